@@ -1,0 +1,1 @@
+"""Uncertainty budgets and conformity decisions: pure functions and frozen dataclasses, no I/O."""

@@ -1,0 +1,1 @@
+"""The service around the computation: HTTP, storage, access and the command line."""
