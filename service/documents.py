@@ -1,0 +1,390 @@
+"""The documents that travel between plant, service and record, as frozen dataclasses.
+
+service/schemas/ reads and writes their JSON form; workflows work on these. Instants are aware datetimes,
+dates are plant-local dates, null limits are None.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from datetime import date, datetime, time
+from typing import Any
+
+# --- who acts -----------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Actor:
+    """Who makes a request: a machine's token, or a person (then ``person`` is the account's code)."""
+
+    principal: str
+    roles: frozenset[str]
+    person: str | None = None
+
+
+@dataclass(frozen=True)
+class Signature:
+    """What a person gives once more to sign an act."""
+
+    password: str = field(repr=False)
+
+
+@dataclass(frozen=True)
+class SignedAct:
+    """The body of approve, return and withdraw."""
+
+    reason: str
+    signature: Signature
+
+
+# --- master data --------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Product:
+    """What is made and judged, with the specifications that a decision uses when it names none."""
+
+    code: str
+    name: str
+    default_specifications: tuple[str, ...] = ()
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Bounds:
+    """A closed interval; None is no bound."""
+
+    lower: float | None = None
+    upper: float | None = None
+
+
+@dataclass(frozen=True)
+class Characteristic:
+    """A measurand of a product: its unit, the units accepted for it and where its values can lie."""
+
+    code: str
+    product: str
+    unit: str
+    accepted_units: tuple[str, ...]
+    basis: str
+    natural_domain: Bounds
+    decimals: int
+    derived_from: tuple[str, ...] | None = None
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Line:
+    """A production line; the order of its analyzers is the order of fallback."""
+
+    code: str
+    name: str
+    analyzers: tuple[str, ...]
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Analyzer:
+    """An instrument with the channels that it reads directly."""
+
+    code: str
+    kind: str
+    channels: tuple[str, ...]
+    decimals: Mapping[str, int] = field(default_factory=dict)
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class FlagLimit:
+    """A figure that the analyzer sends with a scan, and the largest value at which the scan counts."""
+
+    largest: float
+    required: bool
+
+
+@dataclass(frozen=True)
+class InfluenceBounds:
+    """The range of an influence quantity in which the calibration was validated."""
+
+    unit: str
+    lower: float | None
+    upper: float | None
+
+
+@dataclass(frozen=True)
+class Adjustment:
+    """The slope and bias adjustment that the analyzer itself applies to a channel."""
+
+    slope: float
+    bias: float
+
+
+@dataclass(frozen=True)
+class Calibration:
+    """A version of the model in an analyzer, for one product."""
+
+    code: str
+    analyzer: str
+    product: str
+    starts_on: date
+    samples: int | None = None
+    latent_variables: Mapping[str, int] = field(default_factory=dict)
+    standard_error_of_calibration: Mapping[str, float] = field(default_factory=dict)
+    adjustment: Mapping[str, Adjustment] = field(default_factory=dict)
+    flags: Mapping[str, FlagLimit] = field(default_factory=dict)
+    influences: Mapping[str, InfluenceBounds] = field(default_factory=dict)
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class DeclaredEvidence:
+    """A stated figure and what it means; ``estimate`` chooses where the meaning gives several.
+
+    ``declaration`` keeps the members of budgets.declarations.Declaration as they were given.
+    """
+
+    declaration: Mapping[str, Any]
+    estimate: str | None = None
+
+
+@dataclass(frozen=True)
+class StudyEvidence:
+    """An estimate of a recorded study."""
+
+    study: str
+    estimate: str
+
+
+Evidence = StudyEvidence | DeclaredEvidence
+
+
+@dataclass(frozen=True)
+class LaboratoryMethod:
+    """A reference method as a laboratory runs it, with its trueness where that is known."""
+
+    method: str
+    trueness: Evidence | None = None
+
+
+@dataclass(frozen=True)
+class Laboratory:
+    """A laboratory that gives reference values; methods by characteristic."""
+
+    code: str
+    kind: str
+    methods: Mapping[str, LaboratoryMethod]
+    external_codes: Mapping[str, str] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Plant:
+    """All that can change a verdict and belongs to no product; approved like a specification."""
+
+    time_zone: str
+    lapse_hour: time
+    working_days: tuple[str, ...]
+    serving_days: Mapping[str, int]
+    reason: str
+    replicate_level: float | None = None
+
+
+# --- specifications -----------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class ToleranceLimit:
+    """A limit of the permitted true value."""
+
+    value: float
+    unit: str
+    inclusive: bool = True
+
+
+@dataclass(frozen=True)
+class RuleOfDecision:
+    """The decision rule of a requirement as the document states it (contracts.md, section 5)."""
+
+    kind: str
+    multiple: float | None = None
+    coverage_probability: float | None = None
+    sides: int | None = None
+    largest_risk: float | None = None
+    largest_standard_uncertainty: float | None = None
+    least_capability_index: float | None = None
+    rejection: str = "at_tolerance_limit"
+    rounds: int = 1
+
+
+@dataclass(frozen=True)
+class Requirement:
+    """What one characteristic must meet, and by which rule that is decided."""
+
+    characteristic: str
+    lower_tolerance_limit: ToleranceLimit | None
+    upper_tolerance_limit: ToleranceLimit | None
+    decision_rule: RuleOfDecision
+    method: str | None = None
+    judged: str = "lot_mean"
+    comparison: str = "absolute"
+    decimals: int | None = None
+
+
+@dataclass(frozen=True)
+class Specification:
+    """What a product must meet, for whom."""
+
+    code: str
+    product: str
+    kind: str
+    requires: tuple[Requirement, ...]
+    reason: str
+    not_judged: tuple[str, ...] = ()
+
+
+# --- budgets ------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Quantity:
+    """A quantity of the measurement model: the reading itself, or one that evidence stands behind."""
+
+    unit: str
+    source: str | None = None
+    evidence: Evidence | None = None
+
+
+@dataclass(frozen=True)
+class Model:
+    """The measurement model: an expression over named quantities."""
+
+    expression: str
+    quantities: Mapping[str, Quantity]
+
+
+@dataclass(frozen=True)
+class PlannedCount:
+    """How many: at least, as planned, at most."""
+
+    least: int
+    plan: int
+    most: int
+
+
+@dataclass(frozen=True)
+class PlannedProcedure:
+    """How many samples of a lot are read how often."""
+
+    samples: PlannedCount
+    readings_per_sample: PlannedCount
+
+
+@dataclass(frozen=True)
+class BudgetComponent:
+    """A line of the budget: which quantity, at which level it is drawn anew, what stands behind it."""
+
+    code: str
+    quantity: str
+    level: str
+    evidence: Evidence
+
+
+@dataclass(frozen=True)
+class BudgetDocument:
+    """An uncertainty budget of one characteristic as it was drafted."""
+
+    code: str
+    product: str
+    characteristic: str
+    unit: str
+    calibrations: Mapping[str, str]
+    validated_range: Bounds
+    coverage_probability: float
+    bias_treatment: str
+    model: Model
+    procedure: PlannedProcedure
+    components: tuple[BudgetComponent, ...]
+    reason: str
+
+
+# --- studies ------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class SetAsideRow:
+    """A row that does not count, and why."""
+
+    row: int
+    reason: str
+
+
+@dataclass(frozen=True)
+class NamedSource:
+    """A source that is known to be inside a standard error of prediction, with its own evidence."""
+
+    source: str
+    evidence: Evidence
+
+
+@dataclass(frozen=True)
+class DataSource:
+    """The file that the rows came from."""
+
+    name: str
+    sha256: str | None = None
+
+
+Cell = float | int | str | None | Mapping[str, float]
+
+
+@dataclass(frozen=True)
+class Study:
+    """A body of test data with a design."""
+
+    code: str
+    design: str
+    product: str
+    characteristic: str
+    unit: str
+    done_on: date
+    columns: tuple[str, ...]
+    rows: tuple[tuple[Cell, ...], ...]
+    calibrations: Mapping[str, str] = field(default_factory=dict)
+    laboratory: str | None = None
+    serves_until: date | None = None
+    done_by: str | None = None
+    procedure: str | None = None
+    independent: bool | None = None
+    named_sources: tuple[NamedSource, ...] = ()
+    set_aside: tuple[SetAsideRow, ...] = ()
+    source: DataSource | None = None
+
+
+# --- decisions ----------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Reading:
+    """A scan: one look of one analyzer at one sample, a value per channel in the request's units."""
+
+    sample: str
+    analyzer: str
+    calibration: str
+    taken_at: datetime
+    values: Mapping[str, float]
+    flags: Mapping[str, float] = field(default_factory=dict)
+    influences: Mapping[str, float] = field(default_factory=dict)
+    measurement: str | None = None
+
+
+@dataclass(frozen=True)
+class DecisionRequest:
+    """The readings of a lot, to be judged against specifications (the product's own when None)."""
+
+    lot: str
+    product: str
+    line: str
+    units: Mapping[str, str]
+    readings: tuple[Reading, ...]
+    specifications: tuple[str, ...] | None = None
+    operator: str | None = None
