@@ -1,0 +1,49 @@
+"""The decision request: the readings of a lot."""
+
+from __future__ import annotations
+
+from service.documents import DecisionRequest, Reading
+from service.schemas.base import StrictSchema
+from service.schemas.fields import ByKey, Code, Instant, Later, Name, Number, Parts, Text
+
+LONGEST_LOT = 64
+
+
+class ReadingSchema(StrictSchema):
+    """A scan: one look of one analyzer at one sample, with a value per channel."""
+
+    loads_to = Reading
+    without = frozenset({"presentation", "increment", "session", "weight"})
+    sample = Text(64, required=True)
+    analyzer = Code(required=True)
+    calibration = Code(required=True)
+    taken_at = Instant(required=True)
+    values = ByKey(Code(), Number(), least=1, most=100, required=True)
+    flags = ByKey(Name(), Number(), most=100, load_default=dict)
+    influences = ByKey(Name(), Number(), most=100, load_default=dict)
+    measurement = Text(64, allow_none=True, load_default=None)
+    presentation = Later(load_only=True)
+    increment = Later(load_only=True)
+    session = Later(load_only=True)
+    weight = Later(load_only=True)
+
+
+class DecisionRequestSchema(StrictSchema):
+    """The readings of a lot, to be judged against specifications."""
+
+    loads_to = DecisionRequest
+    lot = Text(LONGEST_LOT, required=True)
+    product = Code(required=True)
+    line = Code(required=True)
+    operator = Text(64, allow_none=True, load_default=None)
+    specifications = Parts(
+        Code(),
+        least=1,
+        most=20,
+        distinct=True,
+        allow_none=True,
+        load_default=None,
+        about="The product's own where none are named.",
+    )
+    units = ByKey(Code(), Text(32), least=1, most=100, required=True)
+    readings = Parts(ReadingSchema, least=1, most=2500, required=True)

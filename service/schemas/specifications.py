@@ -1,0 +1,122 @@
+"""Specifications: tolerance limits and the decision rule of each requirement."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from marshmallow import ValidationError, validates_schema
+
+from service.documents import Requirement, RuleOfDecision, Specification, ToleranceLimit
+from service.schemas.base import StrictSchema, Wrong, complaint
+from service.schemas.fields import Choice, Code, Count, Flag, Later, Number, Part, Parts, Text
+
+# Which members a kind of rule takes: all of the first, at least one of the second.
+RULE_MEMBERS: dict[str, tuple[tuple[str, ...], tuple[str, ...]]] = {
+    "simple": ((), ("largest_standard_uncertainty", "least_capability_index")),
+    "guarded_by_factor": (("multiple", "coverage_probability", "sides"), ()),
+    "guarded_by_specific_risk": (("largest_risk",), ()),
+}
+_OWN_MEMBERS = (
+    "multiple",
+    "coverage_probability",
+    "sides",
+    "largest_risk",
+    "largest_standard_uncertainty",
+    "least_capability_index",
+)
+
+
+class ToleranceLimitSchema(StrictSchema):
+    """A limit of the permitted true value."""
+
+    loads_to = ToleranceLimit
+    value = Number(required=True)
+    unit = Text(32, required=True)
+    inclusive = Flag(load_default=True, about="Whether the limit itself is permitted.")
+
+
+class DecisionRuleSchema(StrictSchema):
+    """How uncertainty is taken into account when conformity is stated."""
+
+    loads_to = RuleOfDecision
+    without = frozenset({"specific_risk_cap", "prior", "replicate_level", "largest_lot_risk"})
+    kind = Choice(*RULE_MEMBERS, later=("guarded_by_global_risk",), required=True)
+    multiple = Number(above=0, most=10, allow_none=True, load_default=None, about="Guard band, in U.")
+    coverage_probability = Number(above=0, below=1, allow_none=True, load_default=None)
+    sides = Count(least=1, most=2, allow_none=True, load_default=None)
+    largest_risk = Number(above=0, below=0.5, allow_none=True, load_default=None)
+    largest_standard_uncertainty = Number(above=0, allow_none=True, load_default=None)
+    least_capability_index = Number(above=0, allow_none=True, load_default=None)
+    rejection = Choice("at_tolerance_limit", later=("guarded",), load_default="at_tolerance_limit")
+    rounds = Count(least=1, most=100, load_default=1)
+    specific_risk_cap = Later(load_only=True)
+    prior = Later(load_only=True)
+    replicate_level = Later(load_only=True)
+    largest_lot_risk = Later(load_only=True)
+
+    @validates_schema
+    def _one_round(self, data: dict[str, Any], **_: Any) -> None:
+        if data.get("rounds", 1) > 1:
+            wrong = Wrong("not supported yet: further rounds", "1", supported=False)
+            raise ValidationError({"rounds": [wrong]})
+
+    @validates_schema(skip_on_field_errors=True)
+    def _members_of_kind(self, data: dict[str, Any], **_: Any) -> None:
+        kind = data["kind"]
+        needed, one_of = RULE_MEMBERS[kind]
+        wrongs: dict[str, list[Wrong]] = {}
+        for member in _OWN_MEMBERS:
+            given = data.get(member) is not None
+            if given and member not in needed + one_of:
+                wrongs[member] = [Wrong(f"does not belong to the rule {kind}", "no such member")]
+            elif not given and member in needed:
+                wrongs[member] = [Wrong("missing", f"a value, for the rule {kind}")]
+        if one_of and all(data.get(member) is None for member in one_of):
+            wrong = Wrong("a simple rule without its condition", "one of " + ", ".join(one_of))
+            wrongs["kind"] = [wrong]
+        if wrongs:
+            raise ValidationError(dict(wrongs))
+
+
+class RequirementSchema(StrictSchema):
+    """What one characteristic must meet, and by which rule that is decided."""
+
+    loads_to = Requirement
+    characteristic = Code(required=True)
+    method = Text(200, allow_none=True, load_default=None)
+    judged = Choice("lot_mean", later=("item",), load_default="lot_mean")
+    lower_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
+    upper_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
+    comparison = Choice("absolute", later=("rounded",), load_default="absolute")
+    decimals = Count(most=12, allow_none=True, load_default=None)
+    decision_rule = Part(DecisionRuleSchema, required=True)
+
+    @validates_schema(skip_on_field_errors=True)
+    def _limits(self, data: dict[str, Any], **_: Any) -> None:
+        lower, upper = data["lower_tolerance_limit"], data["upper_tolerance_limit"]
+        if lower is None and upper is None:
+            raise complaint("got no tolerance limit at all", "a lower or an upper tolerance limit")
+        if lower and upper and lower.unit == upper.unit and lower.value >= upper.value:
+            detail = f"got the limits {lower.value!r} and {upper.value!r} {upper.unit} the wrong way round"
+            raise complaint(detail, "a lower tolerance limit below the upper one")
+
+
+class SpecificationSchema(StrictSchema):
+    """What a product must meet, for whom."""
+
+    loads_to = Specification
+    code = Code(required=True)
+    product = Code(required=True)
+    kind = Choice("legal", "customer", "internal", required=True)
+    requires = Parts(RequirementSchema, least=1, most=100, required=True)
+    not_judged = Parts(Text(100), most=100, distinct=True, load_default=())
+    reason = Text(2000, lines=True, required=True)
+
+    @validates_schema(skip_on_field_errors=True)
+    def _each_once(self, data: dict[str, Any], **_: Any) -> None:
+        seen: set[str] = set()
+        for index, requirement in enumerate(data["requires"]):
+            if requirement.characteristic in seen:
+                wrong = Wrong("required a second time", "each characteristic once")
+                raise ValidationError({"requires": {index: {"characteristic": [wrong]}}})
+            seen.add(requirement.characteristic)

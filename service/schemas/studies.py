@@ -1,0 +1,159 @@
+"""Studies: a design, what it was done on, and the rows of its data."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from marshmallow import ValidationError, fields, validates_schema
+
+from service.documents import DataSource, NamedSource, SetAsideRow, Study
+from service.schemas.base import StrictSchema, Wrong, got, not_yet
+from service.schemas.evidence import EvidenceField
+from service.schemas.fields import ByKey, Choice, Code, Count, Day, Flag, Name, Part, Parts, Text, _Stating
+
+MOST_ROWS = 5000
+MOST_COLUMNS = 50
+SOURCES = (
+    "analyzer_repeatability",
+    "presentation",
+    "reference_repeatability",
+    "reference_run",
+    "subsampling",
+)
+
+_CELL = "a finite JSON number, a text of at most 64 characters, null, or an object with below"
+_ROW = {
+    "type": "array",
+    "items": {
+        "oneOf": [
+            {"type": "number"},
+            {"type": "string", "maxLength": 64},
+            {"type": "null"},
+            {
+                "type": "object",
+                "required": ["below"],
+                "properties": {"below": {"type": "number"}},
+                "additionalProperties": False,
+            },
+        ]
+    },
+    "maxItems": MOST_COLUMNS,
+}
+
+
+def _is_cell(cell: object) -> bool:
+    if cell is None:
+        return True
+    kind = type(cell)
+    if kind is float or kind is int:
+        try:
+            return math.isfinite(cell)  # type: ignore[arg-type]
+        except OverflowError:  # a whole number of more than 308 digits
+            return False
+    if isinstance(cell, str):
+        return len(cell) <= 64 and cell.isprintable()
+    return isinstance(cell, dict) and cell.keys() == {"below"} and type(cell["below"]) in (int, float)
+
+
+class RowsField(_Stating, fields.Raw):
+    """The rows; checked in one plain loop, since a study may have thousands."""
+
+    expected = "a list of rows, each a list of cells"
+
+    def __init__(self, **kwargs: Any) -> None:
+        super().__init__(schema={"type": "array", "items": _ROW, "maxItems": MOST_ROWS}, **kwargs)
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
+        if not isinstance(value, list):
+            raise self.wrong(value)
+        if len(value) > MOST_ROWS:
+            raise not_yet(f"got {len(value)} rows", f"at most {MOST_ROWS} rows")
+        wrongs: dict[int, Any] = {}
+        for index, row in enumerate(value):
+            if not isinstance(row, list):
+                wrongs[index] = [Wrong(got(row), "a list of cells")]
+            elif len(row) > MOST_COLUMNS:
+                wrongs[index] = [Wrong(f"got {len(row)} cells", f"at most {MOST_COLUMNS} cells")]
+            elif not all(map(_is_cell, row)):
+                wrongs[index] = {
+                    place: [Wrong(got(cell), _CELL)] for place, cell in enumerate(row) if not _is_cell(cell)
+                }
+        if wrongs:
+            raise ValidationError(wrongs)
+        return tuple(tuple(row) for row in value)
+
+    def _serialize(self, value: Any, attr: str | None, obj: Any, **kwargs: Any) -> Any:
+        return [list(row) for row in value]
+
+
+class SetAsideRowSchema(StrictSchema):
+    """A row that does not count, and why; rows are numbered from 1."""
+
+    loads_to = SetAsideRow
+    row = Count(least=1, most=MOST_ROWS, required=True)
+    reason = Text(500, required=True)
+
+
+class NamedSourceSchema(StrictSchema):
+    """A source known to be inside a standard error of prediction, with its own evidence."""
+
+    loads_to = NamedSource
+    source = Choice(*SOURCES, required=True)
+    evidence = EvidenceField(required=True)
+
+
+class DataSourceSchema(StrictSchema):
+    """The file that the rows came from."""
+
+    loads_to = DataSource
+    name = Text(255, required=True)
+    sha256 = Text(64, allow_none=True, load_default=None)
+
+
+class StudySchema(StrictSchema):
+    """A body of test data with a design."""
+
+    loads_to = Study
+    code = Code(required=True)
+    design = Name(required=True, about="repeatability, duplicates or agreement.")
+    product = Code(required=True)
+    characteristic = Code(required=True)
+    unit = Text(32, required=True)
+    calibrations = ByKey(Code(), Code(), most=20, load_default=dict)
+    laboratory = Code(allow_none=True, load_default=None)
+    done_on = Day(required=True)
+    serves_until = Day(allow_none=True, load_default=None)
+    done_by = Text(100, allow_none=True, load_default=None)
+    procedure = Text(200, allow_none=True, load_default=None)
+    independent = Flag(
+        allow_none=True,
+        load_default=None,
+        about="Whether the samples are independent of those the calibration was made from.",
+    )
+    named_sources = Parts(NamedSourceSchema, most=20, load_default=())
+    columns = Parts(Text(64), least=1, most=MOST_COLUMNS, distinct=True, required=True)
+    rows = RowsField(required=True)
+    set_aside = Parts(SetAsideRowSchema, most=MOST_ROWS, load_default=())
+    source = Part(DataSourceSchema, allow_none=True, load_default=None)
+
+    @validates_schema(skip_on_field_errors=True)
+    def _dates_in_order(self, data: dict[str, Any], **_: Any) -> None:
+        serves_until = data["serves_until"]
+        if serves_until is not None and serves_until < data["done_on"]:
+            wrong = Wrong("lies before done_on", "a date not before done_on")
+            raise ValidationError({"serves_until": [wrong]})
+
+    @validates_schema(skip_on_field_errors=True)
+    def _rows_are_there(self, data: dict[str, Any], **_: Any) -> None:
+        wrongs: dict[int, Any] = {}
+        seen: set[int] = set()
+        rows = len(data["rows"])
+        for index, aside in enumerate(data["set_aside"]):
+            if aside.row > rows:
+                wrongs[index] = {"row": [Wrong(f"got row {aside.row}", f"a row from 1 to {rows}")]}
+            elif aside.row in seen:
+                wrongs[index] = {"row": [Wrong("set aside a second time", "each row once")]}
+            seen.add(aside.row)
+        if wrongs:
+            raise ValidationError({"set_aside": wrongs})
