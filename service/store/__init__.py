@@ -1,0 +1,1 @@
+"""Where everything is kept: tables, migrations, unit of work, the single writer, verification."""

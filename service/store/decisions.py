@@ -1,0 +1,159 @@
+"""Repositories of decisions, lots and the readings that were judged."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Sequence
+from dataclasses import asdict
+from typing import Any
+
+from sqlalchemy import Row, and_, select, tuple_
+
+from service.ledger import Entry
+from service.store.record import entry_of
+from service.store.rows import ReadingIdentity, StoredDecision, StoredLot, StoredReading
+from service.store.session import Session
+from service.store.tables import decisions, entries, lots, readings
+
+_IDENTITIES_PER_QUERY = 300
+_SEQUENCE = re.compile(r"[1-9][0-9]{0,17}")
+
+
+def _decision(row: Row[Any]) -> StoredDecision:
+    return StoredDecision(
+        row.chain,
+        row.sequence,
+        row.product,
+        row.lot,
+        row.round,
+        row.outcome,
+        row.recorded_at,
+        entry_of(row),
+    )
+
+
+class Decisions:
+    """Decisions; each comes with the entry that says it in full."""
+
+    def __init__(self, session: Session) -> None:
+        self._session = session
+
+    def add(self, *, product: str, lot: str, round: int, outcome: str, entry: Entry) -> None:
+        """Keep the look-up columns of a decision."""
+        values = {
+            "chain": entry.chain,
+            "sequence": entry.sequence,
+            "product": product,
+            "lot": lot,
+            "round": round,
+            "outcome": outcome,
+            "recorded_at": entry.recorded_at,
+        }
+        self._session.insert(decisions, values)
+
+    def get(self, identity: str) -> StoredDecision | None:
+        """Return the decision of an id such as ``tower-1.18233``, or None, also for what is no id."""
+        chain, _, sequence = identity.rpartition(".")
+        # Only the one way to write it is an id: no leading zeros, nothing beyond PostgreSQL's integer.
+        if _SEQUENCE.fullmatch(sequence) is None:
+            return None
+        query = self._query().where(decisions.c.chain == chain, decisions.c.sequence == int(sequence))
+        row = self._session.row(query, entries, decisions)
+        return None if row is None else _decision(row)
+
+    def list(
+        self,
+        *,
+        product: str | None = None,
+        lot: str | None = None,
+        line: str | None = None,
+        outcome: str | None = None,
+        limit: int = 100,
+        before: tuple[str, str, int] | None = None,
+    ) -> list[StoredDecision]:
+        """Return decisions, newest first; ``before`` is (recorded_at, chain, sequence) of a page's last."""
+        query = self._query()
+        wanted = {"product": product, "lot": lot, "chain": line, "outcome": outcome}
+        for name, value in wanted.items():
+            if value is not None:
+                query = query.where(decisions.c[name] == value)
+        order = (decisions.c.recorded_at, decisions.c.chain, decisions.c.sequence)
+        if before is not None:
+            query = query.where(tuple_(*order) < before)
+        query = query.order_by(*(column.desc() for column in order)).limit(limit)
+        return [_decision(row) for row in self._session.rows(query, entries, decisions)]
+
+    @staticmethod
+    def _query() -> Any:
+        same_entry = and_(entries.c.chain == decisions.c.chain, entries.c.sequence == decisions.c.sequence)
+        columns = (decisions.c.product, decisions.c.lot, decisions.c.round, decisions.c.outcome)
+        return select(entries, *columns).join(decisions, same_entry)
+
+
+class Lots:
+    """Where each lot stands."""
+
+    def __init__(self, session: Session) -> None:
+        self._session = session
+
+    def get(self, product: str, lot: str) -> StoredLot | None:
+        """Return where a lot stands, or None when it was never judged."""
+        row = self._session.row(select(lots).where(lots.c.product == product, lots.c.lot == lot))
+        return None if row is None else StoredLot(**row._mapping)
+
+    def upsert(
+        self, *, product: str, lot: str, line: str, outcome: str, rounds: int, entry: Entry
+    ) -> StoredLot:
+        """Set where a lot stands after a decision."""
+        stored = StoredLot(
+            product, lot, line, outcome, rounds, entry.chain, entry.sequence, entry.recorded_at
+        )
+        self._session.upsert(lots, asdict(stored))
+        return stored
+
+    def list(
+        self,
+        *,
+        outcome: str | None = None,
+        product: str | None = None,
+        line: str | None = None,
+        limit: int = 100,
+        before: tuple[str, str, str] | None = None,
+    ) -> list[StoredLot]:
+        """Return lots, last judged first; ``before`` is (recorded_at, product, lot) of a page's last."""
+        query = select(lots)
+        for name, value in {"outcome": outcome, "product": product, "line": line}.items():
+            if value is not None:
+                query = query.where(lots.c[name] == value)
+        order = (lots.c.recorded_at, lots.c.product, lots.c.lot)
+        if before is not None:
+            query = query.where(tuple_(*order) < before)
+        query = query.order_by(*(column.desc() for column in order)).limit(limit)
+        return [StoredLot(**row._mapping) for row in self._session.rows(query)]
+
+
+class Readings:
+    """Readings that were judged: the same one is never evidence twice."""
+
+    def __init__(self, session: Session) -> None:
+        self._session = session
+
+    def find(self, identities: Iterable[ReadingIdentity]) -> list[StoredReading]:
+        """Return those of the identities that were used before."""
+        key = tuple_(readings.c.analyzer, readings.c.identity, readings.c.sample)
+        found: list[StoredReading] = []
+        for part in _parts(list(identities)):
+            rows = self._session.rows(select(readings).where(key.in_(part)), readings)
+            found.extend(StoredReading(**row._mapping) for row in rows)
+        return found
+
+    def add(self, identities: Iterable[ReadingIdentity], entry: Entry) -> None:
+        """Mark readings as used by an entry."""
+        for analyzer, identity, sample in identities:
+            values = {"analyzer": analyzer, "identity": identity, "sample": sample}
+            self._session.insert(readings, {**values, "chain": entry.chain, "sequence": entry.sequence})
+
+
+def _parts(identities: Sequence[ReadingIdentity]) -> Iterable[Sequence[ReadingIdentity]]:
+    for start in range(0, len(identities), _IDENTITIES_PER_QUERY):
+        yield identities[start : start + _IDENTITIES_PER_QUERY]

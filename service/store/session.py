@@ -1,0 +1,82 @@
+"""One connection in one transaction, as the repositories see it.
+
+Rows of the record are gathered and written by one statement per table, before that table is next read
+and at the commit: this is what makes a batch of acts cheap.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from sqlalchemy import Connection, Executable, Row, Table, insert
+from sqlalchemy.dialects.postgresql import insert as postgresql_insert
+from sqlalchemy.dialects.sqlite import insert as sqlite_insert
+
+from service.store.engine import driver_errors
+
+Values = Mapping[str, Any]
+
+
+class Session:
+    """Executes statements, keeps count of writes, and remembers when a statement failed."""
+
+    def __init__(self, connection: Connection, *, may_write: bool) -> None:
+        self._connection = connection
+        self._may_write = may_write
+        self._pending: dict[Table, list[Values]] = {}
+        self.writes = 0
+        self.broken = False
+        self.postgresql = connection.dialect.name == "postgresql"
+
+    def rows(self, statement: Executable, *tables: Table) -> Sequence[Row[Any]]:
+        """Return all rows of a query; ``tables`` names the gathered ones that it reads."""
+        self.flush(*tables)
+        return self._execute(statement).all()  # type: ignore[no-any-return]
+
+    def row(self, statement: Executable, *tables: Table) -> Row[Any] | None:
+        """Return the first row of a query or None."""
+        self.flush(*tables)
+        return self._execute(statement).first()  # type: ignore[no-any-return]
+
+    def write(self, statement: Executable) -> int:
+        """Execute a change at once and return the number of rows it met."""
+        self._count_write()
+        return int(self._execute(statement).rowcount)
+
+    def insert(self, table: Table, values: Values) -> None:
+        """Gather a row for a table."""
+        self._count_write()
+        self._pending.setdefault(table, []).append(values)
+
+    def upsert(self, table: Table, values: Values) -> None:
+        """Insert a row or replace the columns of the one with its primary key, at once."""
+        maker: Any = postgresql_insert if self.postgresql else sqlite_insert
+        keys = [column.name for column in table.primary_key]
+        statement = maker(table).values(**values)
+        changes = {name: statement.excluded[name] for name in values if name not in keys}
+        self.write(statement.on_conflict_do_update(index_elements=keys, set_=changes))
+
+    def flush(self, *tables: Table) -> None:
+        """Write the gathered rows of the tables named."""
+        for table in tables:
+            if rows := self._pending.pop(table, None):
+                self._execute(insert(table), rows)
+
+    def flush_all(self) -> None:
+        """Write all gathered rows."""
+        self.flush(*self._pending)
+
+    def _count_write(self) -> None:
+        if not self._may_write:
+            raise RuntimeError("this unit of work only reads")
+        self.writes += 1
+
+    def _execute(self, statement: Executable, parameters: Any = None) -> Any:
+        try:
+            with driver_errors():
+                return self._connection.execute(statement, parameters)
+        except Exception:
+            # After a failed statement PostgreSQL takes no further one in this transaction.
+            self.broken = True
+            raise
