@@ -1,0 +1,227 @@
+"""A budget: components, the procedure they are for, and the checks that nothing is counted twice."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from itertools import combinations
+
+from budgets.components import Component
+from budgets.errors import BudgetsError, ComponentError, ModelError, NotSupportedError, raise_collected
+
+LARGEST_COUNT = 50
+BIAS_TREATMENTS = ("corrected", "in_guard_band")
+BIAS = "bias"
+
+# A source that was taken out of a remainder is back in the budget when a component contains it
+# or is drawn anew at the level of that source.
+_LEVEL_OF_SOURCE = {"repeatability": "reading", "presentation": "presentation"}
+
+
+@dataclass(frozen=True)
+class Count:
+    """How many of something: at least, as planned, at most.
+
+    Raises
+    ------
+    ComponentError
+        Unless 1 <= least <= plan <= most <= 50.
+    """
+
+    least: int
+    plan: int
+    most: int
+
+    def __post_init__(self) -> None:
+        if not 1 <= self.least <= self.plan <= self.most <= LARGEST_COUNT:
+            raise ComponentError(
+                f"the counts must satisfy 1 <= least <= plan <= most <= {LARGEST_COUNT}; "
+                f"got {self.least}, {self.plan}, {self.most}"
+            )
+
+
+@dataclass(frozen=True)
+class Procedure:
+    """What is done to judge a lot: so many samples, so many readings of each."""
+
+    samples: Count
+    readings_per_sample: Count
+
+
+@dataclass(frozen=True)
+class Budget:
+    """An uncertainty budget of one characteristic on one analyzer.
+
+    Parameters
+    ----------
+    components : tuple of Component
+        Of the characteristic's own quantity and of the quantity ``bias``.
+    procedure : Procedure
+    coverage_probability : float
+        Of the expanded uncertainty that is reported.
+    bias : float or None, unit of the characteristic
+        Mean of (analyzer - reference); None when the model has no such quantity.
+    bias_treatment : {"corrected", "in_guard_band"}
+        Corrected: the estimate is reading minus bias. In the guard band: the estimate is the reading.
+    validated_range : tuple of float, shape (2,), unit of the characteristic
+        The estimate must lie inside for the evidence to speak of it.
+
+    Raises
+    ------
+    ComponentError, ModelError, NotSupportedError
+        With all faults found in ``faults``; double counting is one of them.
+
+    Notes
+    -----
+    The measurement model is ``estimate = reading - bias``: both sensitivity coefficients are of size one.
+    """
+
+    components: tuple[Component, ...]
+    procedure: Procedure
+    coverage_probability: float
+    bias: float | None
+    bias_treatment: str
+    validated_range: tuple[float, float]
+
+    def __post_init__(self) -> None:
+        raise_collected(
+            [
+                *_faults_of_members(self),
+                *_faults_of_names(self.components),
+                *_faults_of_bias(self),
+                *_double_counting(self.components),
+                *_missing_sources(self.components),
+            ]
+        )
+
+
+def _faults_of_members(budget: Budget) -> list[BudgetsError]:
+    faults: list[BudgetsError] = []
+    if not 0 < budget.coverage_probability < 1:
+        faults.append(
+            ComponentError(
+                f"the coverage probability {budget.coverage_probability} is not between 0 and 1",
+                where=("coverage_probability",),
+            )
+        )
+    if budget.bias_treatment not in BIAS_TREATMENTS:
+        faults.append(
+            ComponentError(
+                f"the bias is treated as {' or '.join(BIAS_TREATMENTS)}, not {budget.bias_treatment!r}",
+                where=("bias_treatment",),
+            )
+        )
+    lower, upper = budget.validated_range
+    if not (math.isfinite(lower) and math.isfinite(upper) and lower < upper):
+        faults.append(
+            ComponentError(
+                f"the validated range must run from a lower to a higher finite value; got {lower} to {upper}",
+                where=("validated_range",),
+            )
+        )
+    return faults
+
+
+def _faults_of_names(components: tuple[Component, ...]) -> list[BudgetsError]:
+    faults: list[BudgetsError] = []
+    if not components:
+        faults.append(ComponentError("a budget needs at least one component", where=("components",)))
+    seen: set[str] = set()
+    for index, component in enumerate(components):
+        if component.code in seen:
+            faults.append(
+                ComponentError(
+                    f"two components are called {component.code!r}", where=("components", index, "code")
+                )
+            )
+        seen.add(component.code)
+    quantities = sorted({component.quantity for component in components} - {BIAS})
+    if len(quantities) > 1:
+        faults.append(
+            NotSupportedError(
+                f"a model with several input quantities beside the bias ({', '.join(quantities)})",
+                where=("components",),
+            )
+        )
+    if components and not quantities:
+        faults.append(
+            ComponentError(
+                "no component belongs to the reading itself, only to its bias", where=("components",)
+            )
+        )
+    return faults
+
+
+def _faults_of_bias(budget: Budget) -> list[BudgetsError]:
+    has_component = any(component.quantity == BIAS for component in budget.components)
+    if budget.bias is None:
+        if not has_component:
+            return []
+        return [ModelError("there are components of a bias, but the model has no bias", where=("bias",))]
+    if not math.isfinite(budget.bias):
+        return [ModelError("the bias must be a finite number", where=("bias",))]
+    if has_component:
+        return []
+    return [
+        ComponentError(
+            "the model has a bias but no component gives its uncertainty; a bias that is not significant "
+            "is not known to be zero, so u(bias) is a component in all cases",
+            where=("components",),
+        )
+    ]
+
+
+def _beyond_its_study(part: Component, whole: Component) -> bool:
+    """Say whether ``part`` only adds what its study's averaging did not leave in ``whole``."""
+    return part.covered_weight > 0 and whole.covered_weight == 0 and "remainder" in whole.contains
+
+
+def _double_counting(components: tuple[Component, ...]) -> list[BudgetsError]:
+    faults: list[BudgetsError] = []
+    for (_, first), (index, second) in combinations(enumerate(components), 2):
+        shared = [source for source in first.contains if source in second.contains]
+        if first.quantity != second.quantity or not shared:
+            continue
+        if _beyond_its_study(first, second) or _beyond_its_study(second, first):
+            continue
+        advice = (
+            "keep the larger of the two"
+            if shared == ["resolution"]
+            else "use the remainder instead of the whole, or leave one of them out"
+        )
+        faults.append(
+            ComponentError(
+                f"{first.code} and {second.code} both contain {' and '.join(shared)}: this would be counted "
+                f"twice; {advice}",
+                where=("components", index),
+            )
+        )
+    return faults
+
+
+def _missing_sources(components: tuple[Component, ...]) -> list[BudgetsError]:
+    faults: list[BudgetsError] = []
+    for index, component in enumerate(components):
+        others = [
+            other for other in components if other is not component and other.quantity == component.quantity
+        ]
+        for source in component.taken_out:
+            level = _LEVEL_OF_SOURCE[source]
+            if any(source in other.contains or other.level == level for other in others):
+                continue
+            faults.append(
+                ComponentError(
+                    f"{source} was taken out of {component.code}, and no other component brings it back: "
+                    f"add one at the level {level!r}",
+                    where=("components", index),
+                )
+            )
+        if component.covered_weight > 0 and not any(_beyond_its_study(component, other) for other in others):
+            faults.append(
+                ComponentError(
+                    f"{component.code} counts only what its study did not cover; it stands beside the "
+                    "standard error of prediction of the same study, or not at all",
+                    where=("components", index),
+                )
+            )
+    return faults
