@@ -1,0 +1,39 @@
+"""The plant's calendar: when a study stops serving, as an instant, and how far ahead that is announced."""
+
+from __future__ import annotations
+
+from datetime import UTC, date, datetime, time, timedelta
+from typing import Final
+from zoneinfo import ZoneInfo
+
+from service.documents import Plant
+
+WEEKDAYS: Final = ("monday", "tuesday", "wednesday", "thursday", "friday", "saturday", "sunday")
+NOTICE: Final = timedelta(days=30)
+
+# In force until the plant approves a document of its own.
+DEFAULT_PLANT: Final = Plant(
+    time_zone="UTC",
+    lapse_hour=time(11),
+    working_days=WEEKDAYS[:5],
+    serving_days={"repeatability": 365, "duplicates": 365, "agreement": 365},
+    reason="default, until the plant approves a document of its own",
+)
+
+
+def lapse_instant(serves_until: date, plant: Plant) -> datetime:
+    """Turn the last serving day into an instant: the lapse hour of that day or of the next working day.
+
+    Evidence never lapses in the middle of a weekend, when nobody is there to renew it.
+    """
+    day = serves_until
+    while WEEKDAYS[day.weekday()] not in plant.working_days:
+        day += timedelta(days=1)
+    local = datetime.combine(day, plant.lapse_hour, tzinfo=ZoneInfo(plant.time_zone))
+    return local.astimezone(UTC)
+
+
+def serving_end(design: str, done_on: date, plant: Plant) -> date | None:
+    """Give the last day on which a study of ``design`` serves when it does not say so itself."""
+    days = plant.serving_days.get(design)
+    return None if days is None else done_on + timedelta(days=days)

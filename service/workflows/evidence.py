@@ -1,0 +1,147 @@
+"""From what a document names as evidence to the estimate behind it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from datetime import date
+from typing import ParamSpec, TypeVar
+
+from budgets.declarations import Declaration
+from budgets.declarations import evaluate as evaluate_declaration
+from budgets.errors import BudgetsError
+from budgets.evidence.evaluation import Estimate, Evaluation
+from budgets.units import conversion
+from service.documents import DeclaredEvidence, Evidence, Study, StudyEvidence
+from service.errors import Fault, InvalidRequest
+from service.schemas import load
+from service.store.unit_of_work import UnitOfWork
+
+_T = TypeVar("_T")
+_P = ParamSpec("_P")
+
+
+@dataclass(frozen=True)
+class Behind:
+    """An estimate, how it was evaluated (GUM 2.3), and the study that it came from, if any."""
+
+    estimate: Estimate
+    evaluation_type: str
+    study: Study | None = None
+
+    @property
+    def serves_until(self) -> date | None:
+        """The last day on which the evidence serves; a declaration has none."""
+        return None if self.study is None else self.study.serves_until
+
+
+class FaultCollector:
+    """Gathers faults so that a caller learns all of them at once."""
+
+    def __init__(self) -> None:
+        self.faults: list[Fault] = []
+
+    def attempt(self, pointer: str, step: Callable[_P, _T], *args: _P.args, **kwargs: _P.kwargs) -> _T | None:
+        """Run ``step``; what it finds wrong is kept, located below ``pointer``."""
+        try:
+            return step(*args, **kwargs)
+        except InvalidRequest as error:
+            self.faults.extend(error.faults or (Fault(error.message, pointer=pointer),))
+        except BudgetsError as error:
+            self.faults.extend(budget_faults(error, pointer))
+        return None
+
+    def add(self, pointer: str, detail: str, expected: str | None = None) -> None:
+        """Keep one fault."""
+        self.faults.append(Fault(detail, expected=expected, pointer=pointer))
+
+    def finish(self, message: str) -> None:
+        """End the collection. Raises InvalidRequest when anything was found."""
+        if self.faults:
+            raise InvalidRequest(message, faults=tuple(self.faults))
+
+
+def budget_faults(error: BudgetsError, pointer: str) -> tuple[Fault, ...]:
+    """Turn an error of the computation, which may hold several, into faults located below ``pointer``."""
+    if error.faults:
+        return tuple(fault for part in error.faults for fault in budget_faults(part, pointer))
+    where = "".join(f"/{step}" for step in error.where)
+    return (Fault(error.message, pointer=f"{pointer}{where}"),)
+
+
+def resolve(unit_of_work: UnitOfWork, evidence: Evidence, *, code: str, unit: str, pointer: str) -> Behind:
+    """Find the estimate behind ``evidence``, expressed in ``unit``.
+
+    Raises
+    ------
+    InvalidRequest
+        There is no such study or estimate, or the declared figure does not say what it means.
+    """
+    if isinstance(evidence, StudyEvidence):
+        return _from_study(unit_of_work, evidence, unit, pointer)
+    return _from_declaration(evidence, code, unit, pointer)
+
+
+def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str, pointer: str) -> Behind:
+    stored = unit_of_work.studies.get(evidence.study)
+    if stored is None:
+        raise InvalidRequest(
+            "Evidence is missing.",
+            faults=(
+                Fault(
+                    f"there is no study {evidence.study!r}",
+                    expected="the code of a recorded study",
+                    pointer=f"{pointer}/study",
+                ),
+            ),
+        )
+    study = load(Study, stored.document)
+    collector = FaultCollector()
+    evaluation = Evaluation.from_document(stored.evaluation)
+    estimate = collector.attempt(pointer, evaluation.estimate, evidence.estimate)
+    collector.finish("Evidence is missing.")
+    assert estimate is not None
+    return Behind(_in_unit(estimate, study.unit, unit, pointer), "A", study)
+
+
+def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer: str) -> Behind:
+    collector = FaultCollector()
+    members = dict(evidence.declaration)
+    stated_unit = members.pop("unit", None)
+    if stated_unit is None:
+        collector.add(
+            f"{pointer}/declaration/unit", "is missing", f"the unit of the figure, such as {unit!r}"
+        )
+    evaluation = collector.attempt(
+        f"{pointer}/declaration", lambda: evaluate_declaration(Declaration(**members), code=code)
+    )
+    collector.finish("A declaration cannot be used.")
+    assert evaluation is not None and stated_unit is not None
+    if evidence.estimate is None and len(evaluation.estimates) > 1:
+        names = ", ".join(estimate.name for estimate in evaluation.estimates)
+        collector.add(f"{pointer}/estimate", "the declaration gives several estimates", f"one of {names}")
+        collector.finish("A declaration cannot be used.")
+    name = evidence.estimate or evaluation.estimates[0].name
+    estimate = collector.attempt(pointer, evaluation.estimate, name)
+    collector.finish("A declaration cannot be used.")
+    assert estimate is not None
+    return Behind(_in_unit(estimate, stated_unit, unit, f"{pointer}/declaration/unit"), "B")
+
+
+def _in_unit(estimate: Estimate, from_unit: str, to_unit: str, pointer: str) -> Estimate:
+    """Express an estimate in another unit: errors are differences, so an offset of the unit cancels."""
+    if from_unit == to_unit:
+        return estimate
+    collector = FaultCollector()
+    found = collector.attempt(pointer, conversion, from_unit, to_unit)
+    collector.finish("A unit does not convert.")
+    assert found is not None
+    factor, interval = found.factor, estimate.interval
+    return replace(
+        estimate,
+        value=None if estimate.value is None else estimate.value * factor,
+        terms=tuple(replace(term, coefficient=term.coefficient * factor**2) for term in estimate.terms),
+        interval=None
+        if interval is None
+        else replace(interval, lower=interval.lower * factor, upper=interval.upper * factor),
+    )

@@ -1,0 +1,327 @@
+"""A lot judged: pure, from the register and the request to the content of the entry that records it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any, Final
+
+from budgets.reporting import displayed, statement
+
+from budgets.errors import BudgetsError
+from budgets.release import Judgement, ReleaseRule
+from service.documents import Characteristic, DecisionRequest, Requirement
+from service.ledger import read_instant
+from service.schemas import dump
+from service.workflows.calendar import NOTICE
+from service.workflows.measured import Hold, Measured, measure
+from service.workflows.register import BudgetInForce, Register, SpecificationInForce
+from service.workflows.request_checks import check_request
+
+# The worst verdict decides the lot.
+SEVERITY: Final = {"release": 0, "hold": 1, "reject": 2}
+
+CAUTION: Final = (
+    "This answer speaks of the named characteristics only; it is no safety clearance. Local regulations and "
+    "the plant's authorised person decide on the lot."
+)
+
+
+@dataclass(frozen=True)
+class Ruling:
+    """One verdict with the reasons that led to it."""
+
+    verdict: dict[str, Any]
+    reasons: tuple[dict[str, Any], ...]
+
+
+def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dict[str, Any]:
+    """Judge a lot by what is in force; gives the whole answer but its place in the record.
+
+    Raises
+    ------
+    InvalidRequest, Conflict
+        The request is not understood; see request_checks and measured.
+    """
+    check_request(register, request, read_instant(recorded_at))
+    judged: dict[str, Measured] = {}
+
+    def measured(code: str) -> Measured:
+        if code not in judged:
+            judged[code] = measure(register, request, code, recorded_at)
+        return judged[code]
+
+    codes = request.specifications
+    if codes is None:
+        codes = register.products[request.product].default_specifications
+    rulings: list[Ruling] = []
+    not_judged: dict[str, None] = {}
+    for code in codes:
+        specification = register.specifications.get(code)
+        if specification is None:
+            rulings.append(_nothing_in_force(code))
+            continue
+        not_judged.update(dict.fromkeys(specification.document.not_judged))
+        for requirement in specification.document.requires:
+            rulings.append(
+                _rule_on(register, request, specification, requirement, measured(requirement.characteristic))
+            )
+    if not codes:
+        rulings.append(_nothing_in_force(None))
+    return _answer(request, rulings, tuple(not_judged), recorded_at, _notices(judged, recorded_at))
+
+
+def _answer(
+    request: DecisionRequest,
+    rulings: list[Ruling],
+    not_judged: tuple[str, ...],
+    recorded_at: str,
+    notices: list[dict[str, Any]],
+) -> dict[str, Any]:
+    outcomes = [ruling.verdict["outcome"] for ruling in rulings]
+    return {
+        "recorded_at": recorded_at,
+        "lot": request.lot,
+        "product": request.product,
+        "line": request.line,
+        "round": 1,
+        "rounds_left": 0,
+        "outcome": max(outcomes, key=SEVERITY.__getitem__),
+        "reasons": [reason for ruling in rulings for reason in ruling.reasons],
+        "verdicts": [ruling.verdict for ruling in rulings],
+        "not_judged": list(not_judged),
+        "notices": notices,
+        "caution": CAUTION,
+        "request": dump(request),
+    }
+
+
+# --- one verdict ---------------------------------------------------------------------------------------
+
+
+def _rule_on(
+    register: Register,
+    request: DecisionRequest,
+    specification: SpecificationInForce,
+    requirement: Requirement,
+    measured: Measured,
+) -> Ruling:
+    characteristic = register.characteristics[request.product, requirement.characteristic]
+    rule, unusable = _release_rule(register, specification, requirement, measured)
+    holds = (*measured.holds, *unusable)
+    judgement = None
+    if rule is not None and measured.estimate is not None and not holds:
+        judgement = rule.judge(measured.estimate)
+    outcome = "hold" if judgement is None else judgement.outcome
+    verdict = {
+        "characteristic": requirement.characteristic,
+        "unit": characteristic.unit,
+        "specification": _reference(specification),
+        "outcome": outcome,
+        "estimate": measured.estimate,
+        **_figures(rule, judgement),
+        "decision_rule": _decision_rule(requirement),
+        "budget": None if measured.budget is None else _budget_reference(measured.budget),
+        "samples": 0 if measured.counts is None else len(measured.counts.readings_per_sample),
+        "readings": 0 if measured.counts is None else sum(measured.counts.readings_per_sample),
+        "display": _display(rule, measured, judgement, characteristic, requirement),
+    }
+    reasons = [_reason(hold, requirement.characteristic, specification) for hold in holds]
+    if judgement is not None and outcome != "release" and rule is not None:
+        about_value = _about_the_value(rule, outcome, measured, characteristic)
+        reasons.append(_reason(about_value, requirement.characteristic, specification))
+    return Ruling(verdict, tuple(reasons))
+
+
+def _release_rule(
+    register: Register,
+    specification: SpecificationInForce,
+    requirement: Requirement,
+    measured: Measured,
+) -> tuple[ReleaseRule | None, tuple[Hold, ...]]:
+    """Find the stored rule for what was done; no rule when there is nothing to apply it to."""
+    if measured.budget is None or measured.counts is None:
+        return None, ()
+    if any(hold.code == "too-few-readings" for hold in measured.holds):
+        return None, ()
+    try:
+        return register.rule(specification, requirement, measured.budget, measured.counts), ()
+    except BudgetsError as error:
+        hold = Hold(
+            "cannot-be-proved", error.message, "Read as the procedure plans. A person decides on this lot."
+        )
+        return None, (hold,)
+
+
+def _figures(rule: ReleaseRule | None, judgement: Judgement | None) -> dict[str, Any]:
+    """Write the figures of the rule, and the probabilities where the reading can be trusted."""
+    if rule is None:
+        return dict.fromkeys(_FIGURES)
+    nu = rule.effective_degrees_of_freedom
+    return {
+        "combined_standard_uncertainty": rule.combined_standard_uncertainty,
+        "effective_degrees_of_freedom": None if nu == float("inf") else nu,
+        "coverage_probability": rule.coverage_probability,
+        "coverage_factor": rule.coverage_factor,
+        "expanded_uncertainty": rule.expanded_uncertainty,
+        "lower_tolerance_limit": rule.lower_tolerance_limit,
+        "upper_tolerance_limit": rule.upper_tolerance_limit,
+        "lower_acceptance_limit": rule.lower_acceptance_limit,
+        "upper_acceptance_limit": rule.upper_acceptance_limit,
+        "acceptance_limits": "fixed",
+        "guard_band": {"lower": rule.guard_band_lower, "upper": rule.guard_band_upper},
+        "uncorrected_bias": rule.bias_shift,
+        "measurement_capability_index": rule.measurement_capability_index,
+        "largest_specific_risk": rule.largest_specific_risk,
+        "conformance_probability": None if judgement is None else judgement.conformance_probability,
+        "specific_consumers_risk": None if judgement is None else judgement.specific_consumers_risk,
+    }
+
+
+_FIGURES: Final = (
+    "combined_standard_uncertainty",
+    "effective_degrees_of_freedom",
+    "coverage_probability",
+    "coverage_factor",
+    "expanded_uncertainty",
+    "lower_tolerance_limit",
+    "upper_tolerance_limit",
+    "lower_acceptance_limit",
+    "upper_acceptance_limit",
+    "acceptance_limits",
+    "guard_band",
+    "uncorrected_bias",
+    "measurement_capability_index",
+    "largest_specific_risk",
+    "conformance_probability",
+    "specific_consumers_risk",
+)
+
+
+def _nothing_in_force(code: str | None) -> Ruling:
+    """Rule on a specification that is asked for but not in force, or on a product without any."""
+    what = (
+        "No specification is in force for this product."
+        if code is None
+        else f"No version of {code} is in force."
+    )
+    specification = None if code is None else {"code": code, "version": None}
+    reason = {
+        "code": "nothing-in-force",
+        "characteristic": None,
+        "specification": specification,
+        "detail": what,
+        "next": "Have a version approved. A person decides on this lot.",
+    }
+    verdict = {
+        "characteristic": None,
+        "unit": None,
+        "specification": specification,
+        "outcome": "hold",
+        "estimate": None,
+        **dict.fromkeys(_FIGURES),
+        "decision_rule": None,
+        "budget": None,
+        "samples": 0,
+        "readings": 0,
+        "display": None,
+    }
+    return Ruling(verdict, (reason,))
+
+
+# --- words and references ------------------------------------------------------------------------------
+
+
+def _reference(specification: SpecificationInForce) -> dict[str, Any]:
+    return {"code": specification.document.code, "version": specification.version}
+
+
+def _budget_reference(budget: BudgetInForce) -> dict[str, Any]:
+    return {"code": budget.document.code, "version": budget.version, "digest": budget.digest}
+
+
+def _decision_rule(requirement: Requirement) -> dict[str, Any]:
+    stated = vars(requirement.decision_rule)
+    return {name: value for name, value in stated.items() if value is not None}
+
+
+def _reason(hold: Hold, characteristic: str, specification: SpecificationInForce) -> dict[str, Any]:
+    return {
+        "code": hold.code,
+        "characteristic": characteristic,
+        "specification": _reference(specification),
+        "detail": hold.detail,
+        "next": hold.next,
+    }
+
+
+def _about_the_value(
+    rule: ReleaseRule, outcome: str, measured: Measured, characteristic: Characteristic
+) -> Hold:
+    shown = displayed(rule, measured.estimate, decimals=characteristic.decimals)
+    unit = characteristic.unit
+    assert measured.estimate is not None
+    upper_side = rule.upper_tolerance_limit is not None and (
+        rule.lower_acceptance_limit is None or measured.estimate >= rule.lower_acceptance_limit
+    )
+    relation = "above" if upper_side else "below"
+    limit = shown.upper_tolerance_limit if upper_side else shown.lower_tolerance_limit
+    accepted = shown.upper_acceptance_limit if upper_side else shown.lower_acceptance_limit
+    if outcome == "reject":
+        return Hold(
+            "outside-tolerance",
+            f"{shown.estimate} {unit} is {relation} the tolerance limit {limit} {unit}.",
+            "The lot does not meet the specification. A person decides what becomes of it.",
+        )
+    return Hold(
+        "in-guard-band",
+        f"{shown.estimate} {unit} is within the tolerance limit {limit} {unit} but {relation} the acceptance "
+        f"limit {accepted} {unit}.",
+        "The rule plans no further readings. A person decides, with an analysis by the laboratory.",
+    )
+
+
+def _display(
+    rule: ReleaseRule | None,
+    measured: Measured,
+    judgement: Judgement | None,
+    characteristic: Characteristic,
+    requirement: Requirement,
+) -> dict[str, Any] | None:
+    """Write the rounded texts for people; the record keeps the digits beside them."""
+    if rule is None or measured.estimate is None:
+        return None
+    shown = displayed(rule, measured.estimate, decimals=characteristic.decimals)
+    return {
+        "estimate": shown.estimate,
+        "expanded_uncertainty": shown.expanded_uncertainty,
+        "lower_acceptance_limit": shown.lower_acceptance_limit,
+        "upper_acceptance_limit": shown.upper_acceptance_limit,
+        "statement": statement(
+            rule,
+            measured.estimate,
+            characteristic=characteristic.code,
+            unit=characteristic.unit,
+            basis=characteristic.basis,
+            method=requirement.method,
+            decimals=characteristic.decimals,
+        ),
+    }
+
+
+def _notices(judged: dict[str, Measured], recorded_at: str) -> list[dict[str, Any]]:
+    """Announce evidence that lapses soon, once per budget."""
+    now: datetime = read_instant(recorded_at)
+    notices = {}
+    for measured in judged.values():
+        budget = measured.budget
+        if budget is None or budget.lapses_at is None or recorded_at >= budget.lapses_at:
+            continue
+        left = read_instant(budget.lapses_at) - now
+        if left <= NOTICE:
+            notices[budget.document.code] = {
+                "code": "evidence-lapses",
+                "at": budget.lapses_at,
+                "detail": f"The evidence behind {budget.document.code} serves {left.days} more days; renew it.",
+            }
+    return list(notices.values())

@@ -1,0 +1,155 @@
+"""The register: all that a decision needs and that is in force, read once per revision of the database."""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from budgets.budget import Budget
+from budgets.propagation import Counts
+from budgets.release import ReleaseRule
+from service.documents import (
+    Analyzer,
+    BudgetDocument,
+    Calibration,
+    Characteristic,
+    Line,
+    Plant,
+    Product,
+    Requirement,
+    Specification,
+)
+from service.schemas import load
+from service.store.rows import StoredVersion
+from service.store.unit_of_work import UnitOfWork
+from service.workflows.calendar import DEFAULT_PLANT
+from service.workflows.rules import RuleKey, compile_rule, counts_text
+from service.workflows.stored_budgets import budget_from_evaluation
+
+
+@dataclass(frozen=True)
+class SpecificationInForce:
+    """A specification version that decisions may be made on."""
+
+    version: int
+    document: Specification
+
+
+@dataclass(frozen=True)
+class BudgetInForce:
+    """A budget version that decisions may be made on, rebuilt from what was stored at its approval."""
+
+    version: int
+    document: BudgetDocument
+    budget: Budget
+    digest: str
+    lapses_at: str | None
+
+
+@dataclass
+class Register:
+    """What is in force at one revision. Rules for counts that no approval foresaw are added as they occur."""
+
+    revision: int
+    plant: Plant
+    products: Mapping[str, Product]
+    characteristics: Mapping[tuple[str, str], Characteristic]
+    lines: Mapping[str, Line]
+    analyzers: Mapping[str, Analyzer]
+    calibrations: Mapping[str, Calibration]
+    specification_products: Mapping[str, str]
+    specifications: Mapping[str, SpecificationInForce]
+    budgets: Mapping[tuple[str, str, str], BudgetInForce]
+    rules: dict[RuleKey, ReleaseRule] = field(default_factory=dict)
+
+    def rule(
+        self,
+        specification: SpecificationInForce,
+        requirement: Requirement,
+        budget: BudgetInForce,
+        counts: Counts,
+    ) -> ReleaseRule:
+        """Give the stored rule for what was done; compile it from the stored budget where none was stored."""
+        key = RuleKey(
+            specification=specification.document.code,
+            specification_version=specification.version,
+            characteristic=requirement.characteristic,
+            budget=budget.document.code,
+            budget_version=budget.version,
+            counts=counts_text(counts),
+        )
+        rule = self.rules.get(key)
+        if rule is None:
+            characteristic = self.characteristics[budget.document.product, requirement.characteristic]
+            rule = compile_rule(budget.budget, counts, requirement, characteristic)
+            self.rules[key] = rule
+        return rule
+
+
+def load_register(unit_of_work: UnitOfWork, revision: int) -> Register:
+    """Read everything that is in force in the transaction of ``unit_of_work``."""
+    in_force = unit_of_work.versions.all_in_force()
+    specifications = [version for version in in_force if version.kind == "specification"]
+    budgets = [_budget_in_force(version) for version in in_force if version.kind == "budget"]
+    plants = [version for version in in_force if version.kind == "plant"]
+    characteristics = _masters(unit_of_work, "characteristic", Characteristic)
+    return Register(
+        revision=revision,
+        plant=load(Plant, plants[0].document) if plants else DEFAULT_PLANT,
+        products={product.code: product for product in _masters(unit_of_work, "product", Product)},
+        characteristics={(item.product, item.code): item for item in characteristics},
+        lines={line.code: line for line in _masters(unit_of_work, "line", Line)},
+        analyzers={analyzer.code: analyzer for analyzer in _masters(unit_of_work, "analyzer", Analyzer)},
+        calibrations={item.code: item for item in _masters(unit_of_work, "calibration", Calibration)},
+        specification_products=unit_of_work.versions.products("specification"),
+        specifications={
+            version.code: SpecificationInForce(version.version, load(Specification, version.document))
+            for version in specifications
+        },
+        budgets={
+            (budget.document.product, budget.document.characteristic, analyzer): budget
+            for budget in budgets
+            for analyzer in budget.document.calibrations
+        },
+        rules={
+            RuleKey.of(stored): ReleaseRule.from_document(stored.numbers)
+            for stored in unit_of_work.rules.in_force()
+        },
+    )
+
+
+def _masters(unit_of_work: UnitOfWork, kind: str, document_class: type[Any]) -> list[Any]:
+    return [load(document_class, stored.document) for stored in unit_of_work.master.all(kind)]
+
+
+def _budget_in_force(version: StoredVersion) -> BudgetInForce:
+    document = load(BudgetDocument, version.document)
+    assert version.evaluation is not None  # stored at approval, without exception
+    return BudgetInForce(
+        version=version.version,
+        document=document,
+        budget=budget_from_evaluation(document, version.evaluation),
+        digest=version.evaluation["digest"],
+        lapses_at=version.lapses_at,
+    )
+
+
+class RegisterCache:
+    """Keeps the register of the newest revision that this process has seen; safe for threads."""
+
+    def __init__(self) -> None:
+        self._lock = threading.Lock()
+        self._register: Register | None = None
+
+    def current(self, unit_of_work: UnitOfWork) -> Register:
+        """Give the register at the revision that ``unit_of_work`` sees; reads it anew when that has moved."""
+        revision = unit_of_work.revision()
+        register = self._register
+        if register is not None and register.revision == revision:
+            return register
+        with self._lock:
+            if self._register is None or self._register.revision != revision:
+                self._register = load_register(unit_of_work, revision)
+            return self._register

@@ -1,0 +1,150 @@
+"""Budget, specification and decision rule compiled into release rules, one for each number of readings."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from budgets.budget import Budget, Procedure
+from budgets.conformity import Tolerance
+from budgets.decision_rules import DecisionRule
+from budgets.errors import LimitsError
+from budgets.propagation import Counts
+from budgets.release import ReleaseRule
+from budgets.units import convert
+from service.documents import Characteristic, Requirement, RuleOfDecision, ToleranceLimit
+from service.store.rows import StoredRule
+from service.workflows.evidence import FaultCollector
+
+
+@dataclass(frozen=True)
+class RuleKey:
+    """Which specification, budget and numbers of readings a compiled rule belongs to."""
+
+    specification: str
+    specification_version: int
+    characteristic: str
+    budget: str
+    budget_version: int
+    counts: str
+
+    @classmethod
+    def of(cls, stored: StoredRule) -> RuleKey:
+        """Give the key of a stored rule."""
+        return cls(
+            stored.specification,
+            stored.specification_version,
+            stored.characteristic,
+            stored.budget,
+            stored.budget_version,
+            stored.counts,
+        )
+
+    def stored(self, numbers: dict[str, Any]) -> StoredRule:
+        """Put the key and the compiled numbers together for the store."""
+        return StoredRule(**self.to_document(), numbers=numbers)
+
+    def to_document(self) -> dict[str, Any]:
+        """Write the key down for the record."""
+        return asdict(self)
+
+
+def counts_text(counts: Counts) -> str:
+    """Write the readings per sample, most first: the order of samples changes no uncertainty."""
+    return ",".join(str(number) for number in sorted(counts.readings_per_sample, reverse=True))
+
+
+def counts_from_text(text: str) -> Counts:
+    """Read what counts_text wrote."""
+    return Counts(tuple(int(part) for part in text.split(",")))
+
+
+def balanced_counts(procedure: Procedure) -> Iterator[Counts]:
+    """Give every balanced way of doing the procedure; rules for these are compiled at approval."""
+    for samples in range(procedure.samples.least, procedure.samples.most + 1):
+        readings = procedure.readings_per_sample
+        for readings_per_sample in range(readings.least, readings.most + 1):
+            yield Counts((readings_per_sample,) * samples)
+
+
+def planned_counts(procedure: Procedure) -> Counts:
+    """Give the numbers that the procedure plans."""
+    return Counts((procedure.readings_per_sample.plan,) * procedure.samples.plan)
+
+
+def decision_rule(stated: RuleOfDecision) -> DecisionRule:
+    """Turn the decision rule of a document into that of the computation. Raises LimitsError."""
+    return DecisionRule(
+        kind=stated.kind,
+        largest_standard_uncertainty=stated.largest_standard_uncertainty,
+        least_capability_index=stated.least_capability_index,
+        multiple=stated.multiple,
+        coverage_probability=stated.coverage_probability,
+        sides=stated.sides,
+        largest_risk=stated.largest_risk,
+    )
+
+
+def tolerance(requirement: Requirement, characteristic: Characteristic) -> Tolerance:
+    """Express the tolerance limits in the unit of the characteristic. Raises UnitsError or LimitsError."""
+
+    def value(limit: ToleranceLimit | None) -> float | None:
+        return None if limit is None else convert(limit.value, limit.unit, characteristic.unit)
+
+    lower, upper = requirement.lower_tolerance_limit, requirement.upper_tolerance_limit
+    return Tolerance(
+        lower=value(lower),
+        upper=value(upper),
+        lower_inclusive=lower is None or lower.inclusive,
+        upper_inclusive=upper is None or upper.inclusive,
+    )
+
+
+def compile_rule(
+    budget: Budget, counts: Counts, requirement: Requirement, characteristic: Characteristic
+) -> ReleaseRule:
+    """Compile one release rule. Raises the errors of budgets, an empty acceptance interval among them."""
+    domain = characteristic.natural_domain
+    return ReleaseRule.compile(
+        budget,
+        counts,
+        tolerance(requirement, characteristic),
+        decision_rule(requirement.decision_rule),
+        domain=(domain.lower, domain.upper),
+    )
+
+
+def compile_pair(
+    budget: Budget,
+    requirement: Requirement,
+    characteristic: Characteristic,
+    *,
+    label: str,
+) -> dict[str, dict[str, Any]]:
+    """Compile the rules of one budget and one requirement for all balanced numbers of readings.
+
+    The planned numbers must be able to release something; other numbers that cannot are left out, and a lot
+    judged with them is compiled when it comes.
+
+    Raises
+    ------
+    InvalidRequest
+        With the planned numbers no reading could prove the requirement, or its limits are wrong.
+    """
+    collector = FaultCollector()
+    planned = planned_counts(budget.procedure)
+    collector.attempt("#", compile_rule, budget, planned, requirement, characteristic)
+    if collector.faults:
+        detail = "; ".join(fault.detail for fault in collector.faults)
+        collector.faults.clear()
+        collector.add("#", f"{label}: {detail}")
+    collector.finish("This measurement cannot prove this specification.")
+    rules = {}
+    for counts in balanced_counts(budget.procedure):
+        try:
+            rule = compile_rule(budget, counts, requirement, characteristic)
+        except LimitsError:
+            continue
+        rules[counts_text(counts)] = rule.to_document()
+    return rules

@@ -1,0 +1,181 @@
+"""Studies: test data in, evaluation out; previewed without a trace or recorded for good."""
+
+from __future__ import annotations
+
+import dataclasses
+from datetime import UTC, datetime
+from typing import Any
+from zoneinfo import ZoneInfo
+
+from budgets.evidence.agreement import NamedSource
+from budgets.evidence.study_data import StudyData, evaluate_study
+
+from budgets.evidence.evaluation import Evaluation, SetAside
+from budgets.units import conversion
+from service.access import require
+from service.documents import Actor, Plant, Study
+from service.errors import Conflict, NotFound
+from service.ledger import Entry
+from service.schemas import dump
+from service.store.rows import StoredStudy
+from service.store.unit_of_work import UnitOfWork
+from service.workflows import plant
+from service.workflows.calendar import serving_end
+from service.workflows.evidence import FaultCollector, resolve
+from service.workflows.paging import page_of, start_after
+from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record
+from service.workflows.services import Services
+
+
+def preview(services: Services, actor: Actor, study: Study) -> dict[str, Any]:
+    """Evaluate a study and store nothing. Raises InvalidRequest with all that is wrong with it."""
+    require(actor, "read")
+    with services.database.reading() as unit_of_work:
+        complete, evaluation = _evaluate(unit_of_work, study)
+    return {"recorded": False, "study": dump(complete), "evaluation": evaluation.to_document()}
+
+
+def record_study(
+    services: Services, actor: Actor, study: Study, request: Request
+) -> tuple[dict[str, Any], bool]:
+    """Evaluate a study and record both for good; gives the answer and whether it had been recorded earlier.
+
+    Raises
+    ------
+    Conflict
+        The code is taken; a study is never changed, a further one gets a code of its own.
+    InvalidRequest
+        The data cannot be evaluated.
+    """
+    require(actor, "record a study")
+    # Evaluated here, so that the writer, which the production lines wait for, only writes it down.
+    with services.database.reading() as unit_of_work:
+        taken = unit_of_work.studies.get(study.code)
+        complete, evaluation = (study, None) if taken else _evaluate(unit_of_work, study)
+
+    def perform(unit_of_work: UnitOfWork) -> Entry:
+        if evaluation is None or unit_of_work.studies.get(study.code) is not None:
+            raise Conflict(
+                "already-exists",
+                f"There is a study {study.code!r}; studies never change, use a new code.",
+                link=f"/v1/studies/{study.code}",
+            )
+        content = {"study": dump(complete), "evaluation": evaluation.to_document()}
+        entry = unit_of_work.append(PLANT_CHAIN, "study-recorded", actor.principal, content)
+        unit_of_work.studies.add(
+            study.code,
+            content["study"],
+            content["evaluation"],
+            entry,
+            product=study.product,
+            characteristic=study.characteristic,
+            design=study.design,
+        )
+        return entry
+
+    recorded = record(services, actor, request, {PLANT_CHAIN}, perform)
+    answer = {"recorded": True, **recorded.entry.content, "entry": entry_reference(recorded.entry)}
+    return answer, recorded.earlier
+
+
+def get(services: Services, actor: Actor, code: str) -> dict[str, Any]:
+    """Read a study with its data and evaluation. Raises NotFound."""
+    require(actor, "read")
+    with services.database.reading() as unit_of_work:
+        stored = unit_of_work.studies.get(code)
+    if stored is None:
+        raise NotFound(f"There is no study {code!r}.")
+    return {"recorded": True, "study": stored.document, "evaluation": stored.evaluation}
+
+
+def listing(
+    services: Services,
+    actor: Actor,
+    *,
+    product: str | None = None,
+    limit: int = 50,
+    cursor: str | None = None,
+) -> Page:
+    """List studies without their data, newest first."""
+    require(actor, "read")
+    with services.database.reading() as unit_of_work:
+        before = start_after(cursor, unit_of_work.studies.get, lambda last: (last.sequence, last.code))
+        found = unit_of_work.studies.list(product=product, limit=limit + 1, before=before)
+    return page_of(found, limit, _summary, lambda stored: stored.code)
+
+
+def _summary(stored: StoredStudy) -> dict[str, Any]:
+    shown = ("code", "design", "product", "characteristic", "unit", "done_on", "serves_until")
+    return {member: stored.document[member] for member in shown}
+
+
+# --- evaluation ----------------------------------------------------------------------------------------
+
+
+def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation]:
+    plant_document = plant.in_force(unit_of_work)
+    collector = FaultCollector()
+    _check_references(unit_of_work, study, collector)
+    _check_dates(study, plant_document, collector)
+    sources = [
+        collector.attempt(f"#/named_sources/{index}/evidence", _source, unit_of_work, study, index)
+        for index in range(len(study.named_sources))
+    ]
+    collector.finish("The study refers to what does not exist or does not fit.")
+    evaluation = collector.attempt(
+        "#",
+        evaluate_study,
+        study.design,
+        StudyData(columns=study.columns, rows=study.rows),
+        study=study.code,
+        set_aside=tuple(SetAside(row.row - 1, row.reason) for row in study.set_aside),
+        named_sources=tuple(source for source in sources if source is not None),
+        independent=study.independent,
+    )
+    collector.finish("The study cannot be evaluated.")
+    assert evaluation is not None
+    serves_until = study.serves_until or serving_end(study.design, study.done_on, plant_document)
+    return dataclasses.replace(study, serves_until=serves_until), evaluation
+
+
+def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
+    named = study.named_sources[index]
+    behind = resolve(
+        unit_of_work,
+        named.evidence,
+        code=f"{study.code}/{named.source}",
+        unit=study.unit,
+        pointer=f"#/named_sources/{index}/evidence",
+    )
+    return NamedSource(source=named.source, estimate=behind.estimate)
+
+
+def _check_references(unit_of_work: UnitOfWork, study: Study, collector: FaultCollector) -> None:
+    key = f"{study.product}/{study.characteristic}"
+    characteristic = unit_of_work.master.get("characteristic", key)
+    if unit_of_work.master.get("product", study.product) is None:
+        collector.add("#/product", f"there is no product {study.product!r}", "the code of a product")
+    elif characteristic is None:
+        collector.add("#/characteristic", f"there is no characteristic {key!r}", "one of the product")
+    else:
+        unit = characteristic.document["unit"]
+        collector.attempt("#/unit", conversion, study.unit, unit)
+    for analyzer, calibration in study.calibrations.items():
+        stored = unit_of_work.master.get("calibration", calibration)
+        if stored is None or stored.document["analyzer"] != analyzer:
+            collector.add(
+                f"#/calibrations/{analyzer}",
+                f"there is no calibration {calibration!r} of {analyzer!r}",
+                "a calibration of that analyzer",
+            )
+    if study.laboratory is not None and unit_of_work.master.get("laboratory", study.laboratory) is None:
+        collector.add(
+            "#/laboratory", f"there is no laboratory {study.laboratory!r}", "the code of a laboratory"
+        )
+
+
+def _check_dates(study: Study, plant_document: Plant, collector: FaultCollector) -> None:
+    # A date is plant-local: nothing can be done on a day that has not begun anywhere in the plant.
+    today = datetime.now(UTC).astimezone(ZoneInfo(plant_document.time_zone)).date()
+    if study.done_on > today:
+        collector.add("#/done_on", f"got {study.done_on.isoformat()}", f"a day not after {today.isoformat()}")
