@@ -104,6 +104,11 @@ def format_instant(instant: datetime) -> str:
     return instant.astimezone(UTC).isoformat(timespec="microseconds").replace("+00:00", "Z")
 
 
+def read_instant(text: str) -> datetime:
+    """Read an instant that format_instant wrote."""
+    return datetime.fromisoformat(text)
+
+
 def write_entry(
     *,
     chain: str,
@@ -184,7 +189,7 @@ class ChainCheck:
         """Check the next entry; a finding ends the check."""
         detail = self._fault(stored)
         if detail is not None:
-            return Finding(self.chain, min(stored.sequence, self.sequence + 1), detail)
+            return Finding(self.chain, self.sequence + 1, detail)
         self.sequence, self.hash, self.recorded_at = stored.sequence, stored.hash, stored.recorded_at
         return None
 
@@ -199,8 +204,8 @@ class ChainCheck:
         if head is None:
             return Finding(self.chain, None, "the chain has no head") if self.sequence else None
         if (head.sequence, head.hash) != (self.sequence, self.hash):
-            detail = f"the head names entry {head.sequence} ({head.hash[:12]}...), "
-            detail += f"but the chain ends at {self.sequence} ({self.hash[:12]}...)"
+            detail = f"the head names entry {head.sequence} ({head.hash:.12}...), "
+            detail += f"but the chain ends at {self.sequence} ({self.hash:.12}...)"
             return Finding(self.chain, self.sequence, detail)
         if self.sequence and head.recorded_at != self.recorded_at:
             return Finding(self.chain, self.sequence, "the head has another recorded_at than its entry")
@@ -208,6 +213,8 @@ class ChainCheck:
 
     def _fault(self, stored: StoredEntry) -> str | None:
         expected = self.sequence + 1
+        if not isinstance(stored.sequence, int):  # SQLite keeps whatever somebody put there
+            return "the column sequence is no number"
         if stored.sequence != expected:
             return f"entry {expected} is missing" if stored.sequence > expected else "the sequence goes back"
         if hash_of(stored.body) != stored.hash:

@@ -30,6 +30,11 @@ class Master:
         row = self._session.row(select(table).where(table.c.kind == kind, table.c.key == key))
         return None if row is None else _stored(row)
 
+    def all(self, kind: str) -> list[StoredDocument]:
+        """Return all documents of a kind by key."""
+        query = select(master_documents).where(master_documents.c.kind == kind)
+        return [_stored(row) for row in self._session.rows(query.order_by(master_documents.c.key))]
+
     def list(
         self,
         kind: str,

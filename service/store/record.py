@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import heapq
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping, Sequence
 from itertools import islice
 from typing import Any
 
-from sqlalchemy import Row, select, tuple_
+from sqlalchemy import LargeBinary, Row, cast, select, tuple_
 
 from service.ledger import Entry, Head, StoredEntry
 from service.store.rows import StoredKey
@@ -15,6 +15,9 @@ from service.store.session import Session
 from service.store.tables import chains, entries, idempotency_keys
 
 LARGEST_PAGE = 1000
+# A body that somebody altered may be text by now; verification must be able to read it all the same.
+_AS_BYTES: list[Any] = [column for column in entries.c if column.name != "body"]
+_AS_BYTES.append(cast(entries.c.body, LargeBinary).label("body"))
 
 
 def entry_of(row: Row[Any]) -> Entry:
@@ -40,8 +43,10 @@ class Ledger:
         """Return entries of a chain in order, beginning after a sequence number."""
         return [entry_of(row) for row in self._rows(chain, after, limit)]
 
-    def stored_entries(self, chain: str, *, after: int = 0, limit: int = LARGEST_PAGE) -> list[StoredEntry]:
-        """Return entries with their column copies as they stand, for verification."""
+    def stored_entries(
+        self, chain: str, *, after: int | None = None, limit: int = LARGEST_PAGE
+    ) -> list[StoredEntry]:
+        """Return entries with their column copies as they stand, for verification; None: from the first."""
         return [
             StoredEntry(
                 row.chain,
@@ -53,7 +58,7 @@ class Ledger:
                 row.hash,
                 bytes(row.body),
             )
-            for row in self._rows(chain, after, limit)
+            for row in self._rows(chain, after, limit, columns=_AS_BYTES)
         ]
 
     def heads(self) -> dict[str, Head]:
@@ -80,14 +85,13 @@ class Ledger:
             position[entry.chain] = entry.sequence
         return found, position
 
-    def _rows(self, chain: str, after: int, limit: int) -> Iterable[Row[Any]]:
-        query = (
-            select(entries)
-            .where(entries.c.chain == chain, entries.c.sequence > after)
-            .order_by(entries.c.sequence)
-            .limit(limit)
-        )
-        return self._session.rows(query, entries)
+    def _rows(
+        self, chain: str, after: int | None, limit: int, columns: Sequence[Any] = (entries,)
+    ) -> Sequence[Row[Any]]:
+        query = select(*columns).where(entries.c.chain == chain)
+        if after is not None:
+            query = query.where(entries.c.sequence > after)
+        return self._session.rows(query.order_by(entries.c.sequence).limit(limit), entries)
 
 
 class Keys:

@@ -12,10 +12,13 @@ from typing import Any
 from sqlalchemy import Connection, Executable, Row, Table, insert
 from sqlalchemy.dialects.postgresql import insert as postgresql_insert
 from sqlalchemy.dialects.sqlite import insert as sqlite_insert
+from sqlalchemy.exc import DataError
 
 from service.store.engine import driver_errors
 
 Values = Mapping[str, Any]
+# PostgreSQL's text holds no NUL, so a name with one (from a URL, say) is a name of nothing.
+_NUL = "cannot contain NUL"
 
 
 class Session:
@@ -32,12 +35,20 @@ class Session:
     def rows(self, statement: Executable, *tables: Table) -> Sequence[Row[Any]]:
         """Return all rows of a query; ``tables`` names the gathered ones that it reads."""
         self.flush(*tables)
-        return self._execute(statement).all()  # type: ignore[no-any-return]
+        try:
+            found: Sequence[Row[Any]] = self._execute(statement).all()
+        except DataError as error:
+            if _NUL not in str(error.orig):
+                raise
+            self.broken = False  # refused by the driver before anything was sent
+            return []
+        return found
 
     def row(self, statement: Executable, *tables: Table) -> Row[Any] | None:
         """Return the first row of a query or None."""
         self.flush(*tables)
-        return self._execute(statement).first()  # type: ignore[no-any-return]
+        found = self.rows(statement)
+        return found[0] if found else None
 
     def write(self, statement: Executable) -> int:
         """Execute a change at once and return the number of rows it met."""

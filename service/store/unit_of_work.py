@@ -80,7 +80,7 @@ class UnitOfWork:
 
     def __init__(self, connection: Connection, clock: Clock | None, locked: frozenset[str] | None) -> None:
         self._connection = connection
-        self._session = session = Session(connection, may_write=locked is not None)
+        self.session = session = Session(connection, may_write=locked is not None)
         self._locked = locked or frozenset()
         self._clock = clock
         self._heads: dict[str, Head] | None = None
@@ -130,7 +130,7 @@ class UnitOfWork:
             content=content,
         )
         columns = ("chain", "sequence", "recorded_at", "actor", "kind", "previous", "hash", "body")
-        self._session.insert(entries, {name: getattr(entry, name) for name in columns})
+        self.session.insert(entries, {name: getattr(entry, name) for name in columns})
         self._read_heads()[chain] = Head(chain, entry.sequence, entry.hash, entry.recorded_at)
         self._moved.add(chain)
         self._latest = max(self._latest, entry.recorded_at)
@@ -140,7 +140,7 @@ class UnitOfWork:
     def revision(self) -> int:
         """Return the number that counts the acts which can change a verdict."""
         if self._revision is None:
-            row = self._session.row(select(revision.c.revision).where(revision.c.id == 1))
+            row = self.session.row(select(revision.c.revision).where(revision.c.id == 1))
             if row is None:
                 raise NotFound("the row of the revision is missing from the database")
             self._revision = int(row.revision)
@@ -151,19 +151,19 @@ class UnitOfWork:
         if PLANT not in self._locked:
             raise RuntimeError("an act that changes the revision holds the plant's chain")
         self._revision = self.revision() + 1
-        self._session.write(update(revision).where(revision.c.id == 1).values(revision=self._revision))
+        self.session.write(update(revision).where(revision.c.id == 1).values(revision=self._revision))
         return self._revision
 
     def begin_act(self) -> None:
         """Begin the next act of a batch: a moment of its own, and nothing written yet."""
         self._moment = None
-        self._writes_before = self._session.writes
+        self._writes_before = self.session.writes
         self.appended = []
 
     @property
     def act_left_traces(self) -> bool:
         """Say whether the act since ``begin_act`` wrote anything, or broke the transaction."""
-        return self._session.broken or self._session.writes != self._writes_before
+        return self.session.broken or self.session.writes != self._writes_before
 
     def commit(self) -> None:
         """Write what was gathered, move the heads, and commit."""
@@ -171,29 +171,29 @@ class UnitOfWork:
         for chain in sorted(self._moved):
             head = heads[chain]
             values = {"chain": chain, "sequence": head.sequence, "hash": head.hash}
-            self._session.upsert(chains, {**values, "recorded_at": head.recorded_at})
+            self.session.upsert(chains, {**values, "recorded_at": head.recorded_at})
         self._moved.clear()
-        self._session.flush_all()
+        self.session.flush_all()
         with driver_errors():
             self._connection.commit()
 
     def hold(self) -> None:
         """Take the locks on PostgreSQL; on SQLite the transaction itself is the lock."""
-        if self._session.postgresql:
+        if self.session.postgresql:
             self._lock_heads()
             # An act in the plant's chain excludes decisions for its moment; decisions exclude no other.
             # So the order of recorded_at is the order in which versions came into force and were used.
             strength = "UPDATE" if PLANT in self._locked else "SHARE"
             statement = text(f"SELECT revision FROM revision WHERE id = 1 FOR {strength}")
-            if (row := self._session.row(statement)) is not None:
+            if (row := self.session.row(statement)) is not None:
                 self._revision = int(row.revision)
         self._read_heads()
 
     def _lock_heads(self) -> None:
         query = select(chains.c.chain).where(chains.c.chain.in_(sorted(self._locked)))
-        if len(self._session.rows(query)) < len(self._locked):
-            self._session.row(select(func.pg_advisory_xact_lock(_NEW_CHAIN_LOCK)))
-        self._session.rows(query.order_by(chains.c.chain).with_for_update())
+        if len(self.session.rows(query)) < len(self._locked):
+            self.session.row(select(func.pg_advisory_xact_lock(_NEW_CHAIN_LOCK)))
+        self.session.rows(query.order_by(chains.c.chain).with_for_update())
 
     def _read_heads(self) -> dict[str, Head]:
         if self._heads is None:
@@ -204,14 +204,14 @@ class UnitOfWork:
     def _read_clock(self) -> datetime:
         if self._clock is not None:
             return self._clock()
-        if not self._session.postgresql:
+        if not self.session.postgresql:
             return system_clock()
         return self._database_clock()
 
     def _database_clock(self) -> datetime:
         """Return the database's time: asked once per transaction, then carried on by our own stop-watch."""
         if self._asked is None:
-            row = self._session.row(select(func.clock_timestamp().label("instant")))
+            row = self.session.row(select(func.clock_timestamp().label("instant")))
             assert row is not None
             self._asked = (row.instant, time.monotonic())
         instant, asked = self._asked

@@ -61,6 +61,13 @@ class Versions:
             query = query.where(versions.c.kind == kind)
         return [_stored(row) for row in self._session.rows(query.order_by(versions.c.kind, versions.c.code))]
 
+    def products(self, kind: str) -> dict[str, str]:
+        """Return every code of a kind, whatever the state of its versions, with the product it is for."""
+        query = select(versions.c.code, func.max(versions.c.product).label("product")).where(
+            versions.c.kind == kind, versions.c.product.is_not(None)
+        )
+        return {row.code: row.product for row in self._session.rows(query.group_by(versions.c.code))}
+
     def list(
         self,
         kind: str,
