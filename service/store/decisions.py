@@ -7,7 +7,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import asdict
 from typing import Any
 
-from sqlalchemy import Row, and_, select, tuple_
+from sqlalchemy import Row, and_, bindparam, select, tuple_
 
 from service.ledger import Entry
 from service.store.record import entry_of
@@ -16,6 +16,12 @@ from service.store.session import Session
 from service.store.tables import decisions, entries, lots, readings
 
 _IDENTITIES_PER_QUERY = 300
+_LOT = select(lots).where(lots.c.product == bindparam("of"), lots.c.lot == bindparam("named"))
+_READINGS = select(readings).where(
+    tuple_(readings.c.analyzer, readings.c.identity, readings.c.sample).in_(
+        bindparam("identities", expanding=True)
+    )
+)
 _SEQUENCE = re.compile(r"[1-9][0-9]{0,17}")
 
 
@@ -98,7 +104,7 @@ class Lots:
 
     def get(self, product: str, lot: str) -> StoredLot | None:
         """Return where a lot stands, or None when it was never judged."""
-        row = self._session.row(select(lots).where(lots.c.product == product, lots.c.lot == lot))
+        row = self._session.row(_LOT, of=product, named=lot)
         return None if row is None else StoredLot(**row._mapping)
 
     def upsert(
@@ -140,10 +146,9 @@ class Readings:
 
     def find(self, identities: Iterable[ReadingIdentity]) -> list[StoredReading]:
         """Return those of the identities that were used before."""
-        key = tuple_(readings.c.analyzer, readings.c.identity, readings.c.sample)
         found: list[StoredReading] = []
         for part in _parts(list(identities)):
-            rows = self._session.rows(select(readings).where(key.in_(part)), readings)
+            rows = self._session.rows(_READINGS, readings, identities=part)
             found.extend(StoredReading(**row._mapping) for row in rows)
         return found
 

@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from itertools import islice
 from typing import Any
 
-from sqlalchemy import LargeBinary, Row, cast, select, tuple_
+from sqlalchemy import LargeBinary, Row, bindparam, cast, select, tuple_
 
 from service.ledger import Entry, Head, StoredEntry
 from service.store.rows import StoredKey
@@ -18,6 +18,12 @@ LARGEST_PAGE = 1000
 # A body that somebody altered may be text by now; verification must be able to read it all the same.
 _AS_BYTES: list[Any] = [column for column in entries.c if column.name != "body"]
 _AS_BYTES.append(cast(entries.c.body, LargeBinary).label("body"))
+
+_ENTRY = select(entries).where(entries.c.chain == bindparam("of"), entries.c.sequence == bindparam("at"))
+_HEADS = select(chains).order_by(chains.c.chain)
+_KEYS = select(idempotency_keys).where(
+    tuple_(idempotency_keys.c.principal, idempotency_keys.c.key).in_(bindparam("pairs", expanding=True))
+)
 
 
 def entry_of(row: Row[Any]) -> Entry:
@@ -35,8 +41,7 @@ class Ledger:
 
     def entry(self, chain: str, sequence: int) -> Entry | None:
         """Return one entry."""
-        query = select(entries).where(entries.c.chain == chain, entries.c.sequence == sequence)
-        row = self._session.row(query, entries)
+        row = self._session.row(_ENTRY, entries, of=chain, at=sequence)
         return None if row is None else entry_of(row)
 
     def entries(self, chain: str, *, after: int = 0, limit: int = LARGEST_PAGE) -> list[Entry]:
@@ -63,7 +68,7 @@ class Ledger:
 
     def heads(self) -> dict[str, Head]:
         """Return the heads of all chains by chain."""
-        found = self._session.rows(select(chains).order_by(chains.c.chain))
+        found = self._session.rows(_HEADS)
         return {row.chain: Head(row.chain, row.sequence, row.hash, row.recorded_at) for row in found}
 
     def chain_names(self) -> list[str]:

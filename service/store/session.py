@@ -7,9 +7,10 @@ and at the commit: this is what makes a batch of acts cheap.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from functools import lru_cache
 from typing import Any
 
-from sqlalchemy import Connection, Executable, Row, Table, insert
+from sqlalchemy import Connection, Executable, Insert, Row, Table, insert
 from sqlalchemy.dialects.postgresql import insert as postgresql_insert
 from sqlalchemy.dialects.sqlite import insert as sqlite_insert
 from sqlalchemy.exc import DataError
@@ -32,11 +33,11 @@ class Session:
         self.broken = False
         self.postgresql = connection.dialect.name == "postgresql"
 
-    def rows(self, statement: Executable, *tables: Table) -> Sequence[Row[Any]]:
+    def rows(self, statement: Executable, *tables: Table, **parameters: Any) -> Sequence[Row[Any]]:
         """Return all rows of a query; ``tables`` names the gathered ones that it reads."""
         self.flush(*tables)
         try:
-            found: Sequence[Row[Any]] = self._execute(statement).all()
+            found: Sequence[Row[Any]] = self._execute(statement, parameters).all()
         except DataError as error:
             if _NUL not in str(error.orig):
                 raise
@@ -44,10 +45,9 @@ class Session:
             return []
         return found
 
-    def row(self, statement: Executable, *tables: Table) -> Row[Any] | None:
+    def row(self, statement: Executable, *tables: Table, **parameters: Any) -> Row[Any] | None:
         """Return the first row of a query or None."""
-        self.flush(*tables)
-        found = self.rows(statement)
+        found = self.rows(statement, *tables, **parameters)
         return found[0] if found else None
 
     def write(self, statement: Executable) -> int:
@@ -62,17 +62,14 @@ class Session:
 
     def upsert(self, table: Table, values: Values) -> None:
         """Insert a row or replace the columns of the one with its primary key, at once."""
-        maker: Any = postgresql_insert if self.postgresql else sqlite_insert
-        keys = [column.name for column in table.primary_key]
-        statement = maker(table).values(**values)
-        changes = {name: statement.excluded[name] for name in values if name not in keys}
-        self.write(statement.on_conflict_do_update(index_elements=keys, set_=changes))
+        self._count_write()
+        self._execute(_upsert(table, tuple(values), self.postgresql), values)
 
     def flush(self, *tables: Table) -> None:
         """Write the gathered rows of the tables named."""
         for table in tables:
             if rows := self._pending.pop(table, None):
-                self._execute(insert(table), rows)
+                self._execute(_insert(table), rows)
 
     def flush_all(self) -> None:
         """Write all gathered rows."""
@@ -91,3 +88,19 @@ class Session:
             # After a failed statement PostgreSQL takes no further one in this transaction.
             self.broken = True
             raise
+
+
+# Statements are built once: building them costs more than running them.
+@lru_cache
+def _insert(table: Table) -> Insert:
+    return insert(table)
+
+
+@lru_cache
+def _upsert(table: Table, names: tuple[str, ...], postgresql: bool) -> Insert:
+    maker: Any = postgresql_insert if postgresql else sqlite_insert
+    statement = maker(table)
+    keys = [column.name for column in table.primary_key]
+    changes = {name: statement.excluded[name] for name in names if name not in keys}
+    upsert: Insert = statement.on_conflict_do_update(index_elements=keys, set_=changes)
+    return upsert

@@ -14,7 +14,7 @@ from contextlib import contextmanager
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
-from sqlalchemy import Connection, func, select, text, update
+from sqlalchemy import Connection, func, select, update
 
 from service.errors import NotFound
 from service.ledger import GENESIS, Entry, Head, format_instant, write_entry
@@ -64,6 +64,7 @@ __all__ = [
 
 PLANT = "plant"
 """The chain of approvals, master data, people and studies."""
+_REVISION = select(revision.c.revision).where(revision.c.id == 1)
 _NEW_CHAIN_LOCK = 0x53484D4B
 """PostgreSQL advisory lock held while a chain gets its first entry: there is no head row to lock yet."""
 
@@ -140,7 +141,7 @@ class UnitOfWork:
     def revision(self) -> int:
         """Return the number that counts the acts which can change a verdict."""
         if self._revision is None:
-            row = self.session.row(select(revision.c.revision).where(revision.c.id == 1))
+            row = self.session.row(_REVISION)
             if row is None:
                 raise NotFound("the row of the revision is missing from the database")
             self._revision = int(row.revision)
@@ -183,8 +184,7 @@ class UnitOfWork:
             self._lock_heads()
             # An act in the plant's chain excludes decisions for its moment; decisions exclude no other.
             # So the order of recorded_at is the order in which versions came into force and were used.
-            strength = "UPDATE" if PLANT in self._locked else "SHARE"
-            statement = text(f"SELECT revision FROM revision WHERE id = 1 FOR {strength}")
+            statement = _REVISION.with_for_update(read=PLANT not in self._locked)
             if (row := self.session.row(statement)) is not None:
                 self._revision = int(row.revision)
         self._read_heads()

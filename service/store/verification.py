@@ -15,7 +15,6 @@ from service.store.tables import decisions, entries, idempotency_keys, readings,
 from service.store.triggers import missing_triggers
 from service.store.unit_of_work import Database
 
-
 DECISION = "decision"
 """The kind of the entries that have a row in ``decisions``, all of them and no others."""
 
