@@ -34,6 +34,8 @@ class Act:
     def __post_init__(self) -> None:
         if (self.key is None) != (self.fingerprint is None):
             raise ValueError("an idempotency key comes with a fingerprint")
+        if not (self.principal + (self.key or "")).isprintable():
+            raise ValueError("a principal and a key are printable text")
 
 
 @dataclass(frozen=True)

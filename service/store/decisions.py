@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from dataclasses import asdict
 from typing import Any
 
@@ -15,13 +15,7 @@ from service.store.rows import ReadingIdentity, StoredDecision, StoredLot, Store
 from service.store.session import Session
 from service.store.tables import decisions, entries, lots, readings
 
-_IDENTITIES_PER_QUERY = 300
 _LOT = select(lots).where(lots.c.product == bindparam("of"), lots.c.lot == bindparam("named"))
-_READINGS = select(readings).where(
-    tuple_(readings.c.analyzer, readings.c.identity, readings.c.sample).in_(
-        bindparam("identities", expanding=True)
-    )
-)
 _SEQUENCE = re.compile(r"[1-9][0-9]{0,17}")
 
 
@@ -146,19 +140,12 @@ class Readings:
 
     def find(self, identities: Iterable[ReadingIdentity]) -> list[StoredReading]:
         """Return those of the identities that were used before."""
-        found: list[StoredReading] = []
-        for part in _parts(list(identities)):
-            rows = self._session.rows(_READINGS, readings, identities=part)
-            found.extend(StoredReading(**row._mapping) for row in rows)
-        return found
+        names = ("analyzer", "identity", "sample")
+        rows = self._session.rows_among(readings, names, list(identities))
+        return [StoredReading(**row._mapping) for row in rows]
 
     def add(self, identities: Iterable[ReadingIdentity], entry: Entry) -> None:
         """Mark readings as used by an entry."""
         for analyzer, identity, sample in identities:
             values = {"analyzer": analyzer, "identity": identity, "sample": sample}
             self._session.insert(readings, {**values, "chain": entry.chain, "sequence": entry.sequence})
-
-
-def _parts(identities: Sequence[ReadingIdentity]) -> Iterable[Sequence[ReadingIdentity]]:
-    for start in range(0, len(identities), _IDENTITIES_PER_QUERY):
-        yield identities[start : start + _IDENTITIES_PER_QUERY]

@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from itertools import islice
 from typing import Any
 
-from sqlalchemy import LargeBinary, Row, bindparam, cast, select, tuple_
+from sqlalchemy import LargeBinary, Row, bindparam, cast, select
 
 from service.ledger import Entry, Head, StoredEntry
 from service.store.rows import StoredKey
@@ -21,9 +21,6 @@ _AS_BYTES.append(cast(entries.c.body, LargeBinary).label("body"))
 
 _ENTRY = select(entries).where(entries.c.chain == bindparam("of"), entries.c.sequence == bindparam("at"))
 _HEADS = select(chains).order_by(chains.c.chain)
-_KEYS = select(idempotency_keys).where(
-    tuple_(idempotency_keys.c.principal, idempotency_keys.c.key).in_(bindparam("pairs", expanding=True))
-)
 
 
 def entry_of(row: Row[Any]) -> Entry:
@@ -115,10 +112,7 @@ class Keys:
 
     def prefetch(self, pairs: list[tuple[str, str]]) -> None:
         """Look up many keys by one query; a writing unit of work holds the lock that keeps this true."""
-        table = idempotency_keys
-        found = self._session.rows(
-            select(table).where(tuple_(table.c.principal, table.c.key).in_(pairs)), table
-        )
+        found = self._session.rows_among(idempotency_keys, ("principal", "key"), pairs)
         self._known.update(dict.fromkeys(pairs))
         for row in found:
             self._known[row.principal, row.key] = StoredKey(row.fingerprint, row.chain, row.sequence)

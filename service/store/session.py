@@ -6,11 +6,12 @@ and at the commit: this is what makes a batch of acts cheap.
 
 from __future__ import annotations
 
+import json
 from collections.abc import Mapping, Sequence
 from functools import lru_cache
 from typing import Any
 
-from sqlalchemy import Connection, Executable, Insert, Row, Table, insert
+from sqlalchemy import Connection, Executable, Insert, Row, Table, TextClause, insert, text
 from sqlalchemy.dialects.postgresql import insert as postgresql_insert
 from sqlalchemy.dialects.sqlite import insert as sqlite_insert
 from sqlalchemy.exc import DataError
@@ -44,6 +45,17 @@ class Session:
             self.broken = False  # refused by the driver before anything was sent
             return []
         return found
+
+    def rows_among(
+        self, table: Table, names: tuple[str, ...], wanted: Sequence[tuple[str, ...]]
+    ) -> Sequence[Row[Any]]:
+        """Return the rows whose named text columns are one of the tuples wanted, by one index search each."""
+        if not wanted:
+            return []
+        if not self.postgresql:
+            return self.rows(_among_on_sqlite(table, names), table, wanted=json.dumps(wanted))
+        columns = {f"w{place}": list(values) for place, values in enumerate(zip(*wanted, strict=True))}
+        return self.rows(_among_on_postgresql(table, names), table, **columns)
 
     def row(self, statement: Executable, *tables: Table, **parameters: Any) -> Row[Any] | None:
         """Return the first row of a query or None."""
@@ -104,3 +116,19 @@ def _upsert(table: Table, names: tuple[str, ...], postgresql: bool) -> Insert:
     changes = {name: statement.excluded[name] for name in names if name not in keys}
     upsert: Insert = statement.on_conflict_do_update(index_elements=keys, set_=changes)
     return upsert
+
+
+# Not `(a, b) IN (...)`: for more than one tuple SQLite reads the whole table then.
+@lru_cache
+def _among_on_sqlite(table: Table, names: tuple[str, ...]) -> TextClause:
+    pairs = (f"t.\"{name}\" = json_extract(w.value, '$[{place}]')" for place, name in enumerate(names))
+    # CROSS JOIN keeps SQLite from turning the order of the two round
+    return text(f"SELECT t.* FROM json_each(:wanted) w CROSS JOIN {table.name} t WHERE {' AND '.join(pairs)}")
+
+
+@lru_cache
+def _among_on_postgresql(table: Table, names: tuple[str, ...]) -> TextClause:
+    arrays = ", ".join(f"CAST(:w{place} AS text[])" for place in range(len(names)))
+    columns = ", ".join(f"w{place}" for place in range(len(names)))
+    pairs = " AND ".join(f't."{name}" = w.w{place}' for place, name in enumerate(names))
+    return text(f"SELECT t.* FROM unnest({arrays}) AS w({columns}) JOIN {table.name} t ON {pairs}")

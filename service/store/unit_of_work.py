@@ -91,6 +91,7 @@ class UnitOfWork:
         self._asked: tuple[datetime, float] | None = None
         self._revision: int | None = None
         self._writes_before = 0
+        self.revision_moved = False
         self.appended: list[Entry] = []
         self.ledger = Ledger(session)
         self.keys = Keys(session)
@@ -152,6 +153,7 @@ class UnitOfWork:
         if PLANT not in self._locked:
             raise RuntimeError("an act that changes the revision holds the plant's chain")
         self._revision = self.revision() + 1
+        self.revision_moved = True
         self.session.write(update(revision).where(revision.c.id == 1).values(revision=self._revision))
         return self._revision
 
