@@ -6,6 +6,7 @@ from typing import Any
 
 from marshmallow import ValidationError, validates_schema
 
+from budgets.levels import LEVELS
 from service.documents import (
     BudgetComponent,
     BudgetDocument,
@@ -18,19 +19,6 @@ from service.schemas.base import StrictSchema, Wrong, complaint
 from service.schemas.evidence import EvidenceField
 from service.schemas.fields import ByKey, Choice, Code, Count, Later, Name, Number, Part, Parts, Text
 from service.schemas.master import BoundsSchema
-
-# The same words as budgets.components.LEVELS (a test holds them together).
-LEVELS = (
-    "reading",
-    "presentation",
-    "increment",
-    "sample",
-    "session",
-    "instrument",
-    "lot",
-    "calibration",
-    "reference",
-)
 
 
 class QuantitySchema(StrictSchema):

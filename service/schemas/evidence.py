@@ -8,21 +8,10 @@ from typing import Any
 
 from marshmallow import fields
 
+from budgets.declarations import DISTRIBUTIONS, MEANINGS
 from service.documents import DeclaredEvidence, StudyEvidence
 from service.schemas.base import StrictSchema, complaint, got
-from service.schemas.fields import Code, Count, Name, Number, Part, Text, _Stating
-
-# In the order in which a form would ask.
-MEANINGS = (
-    "standard_deviation",
-    "mean_of_determinations",
-    "expanded",
-    "expanded_with_probability",
-    "repeatability_limit",
-    "reproducibility_limit",
-    "half_width",
-    "resolution",
-)
+from service.schemas.fields import Choice, Code, Count, Name, Number, Part, Text, _Stating
 
 
 class FactorField(_Stating, fields.Raw):
@@ -46,8 +35,8 @@ class FactorField(_Stating, fields.Raw):
 class DeclarationSchema(StrictSchema):
     """A stated figure and what it means; which options belong to which meaning is judged by budgets."""
 
-    meaning = Name(
-        required=True, about="What the figure means: " + ", ".join(MEANINGS) + ". A bare figure is refused."
+    meaning = Choice(
+        *MEANINGS, later=("relative",), required=True, about="What the figure means; a bare one is refused."
     )
     value = Number(required=True, least=0)
     unit = Text(32)
@@ -58,10 +47,11 @@ class DeclarationSchema(StrictSchema):
     degrees_of_freedom = Number(above=0)
     factor = FactorField()
     repeatability_limit = Number(least=0)
-    distribution = Name()
+    distribution = Choice(*DISTRIBUTIONS)
     top_to_base_ratio = Number(least=0, most=1)
     reliability = Number(above=0, about="Relative uncertainty of the figure itself, as 0.25.")
     document = Text(200)
+    title = Text(200)
 
 
 class StudyEvidenceSchema(StrictSchema):
@@ -86,7 +76,10 @@ class EvidenceField(_Stating, fields.Raw):
     expected = "an object with study and estimate, or with a declaration"
 
     def __init__(self, **kwargs: Any) -> None:
-        super().__init__(schema={}, **kwargs)
+        names = ("StudyEvidence", "DeclaredEvidence")
+        either: list[dict[str, Any]] = [{"$ref": f"#/components/schemas/{name}"} for name in names]
+        null = [{"type": "null"}] if kwargs.get("allow_none") else []
+        super().__init__(schema={"oneOf": either + null}, **kwargs)
         self._study, self._declared = StudyEvidenceSchema(), DeclaredEvidenceSchema()
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:

@@ -1,6 +1,6 @@
 """The fields of all documents: numbers are numbers, texts are texts, and each says what it expects.
 
-Limits stand in ``metadata`` in the words of JSON Schema, so that openapi.yaml shows what is checked here.
+Each keeps its limits as ``form``, in the words of JSON Schema, so that openapi.yaml shows what is checked.
 """
 
 from __future__ import annotations
@@ -35,8 +35,8 @@ class _Stating(fields.Field[Any]):
     def __init__(
         self, *args: Any, schema: Mapping[str, Any] | None = None, about: str = "", **kwargs: Any
     ) -> None:
-        metadata = {**(schema or {}), **({"description": about} if about else {})}
-        super().__init__(*args, metadata=metadata, **kwargs)
+        super().__init__(*args, metadata={"description": about} if about else {}, **kwargs)
+        self.form: dict[str, Any] = dict(schema or {})
 
     def make_error(self, key: str, **_: Any) -> ValidationError:
         """Replace marshmallow's texts: a missing value, null, or (from a base class) a wrong form."""
@@ -319,7 +319,7 @@ class ByKey(_Stating, fields.Dict):
         **kwargs: Any,
     ) -> None:
         inner = each if isinstance(each, fields.Field) else Part(each)
-        names: dict[str, Any] = {k: x for k, x in key.metadata.items() if k != "description"}
+        names: dict[str, Any] = getattr(key, "form", {})
         size: dict[str, Any] = {"minProperties": least, "maxProperties": most, "propertyNames": names}
         super().__init__(keys=key, values=inner, schema=size, **kwargs)
         self.key_field: fields.Field[Any]

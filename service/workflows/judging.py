@@ -322,6 +322,6 @@ def _notices(judged: dict[str, Measured], recorded_at: str) -> list[dict[str, An
             notices[budget.document.code] = {
                 "code": "evidence-lapses",
                 "at": budget.lapses_at,
-                "detail": f"The evidence behind {budget.document.code} serves {left.days} more days; renew it.",
+                "detail": f"The evidence behind {budget.document.code} serves {left.days} more days.",
             }
     return list(notices.values())

@@ -17,7 +17,7 @@ def verification(services: Services, actor: Actor) -> dict[str, Any]:
     return {
         "whole": result.finding is None,
         "chains": [
-            {"chain": chain, "entries": entries, "hash": head} for chain, entries, head in result.chains
+            {"chain": chain.chain, "entries": chain.entries, "hash": chain.hash} for chain in result.chains
         ],
         "finding": None if result.finding is None else str(result.finding),
     }

@@ -1,4 +1,4 @@
-"""Whether a decision request is understood. Everything that is not is named at once, and nothing is recorded."""
+"""Whether a decision request is understood; everything that is not is named at once."""
 
 from __future__ import annotations
 

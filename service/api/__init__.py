@@ -1,0 +1,73 @@
+"""The HTTP API: a view is a typed adapter; it holds no rule and no SQL."""
+
+from __future__ import annotations
+
+from typing import Any, cast
+
+import yaml
+from flask import Flask, Response, current_app, request
+
+from service.api import (
+    acceptance_limits,
+    budgets,
+    converters,
+    decisions,
+    health,
+    ledger,
+    lots,
+    master_data,
+    plant,
+    requests,
+    specifications,
+    studies,
+)
+from service.api.description import describe_api
+from service.api.reader import LARGEST_BODY
+from service.api.smorest import ShoalmarkApi, is_api_path
+
+__all__ = ["openapi_document", "openapi_text", "register"]
+
+BLUEPRINTS = (
+    decisions.blueprint,
+    lots.blueprint,
+    acceptance_limits.blueprint,
+    studies.blueprint,
+    budgets.blueprint,
+    specifications.blueprint,
+    *master_data.BLUEPRINTS,
+    plant.blueprint,
+    ledger.blueprint,
+)
+
+
+def register(app: Flask) -> None:
+    """Put the API into an application whose ``shoalmark`` extension holds the services."""
+    app.config["MAX_CONTENT_LENGTH"] = LARGEST_BODY
+    converters.register(app)
+    api = ShoalmarkApi(app, spec_kwargs=describe_api())
+    app.extensions["shoalmark.api"] = api
+    for blueprint in BLUEPRINTS:
+        api.register_blueprint(blueprint)
+    app.register_blueprint(health.blueprint)
+    app.add_url_rule("/openapi.yaml", "openapi", _serve_description, methods=["GET"])
+    app.before_request(_authenticate)
+
+
+def openapi_document(app: Flask) -> dict[str, Any]:
+    """Write the description of the API that ``app`` serves (OpenAPI 3.1)."""
+    api = cast(ShoalmarkApi, app.extensions["shoalmark.api"])
+    return cast(dict[str, Any], api.spec.to_dict())
+
+
+def openapi_text(app: Flask) -> str:
+    """Write the description as the YAML text of openapi.yaml."""
+    return yaml.safe_dump(openapi_document(app), sort_keys=False, allow_unicode=True, width=110)
+
+
+def _authenticate() -> None:
+    if is_api_path(request.path):
+        requests.authenticate()
+
+
+def _serve_description() -> Response:
+    return Response(openapi_text(current_app), mimetype="application/yaml")

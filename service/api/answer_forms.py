@@ -1,0 +1,321 @@
+"""The forms of answers in the words of JSON Schema, for openapi.yaml.
+
+Answers are written by workflows, and rebuilt from entries for ever, so nothing here writes them; tests hold
+real answers against these forms. Members may be added to answers later, so the forms stay open.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+Form = dict[str, Any]
+
+
+def ref(name: str) -> Form:
+    """Refer to a form by name."""
+    return {"$ref": f"#/components/schemas/{name}"}
+
+
+def _object(about: str, required: Form, **optional: Form) -> Form:
+    form: Form = {"type": "object", "description": about, "properties": {**required, **optional}}
+    return {**form, "required": list(required)}
+
+
+def _list(items: Form, about: str = "") -> Form:
+    return {"type": "array", "items": items, **({"description": about} if about else {})}
+
+
+def _or_null(form: Form) -> Form:
+    if "$ref" in form:
+        return {"anyOf": [form, {"type": "null"}]}
+    return {**form, "type": [form["type"], "null"]}
+
+
+def page_of(items: Form) -> Form:
+    """A part of a list, newest first."""
+    return _object("A part of a list, newest first.", {"items": _list(items), "next": _CURSOR})
+
+
+_TEXT: Form = {"type": "string"}
+_CODE: Form = {"type": "string"}
+_WHOLE: Form = {"type": "integer"}
+_YES: Form = {"type": "boolean"}
+_NUMBER: Form = {"type": "number"}
+_LIMIT: Form = {"type": ["number", "null"], "description": "null: no such limit"}
+_NUMBER_OR_NULL: Form = {"type": ["number", "null"]}
+_TEXT_OR_NULL: Form = {"type": ["string", "null"]}
+_INSTANT: Form = {"type": "string", "format": "date-time"}
+_CURSOR: Form = {
+    "type": ["string", "null"],
+    "description": "Give as cursor for the next part; null: the end.",
+}
+_HASH: Form = {"type": "string", "pattern": "^[0-9a-f]{64}$"}
+_OUTCOME: Form = {"type": "string", "enum": ["release", "hold", "reject"]}
+_STATE: Form = {"type": "string", "enum": ["draft", "submitted", "in_force", "superseded", "withdrawn"]}
+_REFERENCE = _object("A version.", {"code": _CODE, "version": {"type": ["integer", "null"]}})
+_GUARD_BAND = {**_object("Positive: acceptance inside tolerance.", {"lower": _LIMIT, "upper": _LIMIT})}
+
+_UNCERTAINTY: Form = {
+    "combined_standard_uncertainty": _NUMBER_OR_NULL,
+    "effective_degrees_of_freedom": {"type": ["number", "null"], "description": "null: infinite"},
+    "coverage_probability": _NUMBER_OR_NULL,
+    "coverage_factor": _NUMBER_OR_NULL,
+    "expanded_uncertainty": _NUMBER_OR_NULL,
+}
+_LIMITS: Form = {
+    "lower_tolerance_limit": _LIMIT,
+    "upper_tolerance_limit": _LIMIT,
+    "lower_acceptance_limit": _LIMIT,
+    "upper_acceptance_limit": _LIMIT,
+    "guard_band": _or_null(_GUARD_BAND),
+}
+_BUDGET = _object("The budget version used.", {"code": _CODE, "version": _WHOLE, "digest": _TEXT})
+
+_FAULT = _object(
+    "One thing that is wrong.",
+    {"detail": {"type": "string", "description": "What was got."}},
+    pointer={"type": "string", "description": "Where in the body (RFC 6901, as URI fragment)."},
+    parameter={"type": "string", "description": "Which parameter of the query."},
+    header={"type": "string", "description": "Which header."},
+    expected={"type": "string", "description": "What would be right."},
+)
+
+_PROBLEM = _object(
+    "A problem document (RFC 9457). Nothing was recorded unless the type is /problems/unavailable.",
+    {"type": _TEXT, "title": _TEXT, "status": _WHOLE, "instance": _TEXT, "detail": _TEXT},
+    errors=_list(_FAULT, "All faults at once."),
+    link={"type": "string", "description": "What stands in the way."},
+)
+
+_ENTRY = _object("Where it is recorded; keep the hash.", {"chain": _CODE, "sequence": _WHOLE, "hash": _HASH})
+
+_REASON = _object(
+    "Why a lot is not released.",
+    {
+        "code": _TEXT,
+        "characteristic": _TEXT_OR_NULL,
+        "specification": _or_null(_REFERENCE),
+        "detail": _TEXT,
+        "next": {"type": "string", "description": "What to do now."},
+    },
+)
+
+_VERDICT = _object(
+    "One characteristic judged against one specification.",
+    {
+        "characteristic": _TEXT_OR_NULL,
+        "unit": _TEXT_OR_NULL,
+        "specification": _or_null(_REFERENCE),
+        "outcome": _OUTCOME,
+        "estimate": _NUMBER_OR_NULL,
+        **_UNCERTAINTY,
+        **_LIMITS,
+        "acceptance_limits": _TEXT_OR_NULL,
+        "conformance_probability": _NUMBER_OR_NULL,
+        "specific_consumers_risk": _NUMBER_OR_NULL,
+        "decision_rule": {"type": ["object", "null"]},
+        "budget": _or_null(_BUDGET),
+        "samples": _WHOLE,
+        "readings": _WHOLE,
+        "display": {"type": ["object", "null"], "description": "Rounded texts for people."},
+    },
+)
+
+_JUDGED: Form = {
+    "recorded_at": _INSTANT,
+    "lot": _TEXT,
+    "product": _CODE,
+    "line": _CODE,
+    "round": _WHOLE,
+    "rounds_left": _WHOLE,
+    "outcome": _OUTCOME,
+    "reasons": _list(ref("Reason")),
+    "verdicts": _list(ref("Verdict")),
+    "not_judged": _list(_TEXT),
+    "notices": _list(_object("What will need attention.", {"code": _TEXT, "at": _INSTANT, "detail": _TEXT})),
+    "caution": _TEXT,
+}
+
+_DECISION = _object(
+    "A recorded decision.",
+    {"id": _TEXT, "recorded": {"const": True}, **_JUDGED, "entry": ref("Entry")},
+    request=ref("DecisionRequest"),
+)
+
+_DECISION_PREVIEW = _object(
+    "What a decision would answer; nothing is recorded.",
+    {"id": {"type": "null"}, "recorded": {"const": False}, **_JUDGED, "entry": {"type": "null"}},
+)
+
+
+def _version(document: str) -> Form:
+    return _object(
+        "A version of a document.",
+        {
+            "code": _CODE,
+            "version": _WHOLE,
+            "state": _STATE,
+            "revision": {"type": "integer", "description": "The ETag, without its quotes."},
+            "document": ref(document),
+            "drafted_by": _TEXT,
+            "submitted_by": _TEXT_OR_NULL,
+            "approved_by": _TEXT_OR_NULL,
+            "in_force_from": _TEXT_OR_NULL,
+            "lapses_at": _TEXT_OR_NULL,
+        },
+        entry=ref("Entry"),
+    )
+
+
+_EVALUATION = _object(
+    "What a study or declaration gives.",
+    {
+        "design": _TEXT,
+        "estimates": _list(
+            _object(
+                "An estimate as a sum over independent mean squares.",
+                {
+                    "name": _TEXT,
+                    "variance": _NUMBER_OR_NULL,
+                    "standard_uncertainty": _NUMBER_OR_NULL,
+                    "degrees_of_freedom": _NUMBER_OR_NULL,
+                    "value": _NUMBER_OR_NULL,
+                    "terms": _list({"type": "object"}),
+                    "interval": {"type": ["object", "null"]},
+                    "may_feed": _list(_TEXT, "At which levels a component may use it."),
+                },
+            )
+        ),
+        "used": _WHOLE,
+        "set_aside": _list({"type": "object"}),
+        "diagnostics": {"type": "object"},
+        "warnings": _list(_object("In plain words.", {"code": _TEXT, "detail": _TEXT})),
+    },
+)
+
+_BUDGET_FIGURES = _object(
+    "A budget's figures for its planned procedure.",
+    {
+        "code": _CODE,
+        "version": _WHOLE,
+        "state": _STATE,
+        "unit": _TEXT,
+        "digest": _TEXT,
+        "serves_until": _TEXT_OR_NULL,
+        "bias": _NUMBER,
+        "bias_treatment": _TEXT,
+        "samples": _WHOLE,
+        "readings_per_sample": _WHOLE,
+        **_UNCERTAINTY,
+        "components": _list({"type": "object"}),
+    },
+)
+
+_ACCEPTANCE_LIMITS = _object(
+    "What a reading must meet now, per analyzer, specification and procedure.",
+    {
+        "product": _CODE,
+        "characteristic": _CODE,
+        "unit": _TEXT,
+        "items": _list(
+            _object(
+                "The limits for one procedure.",
+                {
+                    "analyzer": _CODE,
+                    "specification": _REFERENCE,
+                    "budget": _BUDGET,
+                    "procedure": _object("How many.", {"samples": _WHOLE, "readings_per_sample": _WHOLE}),
+                    "planned": _YES,
+                    "state": {"type": "string", "enum": ["in_force", "lapsed"]},
+                    "lapses_at": _TEXT_OR_NULL,
+                    **_LIMITS,
+                    **_UNCERTAINTY,
+                },
+            )
+        ),
+    },
+)
+
+_LOT: Form = {
+    "product": _CODE,
+    "lot": _TEXT,
+    "line": _CODE,
+    "outcome": _OUTCOME,
+    "rounds": _WHOLE,
+    "decision": _TEXT,
+    "recorded_at": _INSTANT,
+}
+
+_VERIFICATION = _object(
+    "Whether the record is whole.",
+    {
+        "whole": _YES,
+        "chains": _list(_object("A chain.", {"chain": _CODE, "entries": _WHOLE, "hash": _or_null(_HASH)})),
+        "finding": {"type": ["string", "null"], "description": "The first altered entry, and what is wrong."},
+    },
+)
+
+_STUDY_SUMMARY = _object(
+    "A study without its data.",
+    {
+        "code": _CODE,
+        "design": _TEXT,
+        "product": _CODE,
+        "characteristic": _CODE,
+        "unit": _TEXT,
+        "done_on": _TEXT,
+        "serves_until": _TEXT_OR_NULL,
+    },
+)
+
+ANSWERS: dict[str, Form] = {
+    "Problem": _PROBLEM,
+    "Entry": _ENTRY,
+    "Reason": _REASON,
+    "Verdict": _VERDICT,
+    "Decision": _DECISION,
+    "DecisionPreview": _DECISION_PREVIEW,
+    "DecisionPage": page_of(ref("Decision")),
+    "Evaluation": _EVALUATION,
+    "StudyAnswer": _object(
+        "A study with its evaluation.",
+        {"recorded": _YES, "study": ref("Study"), "evaluation": ref("Evaluation")},
+        entry=ref("Entry"),
+    ),
+    "StudyPage": page_of(_STUDY_SUMMARY),
+    "BudgetFigures": _BUDGET_FIGURES,
+    "AcceptanceLimits": _ACCEPTANCE_LIMITS,
+    "Lot": _object("How a lot stands.", {**_LOT, "last_decision": ref("Decision")}),
+    "LotPage": page_of(_object("How a lot stands.", _LOT)),
+    "Verification": _VERIFICATION,
+    **{
+        f"{name}{suffix}": form
+        for name, document in (
+            ("SpecificationVersion", "Specification"),
+            ("BudgetVersion", "BudgetDocument"),
+            ("PlantVersion", "Plant"),
+        )
+        for suffix, form in (
+            ("", _version(document)),
+            ("Page", page_of(ref(name))),
+            (
+                "Summary",
+                _object(
+                    "The versions that matter now.",
+                    {
+                        "code": _CODE,
+                        "newest": _WHOLE,
+                        "in_force": _or_null(ref(name)),
+                        "open": _or_null(ref(name)),
+                    },
+                ),
+            ),
+        )
+    },
+    **{
+        f"{name}Page": page_of(ref(name))
+        for name in ("Product", "Characteristic", "Line", "Analyzer", "Calibration", "Laboratory")
+    },
+    "Alive": _object("The process answers.", {"alive": {"const": True}}),
+    "Ready": _object("Whether this process can decide.", {"ready": _YES}),
+}

@@ -1,0 +1,35 @@
+"""The head of openapi.yaml."""
+
+from __future__ import annotations
+
+from importlib.metadata import PackageNotFoundError, version
+from typing import Any
+
+_ABOUT = """\
+Judges the lots of a production line against specifications, from uncertainty budgets in force, and keeps
+every answer in a record that cannot be altered unseen.
+
+What cannot be understood is a problem document (RFC 9457) that names every fault, and nothing is recorded.
+What is understood but not provable is a recorded `hold` with its reasons. No answer, a time-out or a 5xx
+means hold: send the same request again under the same `Idempotency-Key` to find the truth.
+
+Numbers are JSON numbers, instants RFC 3339 with their offset, units are named with every figure. Members may
+be added to answers; unknown members of requests are refused. Answers speak of the named characteristics
+only; they are no safety clearance.
+"""
+
+
+def describe_api() -> dict[str, Any]:
+    """Give title, version and what holds for all operations."""
+    try:
+        number = version("shoalmark")
+    except PackageNotFoundError:  # run from a folder without installation
+        number = "0"
+    return {
+        "title": "Shoalmark",
+        "version": number,
+        "openapi_version": "3.1.0",
+        "info": {"description": _ABOUT},
+        "security": [{"token": []}],
+        "servers": [{"url": "/"}],
+    }

@@ -1,0 +1,29 @@
+"""Whether this process is alive and able to decide. Outside of the API's prefix, without a token."""
+
+from __future__ import annotations
+
+from flask import Blueprint, Response
+
+from service.api import requests
+from service.api.answers import answer
+from service.errors import Unavailable
+from service.workflows import health
+
+blueprint = Blueprint("health", __name__)
+
+
+@blueprint.get("/healthz")
+def get_health() -> Response:
+    """Say that the process answers."""
+    return answer({"alive": True})
+
+
+@blueprint.get("/readyz")
+def get_readiness() -> Response:
+    """Say whether this process can record decisions now."""
+    try:
+        return answer(health.ready(requests.services()))
+    except Unavailable as error:
+        response = answer({"ready": False, "detail": error.message}, 503)
+        response.headers["Retry-After"] = str(error.retry_after)
+        return response

@@ -1,0 +1,154 @@
+"""What views read from a request besides the body: who asks, the key, preconditions, the query."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import re
+from typing import Any, TypeVar, cast
+
+from flask import current_app, g, request
+
+from service.api.reader import request_document
+from service.documents import Actor
+from service.errors import Fault, InvalidRequest, KeyMissing, NotFound, StaleVersion, Unauthenticated
+from service.schemas import load
+from service.workflows import accounts
+from service.workflows.recording import Request
+from service.workflows.services import Services
+
+T = TypeVar("T")
+
+KEY_HEADER = "Idempotency-Key"
+KEY_PATTERN = r"[!-~]{8,64}"
+DEFAULT_LIMIT, LARGEST_LIMIT = 50, 500
+_KEY = re.compile(KEY_PATTERN)
+_ETAG = re.compile(r'"([1-9][0-9]{0,17})"')
+
+
+def services() -> Services:
+    """The services that create_app put together."""
+    return cast(Services, current_app.extensions["shoalmark"])
+
+
+def authenticate() -> None:
+    """Find the actor behind the bearer token, before any view. Raises Unauthenticated."""
+    scheme, _, token = request.headers.get("Authorization", "").partition(" ")
+    if scheme.lower() != "bearer" or not token.strip():
+        raise Unauthenticated("The header Authorization has to carry a bearer token.")
+    g.actor = accounts.authenticate(services(), token.strip())
+
+
+def actor() -> Actor:
+    """Who makes the request at hand."""
+    return cast(Actor, g.actor)
+
+
+def body(kind: type[T]) -> T:
+    """Read the body as a document. Raises Unreadable, TooLarge or InvalidRequest."""
+    g.body = request_document()
+    return load(kind, g.body)
+
+
+def forget_signature() -> None:
+    """Keep a password out of the fingerprint, which is stored."""
+    g.body = {name: value for name, value in g.body.items() if name != "signature"}
+
+
+def recording() -> Request:
+    """Give key and fingerprint of a call that records. Raises KeyMissing."""
+    key = request.headers.get(KEY_HEADER)
+    if key is None or _KEY.fullmatch(key) is None:
+        raise KeyMissing("1 fault; nothing was recorded.", faults=(_key_fault(key),))
+    return Request(key, _fingerprint())
+
+
+def replaceable() -> Request:
+    """Give key and fingerprint of a PUT, where the key may be left out. Raises KeyMissing."""
+    return recording() if KEY_HEADER in request.headers else Request(None, _fingerprint())
+
+
+def _key_fault(key: str | None) -> Fault:
+    return Fault(
+        "missing" if key is None else f"got {len(key)} characters",
+        "8 to 64 printable ASCII characters without blanks, new for each thing to record",
+        header=KEY_HEADER,
+    )
+
+
+def _fingerprint() -> str:
+    """Say in 64 characters what a request asks: method, path and parsed body (so blanks do not matter)."""
+    document = json.dumps(g.get("body"), sort_keys=True, separators=(",", ":"), ensure_ascii=False)
+    said = f"{request.method} {request.path}\n{document}"
+    return hashlib.sha256(said.encode()).hexdigest()
+
+
+def if_match() -> int | None:
+    """Give the revision that If-Match names; None without the header. Raises StaleVersion.
+
+    An ETag that we never gave out names a document that does not stand any more.
+    """
+    value = request.headers.get("If-Match")
+    if value is None:
+        return None
+    found = _ETAG.fullmatch(value.strip())
+    if found is None:
+        raise StaleVersion(f'If-Match has to repeat one ETag as it was read, as "3"; got {value[:60]}.')
+    return int(found.group(1))
+
+
+def query(*names: str) -> dict[str, str]:
+    """Give the query's parameters, each of which has to be one of ``names`` and there once."""
+    faults = []
+    for name, values in request.args.lists():
+        if name not in names:
+            faults.append(Fault("unknown parameter", _only(names), parameter=name))
+        elif len(values) > 1:
+            faults.append(Fault(f"got it {len(values)} times", "one value", parameter=name))
+    if faults:
+        raise _bad_query(faults)
+    return request.args.to_dict()
+
+
+def page(*names: str) -> dict[str, Any]:
+    """Give the parameters of a list: limit, cursor and ``names``. Raises InvalidRequest."""
+    given: dict[str, Any] = dict(query("limit", "cursor", *names))
+    limit = given.get("limit", str(DEFAULT_LIMIT))
+    if not (limit.isascii() and limit.isdigit() and len(limit) < 4 and 1 <= int(limit) <= LARGEST_LIMIT):
+        expected = f"a whole number from 1 to {LARGEST_LIMIT}"
+        raise _bad_query([Fault(f"got {limit[:60]!r}", expected, parameter="limit")])
+    return {**given, "limit": int(limit), "cursor": given.get("cursor")}
+
+
+def choice(given: dict[str, Any], name: str, words: tuple[str, ...]) -> None:
+    """Refuse a query parameter that is none of ``words``. Raises InvalidRequest."""
+    value = given.get(name)
+    if value is not None and value not in words:
+        fault = Fault(f"got {value[:60]!r}", "one of " + ", ".join(words), parameter=name)
+        raise _bad_query([fault])
+
+
+def _only(names: tuple[str, ...]) -> str:
+    return "only " + ", ".join(names) if names else "no parameters"
+
+
+def _bad_query(faults: list[Fault]) -> InvalidRequest:
+    count = "1 fault" if len(faults) == 1 else f"{len(faults)} faults"
+    return InvalidRequest(f"{count} in the query.", faults=tuple(faults))
+
+
+def belongs(it_does: bool, what: str) -> None:
+    """Answer that a thing is not there when it stands under another path. Raises NotFound."""
+    if not it_does:
+        raise NotFound(f"There is no {what}.")
+
+
+def same_identity(document: Any, **expected: str) -> None:
+    """Refuse a document that names another thing than the path. Raises InvalidRequest."""
+    faults = [
+        Fault(f"got {getattr(document, member)!r}", f"{value!r}, as in the path", f"#/{member}")
+        for member, value in expected.items()
+        if getattr(document, member) != value
+    ]
+    if faults:
+        raise InvalidRequest(f"{len(faults)} fault(s); nothing was recorded.", faults=tuple(faults))

@@ -1,0 +1,48 @@
+"""The start page: what runs here, where its API is described, and the caution."""
+
+from __future__ import annotations
+
+from importlib.metadata import PackageNotFoundError, version
+
+from flask import Blueprint, Response, current_app, render_template
+
+from service.errors import Unavailable
+from service.workflows import health
+from service.workflows.judging import CAUTION
+
+blueprint = Blueprint("pages", __name__, template_folder="templates", static_folder="static")
+
+# Everything a page needs comes from this server; nothing is framed, sniffed or told to other sites.
+_GUARDS = {
+    "Content-Security-Policy": (
+        "default-src 'self'; frame-ancestors 'none'; form-action 'self'; base-uri 'none'"
+    ),
+    "Referrer-Policy": "same-origin",
+    "X-Content-Type-Options": "nosniff",
+}
+
+
+@blueprint.get("/")
+def start() -> str:
+    """Show the start page."""
+    services = current_app.extensions["shoalmark"]
+    try:
+        health.ready(services)
+        ready = True
+    except Unavailable:
+        ready = False
+    return render_template("pages/start.html", ready=ready, number=_number(), caution=CAUTION)
+
+
+def _number() -> str:
+    try:
+        return version("shoalmark")
+    except PackageNotFoundError:  # run from a folder without installation
+        return "not installed"
+
+
+def guard(response: Response) -> Response:
+    """Tell browsers to trust nothing but this server."""
+    for name, value in _GUARDS.items():
+        response.headers.setdefault(name, value)
+    return response
