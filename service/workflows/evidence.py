@@ -41,7 +41,9 @@ class FaultCollector:
     def __init__(self) -> None:
         self.faults: list[Fault] = []
 
-    def attempt(self, pointer: str, step: Callable[_P, _T], *args: _P.args, **kwargs: _P.kwargs) -> _T | None:
+    def attempt(
+        self, pointer: str, step: Callable[_P, _T], /, *args: _P.args, **kwargs: _P.kwargs
+    ) -> _T | None:
         """Run ``step``; what it finds wrong is kept, located below ``pointer``."""
         try:
             return step(*args, **kwargs)

@@ -52,7 +52,7 @@ def record(
         principal=actor.principal,
         perform=perform,
         key=request.key,
-        fingerprint=request.fingerprint,
+        fingerprint=None if request.key is None else request.fingerprint,
     )
     return services.writer.submit(act)
 

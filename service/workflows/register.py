@@ -5,7 +5,7 @@ from __future__ import annotations
 import threading
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.propagation import Counts
@@ -27,6 +27,9 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows.calendar import DEFAULT_PLANT
 from service.workflows.rules import RuleKey, compile_rule, counts_text
 from service.workflows.stored_budgets import budget_from_evaluation
+
+# Unbalanced numbers of readings are many; beyond this bound they are compiled anew each time.
+MOST_COMPILED: Final = 10_000
 
 
 @dataclass(frozen=True)
@@ -50,7 +53,7 @@ class BudgetInForce:
 
 @dataclass
 class Register:
-    """What is in force at one revision. Rules for counts that no approval foresaw are added as they occur."""
+    """What is in force at one revision; ``compiled`` keeps rules for counts that no approval foresaw."""
 
     revision: int
     plant: Plant
@@ -62,7 +65,8 @@ class Register:
     specification_products: Mapping[str, str]
     specifications: Mapping[str, SpecificationInForce]
     budgets: Mapping[tuple[str, str, str], BudgetInForce]
-    rules: dict[RuleKey, ReleaseRule] = field(default_factory=dict)
+    rules: Mapping[RuleKey, ReleaseRule]
+    compiled: dict[RuleKey, ReleaseRule] = field(default_factory=dict)
 
     def rule(
         self,
@@ -80,11 +84,12 @@ class Register:
             budget_version=budget.version,
             counts=counts_text(counts),
         )
-        rule = self.rules.get(key)
+        rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
             characteristic = self.characteristics[budget.document.product, requirement.characteristic]
             rule = compile_rule(budget.budget, counts, requirement, characteristic)
-            self.rules[key] = rule
+            if len(self.compiled) < MOST_COMPILED:
+                self.compiled[key] = rule
         return rule
 
 
@@ -146,6 +151,9 @@ class RegisterCache:
     def current(self, unit_of_work: UnitOfWork) -> Register:
         """Give the register at the revision that ``unit_of_work`` sees; reads it anew when that has moved."""
         revision = unit_of_work.revision()
+        if unit_of_work.revision_moved:
+            # An approval in this very transaction: should it be rolled back, its number is given again.
+            return load_register(unit_of_work, revision)
         register = self._register
         if register is not None and register.revision == revision:
             return register

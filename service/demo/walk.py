@@ -1,0 +1,208 @@
+"""The whole job walked through over HTTP, step by step, each printed with its figures."""
+
+from __future__ import annotations
+
+import time
+from collections import Counter
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from typing import Any, Final
+
+from rich.console import Console
+from rich.table import Table
+
+from service.demo import plant
+from service.demo.client import Client
+from service.demo.picture import number_line
+
+FIRST_LOT: Final = "W26-04711"
+
+
+@dataclass(frozen=True)
+class Access:
+    """The tokens and passwords of the demo."""
+
+    line: str
+    engineer: str
+    approver: str
+    approver_password: str
+
+
+class Walk:
+    """The steps of the job, in the order in which a plant takes them."""
+
+    def __init__(self, client: Client, access: Access, console: Console) -> None:
+        self._client = client
+        self._access = access
+        self._console = console
+
+    def set_up(self) -> None:
+        """Take the plant from nothing to a budget and specifications in force."""
+        self._put_master_data()
+        self._record_studies()
+        self._bring_into_force("budgets", plant.budget())
+        for specification in plant.specifications():
+            self._bring_into_force("specifications", specification)
+        self._show_budget()
+        self._show_limits()
+
+    def decide_first_lot(self) -> dict[str, Any]:
+        """Judge a lot read a moment ago and show the answer."""
+        now = datetime.now(UTC).isoformat(timespec="milliseconds")
+        readings = [
+            plant.reading(str(1), now, moisture, distance=distance, temperature=24.5)
+            | {"measurement": f"{FIRST_LOT}-{scan}"}
+            for scan, (moisture, distance) in enumerate(((2.91, 1.3), (2.97, 1.2)), start=1)
+        ]
+        request = plant.decision_request(FIRST_LOT, readings)
+        answer = self._client.post(self._access.line, "/v1/decisions", request, key=f"demo-{FIRST_LOT}")
+        self._show_decision(answer)
+        return dict(answer)
+
+    def decide_production(self) -> Counter[str]:
+        """Judge the two hundred production lots and show what became of them."""
+        outcomes: Counter[str] = Counter()
+        started = time.perf_counter()
+        for request in plant.lots():
+            answer = self._client.post(
+                self._access.line, "/v1/decisions", request, key=f"demo-{request['lot']}"
+            )
+            outcomes[answer["outcome"]] += 1
+        seconds = time.perf_counter() - started
+        table = self._table("Production lots judged, one call each", "outcome", "lots")
+        for outcome in ("release", "hold", "reject"):
+            table.add_row(outcome, str(outcomes[outcome]))
+        table.add_row("time per lot", f"{seconds / outcomes.total() * 1000:.1f} ms")
+        self._console.print(table)
+        return outcomes
+
+    def verify(self) -> bool:
+        """Have the record verified and show the heads of its chains."""
+        found = self._client.get(self._access.engineer, "/v1/ledger/verification")
+        table = self._table("The record", "chain", "entries", "hash of the last entry")
+        for chain in found["chains"]:
+            table.add_row(chain["chain"], str(chain["entries"]), chain["hash"])
+        self._console.print(table)
+        self._console.print("The record is whole." if found["whole"] else f"NOT whole: {found['finding']}")
+        return bool(found["whole"])
+
+    # --- single steps ----------------------------------------------------------------------------------
+
+    def _put_master_data(self) -> None:
+        table = self._table("Master data", "put", "revision")
+        for path, document in plant.master_data():
+            answer = self._client.call("PUT", path, self._access.engineer, document, expect=(200, 201))
+            table.add_row(path, answer.headers["etag"].strip('"'))
+        self._console.print(table)
+
+    def _record_studies(self) -> None:
+        columns = ("study", "rows", "estimate", "standard uncertainty", "degrees of freedom", "95 % interval")
+        table = self._table("Studies, evaluated from raw data", *columns)
+        for study in plant.studies():
+            answer = self._client.post(self._access.engineer, "/v1/studies", study)
+            evaluation = answer["evaluation"]
+            for position, estimate in enumerate(evaluation["estimates"]):
+                name = estimate["name"] if estimate["usable"] else f"{estimate['name']} (not usable)"
+                if estimate["value"] is not None:
+                    name = f"{name} = {estimate['value']:.4f} %"
+                table.add_row(
+                    study["code"] if position == 0 else "",
+                    str(evaluation["used"]) if position == 0 else "",
+                    name,
+                    _figure(estimate["standard_uncertainty"], ".4f"),
+                    _figure(estimate["degrees_of_freedom"], ".1f"),
+                    _interval(estimate["interval"]),
+                )
+        self._console.print(table)
+
+    def _bring_into_force(self, kind: str, document: dict[str, Any]) -> None:
+        """Draft, submit, and have another person approve."""
+        self._client.post(self._access.engineer, f"/v1/{kind}", document)
+        version = f"/v1/{kind}/{document['code']}/versions/1"
+        self._client.post(self._access.engineer, f"{version}/submit")
+        act = {"reason": "checked", "signature": {"password": self._access.approver_password}}
+        approved = self._client.post(self._access.approver, f"{version}/approve", act)
+        self._console.print(
+            f"{document['code']}: version 1 drafted and submitted by {approved['drafted_by']}, "
+            f"approved by {approved['approved_by']}, {approved['state'].replace('_', ' ')}."
+        )
+
+    def _show_budget(self) -> None:
+        path = f"/v1/budgets/{plant.BUDGET}/versions/1/evaluation"
+        found = self._client.get(self._access.engineer, path)
+        columns = ("component", "drawn anew per", "u of one draw", "u in the result", "dof", "share")
+        table = self._table("Budget of moisture, one sample read twice", *columns)
+        for line in found["components"]:
+            table.add_row(
+                line["code"],
+                line["level"],
+                f"{line['standard_uncertainty']:.4f} %",
+                f"{line['contribution']:.4f} %",
+                _figure(line["degrees_of_freedom"], ".1f"),
+                f"{100 * line['share_of_variance']:.0f} %",
+            )
+        table.add_section()
+        table.add_row(
+            "combined",
+            "",
+            "",
+            f"{found['combined_standard_uncertainty']:.4f} %",
+            _figure(found["effective_degrees_of_freedom"], ".1f"),
+            f"U = {found['expanded_uncertainty']:.3f} %",
+        )
+        self._console.print(table)
+
+    def _show_limits(self) -> None:
+        path = f"/v1/acceptance-limits/{plant.PRODUCT}/moisture"
+        found = self._client.get(self._access.line, path)
+        columns = ("specification", "samples x readings", "tolerance limit", "guard band", "acceptance limit")
+        table = self._table("Acceptance limits now", *columns, "largest risk")
+        for item in found["items"]:
+            if item["procedure"]["readings_per_sample"] != 2:
+                continue
+            table.add_row(
+                f"{item['specification']['code']} version {item['specification']['version']}",
+                f"{item['procedure']['samples']} x {item['procedure']['readings_per_sample']}"
+                + (", as planned" if item["planned"] else ""),
+                f"at most {item['upper_tolerance_limit']:g} %",
+                f"{item['guard_band']['upper']:.3f} %",
+                f"{item['upper_acceptance_limit']:.3f} %",
+                f"{100 * item['largest_specific_risk']:.1f} %",
+            )
+        self._console.print(table)
+
+    def _show_decision(self, answer: dict[str, Any]) -> None:
+        self._console.rule()
+        self._console.print(
+            f"Lot {answer['lot']}: [bold]{answer['outcome'].upper()}[/bold], recorded as {answer['id']} at "
+            f"{answer['recorded_at']}"
+        )
+        for verdict in answer["verdicts"]:
+            self._console.print()
+            self._console.print(
+                f"{verdict['specification']['code']}: {verdict['outcome']}, conformance probability "
+                f"{verdict['conformance_probability']:.4f}"
+            )
+            for line in number_line(verdict):
+                self._console.print(f"  {line}", markup=False, highlight=False)
+            self._console.print(f"  {verdict['display']['statement']}", highlight=False)
+        for reason in answer["reasons"]:
+            self._console.print(f"  {reason['detail']} {reason['next']}", highlight=False)
+        self._console.print(f"  Not judged: {', '.join(answer['not_judged'])}.", highlight=False)
+        self._console.print(f"  {answer['caution']}", highlight=False)
+        self._console.print(f"  hash {answer['entry']['hash']}", highlight=False)
+        self._console.rule()
+
+    def _table(self, title: str, *columns: str) -> Table:
+        table = Table(title=title, title_justify="left", title_style="bold")
+        for position, column in enumerate(columns):
+            table.add_column(column, justify="left" if position == 0 else "right", overflow="fold")
+        return table
+
+
+def _figure(value: float | None, form: str) -> str:
+    return "∞" if value is None else format(value, form)
+
+
+def _interval(interval: dict[str, Any] | None) -> str:
+    return "" if interval is None else f"{interval['lower']:.4f} to {interval['upper']:.4f}"
