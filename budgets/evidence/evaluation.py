@@ -150,7 +150,11 @@ def effective_degrees_of_freedom(terms: Iterable[Term]) -> float:
         (term.coefficient * term.mean_square.value) ** 2 / term.mean_square.degrees_of_freedom
         for term in single
     )
-    return math.inf if spread == 0 else total * total / spread
+    if spread == 0:
+        return math.inf
+    counted = [term for term in single if term.coefficient * term.mean_square.value != 0]
+    # A single mean square keeps its own number to the last digit.
+    return counted[0].mean_square.degrees_of_freedom if len(counted) == 1 else total * total / spread
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,136 @@
+"""Design ``duplicates``: duplicate (or multiple) determinations of the same samples."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from scipy.special import stdtr
+
+from budgets.errors import EvidenceError
+from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
+from budgets.evidence.repeatability import finding_warnings, precision_warnings, resolution_warnings
+from budgets.evidence.screening import cochran_findings
+from budgets.evidence.study_tables import Layout, Study
+from budgets.evidence.sums import grouped, mean, standard_deviation_interval, sum_of_squares
+from budgets.levels import levels_from
+
+LAYOUT = Layout(required=("sample", "result"), optional=("determination",), numbers=("result",))
+
+_SIGNIFICANT = 0.05
+
+
+def evaluate(study: Study) -> Evaluation:
+    """Return the repeatability of a method from determinations of the same samples.
+
+    Parameters
+    ----------
+    study : Study
+        Columns of `LAYOUT`. With a column ``determination`` the differences are first less second label;
+        without it, in the order of the rows.
+
+    Returns
+    -------
+    Evaluation
+        Estimate ``repeatability``, of one determination.
+
+    Raises
+    ------
+    EvidenceError
+        If there are fewer than two samples with two determinations, or the determinations do not scatter.
+
+    Notes
+    -----
+    Pairs: ``s^2 = sum d^2 / 2n`` with n degrees of freedom while the mean difference is not significantly
+    different from zero, else ``sum (d - mean d)^2 / 2(n - 1)`` with n - 1. More than two determinations:
+    pooled within samples. Source: ISO 5725-2:1994, 7.4.5 (from memory); the test of the mean difference is
+    common practice, no source.
+    """
+    groups = _groups(study)
+    pairs = all(len(values) == 2 for values in groups.values())
+    if pairs:
+        square, freedom, diagnostics, warnings = _of_pairs(list(groups.values()))
+    else:
+        freedom = sum(len(values) - 1 for values in groups.values())
+        square = math.fsum(sum_of_squares(values) for values in groups.values()) / freedom
+        diagnostics, warnings = {}, ()
+    if square == 0:
+        raise EvidenceError(
+            "the determinations of every sample agree exactly: they show no scatter", where=("rows",)
+        )
+    deviation = math.sqrt(square)
+    findings = cochran_findings(list(groups.items()))
+    used = sum(map(len, groups.values()))
+    return Evaluation(
+        design="duplicates",
+        estimates=(
+            Estimate(
+                name="repeatability",
+                terms=(Term(1.0, MeanSquare(f"{study.code}/repeatability", square, freedom)),),
+                value=None,
+                interval=standard_deviation_interval(deviation, freedom),
+                may_feed=levels_from("reading"),
+                usable=True,
+                contains=("repeatability", "resolution"),
+            ),
+        ),
+        used=used,
+        diagnostics={
+            "repeatability_standard_deviation": deviation,
+            "samples": len(groups),
+            **diagnostics,
+            "findings": [found.to_document() for found in findings],
+        },
+        warnings=(
+            *precision_warnings(used, freedom),
+            *warnings,
+            *resolution_warnings(deviation, study.decimals),
+            *finding_warnings(findings),
+        ),
+    )
+
+
+def _groups(study: Study) -> Mapping[str, Sequence[float]]:
+    results = study.full("result")
+    if len(set(results)) == 1:
+        raise EvidenceError("all results are equal; they say nothing about repeatability", where=("rows",))
+    labels = study.labels["sample"]
+    order: Sequence[int] = range(len(results))
+    if "determination" in study.labels:
+        determinations = study.labels["determination"]
+        if len(set(zip(labels, determinations, strict=True))) < len(results):
+            raise EvidenceError("a sample has two results under the same determination", where=("rows",))
+        order = sorted(order, key=lambda i: determinations[i])
+    groups = grouped([labels[i] for i in order], [results[i] for i in order])
+    replicated = {label: values for label, values in groups.items() if len(values) > 1}
+    if len(replicated) < 2:
+        raise EvidenceError(
+            f"{len(replicated)} samples have two determinations; at least two samples are needed",
+            where=("rows",),
+        )
+    return replicated
+
+
+def _of_pairs(
+    pairs: Sequence[Sequence[float]],
+) -> tuple[float, int, dict[str, Any], tuple[EvaluationWarning, ...]]:
+    """Return mean square, degrees of freedom, diagnostics and warnings of duplicate determinations."""
+    differences = [first - second for first, second in pairs]
+    n = len(differences)
+    centre = mean(differences)
+    spread = sum_of_squares(differences)
+    if spread == 0:
+        probability = 0.0 if centre else 1.0
+    else:
+        t = abs(centre) / math.sqrt(spread / (n - 1) / n)
+        probability = 2 * float(stdtr(n - 1, -t))
+    diagnostics = {"mean_difference": centre, "mean_difference_p_value": probability}
+    if probability >= _SIGNIFICANT:
+        return math.fsum(d * d for d in differences) / (2 * n), n, diagnostics, ()
+    warning = EvaluationWarning(
+        "determinations-differ",
+        f"first and second determinations differ by {centre:.3g} on the average (p = {probability:.2g}); the "
+        "standard deviation was taken around that difference, whose cause should be found",
+    )
+    return spread / (2 * (n - 1)), n - 1, diagnostics, (warning,)

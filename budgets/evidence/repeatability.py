@@ -1,0 +1,153 @@
+"""Design ``repeatability``: groups of replicate readings of the same sample."""
+
+from __future__ import annotations
+
+import math
+
+from budgets.errors import EvidenceError
+from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
+from budgets.evidence.screening import Finding, cochran_findings, grubbs_findings
+from budgets.evidence.study_tables import Layout, Study
+from budgets.evidence.sums import (
+    grouped,
+    mean,
+    standard_deviation_factors,
+    standard_deviation_interval,
+    sum_of_squares,
+)
+
+LAYOUT = Layout(required=("sample", "reading"), optional=("replicate",), numbers=("reading",))
+
+# With the upper end of its interval farther off than this, a standard deviation comes with a warning.
+_WELL_KNOWN = 0.25
+
+
+def evaluate(study: Study) -> Evaluation:
+    """Return the pooled repeatability standard deviation of an analyzer.
+
+    Parameters
+    ----------
+    study : Study
+        Columns of `LAYOUT`; samples may have unequal numbers of readings.
+
+    Returns
+    -------
+    Evaluation
+        Estimate ``repeatability``: one mean square with ``sum (n_i - 1)`` degrees of freedom.
+
+    Raises
+    ------
+    EvidenceError
+        If no sample was read twice, or the replicates show no scatter.
+
+    Notes
+    -----
+    Source: ISO 5725-2:1994, 7.4.5.1 (from memory).
+    """
+    readings = study.full("reading")
+    if len(set(readings)) == 1:
+        raise EvidenceError("all readings are equal; they say nothing about repeatability", where=("rows",))
+    groups = grouped(study.labels["sample"], readings)
+    replicated = {label: values for label, values in groups.items() if len(values) > 1}
+    if not replicated:
+        raise EvidenceError(
+            "no sample has two replicates; repeatability needs at least two readings of the same sample",
+            where=("rows",),
+        )
+    freedom = sum(len(values) - 1 for values in replicated.values())
+    # ISO 5725-2, 7.4.5.1: s_r^2 = sum (n_i - 1) s_i^2 / sum (n_i - 1)
+    square = math.fsum(sum_of_squares(values) for values in replicated.values()) / freedom
+    if square == 0:
+        raise EvidenceError(
+            "the replicates of every sample are equal: the display hides the repeatability; declare its "
+            "resolution instead",
+            where=("rows",),
+        )
+    deviation = math.sqrt(square)
+    findings = cochran_findings(list(replicated.items()))
+    findings += [found for label, values in replicated.items() for found in grubbs_findings(label, values)]
+    return Evaluation(
+        design="repeatability",
+        estimates=(
+            Estimate(
+                name="repeatability",
+                terms=(Term(1.0, MeanSquare(f"{study.code}/repeatability", square, freedom)),),
+                value=None,
+                interval=standard_deviation_interval(deviation, freedom),
+                may_feed=("reading", "presentation"),
+                usable=True,
+                contains=("repeatability", "resolution"),
+            ),
+        ),
+        used=sum(map(len, replicated.values())),
+        diagnostics={
+            "repeatability_standard_deviation": deviation,
+            "samples": len(groups),
+            "samples_with_replicates": len(replicated),
+            "groups": [
+                {
+                    "sample": label,
+                    "readings": len(values),
+                    "mean": mean(values),
+                    "standard_deviation": math.sqrt(sum_of_squares(values) / (len(values) - 1)),
+                }
+                for label, values in replicated.items()
+            ],
+            "findings": [found.to_document() for found in findings],
+        },
+        warnings=(
+            *precision_warnings(sum(map(len, replicated.values())), freedom),
+            *_warnings_of_samples(len(groups), len(replicated)),
+            *resolution_warnings(deviation, study.decimals),
+            *finding_warnings(findings),
+        ),
+    )
+
+
+def precision_warnings(replicates: int, degrees_of_freedom: float) -> tuple[EvaluationWarning, ...]:
+    """Say in plain words how well so many replicates know a standard deviation."""
+    lower, upper = standard_deviation_factors(degrees_of_freedom)
+    if upper - 1 <= _WELL_KNOWN:
+        return ()
+    detail = (
+        f"{replicates} replicates know the standard deviation to within {100 * (lower - 1):.0f} % / "
+        f"+{100 * (upper - 1):.0f} % ({degrees_of_freedom:g} degrees of freedom)"
+    )
+    return (EvaluationWarning("few-degrees-of-freedom", detail),)
+
+
+def _warnings_of_samples(samples: int, replicated: int) -> tuple[EvaluationWarning, ...]:
+    warnings = []
+    if replicated == 1:
+        detail = (
+            "only one sample was read repeatedly; whether repeatability is the same elsewhere is not known"
+        )
+        warnings.append(EvaluationWarning("one-sample", detail))
+    if replicated < samples:
+        detail = f"{samples - replicated} samples were read once only and say nothing about repeatability"
+        warnings.append(EvaluationWarning("samples-without-replicates", detail))
+    return tuple(warnings)
+
+
+def resolution_warnings(deviation: float, decimals: int | None) -> tuple[EvaluationWarning, ...]:
+    """Warn when the last digit of the readings is coarser than their scatter."""
+    if decimals is None or deviation >= 10.0**-decimals / math.sqrt(12):
+        return ()
+    detail = (
+        f"the standard deviation {deviation:.2g} is below that of the last digit shown "
+        f"({10.0**-decimals / math.sqrt(12):.2g}); keep the larger of the two"
+    )
+    return (EvaluationWarning("resolution-larger", detail),)
+
+
+def finding_warnings(findings: list[Finding]) -> tuple[EvaluationWarning, ...]:
+    """Put the findings of outlier tests into words; nothing was dropped."""
+    warnings = []
+    for found in findings:
+        what = "the spread" if not found.values else " and ".join(f"{value:g}" for value in found.values)
+        detail = (
+            f"{found.grade} in {found.group}: {what} ({found.test}: {found.statistic:.3f}, critical value "
+            f"{found.critical_value:.3f}); nothing was left out"
+        )
+        warnings.append(EvaluationWarning(found.grade, detail))
+    return tuple(warnings)

@@ -1,0 +1,154 @@
+"""The one door to the study designs: data in, evaluation out."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
+from budgets.evidence import agreement, duplicates, repeatability
+from budgets.evidence.evaluation import Evaluation, SetAside
+from budgets.evidence.study_tables import Cell, Layout, NamedSource, Study, StudyData, read_columns
+
+__all__ = ["DESIGNS", "Cell", "NamedSource", "StudyData", "StudyDesign", "evaluate_study"]
+
+
+@dataclass(frozen=True)
+class StudyDesign:
+    """A design: the columns it knows, what else it takes, and how it is evaluated."""
+
+    name: str
+    layout: Layout
+    evaluate: Callable[[Study], Evaluation]
+    options: tuple[str, ...] = ()
+    takes_sources: bool = False
+
+
+DESIGNS: dict[str, StudyDesign] = {
+    design.name: design
+    for design in (
+        StudyDesign("repeatability", repeatability.LAYOUT, repeatability.evaluate),
+        StudyDesign("duplicates", duplicates.LAYOUT, duplicates.evaluate),
+        StudyDesign(
+            "agreement", agreement.LAYOUT, agreement.evaluate, options=agreement.OPTIONS, takes_sources=True
+        ),
+    )
+}
+_LATER_DESIGNS = (
+    "nested_precision",
+    "sampling",
+    "process_stream",
+    "check_samples",
+    "covariance",
+    "fleet",
+    "production",
+)
+
+
+def evaluate_study(
+    design: str,
+    data: StudyData,
+    *,
+    study: str,
+    set_aside: Sequence[SetAside] = (),
+    options: Mapping[str, Any] | None = None,
+    named_sources: Sequence[NamedSource] = (),
+    readings_decimals: int | None = None,
+) -> Evaluation:
+    """Evaluate a study by its design.
+
+    Parameters
+    ----------
+    design : str
+        One of ``DESIGNS``.
+    data : StudyData
+    study : str
+        Code of the study, the prefix of the codes of its mean squares.
+    set_aside : sequence of SetAside
+        Rows to leave out, each with a reason. The evaluation with them stands in the diagnostics under
+        ``with_set_aside``.
+    options : mapping or None
+        What the design takes; anything else is refused.
+    named_sources : sequence of NamedSource
+        Sources known from elsewhere, for ``agreement``.
+    readings_decimals : int or None
+        Decimals of the readings, for the warning about their resolution.
+
+    Returns
+    -------
+    Evaluation
+
+    Raises
+    ------
+    EvidenceError
+        With all faults found in ``faults``, their paths such as ``("rows", 3, 1)`` or ``("columns", 0)``.
+    NotSupportedError
+        For a design, or a kind of cell, that this version does not evaluate.
+    """
+    if design in _LATER_DESIGNS:
+        raise NotSupportedError(f"the study design {design}", where=("design",))
+    if design not in DESIGNS:
+        raise EvidenceError(
+            f"{design!r} is no study design; there are {', '.join(DESIGNS)}", where=("design",)
+        )
+    chosen = DESIGNS[design]
+    given = dict(options or {})
+    raise_collected([*_faults_of_requests(chosen, given, named_sources), *_faults_of_rows(set_aside, data)])
+
+    def evaluated(rows: Sequence[int]) -> Evaluation:
+        labels, numbers = read_columns(data, chosen.layout, rows)
+        return chosen.evaluate(
+            Study(study, labels, numbers, tuple(rows), given, tuple(named_sources), readings_decimals)
+        )
+
+    left_out = {item.row for item in set_aside}
+    evaluation = evaluated([row for row in range(len(data.rows)) if row not in left_out])
+    if not set_aside:
+        return evaluation
+    try:
+        with_them: dict[str, Any] = evaluated(range(len(data.rows))).to_document()
+    except BudgetsError as error:
+        # The rows may have been set aside exactly because they cannot be read.
+        with_them = {"error": error.message}
+    return replace(
+        evaluation,
+        set_aside=tuple(set_aside),
+        diagnostics={**evaluation.diagnostics, "with_set_aside": with_them},
+    )
+
+
+def _faults_of_requests(
+    design: StudyDesign, options: Mapping[str, Any], named_sources: Sequence[NamedSource]
+) -> list[BudgetsError]:
+    taken = f"it takes {', '.join(design.options)}" if design.options else "it takes none"
+    faults: list[BudgetsError] = [
+        EvidenceError(f"{name!r} is no option of the design {design.name}; {taken}", where=("options", name))
+        for name in options
+        if name not in design.options
+    ]
+    if named_sources and not design.takes_sources:
+        faults.append(
+            EvidenceError(
+                f"the design {design.name} takes nothing out, so it takes no named sources",
+                where=("named_sources",),
+            )
+        )
+    return faults
+
+
+def _faults_of_rows(set_aside: Sequence[SetAside], data: StudyData) -> list[BudgetsError]:
+    faults: list[BudgetsError] = []
+    seen: set[int] = set()
+    for index, item in enumerate(set_aside):
+        where = ("set_aside", index)
+        if not 0 <= item.row < len(data.rows):
+            faults.append(
+                EvidenceError(f"there is no row {item.row}; rows are counted from 0", where=(*where, "row"))
+            )
+        if item.row in seen:
+            faults.append(EvidenceError(f"row {item.row} is set aside twice", where=(*where, "row")))
+        if not item.reason.strip():
+            faults.append(EvidenceError("a row is set aside with a reason", where=(*where, "reason")))
+        seen.add(item.row)
+    return faults
