@@ -8,6 +8,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from service.api.problems import slugs
+
 Form = dict[str, Any]
 
 
@@ -80,9 +82,15 @@ _FAULT = _object(
     expected={"type": "string", "description": "What would be right."},
 )
 
+_PROBLEM_TYPE: Form = {
+    "type": "string",
+    "description": "What kind of problem; about:blank says no more than its status.",
+    "examples": ["about:blank", *(f"/problems/{slug}" for slug in sorted(slugs()))],
+}
+
 _PROBLEM = _object(
     "A problem document (RFC 9457). Nothing was recorded unless the type is /problems/unavailable.",
-    {"type": _TEXT, "title": _TEXT, "status": _WHOLE, "instance": _TEXT, "detail": _TEXT},
+    {"type": _PROBLEM_TYPE, "title": _TEXT, "status": _WHOLE, "instance": _TEXT, "detail": _TEXT},
     errors=_list(_FAULT, "All faults at once."),
     link={"type": "string", "description": "What stands in the way."},
 )

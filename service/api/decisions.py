@@ -58,8 +58,7 @@ def preview_decision() -> Response:
 )
 def list_decisions() -> Response:
     """List the decisions, newest first."""
-    page = requests.page("product", "outcome")
-    requests.choice(page, "outcome", OUTCOMES)
+    page = requests.page("product", outcome=OUTCOMES)
     return listed(decisions.listing(requests.services(), requests.actor(), **page))
 
 

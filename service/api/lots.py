@@ -22,8 +22,7 @@ blueprint = Blueprint("lots", __name__, description="How lots stand.")
 )
 def list_lots() -> Response:
     """List lots, the last judged first."""
-    page = requests.page("outcome")
-    requests.choice(page, "outcome", OUTCOMES)
+    page = requests.page(outcome=OUTCOMES)
     return listed(lots.listing(requests.services(), requests.actor(), **page))
 
 

@@ -74,6 +74,17 @@ CONFLICTS: dict[str, str] = {
 }
 
 
+_HTTP_DETAILS = {
+    404: "The API has no resource at this path.",
+    405: "The resource at this path does not know this method; Allow names those that it knows.",
+}
+
+
+def slugs() -> set[str]:
+    """All slugs that the type of a problem may end in."""
+    return {kind.slug for kind in KINDS.values()} | CONFLICTS.keys()
+
+
 def request_id() -> str:
     """The identity of the request at hand, given once and named in its problem and in the log."""
     if "request_id" not in g:
@@ -121,7 +132,8 @@ def _of_http(error: HTTPException) -> WerkzeugResponse:
     status = error.code or 500
     # Without the type of content, which is ours; Allow, Retry-After and WWW-Authenticate go on.
     headers = {name: value for name, value in error.get_headers() if name.lower() != "content-type"}
-    return _respond(None, HTTPStatus(status).phrase, status, error.description or "", (), None, headers)
+    detail = _HTTP_DETAILS.get(status, error.description or "")
+    return _respond(None, HTTPStatus(status).phrase, status, detail, (), None, headers)
 
 
 def _budget_faults(error: BudgetsError) -> tuple[Fault, ...]:

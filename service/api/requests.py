@@ -13,6 +13,7 @@ from service.api.reader import request_document
 from service.documents import Actor
 from service.errors import Fault, InvalidRequest, KeyMissing, NotFound, StaleVersion, Unauthenticated
 from service.schemas import load
+from service.schemas.base import got
 from service.workflows import accounts
 from service.workflows.recording import Request
 from service.workflows.services import Services
@@ -99,42 +100,28 @@ def if_match() -> int | None:
 
 def query(*names: str) -> dict[str, str]:
     """Give the query's parameters, each of which has to be one of ``names`` and there once."""
-    faults = []
-    for name, values in request.args.lists():
-        if name not in names:
-            faults.append(Fault("unknown parameter", _only(names), parameter=name))
-        elif len(values) > 1:
-            faults.append(Fault(f"got it {len(values)} times", "one value", parameter=name))
+    faults = _query_faults(names)
     if faults:
         raise _bad_query(faults)
     return request.args.to_dict()
 
 
-def page(*names: str) -> dict[str, Any]:
-    """Give the parameters of a list: limit, cursor and ``names``. Raises InvalidRequest."""
-    given: dict[str, Any] = dict(query("limit", "cursor", *names))
-    limit = given.get("limit", str(DEFAULT_LIMIT))
+def page(*names: str, **words: tuple[str, ...]) -> dict[str, Any]:
+    """Give the parameters of a list: limit, cursor and ``names``; those of ``words`` are one of a few words.
+
+    Raises InvalidRequest with all that is wrong with the query.
+    """
+    faults = _query_faults(("limit", "cursor", *names, *words))
+    limit = request.args.get("limit", str(DEFAULT_LIMIT))
     if not (limit.isascii() and limit.isdigit() and len(limit) < 4 and 1 <= int(limit) <= LARGEST_LIMIT):
-        expected = f"a whole number from 1 to {LARGEST_LIMIT}"
-        raise _bad_query([Fault(f"got {limit[:60]!r}", expected, parameter="limit")])
-    return {**given, "limit": int(limit), "cursor": given.get("cursor")}
-
-
-def choice(given: dict[str, Any], name: str, words: tuple[str, ...]) -> None:
-    """Refuse a query parameter that is none of ``words``. Raises InvalidRequest."""
-    value = given.get(name)
-    if value is not None and value not in words:
-        fault = Fault(f"got {value[:60]!r}", "one of " + ", ".join(words), parameter=name)
-        raise _bad_query([fault])
-
-
-def _only(names: tuple[str, ...]) -> str:
-    return "only " + ", ".join(names) if names else "no parameters"
-
-
-def _bad_query(faults: list[Fault]) -> InvalidRequest:
-    count = "1 fault" if len(faults) == 1 else f"{len(faults)} faults"
-    return InvalidRequest(f"{count} in the query.", faults=tuple(faults))
+        faults.append(_wrong_parameter("limit", limit, f"a whole number from 1 to {LARGEST_LIMIT}"))
+    for name, allowed in words.items():
+        value = request.args.get(name)
+        if value is not None and value not in allowed:
+            faults.append(_wrong_parameter(name, value, "one of " + ", ".join(allowed)))
+    if faults:
+        raise _bad_query(faults)
+    return {**request.args.to_dict(), "limit": int(limit), "cursor": request.args.get("cursor")}
 
 
 def belongs(it_does: bool, what: str) -> None:
@@ -152,3 +139,23 @@ def same_identity(document: Any, **expected: str) -> None:
     ]
     if faults:
         raise InvalidRequest(f"{len(faults)} fault(s); nothing was recorded.", faults=tuple(faults))
+
+
+def _query_faults(names: tuple[str, ...]) -> list[Fault]:
+    faults = []
+    for name, values in request.args.lists():
+        if name not in names:
+            only = "only " + ", ".join(names) if names else "no parameters"
+            faults.append(Fault("unknown parameter", only, parameter=name))
+        elif len(values) > 1:
+            faults.append(Fault(f"got it {len(values)} times", "one value", parameter=name))
+    return faults
+
+
+def _wrong_parameter(name: str, value: str, expected: str) -> Fault:
+    return Fault(got(value), expected, parameter=name)
+
+
+def _bad_query(faults: list[Fault]) -> InvalidRequest:
+    count = "1 fault" if len(faults) == 1 else f"{len(faults)} faults"
+    return InvalidRequest(f"{count} in the query.", faults=tuple(faults))

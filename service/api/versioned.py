@@ -82,8 +82,7 @@ class Versioned:
 
     def list(self, code: str | None = None) -> Response:
         """List versions, newest first."""
-        page = requests.page("state")
-        requests.choice(page, "state", STATES)
+        page = requests.page(state=STATES)
         return listed(versions.listing(requests.services(), requests.actor(), self.kind, code, **page))
 
     def summary(self, code: str) -> Response:
