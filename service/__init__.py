@@ -43,3 +43,14 @@ def create_app(services: Services) -> Flask:
             app.wsgi_app, x_for=hops, x_proto=hops, x_host=hops
         )
     return app
+
+
+def describe_api() -> str:
+    """Write openapi.yaml from the code; needs neither settings nor a database."""
+    from flask import Flask
+
+    from service import api
+
+    app = Flask(__name__, static_folder=None, template_folder=None)
+    api.register(app)
+    return api.openapi_text(app)

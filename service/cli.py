@@ -129,9 +129,9 @@ def verify(anchor: Path | None) -> None:
 @main.command()
 def openapi() -> None:
     """Print the description of the HTTP API."""
-    from service.api.description import openapi_yaml
+    from service import describe_api
 
-    click.echo(openapi_yaml(), nl=False)
+    click.echo(describe_api(), nl=False)
 
 
 # --- accounts ------------------------------------------------------------------------------------------

@@ -12,7 +12,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
-from urllib.parse import parse_qsl, quote, urlencode, urlsplit, urlunsplit
+from urllib.parse import parse_qsl, quote, urlencode, urlsplit
 
 from service.errors import SettingsError
 
@@ -160,7 +160,8 @@ def masked(url: str) -> str:
         return MASK
     shown = [(name, MASK if "pass" in name.lower() else value) for name, value in pairs]
     query = urlencode(shown, quote_via=quote, safe="/*")
-    return urlunsplit((parts.scheme, place, parts.path, query, ""))
+    # put together by hand: urlunsplit takes two of the four slashes of sqlite:////folder/file
+    return f"{parts.scheme}://{place}{parts.path}" + (f"?{query}" if query else "")
 
 
 def secret_key(settings: Settings) -> bytes:

@@ -1,1 +1,1 @@
-"""The demo plant: an invented milk drying plant with raw test data, and the whole job walked through on it."""
+"""The demo plant: an invented milk drying plant with raw test data, and the job walked through on it."""

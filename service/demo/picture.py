@@ -1,7 +1,7 @@
 """The number line in plain text, for the terminal: the same picture as on the pages and in print.
 
-Clear between the brackets is acceptance, ``/`` the guard band, ``:`` outside tolerance. Above the line lies the
-coverage interval, below it hangs the estimate.
+Clear between the brackets is acceptance, ``/`` the guard band, ``:`` outside tolerance. Above the line lies
+the coverage interval, below it hangs the estimate.
 """
 
 from __future__ import annotations
@@ -27,7 +27,7 @@ def number_line(verdict: dict[str, Any]) -> list[str]:
     start, end = min(marks) - margin, max(marks) + margin
 
     def place(value: float) -> int:
-        return round((value - start) / (end - start) * (WIDTH - 1))
+        return int((value - start) / (end - start) * (WIDTH - 1) + 0.5)
 
     return [
         _coverage(place(estimate - expanded), place(estimate), place(estimate + expanded)),

@@ -181,7 +181,7 @@ class Walk:
             self._console.print()
             self._console.print(
                 f"{verdict['specification']['code']}: {verdict['outcome']}, conformance probability "
-                f"{verdict['conformance_probability']:.4f}"
+                f"{verdict['display']['conformance_probability']}"
             )
             for line in number_line(verdict):
                 self._console.print(f"  {line}", markup=False, highlight=False)
@@ -194,7 +194,8 @@ class Walk:
         self._console.rule()
 
     def _table(self, title: str, *columns: str) -> Table:
-        table = Table(title=title, title_justify="left", title_style="bold")
+        self._console.print(f"\n[bold]{title}[/bold]")
+        table = Table()
         for position, column in enumerate(columns):
             table.add_column(column, justify="left" if position == 0 else "right", overflow="fold")
         return table

@@ -14,7 +14,8 @@ from contextlib import contextmanager
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
-from sqlalchemy import Connection, func, select, update
+from sqlalchemy import Connection, Text, bindparam, cast, func, select, update
+from sqlalchemy.dialects.postgresql import ARRAY
 
 from service.errors import NotFound
 from service.ledger import GENESIS, Entry, Head, format_instant, write_entry
@@ -65,6 +66,12 @@ __all__ = [
 PLANT = "plant"
 """The chain of approvals, master data, people and studies."""
 _REVISION = select(revision.c.revision).where(revision.c.id == 1)
+_LOCKED_HEADS = (
+    select(chains.c.chain)
+    .where(chains.c.chain == func.any(cast(bindparam("names"), ARRAY(Text))))
+    .order_by(chains.c.chain)
+    .with_for_update()
+)
 _NEW_CHAIN_LOCK = 0x53484D4B
 """PostgreSQL advisory lock held while a chain gets its first entry: there is no head row to lock yet."""
 
@@ -192,10 +199,14 @@ class UnitOfWork:
         self._read_heads()
 
     def _lock_heads(self) -> None:
-        query = select(chains.c.chain).where(chains.c.chain.in_(sorted(self._locked)))
-        if len(self.session.rows(query)) < len(self._locked):
-            self.session.row(select(func.pg_advisory_xact_lock(_NEW_CHAIN_LOCK)))
-        self.session.rows(query.order_by(chains.c.chain).with_for_update())
+        names = sorted(self._locked)
+        if len(self.session.rows(_LOCKED_HEADS, names=names)) == len(names):
+            return
+        # A chain without entries has no row to lock. Begin again: whoever waits for this lock must hold
+        # nothing that its holder may wait for.
+        self._connection.rollback()
+        self.session.row(select(func.pg_advisory_xact_lock(_NEW_CHAIN_LOCK)))
+        self.session.rows(_LOCKED_HEADS, names=names)
 
     def _read_heads(self) -> dict[str, Head]:
         if self._heads is None:

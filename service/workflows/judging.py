@@ -6,17 +6,16 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any, Final
 
-from budgets.reporting import displayed, statement
-
 from budgets.errors import BudgetsError
 from budgets.release import Judgement, ReleaseRule
-from service.documents import Characteristic, DecisionRequest, Requirement
+from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.schemas import dump
 from service.workflows.calendar import NOTICE
 from service.workflows.measured import Hold, Measured, measure
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
 from service.workflows.request_checks import check_request
+from service.workflows.wording import about_the_value, display
 
 # The worst verdict decides the lot.
 SEVERITY: Final = {"release": 0, "hold": 1, "reject": 2}
@@ -113,6 +112,9 @@ def _rule_on(
     if rule is not None and measured.estimate is not None and not holds:
         judgement = rule.judge(measured.estimate)
     outcome = "hold" if judgement is None else judgement.outcome
+    shown = None
+    if rule is not None and measured.estimate is not None:
+        shown = display(rule, measured.estimate, judgement, characteristic)
     verdict = {
         "characteristic": requirement.characteristic,
         "unit": characteristic.unit,
@@ -124,12 +126,12 @@ def _rule_on(
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
         "samples": 0 if measured.counts is None else len(measured.counts.readings_per_sample),
         "readings": 0 if measured.counts is None else sum(measured.counts.readings_per_sample),
-        "display": _display(rule, measured, judgement, characteristic, requirement),
+        "display": shown,
     }
     reasons = [_reason(hold, requirement.characteristic, specification) for hold in holds]
-    if judgement is not None and outcome != "release" and rule is not None:
-        about_value = _about_the_value(rule, outcome, measured, characteristic)
-        reasons.append(_reason(about_value, requirement.characteristic, specification))
+    if rule is not None and measured.estimate is not None and judgement is not None and outcome != "release":
+        value_hold = about_the_value(rule, measured.estimate, outcome, characteristic.unit)
+        reasons.append(_reason(value_hold, requirement.characteristic, specification))
     return Ruling(verdict, tuple(reasons))
 
 
@@ -252,60 +254,6 @@ def _reason(hold: Hold, characteristic: str, specification: SpecificationInForce
         "specification": _reference(specification),
         "detail": hold.detail,
         "next": hold.next,
-    }
-
-
-def _about_the_value(
-    rule: ReleaseRule, outcome: str, measured: Measured, characteristic: Characteristic
-) -> Hold:
-    shown = displayed(rule, measured.estimate, decimals=characteristic.decimals)
-    unit = characteristic.unit
-    assert measured.estimate is not None
-    upper_side = rule.upper_tolerance_limit is not None and (
-        rule.lower_acceptance_limit is None or measured.estimate >= rule.lower_acceptance_limit
-    )
-    relation = "above" if upper_side else "below"
-    limit = shown.upper_tolerance_limit if upper_side else shown.lower_tolerance_limit
-    accepted = shown.upper_acceptance_limit if upper_side else shown.lower_acceptance_limit
-    if outcome == "reject":
-        return Hold(
-            "outside-tolerance",
-            f"{shown.estimate} {unit} is {relation} the tolerance limit {limit} {unit}.",
-            "The lot does not meet the specification. A person decides what becomes of it.",
-        )
-    return Hold(
-        "in-guard-band",
-        f"{shown.estimate} {unit} is within the tolerance limit {limit} {unit} but {relation} the acceptance "
-        f"limit {accepted} {unit}.",
-        "The rule plans no further readings. A person decides, with an analysis by the laboratory.",
-    )
-
-
-def _display(
-    rule: ReleaseRule | None,
-    measured: Measured,
-    judgement: Judgement | None,
-    characteristic: Characteristic,
-    requirement: Requirement,
-) -> dict[str, Any] | None:
-    """Write the rounded texts for people; the record keeps the digits beside them."""
-    if rule is None or measured.estimate is None:
-        return None
-    shown = displayed(rule, measured.estimate, decimals=characteristic.decimals)
-    return {
-        "estimate": shown.estimate,
-        "expanded_uncertainty": shown.expanded_uncertainty,
-        "lower_acceptance_limit": shown.lower_acceptance_limit,
-        "upper_acceptance_limit": shown.upper_acceptance_limit,
-        "statement": statement(
-            rule,
-            measured.estimate,
-            characteristic=characteristic.code,
-            unit=characteristic.unit,
-            basis=characteristic.basis,
-            method=requirement.method,
-            decimals=characteristic.decimals,
-        ),
     }
 
 

@@ -8,13 +8,12 @@ from typing import Any
 from zoneinfo import ZoneInfo
 
 from budgets.evidence.agreement import NamedSource
-from budgets.evidence.study_data import StudyData, evaluate_study
-
 from budgets.evidence.evaluation import Evaluation, SetAside
+from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.units import conversion
 from service.access import require
 from service.documents import Actor, Plant, Study
-from service.errors import Conflict, NotFound
+from service.errors import Conflict, Fault, NotFound
 from service.ledger import Entry
 from service.schemas import dump
 from service.store.rows import StoredStudy
@@ -128,14 +127,35 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
         study.design,
         StudyData(columns=study.columns, rows=study.rows),
         study=study.code,
-        set_aside=tuple(SetAside(row.row - 1, row.reason) for row in study.set_aside),
+        # Documents count rows from 1, as people do; the computation from 0.
+        set_aside=tuple(SetAside(aside.row - 1, aside.reason) for aside in study.set_aside),
+        options={} if study.independent is None else {"independent": study.independent},
         named_sources=tuple(source for source in sources if source is not None),
-        independent=study.independent,
+        readings_decimals=_readings_decimals(unit_of_work, study),
     )
+    collector.faults = [_in_document(fault) for fault in collector.faults]
     collector.finish("The study cannot be evaluated.")
     assert evaluation is not None
     serves_until = study.serves_until or serving_end(study.design, study.done_on, plant_document)
-    return dataclasses.replace(study, serves_until=serves_until), evaluation
+    counted_from_1 = tuple(SetAside(aside.row + 1, aside.reason) for aside in evaluation.set_aside)
+    return (
+        dataclasses.replace(study, serves_until=serves_until),
+        dataclasses.replace(evaluation, set_aside=counted_from_1),
+    )
+
+
+def _in_document(fault: Fault) -> Fault:
+    """Point to the member of the document; what is an option to a design is a member of its own there."""
+    pointer = (fault.pointer or "#").replace("#/options/", "#/", 1)
+    return dataclasses.replace(fault, pointer=pointer)
+
+
+def _readings_decimals(unit_of_work: UnitOfWork, study: Study) -> int | None:
+    """Give the decimals that the analyzer shows, where one analyzer was studied and says so."""
+    if len(study.calibrations) != 1:
+        return None
+    analyzer = unit_of_work.master.get("analyzer", next(iter(study.calibrations)))
+    return None if analyzer is None else analyzer.document["decimals"].get(study.characteristic)
 
 
 def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:

@@ -1,0 +1,91 @@
+"""The words and rounded figures of a verdict, for people; the record keeps every digit beside them."""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+from budgets.release import Judgement, ReleaseRule
+from budgets.reporting import (
+    acceptance_limit_text,
+    decimal_text,
+    number_text,
+    probability_text,
+    rounded,
+    statement,
+)
+from service.documents import Characteristic
+from service.workflows.measured import Hold
+
+# Every double is told from its neighbours by then.
+_MOST_DECIMALS: Final = 17
+
+
+def display(
+    rule: ReleaseRule, estimate: float, judgement: Judgement | None, characteristic: Characteristic
+) -> dict[str, Any]:
+    """Give the figures of a verdict rounded for print; a statement only where a judgement was made."""
+    shown = rounded(estimate, rule.expanded_uncertainty)
+    lower, upper = rule.lower_acceptance_limit, rule.upper_acceptance_limit
+    decimals = shown.decimals + 1
+    return {
+        "estimate": shown.estimate,
+        "expanded_uncertainty": shown.expanded_uncertainty,
+        "lower_acceptance_limit": None
+        if lower is None
+        else acceptance_limit_text(lower, decimals, side="lower"),
+        "upper_acceptance_limit": None
+        if upper is None
+        else acceptance_limit_text(upper, decimals, side="upper"),
+        "conformance_probability": None
+        if judgement is None
+        else probability_text(judgement.conformance_probability),
+        "statement": None
+        if judgement is None
+        else statement(
+            characteristic=f"{characteristic.code} ({characteristic.basis})",
+            unit=characteristic.unit,
+            estimate=estimate,
+            rule=rule,
+            judgement=judgement,
+        ),
+    }
+
+
+def about_the_value(rule: ReleaseRule, estimate: float, outcome: str, unit: str) -> Hold:
+    """Say why a value is held or rejected: which limit it misses, and what to do next."""
+    side = "upper" if _misses_upper(rule, estimate) else "lower"
+    relation = "above" if side == "upper" else "below"
+    tolerance_limit = getattr(rule, f"{side}_tolerance_limit")
+    if outcome == "reject":
+        shown = _told_apart(rule, estimate, tolerance_limit)
+        return Hold(
+            "outside-tolerance",
+            f"{shown} {unit} is {relation if estimate != tolerance_limit else 'at'} the tolerance limit "
+            f"{number_text(tolerance_limit)} {unit}.",
+            "The lot does not meet the specification. A person decides what becomes of it.",
+        )
+    acceptance_limit = getattr(rule, f"{side}_acceptance_limit")
+    shown = _told_apart(rule, estimate, acceptance_limit)
+    decimals = len(shown.partition(".")[2])
+    return Hold(
+        "in-guard-band",
+        f"{shown} {unit} is within the tolerance limit {number_text(tolerance_limit)} {unit} but {relation} "
+        f"the acceptance limit {acceptance_limit_text(acceptance_limit, decimals, side=side)} {unit}.",
+        "The rule plans no further readings. A person decides, with an analysis by the laboratory.",
+    )
+
+
+def _misses_upper(rule: ReleaseRule, estimate: float) -> bool:
+    upper = rule.upper_acceptance_limit
+    return upper is not None and estimate > upper
+
+
+def _told_apart(rule: ReleaseRule, estimate: float, limit: float) -> str:
+    """Round an estimate no further than the limit that it misses lets it be seen."""
+    decimals = max(rounded(estimate, rule.expanded_uncertainty).decimals + 1, 0)
+    while decimals < _MOST_DECIMALS:
+        text = decimal_text(estimate, decimals)
+        if (float(text) > limit) == (estimate > limit) and (float(text) < limit) == (estimate < limit):
+            return text
+        decimals += 1
+    return number_text(estimate)
