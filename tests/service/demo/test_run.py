@@ -1,0 +1,32 @@
+"""`shoalmark demo --check` walks the whole job over HTTP against a real server process."""
+
+from __future__ import annotations
+
+import os
+import re
+import subprocess
+import sys
+from pathlib import Path
+
+ROOT = Path(__file__).parents[3]
+
+
+def test_the_check_walks_the_job_and_ends_well(tmp_path: Path) -> None:
+    environment = {name: value for name, value in os.environ.items() if not name.startswith("SHOALMARK_")}
+    result = subprocess.run(
+        [sys.executable, "-c", "from service.cli import main; main()", "demo", "--check"],
+        cwd=ROOT,
+        env=environment | {"TMPDIR": str(tmp_path)},
+        capture_output=True,
+        text=True,
+        timeout=120,
+    )
+    assert result.returncode == 0, result.stdout + result.stderr
+    assert "Lot W26-04711: RELEASE" in result.stdout
+    outcomes = dict(re.findall(r"│ (release|hold|reject) +│ +(\d+) │", result.stdout))
+    assert sum(map(int, outcomes.values())) == 200
+    # Most lots are good, but not all can be proved and a few are beyond the customer's limit.
+    assert int(outcomes["release"]) > int(outcomes["hold"]) > int(outcomes["reject"]) > 0
+    assert "The record is whole." in result.stdout
+    # Nothing of it is left: no database, no server.
+    assert list(tmp_path.iterdir()) == []
