@@ -15,6 +15,7 @@ from service.store.session import Session
 from service.store.tables import chains, entries, idempotency_keys
 
 LARGEST_PAGE = 1000
+_AS_STORED: tuple[Any, ...] = (entries,)
 # A body that somebody altered may be text by now; verification must be able to read it all the same.
 _AS_BYTES: list[Any] = [column for column in entries.c if column.name != "body"]
 _AS_BYTES.append(cast(entries.c.body, LargeBinary).label("body"))
@@ -88,7 +89,7 @@ class Ledger:
         return found, position
 
     def _rows(
-        self, chain: str, after: int | None, limit: int, columns: Sequence[Any] = (entries,)
+        self, chain: str, after: int | None, limit: int, columns: Sequence[Any] = _AS_STORED
     ) -> Sequence[Row[Any]]:
         query = select(*columns).where(entries.c.chain == chain)
         if after is not None:
