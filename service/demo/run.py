@@ -13,7 +13,7 @@ import subprocess
 import sys
 import tempfile
 import time
-from contextlib import suppress
+from contextlib import closing, suppress
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Final
@@ -45,7 +45,7 @@ def run(*, check: bool, port: int | None) -> int:
         environment = _environment(folder, port or _free_port())
         settings = load_settings(environment)
         console.print("Demo plant, invented: a milk drying plant. Not for real release decisions.\n")
-        access = _open_accounts(settings)
+        access = open_accounts(settings)
         server = _start(environment, settings, folder)
         client = Client(settings.host, settings.port)
         walk = Walk(client, access, console)
@@ -77,7 +77,8 @@ def _environment(folder: Path, port: int) -> dict[str, str]:
     }
 
 
-def _open_accounts(settings: Settings) -> Access:
+def open_accounts(settings: Settings) -> Access:
+    """Make the database with the accounts of the demo, before anything serves it."""
     from service.store.schema import migrate
     from service.store.unit_of_work import Database
 
@@ -111,10 +112,8 @@ def _start(environment: dict[str, str], settings: Settings, folder: Path) -> sub
     while time.monotonic() < deadline:
         if server.poll() is not None:
             break
-        with suppress(OSError):
-            client = Client(settings.host, settings.port)
+        with suppress(OSError), closing(Client(settings.host, settings.port)) as client:
             if client.call("GET", "/readyz", None).status == 200:
-                client.close()
                 return server
         time.sleep(0.05)
     _end(server)
