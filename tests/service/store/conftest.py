@@ -13,7 +13,7 @@ from service.store.writer import Writer
 
 @pytest.fixture(params=["sqlite", "postgresql"])
 def empty_url(request: pytest.FixtureRequest, tmp_path: Path) -> str:
-    """The URL of a database that no migration has touched."""
+    """Return the URL of a database that no migration has touched."""
     if request.param == "sqlite":
         return f"sqlite:///{tmp_path / 'empty.sqlite3'}"
     return str(request.getfixturevalue("postgresql_database")(None))

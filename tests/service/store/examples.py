@@ -27,7 +27,7 @@ def note(
     before: Callable[[UnitOfWork], None] | None = None,
     after: Callable[[UnitOfWork, Entry], None] | None = None,
 ) -> Act:
-    """An act that records a note; ``before`` and ``after`` run around its entry."""
+    """Return an act that records a note; ``before`` and ``after`` run around its entry."""
 
     def perform(unit: UnitOfWork) -> Entry:
         if before is not None:
@@ -45,7 +45,7 @@ def note(
 def judge(
     lot: str, outcome: str = "release", *, product: str = "whole-milk-powder", chain: str = LINE
 ) -> Act:
-    """An act that records a decision on a lot with one reading."""
+    """Return an act that records a decision on a lot with one reading."""
 
     def keep(unit: UnitOfWork, entry: Entry) -> None:
         unit.decisions.add(product=product, lot=lot, round=1, outcome=outcome, entry=entry)
@@ -62,14 +62,14 @@ def judge(
 
 
 def texts(database: Database, chain: str = LINE) -> list[str]:
-    """The texts of all notes of a chain, in order."""
+    """Return the texts of all notes of a chain, in order."""
     with database.reading() as unit:
         return [entry.content["text"] for entry in unit.ledger.entries(chain)]
 
 
 @contextmanager
 def connected(url: str) -> Iterator[Connection]:
-    """A connection behind the store's back, closed whatever happens."""
+    """Yield a connection behind the store's back, closed whatever happens."""
     engine = make_engine(url, pool_size=1)
     try:
         with engine.connect() as connection:
