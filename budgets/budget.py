@@ -173,7 +173,9 @@ def _faults_of_bias(budget: Budget) -> list[BudgetsError]:
 
 def _beyond_its_study(part: Component, whole: Component) -> bool:
     """Say whether ``part`` only adds what its study's averaging did not leave in ``whole``."""
-    return part.covered_weight > 0 and whole.covered_weight == 0 and "remainder" in whole.contains
+    if part.covered_weight == 0 or whole.covered_weight > 0:
+        return False
+    return {*part.contains, "remainder"} <= set(whole.contains)
 
 
 def _double_counting(components: tuple[Component, ...]) -> list[BudgetsError]:

@@ -189,6 +189,11 @@ def number_text(value: float) -> str:
     return _text(_decimal(value).normalize())
 
 
+def decimal_text(value: float, decimals: int) -> str:
+    """Return a number rounded to so many decimal places, half to even."""
+    return _text(_decimal(value).quantize(_quantum(decimals), ROUND_HALF_EVEN, _CONTEXT))
+
+
 def rule_text(rule: DecisionRule) -> str:
     """Return a decision rule in words.
 

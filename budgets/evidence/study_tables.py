@@ -10,7 +10,7 @@ from typing import Any
 from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
 from budgets.evidence.evaluation import Estimate
 
-Cell = float | int | str | None
+Cell = float | int | str | Mapping[str, float] | None
 
 LARGEST_MAGNITUDE = 1e15
 
