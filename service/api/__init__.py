@@ -70,4 +70,7 @@ def _authenticate() -> None:
 
 
 def _serve_description() -> Response:
-    return Response(openapi_text(current_app), mimetype="application/yaml")
+    # Written once: it takes most of a second, and anybody may ask for it.
+    text = current_app.extensions.get("shoalmark.openapi") or openapi_text(current_app)
+    current_app.extensions["shoalmark.openapi"] = text
+    return Response(text, mimetype="application/yaml")

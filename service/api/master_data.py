@@ -16,14 +16,15 @@ from service.workflows.recording import Page
 
 
 def _put(kind: str, document: Any) -> Response:
-    result = master_data.put(
-        requests.services(),
-        requests.actor(),
-        kind,
-        document,
-        if_match=requests.if_match(),
-        request=requests.replaceable(),
-    )
+    with requests.creation_only():
+        result = master_data.put(
+            requests.services(),
+            requests.actor(),
+            kind,
+            document,
+            if_match=requests.if_match(),
+            request=requests.replaceable(),
+        )
     return master_put(result)
 
 

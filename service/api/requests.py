@@ -5,13 +5,23 @@ from __future__ import annotations
 import hashlib
 import json
 import re
+from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Any, TypeVar, cast
 
 from flask import current_app, g, request
 
 from service.api.reader import request_document
 from service.documents import Actor
-from service.errors import Fault, InvalidRequest, KeyMissing, NotFound, StaleVersion, Unauthenticated
+from service.errors import (
+    Fault,
+    InvalidRequest,
+    KeyMissing,
+    NotFound,
+    PreconditionRequired,
+    StaleVersion,
+    Unauthenticated,
+)
 from service.schemas import load
 from service.schemas.base import got
 from service.workflows import accounts
@@ -96,6 +106,17 @@ def if_match() -> int | None:
     if found is None:
         raise StaleVersion(f'If-Match has to repeat one ETag as it was read, as "3"; got {value[:60]}.')
     return int(found.group(1))
+
+
+@contextmanager
+def creation_only() -> Iterator[None]:
+    """Answer 412 instead of 428 where ``If-None-Match: *`` asked for creation only. Raises StaleVersion."""
+    try:
+        yield
+    except PreconditionRequired:
+        if request.headers.get("If-None-Match", "").strip() != "*":
+            raise
+        raise StaleVersion("If-None-Match: * asks for creation, but the document exists.") from None
 
 
 def query(*names: str) -> dict[str, str]:

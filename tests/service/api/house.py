@@ -7,6 +7,7 @@ import json
 import random
 from collections.abc import Mapping
 from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta, timezone
 from itertools import count
 from typing import Any
 
@@ -17,10 +18,16 @@ from service import documents
 from service.schemas.examples import EXAMPLES
 
 PASSWORD = "a long enough password"
+
+# Evidence and readings are of now, whenever the tests run.
+TODAY = datetime.now(UTC).date()
+DONE_ON = (TODAY - timedelta(days=40)).isoformat()
+SERVES_UNTIL = (TODAY + timedelta(days=300)).isoformat()
+TAKEN_AT = datetime.now(UTC).replace(minute=0, second=0, microsecond=0) - timedelta(days=1)
 _keys = count(1)
 
 
-def example(kind: type[Any], **changes: Any) -> dict[str, Any]:
+def example(kind: type[Any], /, **changes: Any) -> dict[str, Any]:
     """Give a valid document of a kind, with changes."""
     return {**copy.deepcopy(EXAMPLES[kind]), **changes}
 
@@ -77,6 +84,12 @@ def done(response: TestResponse, status: int = 201) -> dict[str, Any]:
     return document
 
 
+def a_study(**changes: Any) -> dict[str, Any]:
+    """Make a study that serves now."""
+    plain = {"done_on": DONE_ON, "serves_until": SERVES_UNTIL, "set_aside": [], "source": None}
+    return example(documents.Study, **{**plain, **changes})
+
+
 def repeatability_study(**changes: Any) -> dict[str, Any]:
     draw = random.Random(11)
     rows = [
@@ -84,8 +97,7 @@ def repeatability_study(**changes: Any) -> dict[str, Any]:
         for sample, level in enumerate([2.6 + 0.04 * step for step in range(20)], start=1)
         for replicate in (1, 2)
     ]
-    study = {"columns": ["sample", "replicate", "reading"], "rows": rows, "set_aside": [], "source": None}
-    return example(documents.Study, **{**study, **changes})
+    return a_study(**{"columns": ["sample", "replicate", "reading"], "rows": rows, **changes})
 
 
 def duplicates_study() -> dict[str, Any]:
@@ -95,16 +107,13 @@ def duplicates_study() -> dict[str, Any]:
         for sample in range(1, 21)
         for determination in (1, 2)
     ]
-    return example(
-        documents.Study,
+    return a_study(
         code="wmp-dup-2026-01",
         design="duplicates",
         calibrations={},
         laboratory="site-lab",
         columns=["sample", "determination", "result"],
         rows=rows,
-        set_aside=[],
-        source=None,
     )
 
 
@@ -127,8 +136,7 @@ def agreement_study() -> dict[str, Any]:
             "evidence": {"study": "wmp-dup-2026-01", "estimate": "repeatability"},
         },
     ]
-    return example(
-        documents.Study,
+    return a_study(
         code="wmp-val-2026-01",
         design="agreement",
         independent=True,
@@ -136,8 +144,6 @@ def agreement_study() -> dict[str, Any]:
         named_sources=sources,
         columns=["pair", "reading", "reference", "group"],
         rows=rows,
-        set_aside=[],
-        source=None,
     )
 
 
@@ -185,14 +191,27 @@ def decision(
     lot: str = "W26-04711", moisture: tuple[float, ...] = (2.71, 2.74), **changes: Any
 ) -> dict[str, Any]:
     """Make a request to judge a lot, read as often as there are values."""
-    taken = "2026-03-02T06:12:{:02d}.{:03d}+01:00"
-    number = sum(lot.encode()) % 1000
+    first = TAKEN_AT + timedelta(milliseconds=sum(lot.encode()) % 1000)
     readings = [
         {
             **EXAMPLES[documents.DecisionRequest]["readings"][0],
-            "taken_at": taken.format(second, number),
+            "taken_at": instant(first + timedelta(seconds=second)),
             "values": {"moisture": value, "fat": 26.4, "protein": 24.9},
         }
         for second, value in enumerate(moisture)
     ]
-    return example(documents.DecisionRequest, lot=lot, readings=readings, **changes)
+    return example(documents.DecisionRequest, **{"lot": lot, "readings": readings, **changes})
+
+
+def instant(moment: datetime, hours: int = 1) -> str:
+    """Write an instant as a line of another time zone would."""
+    return moment.astimezone(timezone(timedelta(hours=hours))).isoformat(timespec="milliseconds")
+
+
+def moved(request: dict[str, Any], **by: int) -> dict[str, Any]:
+    """Give the same request with readings taken later, and its instants written in another zone."""
+    later = copy.deepcopy(request)
+    for reading in later["readings"]:
+        moment = datetime.fromisoformat(reading["taken_at"]) + timedelta(**by)
+        reading["taken_at"] = instant(moment, hours=-5)
+    return later

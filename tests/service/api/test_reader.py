@@ -1,6 +1,7 @@
 """The strict JSON reader.
 
-RFC 8259 says what JSON is; RFC 7493 (I-JSON), 2.1 and 2.3, forbids lone surrogates and equal names (from memory).
+RFC 8259 says what JSON is. RFC 7493 (I-JSON), 2.1 and 2.3, forbids lone surrogates and equal
+names (from memory).
 """
 
 from __future__ import annotations

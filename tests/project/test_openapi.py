@@ -1,0 +1,99 @@
+"""The description of the API is valid, complete, held to the code, and the code is held to it."""
+
+from __future__ import annotations
+
+import tomllib
+from pathlib import Path
+from typing import Any
+
+import pytest
+import yaml
+from flask import Flask
+from openapi_spec_validator import validate
+
+from service import api, create_app, create_services
+from service.settings import load_settings
+from service.store.schema import migrate
+
+ROOT = Path(__file__).parents[2]
+
+
+@pytest.fixture(scope="module")
+def app(tmp_path_factory: pytest.TempPathFactory) -> Any:
+    settings = load_settings({"SHOALMARK_DATA_FOLDER": str(tmp_path_factory.mktemp("openapi"))})
+    migrate(settings.database_url)
+    app = create_app(create_services(settings))
+    yield app
+    app.extensions["shoalmark"].close()
+
+
+@pytest.fixture(scope="module")
+def document(app: Flask) -> dict[str, Any]:
+    return api.openapi_document(app)
+
+
+def operations(document: dict[str, Any]) -> list[tuple[str, str, dict[str, Any]]]:
+    return [
+        (path, method, operation)
+        for path, item in document["paths"].items()
+        for method, operation in item.items()
+        if method in ("get", "post", "put", "delete", "patch")
+    ]
+
+
+def test_it_is_valid_openapi_3_1(document: dict[str, Any]) -> None:
+    assert document["openapi"] == "3.1.0"
+    validate(document)
+
+
+def test_the_file_is_what_the_program_writes(app: Flask) -> None:
+    assert (ROOT / "openapi.yaml").read_text() == api.openapi_text(app), "run: shoalmark openapi"
+
+
+def test_its_version_is_that_of_the_distribution(document: dict[str, Any]) -> None:
+    project = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]
+    assert document["info"]["version"] == project["version"]
+
+
+def test_every_route_of_the_api_is_described(app: Flask, document: dict[str, Any]) -> None:
+    routed = {
+        (rule.rule.count("/"), method.lower(), rule.rule.split("<")[0])
+        for rule in app.url_map.iter_rules()
+        if rule.rule.startswith("/v1")
+        for method in (rule.methods or set()) - {"HEAD", "OPTIONS"}
+    }
+    described = {(path.count("/"), method, path.split("{")[0]) for path, method, _ in operations(document)}
+    assert described == routed
+
+
+def test_every_operation_names_its_problems(document: dict[str, Any]) -> None:
+    for path, method, operation in operations(document):
+        responses = operation["responses"]
+        assert {"401", "403", "500"} <= responses.keys(), (method, path)
+        assert ("404" in responses) == ("{" in path), (method, path)
+        if "requestBody" in operation:
+            assert {"400", "413", "415", "422"} <= responses.keys(), (method, path)
+        for status, response in responses.items():
+            if int(status) >= 400:
+                assert list(response["content"]) == ["application/problem+json"], (method, path, status)
+        assert operation["summary"], (method, path)
+
+
+def test_recording_posts_need_a_key(document: dict[str, Any]) -> None:
+    for path, method, operation in operations(document):
+        keys = [each for each in operation.get("parameters", []) if each["name"] == "Idempotency-Key"]
+        if method == "post" and not path.endswith("/preview"):
+            assert [each["required"] for each in keys] == [True], path
+            assert "503" in operation["responses"]
+
+
+def test_every_body_shows_a_valid_example(document: dict[str, Any]) -> None:
+    for path, method, operation in operations(document):
+        if "requestBody" in operation:
+            assert operation["requestBody"]["content"]["application/json"]["example"], (method, path)
+
+
+def test_it_is_served_as_it_is_written(app: Flask) -> None:
+    response = app.test_client().get("/openapi.yaml")
+    assert (response.status_code, response.mimetype) == (200, "application/yaml")
+    assert yaml.safe_load(response.get_data()) == api.openapi_document(app)

@@ -1,0 +1,156 @@
+"""Versioned documents: drafted, replaced, submitted, approved by another person, superseded, withdrawn."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import pytest
+
+from service import documents
+from tests.service.api import house
+from tests.service.api.conftest import Callers
+from tests.service.api.house import done, example, signed
+
+KINDS: list[tuple[str, dict[str, Any]]] = [
+    ("/v1/specifications/new-one", house.specification("new-one", 3.1)),
+    ("/v1/budgets/new-one", example(documents.BudgetDocument, code="new-one")),
+    ("/v1/plant", example(documents.Plant)),
+]
+
+
+def drafted(callers: Callers, path: str, document: dict[str, Any]) -> dict[str, Any]:
+    collection = "/v1/plant/versions" if path == "/v1/plant" else path.rsplit("/", 1)[0]
+    return done(callers["engineer"].post(collection, document))
+
+
+@pytest.mark.parametrize(("path", "document"), KINDS, ids=["specification", "budget", "plant"])
+def test_a_draft_is_replaced_submitted_returned_and_withdrawn(
+    callers: Callers, path: str, document: dict[str, Any]
+) -> None:
+    engineer, approver = callers["engineer"], callers["max"]
+    # Only one budget may serve an analyzer: the one in force makes way.
+    done(approver.post("/v1/budgets/wmp-moisture-nir/versions/1/withdraw", signed()), 200)
+    draft = drafted(callers, path, document)
+    assert (draft["version"], draft["state"], draft["revision"]) == (1, "draft", 1)
+    one = f"{path}/versions/1"
+    response = engineer.get(one)
+    assert response.headers["ETag"] == '"1"'
+    changed = {**document, "reason": "a better reason"}
+    assert engineer.put(one, changed).status_code == 428
+    assert engineer.put(one, changed, If_Match='"7"').status_code == 412
+    assert engineer.put(one, changed, If_Match="*").status_code == 412
+    replaced = engineer.put(one, changed, If_Match='"1"')
+    assert done(replaced, 200)["document"]["reason"] == "a better reason"
+    assert replaced.headers["ETag"] == '"2"'
+    assert done(engineer.post(f"{one}/submit"), 200)["state"] == "submitted"
+    late = engineer.put(one, document, If_Match='"3"')
+    assert (late.status_code, late.get_json()["type"]) == (409, "/problems/not-in-this-state")
+    assert done(approver.post(f"{one}/return", signed("more detail please")), 200)["state"] == "draft"
+    assert done(callers["ada"].post(f"{one}/withdraw", signed("not needed")), 200)["state"] == "withdrawn"
+    listed = done(engineer.get(f"{path}/versions?state=withdrawn"), 200)["items"]
+    assert [item["version"] for item in listed] == [1]
+
+
+def test_an_approved_version_supersedes_the_one_before(callers: Callers) -> None:
+    engineer, approver = callers["engineer"], callers["max"]
+    second = done(engineer.post("/v1/specifications/legal/versions", house.specification("legal", 4.9)))
+    assert second["version"] == 2
+    assert callers["engineer"].post(
+        "/v1/specifications/legal/versions", house.specification("legal", 4.8)
+    ).get_json()["type"] == ("/problems/open-version-exists")
+    two = "/v1/specifications/legal/versions/2"
+    done(engineer.post(f"{two}/submit"), 200)
+    approved = done(approver.post(f"{two}/approve", signed()), 200)
+    assert (approved["state"], approved["approved_by"]) == ("in_force", "max")
+    assert approved["in_force_from"]
+    assert done(engineer.get("/v1/specifications/legal/versions/1"), 200)["state"] == "superseded"
+    summary = done(engineer.get("/v1/specifications/legal"), 200)
+    assert (summary["newest"], summary["in_force"]["version"], summary["open"]) == (2, 2, None)
+    judged = done(callers["mes"].post("/v1/decisions", house.decision()))
+    assert judged["verdicts"][0]["specification"] == {"code": "legal", "version": 2}
+    assert judged["verdicts"][0]["upper_tolerance_limit"] == 4.9
+
+
+def test_nobody_approves_alone(callers: Callers) -> None:
+    path, document = KINDS[0]
+    done(callers["ada"].post("/v1/specifications", document))
+    one = f"{path}/versions/1"
+    done(callers["ada"].post(f"{one}/submit"), 200)
+    for name, words in (("ada", "another person"), ("robot", "machine"), ("engineer", "role")):
+        response = callers[name].post(f"{one}/approve", signed())
+        assert response.status_code == 403
+        assert response.get_json()["type"] == "/problems/forbidden"
+        assert words in response.get_json()["detail"]
+    wrong = {"reason": "checked", "signature": {"password": "guessed once"}}
+    response = callers["max"].post(f"{one}/approve", wrong)
+    assert (response.status_code, "signature" in response.get_json()["detail"]) == (403, True)
+    assert "guessed once" not in response.get_data(as_text=True)
+    done(callers["max"].post(f"{one}/approve", signed()), 200)
+
+
+def test_a_repeated_approval_is_one_act_whatever_the_password(callers: Callers) -> None:
+    path, document = KINDS[0]
+    drafted(callers, path, document)
+    one, key = f"{path}/versions/1", house.fresh_key()
+    done(callers["engineer"].post(f"{one}/submit"), 200)
+    first = callers["max"].post(f"{one}/approve", signed(), key=key)
+    again = callers["max"].post(f"{one}/approve", signed(), key=key)
+    assert (again.status_code, again.headers["Recorded-Earlier"]) == (200, "true")
+    assert again.get_json() == first.get_json()
+    other = callers["max"].post(f"{one}/approve", signed("another reason"), key=key)
+    assert other.get_json()["type"] == "/problems/idempotency-key-reused"
+
+
+def test_a_code_is_given_once(callers: Callers) -> None:
+    response = callers["engineer"].post("/v1/specifications", house.specification("legal", 4.0))
+    document = response.get_json()
+    assert (response.status_code, document["type"]) == (409, "/problems/already-exists")
+    assert document["link"] == "/v1/specifications/legal"
+    response = callers["engineer"].post("/v1/studies", house.repeatability_study())
+    assert (response.status_code, response.get_json()["type"]) == (409, "/problems/already-exists")
+
+
+def test_a_document_belongs_to_the_code_in_its_path(callers: Callers) -> None:
+    response = callers["engineer"].post(
+        "/v1/specifications/legal/versions", house.specification("other", 4.0)
+    )
+    assert response.status_code == 422
+    assert [fault["pointer"] for fault in response.get_json()["errors"]] == ["#/code"]
+
+
+@pytest.mark.parametrize(
+    "path",
+    [
+        "/v1/specifications/nothing",
+        "/v1/specifications/nothing/versions",
+        "/v1/specifications/legal/versions/9",
+        "/v1/specifications/legal/versions/0",
+        "/v1/specifications/legal/versions/01",
+        "/v1/specifications/legal/versions/99999999999999999999",
+        "/v1/specifications/LEGAL",
+        "/v1/plant/versions/1",
+        "/v1/budgets/nothing/versions/1/evaluation",
+    ],
+)
+def test_what_is_not_there_is_a_404(callers: Callers, path: str) -> None:
+    response = callers["engineer"].get(path)
+    assert (response.status_code, response.content_type) == (404, "application/problem+json")
+    # A path that no resource can have says so; a resource that is not there has a type of its own.
+    assert response.get_json()["type"] in ("/problems/not-found", "about:blank")
+
+
+def test_a_budget_shows_its_figures(callers: Callers) -> None:
+    figures = done(callers["engineer"].get("/v1/budgets/wmp-moisture-nir/versions/1/evaluation"), 200)
+    parts = figures["components"]
+    assert {part["code"] for part in parts} == {"repeatability", "remainder", "bias", "reference-trueness"}
+    # The law of propagation for independent input quantities: JCGM 100:2008, 5.1.2, eq. (10) (from memory).
+    variance = sum(part["contribution"] ** 2 for part in parts)
+    assert figures["combined_standard_uncertainty"] ** 2 == pytest.approx(variance)
+    assert sum(part["share_of_variance"] for part in parts) == pytest.approx(1)
+
+
+def test_another_budget_for_the_same_analyzer_cannot_come_in_force(callers: Callers) -> None:
+    path, document = KINDS[1]
+    drafted(callers, path, document)
+    response = callers["engineer"].post(f"{path}/versions/1/submit")
+    assert (response.status_code, response.get_json()["type"]) == (409, "/problems/another-budget-in-force")
