@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
@@ -17,6 +17,16 @@ def empty_url(request: pytest.FixtureRequest, tmp_path: Path) -> str:
     if request.param == "sqlite":
         return f"sqlite:///{tmp_path / 'empty.sqlite3'}"
     return str(request.getfixturevalue("postgresql_database")(None))
+
+
+@pytest.fixture
+def postgresql(
+    postgresql_database: Callable[[str | None], str], postgresql_template: str
+) -> Iterator[Database]:
+    """Return a migrated database on PostgreSQL: for what SQLite, with one writer at a time, cannot show."""
+    database = Database(postgresql_database(postgresql_template))
+    yield database
+    database.close()
 
 
 @pytest.fixture
