@@ -56,7 +56,9 @@ def a_budget(a_component: Callable[..., Component]) -> Callable[..., Budget]:
 
 @pytest.fixture
 def an_estimate() -> Callable[..., Estimate]:
-    def make(name: str = "repeatability", variance: float = 0.0009, nu: float = 20, **changes: Any) -> Estimate:
+    def make(
+        name: str = "repeatability", variance: float = 0.0009, nu: float = 20, **changes: Any
+    ) -> Estimate:
         members: dict[str, Any] = {
             "name": name,
             "terms": (Term(1.0, MeanSquare(f"elsewhere/{name}", variance, nu)),),

@@ -9,6 +9,7 @@ from budgets.acceptance import acceptance_interval
 from budgets.conformity import Tolerance, tails
 from budgets.decision_rules import DecisionRule
 from budgets.errors import EmptyAcceptanceError, LimitsError
+from budgets.propagation import upper_quantile
 
 UPPER, LOWER, BOTH = Tolerance(None, 4.0), Tolerance(2.0, None), Tolerance(2.0, 4.0)
 
@@ -25,7 +26,7 @@ SIMPLE = DecisionRule("simple", largest_standard_uncertainty=10.0)
 
 
 def exact_root(r, nu, u, half_width):
-    """The guard band of both tails at once, in forty digits by mpmath's own root finder."""
+    """Return the guard band of both tails at once, in forty digits by mpmath's own root finder."""
 
     def tail(z):
         if math.isinf(nu):
@@ -34,7 +35,9 @@ def exact_root(r, nu, u, half_width):
         return value if z >= 0 else 1 - value
 
     half = mp.mpf(half_width) / mp.mpf(u)
-    return mp.findroot(lambda z: tail(z) + tail(2 * half - z) - mp.mpf(r), (0, half), solver="anderson")
+    return mp.findroot(
+        lambda z: tail(z) + tail(2 * half - z) - mp.mpf(r), (0, half), solver="ridder", maxsteps=200
+    )
 
 
 @pytest.mark.parametrize("nu", [2.5, 9.0, 41.2, math.inf])
@@ -121,6 +124,33 @@ def test_a_single_acceptable_point_is_not_empty():
     assert accepted.lower <= accepted.upper
     with pytest.raises(EmptyAcceptanceError):
         acceptance_interval(factor(), BOTH, 1.0001 / 1.959963984540054, math.inf)
+
+
+@pytest.mark.parametrize("rule", [factor(), risk(0.05)], ids=lambda rule: rule.kind)
+def test_rounding_never_crosses_the_limits_of_a_single_point(rule):
+    quantile = 1.959963984540054
+    for tenths in range(1, 400):
+        tolerance = Tolerance(tenths / 10, tenths / 10 + tenths / 7)
+        u = (tolerance.upper - tolerance.lower) / 2 / quantile
+        for nearby in (u, math.nextafter(u, 0)):
+            try:
+                accepted = acceptance_interval(rule, tolerance, nearby, math.inf)
+            except EmptyAcceptanceError:
+                continue
+            assert tolerance.lower < accepted.lower <= accepted.upper < tolerance.upper
+
+
+@pytest.mark.parametrize("r", [0.01, 0.05, 0.2])
+def test_the_last_point_that_is_left_has_the_largest_allowed_risk(r):
+    for tenths in range(11, 300):
+        nu = tenths / 10
+        u = 1.0 / upper_quantile(r / 2, nu)
+        try:
+            accepted = acceptance_interval(risk(r), BOTH, u, nu)
+        except EmptyAcceptanceError:
+            continue
+        assert 3 - 1e-6 <= accepted.lower <= accepted.upper <= 3 + 1e-6
+        assert sum(tails(accepted.upper, u, nu, BOTH)) == pytest.approx(r, rel=1e-9)
 
 
 def test_domain_and_validated_range_are_no_limits_but_must_leave_something():

@@ -41,8 +41,9 @@ def refused(a_budget, *components, bias=None, match):
 
 
 def test_all_faults_are_told_at_once(a_budget):
-    error = pytest.raises(ComponentError, a_budget, coverage_probability=0.0, bias_treatment="?").value
-    assert [fault.where for fault in error.each()] == [("coverage_probability",), ("bias_treatment",)]
+    with pytest.raises(ComponentError) as caught:
+        a_budget(coverage_probability=0.0, bias_treatment="?")
+    assert [fault.where for fault in caught.value.each()] == [("coverage_probability",), ("bias_treatment",)]
 
 
 def test_codes_are_unique(a_budget, a_component):

@@ -100,7 +100,7 @@ def test_what_was_stated_is_kept():
 
 
 def test_a_bare_figure_is_refused_with_all_meanings():
-    with pytest.raises(ComponentError, match="what does the figure 0.2 mean") as caught:
+    with pytest.raises(ComponentError, match=r"what does the figure 0.2 mean") as caught:
         stated(None, 0.2)
     assert all(meaning in caught.value.message for meaning in MEANINGS)
     with pytest.raises(ComponentError, match="'error' is no meaning"):

@@ -21,7 +21,9 @@ def test_faults_of_arguments_are_value_errors():
 
 
 def test_every_class_of_the_tree_is_drawn_in_the_module():
-    tree = [name for name, item in inspect.getmembers(errors, inspect.isclass) if issubclass(item, BudgetsError)]
+    tree = [
+        name for name, item in inspect.getmembers(errors, inspect.isclass) if issubclass(item, BudgetsError)
+    ]
     assert all(name in errors.__doc__ for name in tree)
 
 

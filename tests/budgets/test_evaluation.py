@@ -19,7 +19,9 @@ from budgets.evidence.evaluation import (
 )
 
 
-@pytest.mark.parametrize(("value", "nu"), [(-1.0, 3), (math.nan, 3), (math.inf, 3), (1.0, 0), (1.0, math.nan)])
+@pytest.mark.parametrize(
+    ("value", "nu"), [(-1.0, 3), (math.nan, 3), (math.inf, 3), (1.0, 0), (1.0, math.nan)]
+)
 def test_an_impossible_mean_square_is_refused(value, nu):
     with pytest.raises(EvidenceError):
         MeanSquare("s/x", value, nu)

@@ -15,17 +15,23 @@ from budgets.release import OUTCOMES, ReleaseRule
 RISK = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
 FACTOR = DecisionRule("guarded_by_factor", multiple=1.0, coverage_probability=0.95, sides=2)
 SIMPLE = DecisionRule("simple", largest_standard_uncertainty=1.0)
-TOLERANCES = (Tolerance(None, 4.0), Tolerance(2.0, None), Tolerance(2.0, 4.0), Tolerance(2.0, 4.0, False, False))
+TOLERANCES = (
+    Tolerance(None, 4.0),
+    Tolerance(2.0, None),
+    Tolerance(2.0, 4.0),
+    Tolerance(2.0, 4.0, False, False),
+)
 
 
 def known(component):
-    """The same component with infinite degrees of freedom."""
+    """Return the same component with infinite degrees of freedom."""
     from dataclasses import replace
 
     return replace(
         component,
         terms=tuple(
-            replace(t, mean_square=replace(t.mean_square, degrees_of_freedom=math.inf)) for t in component.terms
+            replace(t, mean_square=replace(t.mean_square, degrees_of_freedom=math.inf))
+            for t in component.terms
         ),
     )
 

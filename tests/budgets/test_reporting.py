@@ -12,6 +12,7 @@ from budgets.propagation import Counts
 from budgets.release import ReleaseRule
 from budgets.reporting import (
     acceptance_limit_text,
+    decimal_text,
     number_text,
     probability_text,
     rounded,
@@ -59,6 +60,10 @@ def test_what_is_no_uncertainty_is_not_printed(value):
 def test_printed_acceptance_limits_never_accept_more(limit, decimals):
     assert Decimal(acceptance_limit_text(limit, decimals, side="upper")) <= Decimal(repr(limit))
     assert Decimal(acceptance_limit_text(limit, decimals, side="lower")) >= Decimal(repr(limit))
+
+
+def test_decimal_places_round_half_to_even():
+    assert [decimal_text(x, 2) for x in (3.135, 3.145, 2.675, -0.001)] == ["3.14", "3.14", "2.68", "0.00"]
 
 
 def test_a_limit_has_one_of_two_sides():
@@ -138,7 +143,7 @@ def test_the_statement_names_result_limits_outcome_and_rule(a_budget, tolerance,
     text = statement(
         characteristic="moisture", unit="%", estimate=3.135, rule=rule, judgement=rule.judge(3.135)
     )
-    assert text.startswith("moisture: (3.14 ± 0.12) %, expanded uncertainty with k = 2.00")
+    assert text.startswith("moisture: (3.14 ± 0.12) %, expanded uncertainty with k = 1.99")
     assert "coverage probability of 95 %" in text
     assert words in text
     assert "Outcome: release; conformance probability > 99.99 %." in text

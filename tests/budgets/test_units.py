@@ -13,7 +13,7 @@ from budgets.units import conversion, convert, is_known
         ("g/100 g", "%", 1.0, 0.0),
         ("g/100g", "%", 1.0, 0.0),
         ("mg/kg", "%", 1e-4, 0.0),
-        ("µg/g", "mg/kg", 1.0, 0.0),
+        ("\u00b5g/g", "mg/kg", 1.0, 0.0),
         ("g/100 mL", "mg/L", 1e4, 0.0),
         ("m^2", "cm**2", 1e4, 0.0),
         ("kg·m/s^2", "N", 1.0, 0.0),
@@ -41,7 +41,21 @@ def test_what_is_equal_in_print_stays_equal(thousandths):
 
 @pytest.mark.parametrize(
     "unit",
-    ["", " ", "g per cup", "9**9**9", "1/cm", "% m/m", "/g", "g//kg", "foo", "degC/s", "m*degC", "g" * 41, "m^99"],
+    [
+        "",
+        " ",
+        "g per cup",
+        "9**9**9",
+        "1/cm",
+        "% m/m",
+        "/g",
+        "g//kg",
+        "foo",
+        "degC/s",
+        "m*degC",
+        "g" * 41,
+        "m^99",
+    ],
 )
 def test_what_is_no_unit(unit):
     assert not is_known(unit)

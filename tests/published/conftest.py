@@ -1,4 +1,4 @@
-"""Published cases from data/*.json, and the one way in which a computed figure is held against a printed one."""
+"""Published cases from data/*.json, and the way a computed figure is held against a printed one."""
 
 from __future__ import annotations
 
@@ -22,7 +22,7 @@ class Case:
         self.compared: set[str] = set()
 
     def holds(self, name: str, computed: Any) -> None:
-        """Hold a figure (or a table of them) against the printed digits, within half a unit of the last one."""
+        """Hold a figure, or a table, against the printed digits to half a unit of the last one."""
         item = self.expected[name]
         self.compared.add(name)
         if item.get("bound") == "less_than":

@@ -101,10 +101,7 @@ def test_cochran_critical_values(case):
     i = published.inputs
     published.holds(
         "C",
-        [
-            [cochran_critical_value(i["alpha"], p, n - 1, (p - 1) * (n - 1)) for n in i["n"]]
-            for p in i["p"]
-        ],
+        [[cochran_critical_value(i["alpha"], p, n - 1, (p - 1) * (n - 1)) for n in i["n"]] for p in i["p"]],
     )
 
 
