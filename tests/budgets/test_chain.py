@@ -6,8 +6,8 @@ import pytest
 from budgets.budget import Budget, Count, Procedure
 from budgets.components import Component
 from budgets.conformity import Tolerance
-from budgets.declarations import Declaration, evaluate
 from budgets.decision_rules import DecisionRule
+from budgets.declarations import Declaration, evaluate
 from budgets.errors import ComponentError
 from budgets.evidence.evaluation import Evaluation
 from budgets.evidence.study_data import NamedSource, StudyData, evaluate_study
