@@ -56,12 +56,30 @@ def register(app: Flask) -> None:
 def openapi_document(app: Flask) -> dict[str, Any]:
     """Write the description of the API that ``app`` serves (OpenAPI 3.1)."""
     api = cast(ShoalmarkApi, app.extensions["shoalmark.api"])
-    return cast(dict[str, Any], api.spec.to_dict())
+    document = cast(dict[str, Any], api.spec.to_dict())
+    return {"openapi": document.pop("openapi"), **document}
+
+
+class _Plain(yaml.SafeDumper):
+    """Writes what stands twice twice: a reader of openapi.yaml should not have to follow anchors."""
+
+    def ignore_aliases(self, data: Any) -> bool:
+        """Never refer to another place."""
+        return True
+
+
+def _as_block(dumper: yaml.SafeDumper, text: str) -> yaml.ScalarNode:
+    """Write text of several lines as such."""
+    style = "|" if "\n" in text else None
+    return dumper.represent_scalar("tag:yaml.org,2002:str", text, style=style)
+
+
+_Plain.add_representer(str, _as_block)
 
 
 def openapi_text(app: Flask) -> str:
     """Write the description as the YAML text of openapi.yaml."""
-    return yaml.safe_dump(openapi_document(app), sort_keys=False, allow_unicode=True, width=110)
+    return yaml.dump(openapi_document(app), Dumper=_Plain, sort_keys=False, allow_unicode=True, width=110)
 
 
 def _authenticate() -> None:

@@ -7,7 +7,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from http import HTTPStatus
 from typing import Any, TypeVar
 
 from flask_smorest import Blueprint
@@ -16,7 +15,6 @@ from service import documents
 from service.api import requests
 from service.api.answer_forms import Form, ref
 from service.api.answers import EARLIER_HEADER
-from service.api.problems import MEDIA_TYPE
 from service.schemas import SCHEMAS
 from service.schemas.examples import EXAMPLES
 
@@ -24,6 +22,25 @@ View = TypeVar("View", bound=Callable[..., Any])
 
 _ALWAYS = (401, 403, 500)
 _OF_BODY = (400, 413, 415, 422)
+
+# As RFC 9110, section 15, has them (428: RFC 6585); http.HTTPStatus words some of them by its own age.
+PHRASES = {
+    200: "OK",
+    201: "Created",
+    304: "Not Modified",
+    400: "Bad Request",
+    401: "Unauthorized",
+    403: "Forbidden",
+    404: "Not Found",
+    409: "Conflict",
+    412: "Precondition Failed",
+    413: "Content Too Large",
+    415: "Unsupported Media Type",
+    422: "Unprocessable Content",
+    428: "Precondition Required",
+    500: "Internal Server Error",
+    503: "Service Unavailable",
+}
 
 _KEY = {
     "name": requests.KEY_HEADER,
@@ -70,6 +87,11 @@ def parameter(name: str, about: str, words: Sequence[str] = ()) -> Form:
     return {"name": name, "in": "query", "description": about, "schema": schema}
 
 
+def problem_name(status: int) -> str:
+    """Name the response that is described once for all problems of a status."""
+    return PHRASES[status].replace(" ", "")
+
+
 @dataclass(frozen=True)
 class Operation:
     """A call: what goes in, what comes out, and which problems it may answer with."""
@@ -107,16 +129,13 @@ class Operation:
         content = {"application/json": {"schema": ref(self.answers)}}
         responses: Form = {}
         for status in self.status:
-            responses[str(status)] = {"description": HTTPStatus(status).phrase, "content": content}
+            responses[str(status)] = {"description": PHRASES[status], "content": content}
             if headers:
                 responses[str(status)]["headers"] = headers
         if self.conditional:
-            responses["304"] = {"description": HTTPStatus(304).phrase}
+            responses["304"] = {"description": PHRASES[304]}
         for status in sorted(self._problem_statuses(path_has_parameters)):
-            responses[str(status)] = {
-                "description": HTTPStatus(status).phrase,
-                "content": {MEDIA_TYPE: {"schema": ref("Problem")}},
-            }
+            responses[str(status)] = {"$ref": f"#/components/responses/{problem_name(status)}"}
         return responses
 
     def _problem_statuses(self, path_has_parameters: bool) -> set[int]:
@@ -144,7 +163,8 @@ def describe(blueprint: Blueprint, rule: str, method: str, operation: Operation)
     """Register a view under a rule of the API and describe it."""
 
     def decorator(view: View) -> View:
-        documented = blueprint.doc(**operation.document("<" in rule))(view)
+        name = f"{blueprint.name}-{view.__name__}".replace("_", "-")
+        documented = blueprint.doc(operationId=name, **operation.document("<" in rule))(view)
         blueprint.route(rule, methods=[method])(documented)
         return view
 

@@ -15,9 +15,10 @@ from flask import current_app, request
 from marshmallow import fields
 from werkzeug.exceptions import HTTPException
 
-from service.api.answer_forms import ANSWERS
+from service.api.answer_forms import ANSWERS, ref
 from service.api.converters import CONVERTERS
-from service.api.problems import problem_response
+from service.api.operations import PHRASES, problem_name
+from service.api.problems import MEDIA_TYPE, problem_response
 from service.schemas import SCHEMAS
 from service.schemas.evidence import DeclaredEvidenceSchema, StudyEvidenceSchema
 
@@ -27,6 +28,18 @@ PREFIX = "/v1"
 def is_api_path(path: str) -> bool:
     """Whether a path belongs to the API, whose errors are problem documents."""
     return path == PREFIX or path.startswith(PREFIX + "/")
+
+
+def _problem_response(status: int) -> dict[str, Any]:
+    """Describe a problem of a status, with the headers that go with it."""
+    description: dict[str, Any] = {
+        "description": PHRASES[status],
+        "content": {MEDIA_TYPE: {"schema": ref("Problem")}},
+    }
+    headers = {401: "WWW-Authenticate", 503: "Retry-After"}
+    if status in headers:
+        description["headers"] = {headers[status]: {"schema": {"type": "string"}}}
+    return description
 
 
 def _stated_form(self: Any, field: fields.Field[Any], **_: Any) -> dict[str, Any]:
@@ -51,6 +64,9 @@ class ShoalmarkApi(flask_smorest.Api):  # type: ignore[misc] # the package carri
                 components.schema(name, schema=schema)
         for name, form in ANSWERS.items():
             components.schema(name, form)
+        for status in PHRASES:
+            if status >= 400:
+                components.response(problem_name(status), _problem_response(status))
         components.security_scheme(
             "token", {"type": "http", "scheme": "bearer", "description": "`shoalmark token add` makes one."}
         )

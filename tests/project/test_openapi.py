@@ -12,6 +12,7 @@ from flask import Flask
 from openapi_spec_validator import validate
 
 from service import api, create_app, create_services
+from service.api.operations import PHRASES
 from service.settings import load_settings
 from service.store.schema import migrate
 
@@ -47,7 +48,8 @@ def test_it_is_valid_openapi_3_1(document: dict[str, Any]) -> None:
 
 
 def test_the_file_is_what_the_program_writes(app: Flask) -> None:
-    assert (ROOT / "openapi.yaml").read_text() == api.openapi_text(app), "run: shoalmark openapi"
+    written = yaml.safe_load((ROOT / "openapi.yaml").read_text())
+    assert written == api.openapi_document(app), "run: shoalmark openapi > openapi.yaml"
 
 
 def test_its_version_is_that_of_the_distribution(document: dict[str, Any]) -> None:
@@ -75,7 +77,9 @@ def test_every_operation_names_its_problems(document: dict[str, Any]) -> None:
             assert {"400", "413", "415", "422"} <= responses.keys(), (method, path)
         for status, response in responses.items():
             if int(status) >= 400:
-                assert list(response["content"]) == ["application/problem+json"], (method, path, status)
+                shared = document["components"]["responses"][response["$ref"].rsplit("/", 1)[1]]
+                assert list(shared["content"]) == ["application/problem+json"], (method, path, status)
+                assert shared["description"] == PHRASES[int(status)]
         assert operation["summary"], (method, path)
 
 
@@ -85,6 +89,11 @@ def test_recording_posts_need_a_key(document: dict[str, Any]) -> None:
         if method == "post" and not path.endswith("/preview"):
             assert [each["required"] for each in keys] == [True], path
             assert "503" in operation["responses"]
+
+
+def test_every_operation_has_a_name_of_its_own(document: dict[str, Any]) -> None:
+    names = [operation["operationId"] for _, _, operation in operations(document)]
+    assert len(set(names)) == len(names)
 
 
 def test_every_body_shows_a_valid_example(document: dict[str, Any]) -> None:
