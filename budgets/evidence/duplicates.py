@@ -9,11 +9,16 @@ from typing import Any
 from scipy.special import stdtr
 
 from budgets.errors import EvidenceError
-from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
-from budgets.evidence.repeatability import finding_warnings, precision_warnings, resolution_warnings
+from budgets.evidence.evaluation import Evaluation, EvaluationWarning
+from budgets.evidence.repeatability import (
+    finding_warnings,
+    precision_warnings,
+    repeatability_estimate,
+    resolution_warnings,
+)
 from budgets.evidence.screening import cochran_findings
 from budgets.evidence.study_tables import Layout, Study
-from budgets.evidence.sums import grouped, mean, standard_deviation_interval, sum_of_squares
+from budgets.evidence.sums import grouped, mean, sum_of_squares
 from budgets.levels import levels_from
 
 LAYOUT = Layout(required=("sample", "result"), optional=("determination",), numbers=("result",))
@@ -64,17 +69,7 @@ def evaluate(study: Study) -> Evaluation:
     used = sum(map(len, groups.values()))
     return Evaluation(
         design="duplicates",
-        estimates=(
-            Estimate(
-                name="repeatability",
-                terms=(Term(1.0, MeanSquare(f"{study.code}/repeatability", square, freedom)),),
-                value=None,
-                interval=standard_deviation_interval(deviation, freedom),
-                may_feed=levels_from("reading"),
-                usable=True,
-                contains=("repeatability", "resolution"),
-            ),
-        ),
+        estimates=(repeatability_estimate(study.code, square, freedom, levels_from("reading")),),
         used=used,
         diagnostics={
             "repeatability_standard_deviation": deviation,

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping, Sequence
+from typing import Any
 
 from budgets.errors import EvidenceError
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
@@ -68,31 +70,13 @@ def evaluate(study: Study) -> Evaluation:
     findings += [found for label, values in replicated.items() for found in grubbs_findings(label, values)]
     return Evaluation(
         design="repeatability",
-        estimates=(
-            Estimate(
-                name="repeatability",
-                terms=(Term(1.0, MeanSquare(f"{study.code}/repeatability", square, freedom)),),
-                value=None,
-                interval=standard_deviation_interval(deviation, freedom),
-                may_feed=("reading", "presentation"),
-                usable=True,
-                contains=("repeatability", "resolution"),
-            ),
-        ),
+        estimates=(repeatability_estimate(study.code, square, freedom, ("reading", "presentation")),),
         used=sum(map(len, replicated.values())),
         diagnostics={
             "repeatability_standard_deviation": deviation,
             "samples": len(groups),
             "samples_with_replicates": len(replicated),
-            "groups": [
-                {
-                    "sample": label,
-                    "readings": len(values),
-                    "mean": mean(values),
-                    "standard_deviation": math.sqrt(sum_of_squares(values) / (len(values) - 1)),
-                }
-                for label, values in replicated.items()
-            ],
+            "groups": _group_figures(replicated),
             "findings": [found.to_document() for found in findings],
         },
         warnings=(
@@ -102,6 +86,33 @@ def evaluate(study: Study) -> Evaluation:
             *finding_warnings(findings),
         ),
     )
+
+
+def repeatability_estimate(
+    code: str, square: float, degrees_of_freedom: int, may_feed: tuple[str, ...]
+) -> Estimate:
+    """Return the estimate ``repeatability`` of a study from its pooled mean square."""
+    return Estimate(
+        name="repeatability",
+        terms=(Term(1.0, MeanSquare(f"{code}/repeatability", square, degrees_of_freedom)),),
+        value=None,
+        interval=standard_deviation_interval(math.sqrt(square), degrees_of_freedom),
+        may_feed=may_feed,
+        usable=True,
+        contains=("repeatability", "resolution"),
+    )
+
+
+def _group_figures(groups: Mapping[str, Sequence[float]]) -> list[dict[str, Any]]:
+    return [
+        {
+            "sample": label,
+            "readings": len(values),
+            "mean": mean(values),
+            "standard_deviation": math.sqrt(sum_of_squares(values) / (len(values) - 1)),
+        }
+        for label, values in groups.items()
+    ]
 
 
 def precision_warnings(replicates: int, degrees_of_freedom: float) -> tuple[EvaluationWarning, ...]:
