@@ -23,6 +23,8 @@ __all__ = ["Act", "Recorded", "Writer", "perform_now"]
 
 LARGEST_BATCH = 256
 LARGEST_QUEUE = 4096
+PATIENCE = 0.0005
+"""Seconds that a batch waits at most for the acts that are likely to come."""
 
 _WAITING, _BEGUN, _DONE, _WITHDRAWN = range(4)
 
@@ -130,6 +132,7 @@ class Writer:
         self._queue: deque[_Job] = deque()
         self._changed = threading.Condition()
         self._thread: threading.Thread | None = None
+        self._expected = 0
 
     def _enqueue(self, job: _Job) -> None:
         with self._changed:
@@ -150,10 +153,17 @@ class Writer:
                     self._changed.wait()
                 if not self._queue:
                     return
+                # Those who were just answered come back at once when the load is high: a moment's patience
+                # then makes one commit of two. A lone client never waits.
+                self._changed.wait_for(self._all_are_back, PATIENCE)
                 jobs = [self._queue.popleft() for _ in range(min(len(self._queue), LARGEST_BATCH))]
             batch = [job for job in jobs if job.begin()]
             if batch:
                 self._record(batch)
+            self._expected = min(len(batch) + len(self._queue), LARGEST_BATCH)
+
+    def _all_are_back(self) -> bool:
+        return self._closed or len(self._queue) >= self._expected
 
     def _record(self, batch: Sequence[_Job]) -> None:
         try:
