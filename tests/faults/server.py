@@ -51,6 +51,7 @@ class Server:
 
     folder: Path
     port: int
+    settings: dict[str, str] = field(default_factory=dict)
     process: subprocess.Popen[bytes] | None = None
     clients: list[Client] = field(default_factory=list)
 
@@ -59,7 +60,9 @@ class Server:
             self.process = subprocess.Popen(
                 [*COMMAND, "serve"],
                 cwd=ROOT,
-                env=environment(data_folder=self.folder, port=self.port, log_level="warning"),
+                env=environment(
+                    data_folder=self.folder, port=self.port, log_level="warning", **self.settings
+                ),
                 stdin=subprocess.DEVNULL,
                 stdout=log,
                 stderr=subprocess.STDOUT,
