@@ -5,9 +5,10 @@ from __future__ import annotations
 from typing import Any
 
 from flask import Flask
-from werkzeug.routing import BaseConverter
+from werkzeug.routing import BaseConverter, ValidationError
 
 from service.schemas import trimmed_text
+from service.schemas.decisions import LONGEST_LOT
 from service.schemas.fields import CODE_PATTERN
 
 
@@ -51,11 +52,14 @@ class LotConverter(_Pattern):
 
     def to_python(self, value: str) -> str:
         """Give the text as the record keeps it."""
-        return trimmed_text(value)
+        text = trimmed_text(value)
+        if not 0 < len(text) <= LONGEST_LOT or not text.isprintable():
+            raise ValidationError  # werkzeug's: the rule does not match, so there is no such path
+        return text
 
     def form(self) -> dict[str, Any]:
         """Describe the parameter in the words of JSON Schema."""
-        return {"type": "string", "minLength": 1, "maxLength": 64}
+        return {"type": "string", "minLength": 1, "maxLength": LONGEST_LOT}
 
 
 CONVERTERS: dict[str, type[_Pattern]] = {

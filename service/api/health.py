@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import logging
+
 from flask import Blueprint, Response
 
 from service.api import requests
@@ -10,6 +12,8 @@ from service.errors import Unavailable
 from service.workflows import health
 
 blueprint = Blueprint("health", __name__)
+
+_log = logging.getLogger(__name__)
 
 
 @blueprint.get("/healthz")
@@ -24,6 +28,13 @@ def get_readiness() -> Response:
     try:
         return answer(health.ready(requests.services()))
     except Unavailable as error:
-        response = answer({"ready": False, "detail": error.message}, 503)
-        response.headers["Retry-After"] = str(error.retry_after)
-        return response
+        return _not_ready(error.message, error.retry_after)
+    except Exception:  # whatever it is, this process cannot decide
+        _log.exception("readiness")
+        return _not_ready("The failure is in the log.", 5)
+
+
+def _not_ready(detail: str, retry_after: int) -> Response:
+    response = answer({"ready": False, "detail": detail}, 503)
+    response.headers["Retry-After"] = str(retry_after)
+    return response

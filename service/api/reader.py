@@ -16,7 +16,7 @@ from flask import request
 from werkzeug.exceptions import RequestEntityTooLarge, UnsupportedMediaType
 
 from service.errors import Fault, InvalidRequest, TooLarge, Unreadable
-from service.schemas.base import MOST_FAULTS, got, pointer_step
+from service.schemas.base import MOST_FAULTS, counted, got, pointer_step
 
 LARGEST_BODY = 8 * 1024 * 1024
 DEEPEST = 32
@@ -196,8 +196,7 @@ def _located(text: str) -> Unreadable:
     if _pairs_exceed(document):
         return _too_deep()
     faults = list(_faults(document, "#"))
-    count = "1 fault" if len(faults) == 1 else f"{len(faults)} faults"
-    return Unreadable(f"{count}; nothing was recorded.", faults=tuple(faults[:MOST_FAULTS]))
+    return Unreadable(f"{counted(len(faults))}; nothing was recorded.", faults=tuple(faults[:MOST_FAULTS]))
 
 
 def _pairs_exceed(document: Any) -> bool:

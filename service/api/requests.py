@@ -23,7 +23,7 @@ from service.errors import (
     Unauthenticated,
 )
 from service.schemas import load
-from service.schemas.base import got
+from service.schemas.base import counted, got
 from service.workflows import accounts
 from service.workflows.recording import Request
 from service.workflows.services import Services
@@ -32,6 +32,7 @@ T = TypeVar("T")
 
 KEY_HEADER = "Idempotency-Key"
 KEY_PATTERN = r"[!-~]{8,64}"
+LONGEST_PARAMETER = 200
 DEFAULT_LIMIT, LARGEST_LIMIT = 50, 500
 _KEY = re.compile(KEY_PATTERN)
 _ETAG = re.compile(r'"([1-9][0-9]{0,17})"')
@@ -59,6 +60,13 @@ def body(kind: type[T]) -> T:
     """Read the body as a document. Raises Unreadable, TooLarge or InvalidRequest."""
     g.body = request_document()
     return load(kind, g.body)
+
+
+def no_body() -> None:
+    """Refuse a body where none is described, except an empty object. Raises InvalidRequest."""
+    if request.get_data(cache=False).strip() not in (b"", b"{}"):
+        fault = Fault("got a body", "no body, or an empty object", "#")
+        raise InvalidRequest("1 fault; nothing was recorded.", faults=(fault,))
 
 
 def forget_signature() -> None:
@@ -159,7 +167,7 @@ def same_identity(document: Any, **expected: str) -> None:
         if getattr(document, member) != value
     ]
     if faults:
-        raise InvalidRequest(f"{len(faults)} fault(s); nothing was recorded.", faults=tuple(faults))
+        raise InvalidRequest(f"{counted(len(faults))}; nothing was recorded.", faults=tuple(faults))
 
 
 def _query_faults(names: tuple[str, ...]) -> list[Fault]:
@@ -170,6 +178,9 @@ def _query_faults(names: tuple[str, ...]) -> list[Fault]:
             faults.append(Fault("unknown parameter", only, parameter=name))
         elif len(values) > 1:
             faults.append(Fault(f"got it {len(values)} times", "one value", parameter=name))
+        elif not values[0].isprintable() or len(values[0]) > LONGEST_PARAMETER:
+            # Nothing has such a name, and a database need not be able to look for it (NUL).
+            faults.append(_wrong_parameter(name, values[0], f"printable text up to {LONGEST_PARAMETER}"))
     return faults
 
 
@@ -178,5 +189,4 @@ def _wrong_parameter(name: str, value: str, expected: str) -> Fault:
 
 
 def _bad_query(faults: list[Fault]) -> InvalidRequest:
-    count = "1 fault" if len(faults) == 1 else f"{len(faults)} faults"
-    return InvalidRequest(f"{count} in the query.", faults=tuple(faults))
+    return InvalidRequest(f"{counted(len(faults))} in the query.", faults=tuple(faults))

@@ -59,6 +59,7 @@ class Versioned:
 
     def submit(self, code: str, version: int) -> Response:
         """Submit a draft for approval."""
+        requests.no_body()
         request = requests.recording()
         return recorded(
             versions.submit(requests.services(), requests.actor(), self.kind, code, version, request), 200

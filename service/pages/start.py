@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import logging
 from importlib.metadata import PackageNotFoundError, version
 
 from flask import Blueprint, Response, current_app, render_template
 
-from service.errors import Unavailable
 from service.workflows import health
 from service.workflows.judging import CAUTION
+
+_log = logging.getLogger(__name__)
 
 blueprint = Blueprint("pages", __name__, template_folder="templates", static_folder="static")
 
@@ -29,7 +31,8 @@ def start() -> str:
     try:
         health.ready(services)
         ready = True
-    except Unavailable:
+    except Exception:  # whatever it is, this process cannot decide
+        _log.exception("readiness")
         ready = False
     return render_template("pages/start.html", ready=ready, number=_number(), caution=CAUTION)
 

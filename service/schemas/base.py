@@ -85,6 +85,11 @@ class StrictSchema(Schema):
         return data if self.loads_to is None else self.loads_to(**data)
 
 
+def counted(faults: int) -> str:
+    """Say how many faults there are."""
+    return "1 fault" if faults == 1 else f"{faults} faults"
+
+
 def pointer_step(step: object) -> str:
     """One step of a JSON pointer in its URI fragment form (RFC 6901, sections 3 and 6)."""
     text = str(step).replace("~", "~0").replace("/", "~1")
@@ -106,7 +111,6 @@ def refusal(error: ValidationError) -> InvalidRequest:
     """All complaints of a document as one error with a fault for each."""
     found = list(_flatten(error.messages, "#"))
     faults = tuple(Fault(wrong.detail, wrong.expected, pointer) for wrong, pointer in found[:MOST_FAULTS])
-    count = "1 fault" if len(found) == 1 else f"{len(found)} faults"
     shown = "" if len(found) <= MOST_FAULTS else f", the first {MOST_FAULTS} are shown"
     kind = InvalidRequest if any(wrong.supported for wrong, _ in found) else NotSupported
-    return kind(f"{count}{shown}; nothing was recorded.", faults=faults)
+    return kind(f"{counted(len(found))}{shown}; nothing was recorded.", faults=faults)

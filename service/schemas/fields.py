@@ -141,7 +141,7 @@ class Text(_Stating, fields.String):
         if not isinstance(value, str):
             raise self.wrong(value)
         text = value if value.isascii() and value[:1] != " " != value[-1:] else trimmed_text(value)
-        if not 0 < len(text) <= self._most:
+        if not text.strip() or len(text) > self._most:
             raise self.wrong(value)
         if not text.isprintable() and not (self._lines and text.replace("\n", "").isprintable()):
             raise self.wrong(value)

@@ -253,6 +253,9 @@ def test_evidence_that_lapsed_carries_no_budget(app: Flask, callers: Callers) ->
         ("outcome=maybe", "outcome"),
         ("colour=white", "colour"),
         ("cursor=nowhere", "cursor"),
+        ("product=%00", "product"),
+        ("cursor=%00", "cursor"),
+        ("product=" + "a" * 201, "product"),
     ],
 )
 def test_a_wrong_query_is_refused_by_parameter(callers: Callers, query: str, parameter: str) -> None:
@@ -263,3 +266,19 @@ def test_a_wrong_query_is_refused_by_parameter(callers: Callers, query: str, par
 def test_a_wrong_query_has_all_its_faults_at_once(callers: Callers) -> None:
     found = problem(callers["mes"].get("/v1/lots?limit=0&outcome=maybe&colour=white"), 422, "invalid-request")
     assert {fault["parameter"] for fault in found["errors"]} == {"limit", "outcome", "colour"}
+
+
+def test_a_body_where_none_is_described_is_refused(app: Flask, callers: Callers) -> None:
+    done(callers["engineer"].post("/v1/specifications", house.specification("new-one", 3.0)))
+    before = heads(app)
+    path = "/v1/specifications/new-one/versions/1/submit"
+    found = problem(callers["engineer"].post(path, {"reason": "please"}), 422, "invalid-request")
+    assert pointers(found) == ["#"]
+    assert heads(app) == before
+    assert done(callers["engineer"].post(path, {}), 200)["state"] == "submitted"
+
+
+@pytest.mark.parametrize("lot", ["%00", "%20", "%0A", "a" * 65, "%F0%9F"])
+def test_a_lot_that_no_request_can_name_is_a_404(callers: Callers, lot: str) -> None:
+    response = callers["mes"].get(f"/v1/lots/whole-milk-powder/{lot}")
+    assert (response.status_code, response.content_type) == (404, "application/problem+json")

@@ -107,3 +107,16 @@ def test_health_and_readiness_are_plain_json(app: Flask, callers: Callers) -> No
     assert response.headers["Retry-After"]
     assert client.get("/healthz").status_code == 200
     assert "cannot record decisions" in client.get("/").get_data(as_text=True)
+
+
+def test_a_process_without_its_database_is_not_ready(
+    callers: Callers, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    from service.workflows import health
+
+    monkeypatch.setattr(health, "ready", broken)
+    client = callers["nobody"].client
+    response = client.get("/readyz")
+    assert (response.status_code, response.get_json()["ready"]) == (503, False)
+    assert "secret" not in response.get_data(as_text=True)
+    assert "cannot record decisions" in client.get("/").get_data(as_text=True)

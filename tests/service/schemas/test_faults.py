@@ -225,6 +225,8 @@ def test_a_real_fault_beside_an_unsupported_form_is_an_invalid_request() -> None
         (documents.Study, "set_aside/0/row", 8, "set_aside/0/row"),
         (documents.SignedAct, "signature/password", "", "signature/password"),
         (documents.SignedAct, "reason", " ", "reason"),
+        (documents.SignedAct, "reason", "\n\n", "reason"),
+        (documents.SignedAct, "reason", "a\rb", "reason"),
     ],
 )
 def test_each_wrong_value_is_named_where_it_stands(

@@ -1,0 +1,65 @@
+"""The main job through the API on a real PostgreSQL: what SQLite forgives, it does not."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import pytest
+from flask import Flask
+
+from service import create_app, create_services
+from service.settings import load_settings
+from service.store.schema import migrate
+from service.workflows import accounts
+from tests.service.api import house
+from tests.service.api.conftest import PEOPLE, TOKENS, Callers, callers_of
+from tests.service.api.house import decision, done
+
+
+@pytest.fixture
+def app(postgresql_database: Callable[[str | None], str], tmp_path: Path) -> Iterator[Flask]:
+    url = postgresql_database(None)
+    migrate(url)
+    settings = load_settings({"SHOALMARK_DATA_FOLDER": str(tmp_path), "SHOALMARK_DATABASE_URL": url})
+    app = create_app(create_services(settings))
+    yield app
+    app.extensions["shoalmark"].close()
+
+
+@pytest.fixture
+def callers(app: Flask) -> Callers:
+    database = app.extensions["shoalmark"].database
+    for person, roles in PEOPLE.items():
+        accounts.add_person(database, person, person.title(), roles, house.PASSWORD)
+    tokens = {name: accounts.add_token(database, name, roles).secret for name, roles in TOKENS.items()}
+    return callers_of(app, tokens | {"max": accounts.add_token(database, "max", ()).secret})
+
+
+def test_a_lot_is_judged_from_raw_data_to_the_record(callers: Callers) -> None:
+    house.build(callers["engineer"], callers["max"])
+    key = house.fresh_key()
+    first = callers["mes"].post("/v1/decisions", decision(), key=key)
+    assert done(first)["outcome"] == "release"
+    again = callers["mes"].post("/v1/decisions", decision(), key=key)
+    assert (again.headers["Recorded-Earlier"], again.get_json()) == ("true", first.get_json())
+    reused = callers["mes"].post("/v1/decisions", decision("another"), key=key)
+    assert reused.get_json()["type"] == "/problems/idempotency-key-reused"
+    judged = callers["mes"].post("/v1/decisions", house.moved(decision(), hours=1))
+    assert judged.get_json()["type"] == "/problems/lot-already-judged"
+    same = callers["mes"].post("/v1/decisions", {**decision(), "lot": "L2"})
+    assert same.get_json()["type"] == "/problems/reading-already-judged"
+    held = done(callers["mes"].post("/v1/decisions", decision("Grün/1", moisture=(3.2, 3.22))))
+    assert held["outcome"] == "hold"
+    assert [lot["lot"] for lot in done(callers["mes"].get("/v1/lots"), 200)["items"]] == [
+        "Grün/1",
+        "W26-04711",
+    ]
+    limits = done(callers["mes"].get("/v1/acceptance-limits/whole-milk-powder/moisture"), 200)
+    assert limits["items"]
+    assert done(callers["auditor"].get("/v1/ledger/verification"), 200)["whole"] is True
+
+
+@pytest.mark.parametrize("path", ["/v1/lots/p/%00", "/v1/lots?cursor=%00", "/v1/studies?product=%00"])
+def test_characters_that_postgresql_cannot_hold_are_refused(callers: Callers, path: str) -> None:
+    assert callers["mes"].get(path).status_code in (404, 422)
