@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import asdict, replace
 from typing import Any
 
-from sqlalchemy import Row, Table, select, update
+from sqlalchemy import Row, Table, bindparam, select, update
 
 from service.errors import NotFound
 from service.ledger import Entry
@@ -59,6 +59,10 @@ class People:
         return changed
 
 
+# Built once: every request looks its token up.
+_BY_DIGEST = select(tokens).where(tokens.c.digest == bindparam("digest"))
+
+
 class Tokens:
     """Bearer tokens by code, and by the SHA-256 of their secret."""
 
@@ -72,7 +76,7 @@ class Tokens:
 
     def find_digest(self, digest: str) -> StoredToken | None:
         """Return the token whose secret has this SHA-256 (hex), also a revoked one."""
-        row = self._session.row(select(tokens).where(tokens.c.digest == digest))
+        row = self._session.row(_BY_DIGEST, digest=digest)
         return None if row is None else _token(row)
 
     def list(self) -> list[StoredToken]:
