@@ -76,8 +76,11 @@ def about_the_value(rule: ReleaseRule, estimate: float, outcome: str, unit: str)
 
 
 def _misses_upper(rule: ReleaseRule, estimate: float) -> bool:
-    upper = rule.upper_acceptance_limit
-    return upper is not None and estimate > upper
+    """Say at which side an estimate that is not accepted lies."""
+    lower, upper = rule.lower_acceptance_limit, rule.upper_acceptance_limit
+    if lower is None or upper is None:
+        return upper is not None
+    return estimate - upper > lower - estimate
 
 
 def _told_apart(rule: ReleaseRule, estimate: float, limit: float) -> str:

@@ -1,0 +1,33 @@
+"""When evidence lapses: the plant's hour of a working day, never in the middle of a weekend."""
+
+from dataclasses import replace
+from datetime import UTC, date, datetime, time
+
+import pytest
+
+from service.workflows.calendar import DEFAULT_PLANT, lapse_instant, serving_end
+
+BERLIN = replace(DEFAULT_PLANT, time_zone="Europe/Berlin", lapse_hour=time(11))
+
+
+@pytest.mark.parametrize(
+    ("serves_until", "lapses"),
+    [
+        (date(2026, 3, 6), datetime(2026, 3, 6, 10, tzinfo=UTC)),  # a Friday, winter time
+        (date(2026, 3, 7), datetime(2026, 3, 9, 10, tzinfo=UTC)),  # a Saturday waits for Monday
+        (date(2026, 3, 8), datetime(2026, 3, 9, 10, tzinfo=UTC)),  # so does a Sunday
+        (date(2026, 3, 28), datetime(2026, 3, 30, 9, tzinfo=UTC)),  # over the change to summer time
+    ],
+)
+def test_evidence_lapses_at_the_plants_hour_of_a_working_day(serves_until: date, lapses: datetime) -> None:
+    assert lapse_instant(serves_until, BERLIN) == lapses
+
+
+def test_a_plant_that_works_on_saturdays_lapses_on_saturdays() -> None:
+    plant = replace(BERLIN, working_days=("saturday",))
+    assert lapse_instant(date(2026, 3, 6), plant) == datetime(2026, 3, 7, 10, tzinfo=UTC)
+
+
+def test_a_study_serves_as_long_as_the_plant_says_for_its_design() -> None:
+    assert serving_end("repeatability", date(2026, 1, 14), DEFAULT_PLANT) == date(2027, 1, 14)
+    assert serving_end("unheard-of", date(2026, 1, 14), DEFAULT_PLANT) is None

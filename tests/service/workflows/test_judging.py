@@ -1,0 +1,356 @@
+"""A lot judged: outcomes, the reasons to hold whatever the value, and what the answer says."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+from datetime import UTC, datetime, timedelta
+from typing import Any
+
+import pytest
+from scipy.stats import norm
+
+from service.documents import DecisionRequest, Reading, Requirement, RuleOfDecision, ToleranceLimit
+from service.errors import Conflict, InvalidRequest, NotSupported
+from service.workflows.judging import judge
+from service.workflows.register import Register
+from tests.service.workflows.registers import (
+    BIAS,
+    NOW,
+    STANDARD_UNCERTAINTY,
+    a_budget,
+    a_budget_in_force,
+    a_reading,
+    a_register,
+    a_request,
+    a_requirement,
+    a_specification,
+)
+
+Z = norm.ppf(0.95)
+ACCEPTANCE_LIMIT = 3.2 - Z * STANDARD_UNCERTAINTY
+
+
+def twice(moisture: float, **changes: Any) -> tuple[Reading, Reading]:
+    return a_reading(moisture, 1, **changes), a_reading(moisture, 2, **changes)
+
+
+def judged(request: DecisionRequest | None = None, register: Register | None = None) -> dict[str, Any]:
+    return judge(register or a_register(), request or a_request(), NOW)
+
+
+def reasons(answer: dict[str, Any]) -> list[str]:
+    return [reason["code"] for reason in answer["reasons"]]
+
+
+# --- outcomes about the value --------------------------------------------------------------------------
+
+
+def test_the_estimate_is_the_mean_of_sample_means_less_the_bias() -> None:
+    request = a_request(
+        a_reading(2.80, 1), a_reading(2.90, 2), a_reading(3.10, 3, sample="2"), a_reading(3.10, 4, sample="2")
+    )
+    verdict = judged(request)["verdicts"][0]
+    assert verdict["estimate"] == pytest.approx((2.85 + 3.10) / 2 - BIAS, rel=1e-15)
+    assert (verdict["samples"], verdict["readings"]) == (2, 4)
+
+
+@pytest.mark.parametrize(
+    ("estimate", "outcome", "reason"),
+    [
+        (ACCEPTANCE_LIMIT - 1e-9, "release", []),
+        (ACCEPTANCE_LIMIT + 1e-9, "hold", ["in-guard-band"]),
+        (3.2 - 1e-9, "hold", ["in-guard-band"]),
+        (3.2 + 1e-9, "reject", ["outside-tolerance"]),
+    ],
+)
+def test_the_outcome_follows_the_limits(estimate: float, outcome: str, reason: list[str]) -> None:
+    answer = judged(a_request(*twice(estimate + BIAS)))
+    assert (answer["outcome"], reasons(answer)) == (outcome, reason)
+
+
+def test_the_figures_are_those_of_the_normal_distribution() -> None:
+    """Compared with scipy.stats.norm, a general-purpose reference library."""
+    verdict = judged(a_request(*twice(2.95)))["verdicts"][0]
+    assert verdict["combined_standard_uncertainty"] == pytest.approx(STANDARD_UNCERTAINTY, rel=1e-14)
+    assert verdict["effective_degrees_of_freedom"] is None
+    assert verdict["expanded_uncertainty"] == pytest.approx(norm.ppf(0.975) * STANDARD_UNCERTAINTY, rel=1e-12)
+    assert verdict["upper_acceptance_limit"] == pytest.approx(ACCEPTANCE_LIMIT, rel=1e-14)
+    assert verdict["conformance_probability"] == pytest.approx(
+        norm.cdf((3.2 - 3.0) / STANDARD_UNCERTAINTY), rel=1e-12
+    )
+    assert verdict["specific_consumers_risk"] == pytest.approx(
+        norm.sf((3.2 - 3.0) / STANDARD_UNCERTAINTY), rel=1e-12
+    )
+
+
+def test_more_readings_move_the_acceptance_limit_outward_within_the_procedure() -> None:
+    two = judged(a_request(*twice(2.9)))["verdicts"][0]
+    four = judged(a_request(*(a_reading(2.9, second) for second in range(4))))["verdicts"][0]
+    assert four["combined_standard_uncertainty"] == pytest.approx(math.hypot(0.06 / math.sqrt(2), 0.08))
+    assert four["upper_acceptance_limit"] > two["upper_acceptance_limit"]
+
+
+def test_units_are_converted_before_anything_is_compared() -> None:
+    per_kilogram = a_request(*twice(29.1), units={"moisture": "g/kg"})
+    assert judged(per_kilogram)["verdicts"][0]["estimate"] == pytest.approx(2.91 - BIAS, rel=1e-15)
+
+
+def test_a_strict_limit_does_not_hold_its_own_value() -> None:
+    """With no guard band the tolerance limit itself decides."""
+    rule = RuleOfDecision("simple", largest_standard_uncertainty=0.2)
+    exact = a_request(*twice(3.0))
+    budgets = {("whole-milk-powder", "moisture", "nir-1"): a_budget_in_force(budget=a_budget(bias=0.0))}
+    for inclusive, outcome in ((True, "release"), (False, "reject")):
+        requirement = a_requirement(
+            upper_tolerance_limit=ToleranceLimit(3.0, "%", inclusive), decision_rule=rule
+        )
+        register = a_register(
+            specifications={"customer-b": a_specification("customer-b", requirement)}, budgets=budgets
+        )
+        assert judged(exact, register)["outcome"] == outcome
+
+
+def test_a_bias_left_to_the_guard_band_stays_in_the_estimate() -> None:
+    """Analyzer below reference (b < 0) harms at an upper limit: the guard band grows by -b (rule 31)."""
+    budget = a_budget(bias_treatment="in_guard_band")
+    budgets = {("whole-milk-powder", "moisture", "nir-1"): a_budget_in_force(budget=budget)}
+    verdict = judged(a_request(*twice(2.9)), a_register(budgets=budgets))["verdicts"][0]
+    assert verdict["estimate"] == pytest.approx(2.9, rel=1e-15)
+    assert verdict["uncorrected_bias"] == BIAS
+    assert verdict["guard_band"]["upper"] == pytest.approx(Z * STANDARD_UNCERTAINTY - BIAS, rel=1e-12)
+
+
+# --- holds that are not about the value ----------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("changes", "reason"),
+    [
+        ({"calibration": "wmp-8"}, "another-calibration"),
+        ({"flags": {}}, "flag-missing"),
+        ({"flags": {"distance-from-calibration-set": 3.1}}, "scan-flagged"),
+        ({"influences": {"sample_temperature": 14.9}}, "influence-outside-range"),
+        ({"influences": {"sample_temperature": 30.1}}, "influence-outside-range"),
+    ],
+)
+def test_a_scan_that_cannot_be_trusted_holds_the_lot(changes: dict[str, Any], reason: str) -> None:
+    request = a_request(a_reading(2.7, 1), a_reading(2.7, 2, **changes))
+    answer = judged(request)
+    assert (answer["outcome"], reasons(answer)) == ("hold", [reason])
+    assert answer["reasons"][0]["next"]
+
+
+@pytest.mark.parametrize("moisture", [1.9, 4.7])
+def test_a_reading_outside_of_the_validated_range_is_held_even_beyond_the_limit(moisture: float) -> None:
+    """A reading that cannot be trusted rejects no more than it releases."""
+    answer = judged(a_request(*twice(moisture)))
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["outside-validated-range"])
+    assert answer["verdicts"][0]["conformance_probability"] is None
+
+
+def test_one_reading_outside_of_the_range_is_enough() -> None:
+    answer = judged(a_request(a_reading(1.9, 1), a_reading(2.9, 2)))
+    assert reasons(answer) == ["outside-validated-range"]
+
+
+def test_fewer_readings_than_the_procedure_needs_are_held() -> None:
+    answer = judged(a_request(a_reading(2.7)))
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["too-few-readings"])
+
+
+@pytest.mark.parametrize(
+    "readings",
+    [
+        [a_reading(2.7, second) for second in range(5)],
+        [a_reading(2.7, n, sample=str(n // 2)) for n in range(6)],
+    ],
+    ids=["readings", "samples"],
+)
+def test_more_than_the_procedure_has_is_a_fault(readings: list[Reading]) -> None:
+    """Many readings in one call must not shrink the uncertainty beyond the plan."""
+    with pytest.raises(InvalidRequest) as caught:
+        judged(a_request(*readings))
+    assert "at most" in str(caught.value.faults[0].expected)
+
+
+def test_lapsed_evidence_holds_from_its_instant_on_and_is_announced_before() -> None:
+    def answer(lapses_at: str) -> dict[str, Any]:
+        budget = a_budget_in_force(lapses_at=lapses_at)
+        return judged(register=a_register(budgets={("whole-milk-powder", "moisture", "nir-1"): budget}))
+
+    assert reasons(answer(NOW)) == ["evidence-lapsed"]
+    soon = answer("2026-03-16T11:00:00.000000Z")
+    assert soon["outcome"] == "release"
+    assert soon["notices"][0]["code"] == "evidence-lapses"
+    assert soon["notices"][0]["at"] == "2026-03-16T11:00:00.000000Z"
+    assert answer("2027-03-16T11:00:00.000000Z")["notices"] == []
+
+
+def test_a_required_characteristic_that_was_not_sent_is_held() -> None:
+    both = a_specification("customer-b", a_requirement(), a_requirement(characteristic="fat"))
+    answer = judged(register=a_register(specifications={"customer-b": both}))
+    assert [verdict["outcome"] for verdict in answer["verdicts"]] == ["release", "hold"]
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["characteristic-missing"])
+
+
+def test_without_a_budget_in_force_the_members_are_null() -> None:
+    answer = judged(register=a_register(budgets={}))
+    verdict = answer["verdicts"][0]
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["nothing-in-force"])
+    for member in ("budget", "upper_acceptance_limit", "expanded_uncertainty", "conformance_probability"):
+        assert verdict[member] is None
+
+
+def test_a_specification_without_a_version_in_force_is_held() -> None:
+    answer = judged(register=a_register(specifications={}))
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["nothing-in-force"])
+    assert answer["verdicts"][0]["specification"] == {"code": "customer-b", "version": None}
+
+
+def test_a_product_without_specifications_is_held() -> None:
+    products = dict(a_register().products)
+    products["whole-milk-powder"] = replace(products["whole-milk-powder"], default_specifications=())
+    answer = judged(register=a_register(products=products))
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["nothing-in-force"])
+
+
+def test_every_reason_is_named_not_only_the_first() -> None:
+    bad = a_reading(1.9, 1, calibration="wmp-8", flags={"distance-from-calibration-set": 9.0})
+    assert reasons(judged(a_request(bad))) == [
+        "scan-flagged",
+        "another-calibration",
+        "outside-validated-range",
+        "too-few-readings",
+    ]
+
+
+# --- several verdicts ----------------------------------------------------------------------------------
+
+
+def test_the_worst_verdict_decides_the_lot() -> None:
+    strict = a_specification("strict", a_requirement(upper_tolerance_limit=ToleranceLimit(2.9, "%")))
+    register = a_register(
+        specifications={"customer-b": a_specification(), "strict": strict},
+        specification_products={"customer-b": "whole-milk-powder", "strict": "whole-milk-powder"},
+    )
+    answer = judged(a_request(specifications=("customer-b", "strict")), register)
+    assert [verdict["outcome"] for verdict in answer["verdicts"]] == ["release", "reject"]
+    assert answer["outcome"] == "reject"
+
+
+# --- what is not understood ----------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("changes", "pointer"),
+    [
+        ({"product": "butter"}, "#/product"),
+        ({"line": "tower-9"}, "#/line"),
+        ({"specifications": ("nobody",)}, "#/specifications/0"),
+        ({"specifications": ("other",)}, "#/specifications/0"),
+        ({"units": {"moisture": "kg"}}, "#/units/moisture"),
+        ({"units": {"moisture": "mg/kg"}}, "#/units/moisture"),
+        ({"units": {"moisture": "%", "ash": "%"}}, "#/units/ash"),
+        ({"units": {"fat": "%"}}, "#/units/moisture"),
+        ({"readings": twice(2.9, analyzer="nir-9")}, "#/readings/0/analyzer"),
+        ({"readings": twice(2.9, analyzer="nobody")}, "#/readings/0/analyzer"),
+        ({"readings": twice(2.9, calibration="wmp-2-1")}, "#/readings/0/calibration"),
+        ({"readings": twice(2.9, values={"moisture": 2.9, "ash": 1.0})}, "#/readings/0/values/ash"),
+        (
+            {"readings": twice(2.9, taken_at=datetime(2026, 3, 2, 5, 18, tzinfo=UTC))},
+            "#/readings/0/taken_at",
+        ),
+    ],
+)
+def test_what_is_not_understood_is_a_fault_at_its_place(changes: dict[str, Any], pointer: str) -> None:
+    with pytest.raises(InvalidRequest) as caught:
+        judged(a_request(**changes))
+    assert pointer in [fault.pointer for fault in caught.value.faults]
+
+
+def test_all_faults_are_named_at_once() -> None:
+    readings = (a_reading(2.9, 1, calibration="nobody"), a_reading(2.9, 2, analyzer="nobody"))
+    with pytest.raises(InvalidRequest) as caught:
+        judged(a_request(*readings, units={"moisture": "kg"}))
+    assert {fault.pointer for fault in caught.value.faults} == {
+        "#/units/moisture",
+        "#/readings/0/calibration",
+        "#/readings/1/analyzer",
+    }
+
+
+def test_a_clock_a_little_ahead_is_no_fault() -> None:
+    ahead = datetime(2026, 3, 2, 5, 17, tzinfo=UTC)
+    readings = (a_reading(2.9, taken_at=ahead), a_reading(2.9, taken_at=ahead + timedelta(seconds=1)))
+    assert judged(a_request(*readings))["outcome"] == "release"
+
+
+def test_the_same_reading_twice_is_not_two_readings() -> None:
+    with pytest.raises(Conflict) as caught:
+        judged(a_request(a_reading(2.9), a_reading(2.9)))
+    assert caught.value.code == "reading-already-judged"
+
+
+def test_measurements_with_identities_of_their_own_may_share_their_instant() -> None:
+    readings = (a_reading(2.9, measurement="m1"), a_reading(2.9, measurement="m2"))
+    assert judged(a_request(*readings))["outcome"] == "release"
+
+
+def test_a_lot_read_on_two_analyzers_needs_a_budget_that_names_both() -> None:
+    other = a_reading(2.9, 2, analyzer="nir-2", calibration="wmp-2-1")
+    with pytest.raises(InvalidRequest, match="names both"):
+        judged(a_request(a_reading(2.9, 1), other))
+    budget = a_budget_in_force()
+    both = {("whole-milk-powder", "moisture", analyzer): budget for analyzer in ("nir-1", "nir-2")}
+    with pytest.raises(NotSupported):
+        judged(a_request(a_reading(2.9, 1), other), a_register(budgets=both))
+
+
+# --- what the answer says ------------------------------------------------------------------------------
+
+
+def test_the_answer_names_what_was_not_judged_and_carries_the_caution() -> None:
+    answer = judged()
+    assert answer["not_judged"] == ["microbiology"]
+    assert "no safety clearance" in answer["caution"]
+    assert (answer["round"], answer["rounds_left"]) == (1, 0)
+
+
+def test_a_reason_never_contradicts_itself_by_rounding() -> None:
+    """Just above the acceptance limit the printed estimate lies above the printed limit too."""
+    estimate = ACCEPTANCE_LIMIT + 1e-7
+    detail = judged(a_request(*twice(estimate + BIAS)))["reasons"][0]["detail"]
+    numbers = [float(word) for word in detail.replace("%", "").split() if word[0].isdigit()]
+    printed_estimate, tolerance_limit, acceptance_limit = numbers
+    assert acceptance_limit <= ACCEPTANCE_LIMIT < printed_estimate < tolerance_limit
+
+
+def test_a_lower_limit_is_spoken_of_as_below() -> None:
+    requirement: Requirement = a_requirement(
+        lower_tolerance_limit=ToleranceLimit(2.5, "%"), upper_tolerance_limit=None
+    )
+    register = a_register(specifications={"customer-b": a_specification("customer-b", requirement)})
+    assert "below the tolerance limit" in judged(a_request(*twice(2.3)), register)["reasons"][0]["detail"]
+    held = judged(a_request(*twice(2.55)), register)
+    assert "below the acceptance limit" in held["reasons"][0]["detail"]
+
+
+def test_the_digits_of_the_record_are_not_rounded_and_the_display_is() -> None:
+    verdict = judged(a_request(a_reading(2.901, 1), a_reading(2.902, 2)))["verdicts"][0]
+    assert verdict["estimate"] == pytest.approx(2.9515, rel=1e-15)
+    assert verdict["display"]["estimate"] == "2.95"
+    assert verdict["display"]["expanded_uncertainty"] == "0.20"
+    # Rounded inward: what meets the printed limit meets the limit.
+    assert float(verdict["display"]["upper_acceptance_limit"]) <= verdict["upper_acceptance_limit"]
+
+
+def test_a_stored_rule_is_used_as_it_stands() -> None:
+    """A library that computes another quantile tomorrow does not move a verdict of today's approval."""
+    register = a_register()
+    judged(register=register)
+    (key, compiled) = next(iter(register.compiled.items()))
+    stored = replace(compiled, upper_acceptance_limit=2.5)
+    answer = judged(register=a_register(rules={key: stored}))
+    assert answer["verdicts"][0]["upper_acceptance_limit"] == 2.5
+    assert answer["outcome"] == "hold"
