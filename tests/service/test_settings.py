@@ -13,13 +13,13 @@ import pytest
 from service.errors import SettingsError
 from service.settings import NAMES, TABLE, describe, load_settings, masked, secret_key
 
-HOME = {"HOME": "/home/shift"}
+HOME = {"HOME": "/people/shift"}
 
 
 def test_without_any_setting_the_defaults_work():
     settings = load_settings(HOME)
-    assert settings.data_folder == Path("/home/shift/.local/share/shoalmark")
-    assert settings.database_url == "sqlite:////home/shift/.local/share/shoalmark/shoalmark.sqlite3"
+    assert settings.data_folder == Path("/people/shift/.local/share/shoalmark")
+    assert settings.database_url == "sqlite:////people/shift/.local/share/shoalmark/shoalmark.sqlite3"
     assert (settings.host, settings.port, settings.threads, settings.trusted_proxies) == (
         "127.0.0.1",
         8080,
@@ -33,7 +33,7 @@ def test_without_any_setting_the_defaults_work():
 def test_the_data_folder_follows_the_xdg_variable_when_it_is_absolute():
     assert load_settings({**HOME, "XDG_DATA_HOME": "/data"}).data_folder == Path("/data/shoalmark")
     relative = load_settings({**HOME, "XDG_DATA_HOME": "data"})
-    assert relative.data_folder == Path("/home/shift/.local/share/shoalmark")
+    assert relative.data_folder == Path("/people/shift/.local/share/shoalmark")
 
 
 def test_every_setting_is_read(tmp_path):

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import subprocess
+import sys
 import threading
 import time
 from concurrent.futures import ThreadPoolExecutor
+from pathlib import Path
 
 import pytest
 from sqlalchemy import text
@@ -409,3 +412,38 @@ def test_keys_and_fingerprints_come_in_pairs_and_are_printable():
         Act(frozenset({LINE}), "mes", judge("A").perform, key="key-0001")
     with pytest.raises(ValueError, match="printable"):
         Act(frozenset({LINE}), "mes\0", judge("A").perform)
+
+
+EXIT = """
+import sys, threading
+from service.store.unit_of_work import Database
+from service.store.writer import Writer
+from tests.service.store.examples import note
+
+writer = Writer(Database(sys.argv[1]))
+entered = threading.Event()
+opened = threading.Event()
+
+def hold(unit):
+    entered.set()
+    opened.wait(10)
+
+for text, before in (("held", hold), ("waits", None)):
+    act = note(text, before=before)
+    threading.Thread(target=writer.submit, args=(act, 20), daemon=True).start()
+    entered.wait(10)
+while writer.queued < 1:
+    pass
+threading.Timer(0.2, opened.set).start()
+"""
+
+
+def test_a_process_that_ends_in_order_does_what_waits(database_url):
+    root = Path(__file__).parents[3]
+    done = subprocess.run(
+        [sys.executable, "-c", EXIT, database_url], cwd=root, capture_output=True, text=True, timeout=30
+    )
+    assert (done.returncode, done.stderr) == (0, "")
+    database = Database(database_url)
+    assert texts(database) == ["held", "waits"]
+    database.close()

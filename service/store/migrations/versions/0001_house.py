@@ -42,6 +42,7 @@ def upgrade() -> None:
     _create_studies()
     _create_tokens()
     _create_versions()
+    _index_versions()
     op.execute("INSERT INTO revision (id, revision) VALUES (1, 0)")
     if op.get_context().dialect.name == "sqlite":
         _refuse_changes_on_sqlite()
@@ -322,6 +323,9 @@ def _create_versions() -> None:
         ),
         sa.PrimaryKeyConstraint("kind", "code", "version", name=op.f("pk_versions")),
     )
+
+
+def _index_versions() -> None:
     op.create_index("ix_versions_state", "versions", ["kind", "state"], unique=False)
     op.create_index(
         "uq_versions_in_force",
