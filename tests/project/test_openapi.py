@@ -37,6 +37,7 @@ def operations(document: dict[str, Any]) -> list[tuple[str, str, dict[str, Any]]
     return [
         (path, method, operation)
         for path, item in document["paths"].items()
+        if path.startswith("/v1")
         for method, operation in item.items()
         if method in ("get", "post", "put", "delete", "patch")
     ]
@@ -66,6 +67,27 @@ def test_every_route_of_the_api_is_described(app: Flask, document: dict[str, Any
     }
     described = {(path.count("/"), method, path.split("{")[0]) for path, method, _ in operations(document)}
     assert described == routed
+
+
+def test_only_what_is_outside_of_the_prefix_needs_no_token(document: dict[str, Any]) -> None:
+    assert document["security"] == [{"token": []}]
+    public = {
+        path
+        for path, item in document["paths"].items()
+        for operation in item.values()
+        if isinstance(operation, dict) and operation.get("security") == []
+    }
+    assert public == {"/healthz", "/readyz", "/openapi.yaml"}
+
+
+def test_every_form_is_used(document: dict[str, Any]) -> None:
+    text = yaml.safe_dump(document)
+    unused = [
+        name
+        for name in document["components"]["schemas"]
+        if f"schemas/{name}'" not in text and f"schemas/{name}\n" not in text
+    ]
+    assert unused == []
 
 
 def test_every_operation_names_its_problems(document: dict[str, Any]) -> None:

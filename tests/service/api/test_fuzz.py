@@ -117,6 +117,7 @@ def test_fitting_requests_get_the_answers_described(
 ) -> None:
     app, tokens = fuzzed
     statuses = run(app, tokens["engineer"], GenerationMode.POSITIVE, CONFORMING)
+    assert 200 in statuses["GET /healthz"]
     readable = {label for label in statuses if label.startswith("GET ")}
     unread = {label for label in readable if 200 not in statuses[label]}
     assert unread <= {"GET /v1/plant/versions/{version}"}, statuses

@@ -1,0 +1,154 @@
+"""Golden copies of the documents, computed by the program itself from the demo plant (documents/*.json).
+
+They fix names, order and figures of what callers get. When a change is meant, write them anew with
+SHOALMARK_TEST_WRITE_DOCUMENTS=1 and read the difference. Days, hashes and instants are put aside: they are
+other ones every day.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import re
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+import pytest
+from flask.testing import FlaskClient
+
+from service import create_app, create_services
+from service.demo import plant
+from service.demo.run import open_accounts
+from service.demo.walk import Access
+from service.settings import load_settings
+
+FOLDER = Path(__file__).with_name("documents")
+WRITE = "SHOALMARK_TEST_WRITE_DOCUMENTS"
+
+# From library to library the last digits of a quantile may differ.
+RELATIVE_TOLERANCE = 1e-9
+PATTERNS = {
+    "<instant>": r"\d{4}-\d{2}-\d{2}T\d{2}:\d{2}:\d{2}(\.\d+)?(Z|[+-]\d{2}:\d{2})",
+    "<hash>": r"(sha256:)?[0-9a-f]{64}",
+    "<day>": r"\d{4}-\d{2}-\d{2}",
+}
+
+
+class Caller:
+    """Makes the demo's calls in this process and gives the documents answered."""
+
+    def __init__(self, client: FlaskClient, access: Access) -> None:
+        self._client = client
+        self._access = access
+        self._calls = 0
+
+    def call(self, method: str, path: str, who: str, document: Any = None) -> Any:
+        self._calls += 1
+        headers = {"Authorization": f"Bearer {getattr(self._access, who)}"}
+        if method != "GET":
+            headers["Idempotency-Key"] = f"documents-{self._calls}"
+        answer = self._client.open(path, method=method, json=document, headers=headers)
+        return answer.get_json(force=True)
+
+    def signed(self) -> dict[str, Any]:
+        return {"reason": "checked", "signature": {"password": self._access.approver_password}}
+
+
+def reading_of(moisture: float, number: int, **changes: Any) -> plant.Document:
+    taken_at = f"2026-03-02T06:12:{number:02d}.120+01:00"
+    return plant.reading("1", taken_at, moisture, distance=1.8, temperature=24.5) | changes
+
+
+def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
+    """Walk the job and give each kind of document once."""
+    for path, document in plant.master_data():
+        put = caller.call("PUT", path, "engineer", document)
+        yield (
+            {"products": "product", "lines": "line", "laboratories": "laboratory"}.get(
+                path.split("/")[2] if path.count("/") == 3 else "", path.split("/")[-2].removesuffix("s")
+            ),
+            put,
+        )
+    for study in plant.studies():
+        recorded = caller.call("POST", "/v1/studies", "engineer", study)
+        yield f"evaluation-{study['design']}", recorded["evaluation"]
+    for kind, document in (
+        ("budget", plant.budget()),
+        *(("specification", each) for each in plant.specifications()),
+    ):
+        drafted = caller.call("POST", f"/v1/{kind}s", "engineer", document)
+        version = f"/v1/{kind}s/{document['code']}/versions/1"
+        caller.call("POST", f"{version}/submit", "engineer")
+        approved = caller.call("POST", f"{version}/approve", "approver", caller.signed())
+        if document["code"] != "legal":
+            yield f"{kind}-draft", drafted
+            yield f"{kind}-in-force", approved
+    figures = f"/v1/budgets/{plant.BUDGET}/versions/1/evaluation"
+    yield "budget-evaluation", caller.call("GET", figures, "engineer")
+    limits = f"/v1/acceptance-limits/{plant.PRODUCT}/moisture"
+    yield "acceptance-limits", caller.call("GET", limits, "line")
+    for outcome, values in {"release": (2.84, 2.88), "hold": (3.02, 3.06), "reject": (3.30, 3.34)}.items():
+        readings = [reading_of(value, len(outcome) + place) for place, value in enumerate(values)]
+        request = plant.decision_request(f"W26-{outcome}", readings)
+        yield f"decision-{outcome}", caller.call("POST", "/v1/decisions", "line", request)
+    outside = [reading_of(4.8, number, calibration="wmp-7") for number in (31, 32)]
+    request = plant.decision_request("W26-outside", outside)
+    yield "decision-hold-outside-range", caller.call("POST", "/v1/decisions/preview", "line", request)
+    wrong = plant.decision_request("W26-wrong", [reading_of(2.9, 41, values={"moisture": "3,12"})])
+    yield "problem", caller.call("POST", "/v1/decisions", "line", wrong)
+    yield "lot", caller.call("GET", f"/v1/lots/{plant.PRODUCT}/W26-hold", "line")
+
+
+@pytest.fixture(scope="module")
+def computed(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Any]:
+    folder = tmp_path_factory.mktemp("documents")
+    settings = load_settings({"SHOALMARK_DATA_FOLDER": str(folder)})
+    access = open_accounts(settings)
+    services = create_services(settings)
+    try:
+        return dict(documents_of(Caller(create_app(services).test_client(), access)))
+    finally:
+        services.close()
+
+
+def settled(thing: Any) -> Any:
+    """Put aside what is another one every day."""
+    if isinstance(thing, dict):
+        return {
+            name: "urn:uuid:<id>" if name == "instance" else settled(value) for name, value in thing.items()
+        }
+    if isinstance(thing, list):
+        return [settled(value) for value in thing]
+    if isinstance(thing, str):
+        for word, pattern in PATTERNS.items():
+            thing = re.sub(pattern, word, thing)
+    return thing
+
+
+def same(found: Any, kept: Any, where: str) -> None:
+    if isinstance(kept, dict) and isinstance(found, dict):
+        assert list(found) == list(kept), where
+        for name in kept:
+            same(found[name], kept[name], f"{where}/{name}")
+    elif isinstance(kept, list) and isinstance(found, list):
+        assert len(found) == len(kept), where
+        for index, (one, other) in enumerate(zip(found, kept, strict=True)):
+            same(one, other, f"{where}/{index}")
+    elif isinstance(kept, float) and isinstance(found, float):
+        assert found == pytest.approx(kept, rel=RELATIVE_TOLERANCE, abs=1e-15), where
+    else:
+        assert found == kept, where
+        assert type(found) is type(kept), where
+
+
+def test_the_documents_are_those_that_were_agreed(computed: dict[str, Any]) -> None:
+    found = {name: settled(document) for name, document in computed.items()}
+    if os.environ.get(WRITE):
+        for name, document in found.items():
+            text = json.dumps(document, indent=1, ensure_ascii=False)
+            (FOLDER / f"{name}.json").write_text(text + "\n", "utf-8")
+    kept = {path.stem: json.loads(path.read_text("utf-8")) for path in FOLDER.glob("*.json")}
+    assert set(found) == set(kept)
+    for name, document in found.items():
+        same(document, kept[name], name)
