@@ -1,7 +1,7 @@
 """Golden copies of the documents, computed by the program itself from the demo plant (documents/*.json).
 
 They fix names, order and figures of what callers get. When a change is meant, write them anew with
-SHOALMARK_TEST_WRITE_DOCUMENTS=1 and read the difference. Days, hashes and instants are put aside: they are
+TEST_WRITE_DOCUMENTS=1 and read the difference. Days, hashes and instants are put aside: they are
 other ones every day.
 """
 
@@ -24,8 +24,16 @@ from service.demo.walk import Access
 from service.settings import load_settings
 
 FOLDER = Path(__file__).with_name("documents")
-WRITE = "SHOALMARK_TEST_WRITE_DOCUMENTS"
+WRITE = "TEST_WRITE_DOCUMENTS"
 
+MASTER_DATA = {
+    "products": "product",
+    "characteristics": "characteristic",
+    "lines": "line",
+    "analyzers": "analyzer",
+    "calibrations": "calibration",
+    "laboratories": "laboratory",
+}
 # From library to library the last digits of a quantile may differ.
 RELATIVE_TOLERANCE = 1e-9
 PATTERNS = {
@@ -64,12 +72,7 @@ def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
     """Walk the job and give each kind of document once."""
     for path, document in plant.master_data():
         put = caller.call("PUT", path, "engineer", document)
-        yield (
-            {"products": "product", "lines": "line", "laboratories": "laboratory"}.get(
-                path.split("/")[2] if path.count("/") == 3 else "", path.split("/")[-2].removesuffix("s")
-            ),
-            put,
-        )
+        yield MASTER_DATA[path.split("/")[-2]], put
     for study in plant.studies():
         recorded = caller.call("POST", "/v1/studies", "engineer", study)
         yield f"evaluation-{study['design']}", recorded["evaluation"]
