@@ -8,6 +8,7 @@ from service.access import require
 from service.documents import Actor, DecisionRequest
 from service.errors import Conflict, NotFound
 from service.ledger import Entry
+from service.schemas import dump
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.judging import judge
 from service.workflows.paging import page_of, start_after
@@ -23,7 +24,7 @@ def preview(services: Services, actor: Actor, request: DecisionRequest) -> dict[
         register = services.registers.current(unit_of_work)
         _check_unjudged(unit_of_work, request)
         answer = judge(register, request, unit_of_work.now(request.line))
-    return {"id": None, "recorded": False, **_without_request(answer), "entry": None}
+    return {"id": None, "recorded": False, **answer, "entry": None}
 
 
 def decide(
@@ -41,11 +42,14 @@ def decide(
         No answer within the deadline: hold the lot, and ask again with the same key.
     """
     require(actor, "judge a lot")
+    # Written here and not by the writer, which all lines wait for.
+    said = dump(decision_request)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         register = services.registers.current(unit_of_work)
         _check_unjudged(unit_of_work, decision_request)
-        content = judge(register, decision_request, unit_of_work.now(decision_request.line))
+        answer = judge(register, decision_request, unit_of_work.now(decision_request.line))
+        content = {**answer, "request": said}
         entry = unit_of_work.append(decision_request.line, "decision", actor.principal, content)
         _project(unit_of_work, decision_request, content, entry)
         return entry
@@ -87,13 +91,9 @@ def answer_of(entry: Entry) -> dict[str, Any]:
     return {
         "id": f"{entry.chain}.{entry.sequence}",
         "recorded": True,
-        **_without_request(entry.content),
+        **{name: value for name, value in entry.content.items() if name != "request"},
         "entry": entry_reference(entry),
     }
-
-
-def _without_request(content: dict[str, Any]) -> dict[str, Any]:
-    return {name: value for name, value in content.items() if name != "request"}
 
 
 def get(services: Services, actor: Actor, identity: str) -> dict[str, Any]:

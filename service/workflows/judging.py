@@ -10,7 +10,6 @@ from budgets.errors import BudgetsError
 from budgets.release import Judgement, ReleaseRule
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
-from service.schemas import dump
 from service.workflows.calendar import NOTICE
 from service.workflows.measured import Hold, Measured, measure
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
@@ -35,7 +34,7 @@ class Ruling:
 
 
 def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dict[str, Any]:
-    """Judge a lot by what is in force; gives the whole answer but its place in the record.
+    """Judge a lot by what is in force; gives the answer but for its place in the record.
 
     Raises
     ------
@@ -91,7 +90,6 @@ def _answer(
         "not_judged": list(not_judged),
         "notices": notices,
         "caution": CAUTION,
-        "request": dump(request),
     }
 
 
