@@ -21,7 +21,7 @@ from service.api import (
     specifications,
     studies,
 )
-from service.api.description import describe_api
+from service.api.description import describe_api, public_operations
 from service.api.reader import LARGEST_BODY
 from service.api.smorest import ShoalmarkApi, is_api_path
 
@@ -50,6 +50,8 @@ def register(app: Flask) -> None:
         api.register_blueprint(blueprint)
     app.register_blueprint(health.blueprint)
     app.add_url_rule("/openapi.yaml", "openapi", _serve_description, methods=["GET"])
+    for endpoint, operation in public_operations().items():
+        api.describe_public(endpoint, operation)
     app.before_request(_authenticate)
 
 

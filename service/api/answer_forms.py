@@ -276,6 +276,17 @@ _STUDY_SUMMARY = _object(
     },
 )
 
+
+def _versions(name: str, document: str) -> dict[str, Form]:
+    """Give the forms of a kind that has many codes."""
+    now = {"in_force": _or_null(ref(name)), "open": _or_null(ref(name))}
+    return {
+        name: _version(document),
+        f"{name}Page": page_of(ref(name)),
+        f"{name}Summary": _object("The versions that matter now.", {"code": _CODE, "newest": _WHOLE, **now}),
+    }
+
+
 ANSWERS: dict[str, Form] = {
     "Problem": _PROBLEM,
     "Entry": _ENTRY,
@@ -296,34 +307,14 @@ ANSWERS: dict[str, Form] = {
     "Lot": _object("How a lot stands.", {**_LOT, "last_decision": ref("Decision")}),
     "LotPage": page_of(_object("How a lot stands.", _LOT)),
     "Verification": _VERIFICATION,
-    **{
-        f"{name}{suffix}": form
-        for name, document in (
-            ("SpecificationVersion", "Specification"),
-            ("BudgetVersion", "BudgetDocument"),
-            ("PlantVersion", "Plant"),
-        )
-        for suffix, form in (
-            ("", _version(document)),
-            ("Page", page_of(ref(name))),
-            (
-                "Summary",
-                _object(
-                    "The versions that matter now.",
-                    {
-                        "code": _CODE,
-                        "newest": _WHOLE,
-                        "in_force": _or_null(ref(name)),
-                        "open": _or_null(ref(name)),
-                    },
-                ),
-            ),
-        )
-    },
+    **_versions("SpecificationVersion", "Specification"),
+    **_versions("BudgetVersion", "BudgetDocument"),
+    "PlantVersion": _version("Plant"),
+    "PlantVersionPage": page_of(ref("PlantVersion")),
     **{
         f"{name}Page": page_of(ref(name))
         for name in ("Product", "Characteristic", "Line", "Analyzer", "Calibration", "Laboratory")
     },
-    "Alive": _object("The process answers.", {"alive": {"const": True}}),
-    "Ready": _object("Whether this process can decide.", {"ready": _YES}),
+    "Health": _object("The process answers.", {"alive": {"const": True}}),
+    "Readiness": _object("Whether this process can decide.", {"ready": _YES}, detail=_TEXT, revision=_WHOLE),
 }

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from service.api.answer_forms import ref
+
 # That of the distribution (a test holds both together).
 VERSION = "0.1.0"
 
@@ -30,4 +32,43 @@ def describe_api() -> dict[str, Any]:
         "info": {"description": _ABOUT},
         "security": [{"token": []}],
         "servers": [{"url": "/"}],
+    }
+
+
+def public_operations() -> dict[str, dict[str, Any]]:
+    """Describe what is outside of the API's prefix, by endpoint."""
+    ready = {"application/json": {"schema": ref("Readiness")}}
+    retry = {"Retry-After": {"schema": {"type": "string"}}}
+    return {
+        "health.get_health": {
+            "summary": "Say that the process answers.",
+            "operationId": "health",
+            "tags": ["health"],
+            "responses": {
+                "200": {
+                    "description": "It does.",
+                    "content": {"application/json": {"schema": ref("Health")}},
+                }
+            },
+        },
+        "health.get_readiness": {
+            "summary": "Say whether this process can record decisions now.",
+            "operationId": "readiness",
+            "tags": ["health"],
+            "responses": {
+                "200": {"description": "It can.", "content": ready},
+                "503": {"description": "It cannot.", "content": ready, "headers": retry},
+            },
+        },
+        "openapi": {
+            "summary": "Give this description.",
+            "operationId": "description",
+            "tags": ["health"],
+            "responses": {
+                "200": {
+                    "description": "This document.",
+                    "content": {"application/yaml": {"schema": {"type": "string"}}},
+                }
+            },
+        },
     }

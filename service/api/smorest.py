@@ -74,6 +74,14 @@ class ShoalmarkApi(flask_smorest.Api):  # type: ignore[misc] # the package carri
     def _register_responses(self) -> None:
         """Leave out the ready-made error responses: their media type is not ours."""
 
+    def _register_pagination_header(self) -> None:
+        """Leave out the header: our lists say in their body how they go on."""
+
+    def describe_public(self, endpoint: str, operation: dict[str, Any]) -> None:
+        """Describe a GET outside of the API's prefix, which needs no token."""
+        rule = next(self._app.url_map.iter_rules(endpoint))
+        self.spec.path(rule=rule, operations={"get": {**operation, "security": []}})
+
     def _register_error_handlers(self) -> None:
         for kind in (HTTPException, Exception):
             self._app.register_error_handler(kind, _answer_error)

@@ -8,11 +8,15 @@ from importlib.metadata import PackageNotFoundError, version
 from flask import Blueprint, Response, current_app, render_template
 
 from service.workflows import health
-from service.workflows.judging import CAUTION
 
 _log = logging.getLogger(__name__)
 
 blueprint = Blueprint("pages", __name__, template_folder="templates", static_folder="static")
+
+CAUTION = (
+    "Answers of this service speak of the named characteristics only; they are no safety clearance. Local "
+    "regulations and the plant's authorised person decide on a lot."
+)
 
 # Everything a page needs comes from this server; nothing is framed, sniffed or told to other sites.
 _GUARDS = {
@@ -41,7 +45,7 @@ def _number() -> str:
     try:
         return version("shoalmark")
     except PackageNotFoundError:  # run from a folder without installation
-        return "not installed"
+        return ""
 
 
 def guard(response: Response) -> Response:

@@ -48,7 +48,7 @@ class DecisionRuleSchema(StrictSchema):
     largest_standard_uncertainty = Number(above=0, allow_none=True, load_default=None)
     least_capability_index = Number(above=0, allow_none=True, load_default=None)
     rejection = Choice("at_tolerance_limit", later=("guarded",), load_default="at_tolerance_limit")
-    rounds = Count(least=1, most=100, load_default=1)
+    rounds = Count(least=1, most=100, load_default=1, about="More than 1 is not supported yet.")
     specific_risk_cap = Later(load_only=True)
     prior = Later(load_only=True)
     replicate_level = Later(load_only=True)

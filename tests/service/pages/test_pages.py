@@ -12,9 +12,9 @@ from flask import Flask
 from flask.testing import FlaskClient
 
 from service import create_app, create_services
+from service.pages.start import CAUTION
 from service.settings import load_settings
 from service.store.schema import migrate
-from service.workflows.judging import CAUTION
 
 # Elements without an end tag (HTML living standard, 13.1.2, from memory).
 VOID = {"area", "base", "br", "col", "embed", "hr", "img", "input", "link", "meta", "source", "track", "wbr"}
