@@ -95,9 +95,12 @@ class Lots:
 
     def __init__(self, session: Session) -> None:
         self._session = session
+        self._changed: dict[tuple[str, str], StoredLot] = {}
 
     def get(self, product: str, lot: str) -> StoredLot | None:
         """Return where a lot stands, or None when it was never judged."""
+        if (changed := self._changed.get((product, lot))) is not None:
+            return changed
         row = self._session.row(_LOT, of=product, named=lot)
         return None if row is None else StoredLot(**row._mapping)
 
@@ -109,6 +112,7 @@ class Lots:
             product, lot, line, outcome, rounds, entry.chain, entry.sequence, entry.recorded_at
         )
         self._session.upsert(lots, asdict(stored))
+        self._changed[product, lot] = stored
         return stored
 
     def list(
@@ -129,7 +133,7 @@ class Lots:
         if before is not None:
             query = query.where(tuple_(*order) < before)
         query = query.order_by(*(column.desc() for column in order)).limit(limit)
-        return [StoredLot(**row._mapping) for row in self._session.rows(query)]
+        return [StoredLot(**row._mapping) for row in self._session.rows(query, lots)]
 
 
 class Readings:
@@ -137,15 +141,20 @@ class Readings:
 
     def __init__(self, session: Session) -> None:
         self._session = session
+        self._added: dict[ReadingIdentity, StoredReading] = {}
 
     def find(self, identities: Iterable[ReadingIdentity]) -> list[StoredReading]:
         """Return those of the identities that were used before."""
+        wanted = list(dict.fromkeys(identities))
         names = ("analyzer", "identity", "sample")
-        rows = self._session.rows_among(readings, names, list(identities))
-        return [StoredReading(**row._mapping) for row in rows]
+        earlier = [each for each in wanted if each not in self._added]
+        rows = self._session.rows_among(readings, names, earlier)
+        found = [self._added[each] for each in wanted if each in self._added]
+        return found + [StoredReading(**row._mapping) for row in rows]
 
     def add(self, identities: Iterable[ReadingIdentity], entry: Entry) -> None:
         """Mark readings as used by an entry."""
         for analyzer, identity, sample in identities:
-            values = {"analyzer": analyzer, "identity": identity, "sample": sample}
-            self._session.insert(readings, {**values, "chain": entry.chain, "sequence": entry.sequence})
+            stored = StoredReading(analyzer, identity, sample, entry.chain, entry.sequence)
+            self._session.insert(readings, asdict(stored))
+            self._added[analyzer, identity, sample] = stored

@@ -27,7 +27,7 @@ class Master:
     def get(self, kind: str, key: str) -> StoredDocument | None:
         """Return a document as it stands."""
         table = master_documents
-        row = self._session.row(select(table).where(table.c.kind == kind, table.c.key == key))
+        row = self._session.row(select(table).where(table.c.kind == kind, table.c.key == key), table)
         return None if row is None else _stored(row)
 
     def all(self, kind: str) -> list[StoredDocument]:
@@ -51,7 +51,7 @@ class Master:
         if before is not None:
             query = query.where(tuple_(table.c.sequence, table.c.key) < before)
         query = query.order_by(table.c.sequence.desc(), table.c.key.desc()).limit(limit)
-        return [_stored(row) for row in self._session.rows(query)]
+        return [_stored(row) for row in self._session.rows(query, master_documents)]
 
     def put(self, kind: str, key: str, document: Document, entry: Entry) -> StoredDocument:
         """Create a document or replace it; its revision counts up."""

@@ -113,8 +113,9 @@ class Keys:
 
     def prefetch(self, pairs: list[tuple[str, str]]) -> None:
         """Look up many keys by one query; a writing unit of work holds the lock that keeps this true."""
-        found = self._session.rows_among(idempotency_keys, ("principal", "key"), pairs)
-        self._known.update(dict.fromkeys(pairs))
+        unknown = [pair for pair in pairs if pair not in self._known]
+        found = self._session.rows_among(idempotency_keys, ("principal", "key"), unknown)
+        self._known.update(dict.fromkeys(unknown))
         for row in found:
             self._known[row.principal, row.key] = StoredKey(row.fingerprint, row.chain, row.sequence)
 

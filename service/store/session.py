@@ -1,7 +1,7 @@
 """One connection in one transaction, as the repositories see it.
 
-Rows of the record are gathered and written by one statement per table, before that table is next read
-and at the commit: this is what makes a batch of acts cheap.
+Rows that are added, or replace others, are gathered and written by one statement per table, before that table
+is next read and at the commit: this is what makes a batch of acts cheap.
 """
 
 from __future__ import annotations
@@ -30,6 +30,7 @@ class Session:
         self._connection = connection
         self._may_write = may_write
         self._pending: dict[Table, list[Values]] = {}
+        self._replacing: dict[Table, dict[tuple[Any, ...], Values]] = {}
         self.writes = 0
         self.broken = False
         self.postgresql = connection.dialect.name == "postgresql"
@@ -49,13 +50,16 @@ class Session:
     def rows_among(
         self, table: Table, names: tuple[str, ...], wanted: Sequence[tuple[str, ...]]
     ) -> Sequence[Row[Any]]:
-        """Return the rows whose named text columns are one of the tuples wanted, by one index search each."""
+        """Return the rows whose named text columns are one of the tuples wanted, by one index search each.
+
+        Gathered rows are not among them: the repositories that use this remember what they added.
+        """
         if not wanted:
             return []
         if not self.postgresql:
-            return self.rows(_among_on_sqlite(table, names), table, wanted=json.dumps(wanted))
+            return self.rows(_among_on_sqlite(table, names), wanted=json.dumps(wanted))
         columns = {f"w{place}": list(values) for place, values in enumerate(zip(*wanted, strict=True))}
-        return self.rows(_among_on_postgresql(table, names), table, **columns)
+        return self.rows(_among_on_postgresql(table, names), **columns)
 
     def row(self, statement: Executable, *tables: Table, **parameters: Any) -> Row[Any] | None:
         """Return the first row of a query or None."""
@@ -73,19 +77,24 @@ class Session:
         self._pending.setdefault(table, []).append(values)
 
     def upsert(self, table: Table, values: Values) -> None:
-        """Insert a row or replace the columns of the one with its primary key, at once."""
+        """Gather a row that replaces the one with its primary key, if there is one."""
         self._count_write()
-        self._execute(_upsert(table, tuple(values), self.postgresql), values)
+        key = tuple(values[column.name] for column in table.primary_key)
+        self._replacing.setdefault(table, {})[key] = values
 
     def flush(self, *tables: Table) -> None:
         """Write the gathered rows of the tables named."""
         for table in tables:
             if rows := self._pending.pop(table, None):
                 self._execute(_insert(table), rows)
+            if replacing := self._replacing.pop(table, None):
+                # in the order of the keys, so that two processes never wait for each other in a ring
+                ordered = [replacing[key] for key in sorted(replacing)]
+                self._execute(_upsert(table, tuple(ordered[0]), self.postgresql), ordered)
 
     def flush_all(self) -> None:
         """Write all gathered rows."""
-        self.flush(*self._pending)
+        self.flush(*{**self._pending, **self._replacing})
 
     def _count_write(self) -> None:
         if not self._may_write:

@@ -264,6 +264,28 @@ class TestDecisionsLotsReadings:
         ]
         assert unit.readings.find([]) == []
 
+    def test_what_a_transaction_gathered_is_found_in_it_and_after_it(self, database):
+        with database.writing(["tower-1"]) as unit:
+            judge("A", "hold").perform(unit)
+            stored = unit.lots.get("whole-milk-powder", "A")
+            assert stored.outcome == "hold"
+            second = judge("A", "release")
+            with pytest.raises(IntegrityError):  # the same round and reading once more
+                second.perform(unit)
+                unit.commit()
+        with database.writing(["tower-1"]) as unit:
+            entry = judge("B", "hold").perform(unit)
+            unit.lots.upsert(
+                product="whole-milk-powder", lot="B", line="tower-1", outcome="reject", rounds=1, entry=entry
+            )
+            assert unit.lots.get("whole-milk-powder", "B").outcome == "reject"
+            unit.commit()
+        with database.reading() as unit:
+            assert unit.lots.get("whole-milk-powder", "A") is None
+            assert [lot.outcome for lot in unit.lots.list()] == ["reject"]
+            taken = ("nir-1", "taken of whole-milk-powder B", "1")
+            assert [each.sequence for each in unit.readings.find([taken, taken])] == [entry.sequence]
+
     def test_the_same_reading_is_never_kept_twice(self, database):
         with pytest.raises(IntegrityError), database.writing(["tower-1"]) as unit:
             unit.readings.add([("nir-1", "m1", "1"), ("nir-1", "m1", "1")], act(unit, "tower-1"))
