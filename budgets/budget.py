@@ -91,6 +91,7 @@ class Budget:
                 *_faults_of_bias(self),
                 *_double_counting(self.components),
                 *_missing_sources(self.components),
+                *_fewer_readings_than_studied(self),
             ]
         )
 
@@ -226,4 +227,30 @@ def _missing_sources(components: tuple[Component, ...]) -> list[BudgetsError]:
                     where=("components", index),
                 )
             )
+    return faults
+
+
+def _fewer_readings_than_studied(budget: Budget) -> list[BudgetsError]:
+    """Find a whole standard error of prediction that promises more than the least readings keep.
+
+    Its study averaged readings; with fewer of them the repeatability weighs more than it holds.
+    """
+    least = budget.procedure.samples.least * budget.procedure.readings_per_sample.least
+    faults: list[BudgetsError] = []
+    for index, whole in enumerate(budget.components):
+        holds_it = {"repeatability", "remainder"} <= set(whole.contains) and whole.covered_weight == 0
+        if not holds_it or 1 / least <= whole.reading_weight * (1 + 1e-9):
+            continue
+        if any(
+            part.quantity == whole.quantity and _beyond_its_study(part, whole) for part in budget.components
+        ):
+            continue
+        faults.append(
+            ComponentError(
+                f"the study of {whole.code} averaged readings (a mean weight of {whole.reading_weight:.3g} "
+                f"for each), the procedure asks for as few as {least}: add repeatability_beyond_study of "
+                "that study, or plan as many readings",
+                where=("components", index),
+            )
+        )
     return faults

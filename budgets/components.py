@@ -40,6 +40,8 @@ class Component:
         Name of the estimate it was made from.
     taken_out : tuple of str
         Sources subtracted from it, to be named by other components.
+    reading_weight : float
+        Mean of 1/(readings averaged) behind it; 1 when every value behind it was a single reading.
 
     Raises
     ------
@@ -61,6 +63,7 @@ class Component:
     contains: tuple[str, ...] = ()
     source: str = ""
     taken_out: tuple[str, ...] = ()
+    reading_weight: float = 1.0
 
     def __post_init__(self) -> None:
         if self.level not in LEVELS:
@@ -169,4 +172,5 @@ class Component:
             contains=estimate.contains,
             source=estimate.name,
             taken_out=estimate.taken_out,
+            reading_weight=estimate.reading_weight,
         )

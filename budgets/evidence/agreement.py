@@ -62,8 +62,9 @@ def evaluate(study: Study) -> Evaluation:
 
     Notes
     -----
-    ``SEP^2 = sum (d - mean d)^2 / (n - 1)``, ``RMSEP^2 = sum d^2 / n``, d = reading - reference. Source: ISO
-    12099:2017, validation (from memory).
+    ``SEP^2 = sum (d - mean d)^2 / (n - 1)``, ``RMSEP^2 = sum d^2 / n``, d = reading - reference. The RMSEP
+    holds the bias, so it stands in the diagnostics only: no component can be made of it, and it cannot be
+    counted beside a bias. Source: ISO 12099:2017, validation (from memory).
     """
     presentations, limits = _checked_options(study)
     pairs = validation_pairs(study)
@@ -137,6 +138,7 @@ def _estimates(
     pairs: Sequence[Pair],
 ) -> tuple[Estimate, ...]:
     n = len(pairs)
+    reading_weight = math.fsum(1 / len(pair.readings) for pair in pairs) / n
     whole = Estimate(
         name="standard_error_of_prediction",
         terms=(Term(1.0, square),),
@@ -152,6 +154,7 @@ def _estimates(
             "subsampling",
             "remainder",
         ),
+        reading_weight=reading_weight,
     )
     estimates = [test.estimate, whole]
     if left is not None:
@@ -164,7 +167,7 @@ def _estimates(
             interval=None,
             may_feed=("reading",),
             usable=True,
-            covered_weight=math.fsum(1 / len(pair.readings) for pair in pairs) / n,
+            covered_weight=reading_weight,
             contains=("repeatability",),
         )
         estimates.append(beyond)

@@ -181,6 +181,8 @@ class Estimate:
         Sources inside it, for the search for double counting.
     taken_out : tuple of str
         Sources that were subtracted from it and that the budget therefore has to name again.
+    reading_weight : float
+        Mean of 1/(readings averaged) behind it; 1 when every value behind it was a single reading.
     """
 
     name: str
@@ -192,6 +194,7 @@ class Estimate:
     covered_weight: float = 0.0
     contains: tuple[str, ...] = ()
     taken_out: tuple[str, ...] = ()
+    reading_weight: float = 1.0
 
     @property
     def variance(self) -> float:
@@ -232,6 +235,7 @@ class Estimate:
             "covered_weight": self.covered_weight,
             "contains": list(self.contains),
             "taken_out": list(self.taken_out),
+            "reading_weight": self.reading_weight,
         }
 
     @classmethod
@@ -248,6 +252,8 @@ class Estimate:
             covered_weight=document["covered_weight"],
             contains=tuple(document["contains"]),
             taken_out=tuple(document["taken_out"]),
+            # Documents of the first version of this program lack it.
+            reading_weight=document.get("reading_weight", 1.0),
         )
 
 

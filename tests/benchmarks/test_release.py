@@ -1,4 +1,7 @@
-"""Speed of judging, beside the bare calls it is made of. `pytest --benchmark-enable` measures."""
+"""Speed of judging, beside the bare calls it is made of: shown, never asserted.
+
+`pytest --benchmark-enable` measures.
+"""
 
 import math
 import time
@@ -58,6 +61,8 @@ def test_a_million_estimates(benchmark, nu, tolerance):
     rule = a_rule(nu, tolerance)
     rule.judge_many(ESTIMATES[:10])
     benchmark.group = "one million estimates"
+    bare = best(lambda: (ndtr(ESTIMATES), ndtr(ESTIMATES)), rounds=3)
+    benchmark.extra_info["times two bare calls"] = best(lambda: rule.judge_many(ESTIMATES), rounds=3) / bare
     assert benchmark(rule.judge_many, ESTIMATES).outcomes.size == ESTIMATES.size
 
 
@@ -83,25 +88,3 @@ def test_one_combination(benchmark):
     budget = a_budget(20.0)
     benchmark.group = "one combination"
     assert benchmark(combined, budget, Counts((2,))).standard_uncertainty > 0
-
-
-@pytest.mark.parametrize("nu", [math.inf, 9.5], ids=["normal", "t"])
-@pytest.mark.parametrize("tolerance", [Tolerance(None, 4.0), Tolerance(2.0, 4.0)], ids=["one", "two"])
-def test_a_million_take_at_most_three_times_two_bare_calls(nu, tolerance):
-    rule = a_rule(nu, tolerance)
-    bare = best(lambda: (ndtr(ESTIMATES), ndtr(ESTIMATES)))
-    assert best(lambda: rule.judge_many(ESTIMATES)) < 3 * bare
-
-
-@pytest.mark.parametrize("nu", [math.inf, 9.5], ids=["normal", "t"])
-def test_one_takes_at_most_twenty_microseconds(nu):
-    rule = a_rule(nu, Tolerance(2.0, 4.0))
-    number = 500
-    assert best(lambda: [rule.judge(3.9) for _ in range(number)]) / number < 20e-6
-
-
-def test_the_cost_grows_no_faster_than_the_number_of_estimates():
-    rule = a_rule(math.inf, Tolerance(2.0, 4.0))
-    small, large = ESTIMATES[:100_000], ESTIMATES
-    exponent = math.log10(best(lambda: rule.judge_many(large)) / best(lambda: rule.judge_many(small)))
-    assert exponent < 1.3

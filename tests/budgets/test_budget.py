@@ -2,7 +2,7 @@ import math
 
 import pytest
 
-from budgets.budget import Count
+from budgets.budget import Count, Procedure
 from budgets.errors import BudgetsError, ComponentError, ModelError, NotSupportedError
 
 WHOLE = {"contains": ("repeatability", "remainder", "resolution"), "level": "lot"}
@@ -111,3 +111,17 @@ def test_what_was_taken_out_of_a_remainder_comes_back(a_budget, a_component):
     assert a_budget(components=(rest, a_component("declared")), bias=None)
     both = a_component("rest", level="lot", taken_out=("repeatability", "presentation"))
     refused(a_budget, both, a_component("r"), match="presentation was taken out")
+
+
+def test_fewer_readings_than_the_study_averaged_need_the_repeatability_beyond_it(a_budget, a_component):
+    """With one reading the repeatability weighs more than in a study that averaged four."""
+    whole = a_component("sep", reading_weight=0.25, **WHOLE)
+    beyond = a_component("beyond", contains=("repeatability",), covered_weight=0.25)
+    error = refused(a_budget, whole, match="as few as 1: add repeatability_beyond_study")
+    assert error.where == ("components", 0)
+    assert a_budget(components=(whole, beyond), bias=None)
+    enough = Procedure(Count(2, 2, 2), Count(2, 2, 4))
+    assert a_budget(components=(whole,), bias=None, procedure=enough)
+    # The repeatability of another quantity brings nothing back.
+    other = a_component("other", contains=("repeatability",), covered_weight=0.25, quantity="bias")
+    refused(a_budget, whole, other, bias=0.0, match="2 faults")
