@@ -45,7 +45,9 @@ def known_revisions() -> frozenset[str]:
 
 
 def current(url: str) -> str | None:
-    """Return the database's revision, or None when it has no schema of ours."""
+    """Return the database's revision, or None when it has no schema of ours, or no file yet."""
+    if (file := sqlite_file(url)) is not None and not file.exists():
+        return None
     with _connection(url) as connection:
         return _revision_of(connection)
 

@@ -6,6 +6,7 @@ Only hashes are kept: Argon2 of passwords, SHA-256 of tokens (which are random a
 from __future__ import annotations
 
 import hashlib
+import re
 import secrets
 from dataclasses import dataclass
 from functools import cache
@@ -24,6 +25,7 @@ if TYPE_CHECKING:
     from argon2 import PasswordHasher
 
 SHORTEST_PASSWORD: Final = 12
+_CODE: Final = re.compile(r"[a-z0-9][a-z0-9-]{0,62}")
 _TOKEN_PREFIX: Final = "shm_"
 COMMAND_LINE: Final = "command-line"
 
@@ -66,6 +68,7 @@ def verify_signature(services: Services, person: str, signature: Signature) -> N
 
 def add_person(database: Database, code: str, name: str, roles: tuple[str, ...], password: str) -> None:
     """Open an account. Raises Conflict when the code is taken, InvalidRequest for unusable input."""
+    _check_code(code)
     _check_roles(roles)
     if len(password) < SHORTEST_PASSWORD:
         raise InvalidRequest(f"The password needs at least {SHORTEST_PASSWORD} characters.")
@@ -92,6 +95,7 @@ def add_token(database: Database, principal: str, roles: tuple[str, ...]) -> New
     InvalidRequest
         Roles were given for a person, or none for a machine.
     """
+    _check_code(principal)
     secret = _TOKEN_PREFIX + secrets.token_urlsafe(32)
     with database.writing([PLANT_CHAIN]) as unit_of_work:
         person = unit_of_work.people.get(principal)
@@ -140,6 +144,11 @@ def _tokens_of(unit_of_work: UnitOfWork, principal: str) -> list[StoredToken]:
 
 def _append(unit_of_work: UnitOfWork, kind: str, content: dict[str, Any]) -> Entry:
     return unit_of_work.append(PLANT_CHAIN, kind, COMMAND_LINE, content)
+
+
+def _check_code(code: str) -> None:
+    if _CODE.fullmatch(code) is None:
+        raise InvalidRequest(f"{code!r} is not a code: small letters, digits and hyphens, at most 63.")
 
 
 def _check_roles(roles: tuple[str, ...]) -> None:
