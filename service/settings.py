@@ -19,6 +19,7 @@ from service.errors import SettingsError
 PREFIX = "SHOALMARK_"
 MASK = "***"
 LOG_LEVELS = ("debug", "info", "warning", "error")
+LOOPBACK = ("127.0.0.1", "localhost", "::1")
 
 
 @dataclass(frozen=True)
@@ -57,6 +58,11 @@ TABLE: tuple[Setting, ...] = (
     ),
     Setting("SHOALMARK_LOG_LEVEL", "info", "The least level that is logged: debug, info, warning or error."),
     Setting("SHOALMARK_THREADS", "8", "How many requests are worked on at the same time."),
+    Setting(
+        "SHOALMARK_DEMO",
+        "no",
+        "Whether every page says that this is a demo, on the loopback address only: yes or no.",
+    ),
 )
 NAMES = tuple(setting.name for setting in TABLE)
 
@@ -74,6 +80,7 @@ class Settings:
     trusted_proxies: int = 0
     log_level: str = "info"
     threads: int = 8
+    demo: bool = False
     given: frozenset[str] = frozenset()
 
 
@@ -109,10 +116,13 @@ def load_settings(environ: Mapping[str, str]) -> Settings:
         trusted_proxies=source.number("TRUSTED_PROXIES", 0, 0, 10),
         log_level=source.text("LOG_LEVEL", "info").lower(),
         threads=source.number("THREADS", 8, 1, 64),
+        demo=source.flag("DEMO"),
         given=frozenset(source.given),
     )
     if (settings.tls_certificate is None) != (settings.tls_key is None):
         faults.append("SHOALMARK_TLS_CERTIFICATE and SHOALMARK_TLS_KEY are set together or not at all")
+    if settings.demo and settings.host not in LOOPBACK:
+        faults.append(f"SHOALMARK_DEMO needs SHOALMARK_HOST to be one of {', '.join(LOOPBACK)}")
     if settings.log_level not in LOG_LEVELS:
         faults.append(f"SHOALMARK_LOG_LEVEL is {settings.log_level!r}; expected {', '.join(LOG_LEVELS)}")
     if faults:
@@ -134,6 +144,7 @@ def describe(settings: Settings) -> tuple[SettingRow, ...]:
         "SHOALMARK_TRUSTED_PROXIES": settings.trusted_proxies,
         "SHOALMARK_LOG_LEVEL": settings.log_level,
         "SHOALMARK_THREADS": settings.threads,
+        "SHOALMARK_DEMO": "yes" if settings.demo else "no",
     }
     rows = []
     for setting in TABLE:
@@ -235,6 +246,12 @@ class _Source:
             self.faults.append(f"{PREFIX}{name} is {got!r}; expected a whole number, {least} to {most}")
             return default
         return value
+
+    def flag(self, name: str) -> bool:
+        value = self.text(name, "no").lower()
+        if value not in ("yes", "no"):
+            self.faults.append(f"{PREFIX}{name} is {value!r}; expected yes or no")
+        return value == "yes"
 
     def path(self, name: str) -> Path | None:
         value = self._env.path(name, None)

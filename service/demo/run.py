@@ -74,6 +74,7 @@ def _environment(folder: Path, port: int) -> dict[str, str]:
         "SHOALMARK_HOST": HOST,
         "SHOALMARK_PORT": str(port),
         "SHOALMARK_LOG_LEVEL": "warning",
+        "SHOALMARK_DEMO": "yes",
     }
 
 

@@ -15,3 +15,5 @@ def register(app: Flask) -> None:
     # The API answers errors below its prefix; it hands all others to this function, which it does not know.
     app.extensions["shoalmark.error_page"] = errors.error_page
     app.after_request(start.guard)
+    demo = app.extensions["shoalmark"].settings.demo
+    app.context_processor(lambda: {"demo": demo})

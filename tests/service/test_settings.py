@@ -182,3 +182,12 @@ def test_a_secret_key_that_is_no_secret_is_refused(tmp_path, content, mode, mess
     with pytest.raises(SettingsError, match=message) as caught:
         secret_key(load_settings({"SHOALMARK_DATA_FOLDER": str(tmp_path)}))
     assert content not in caught.value.message
+
+
+def test_a_demo_is_served_on_the_loopback_address_only() -> None:
+    assert load_settings({**HOME, "SHOALMARK_DEMO": "yes"}).demo
+    assert not load_settings(HOME).demo
+    with pytest.raises(SettingsError, match="SHOALMARK_DEMO needs SHOALMARK_HOST"):
+        load_settings({**HOME, "SHOALMARK_DEMO": "yes", "SHOALMARK_HOST": "0.0.0.0"})
+    with pytest.raises(SettingsError, match="expected yes or no"):
+        load_settings({**HOME, "SHOALMARK_DEMO": "perhaps"})

@@ -124,3 +124,18 @@ def test_the_theme_is_readable_and_stands_in_one_place() -> None:
         assert contrast(colours["needed"], colours["paper"]) >= 4.5
     # No colour is named outside of the scheme.
     assert not re.search(r"#[0-9a-f]{3,6}", re.sub(r":root \{[^}]*\}", "", css))
+
+
+def test_every_page_of_a_demo_says_so(tmp_path: Path) -> None:
+    settings = load_settings({"SHOALMARK_DATA_FOLDER": str(tmp_path), "SHOALMARK_DEMO": "yes"})
+    migrate(settings.database_url)
+    demo = create_app(create_services(settings))
+    try:
+        for path in ("/", "/no-such-page"):
+            assert "Demo: an invented plant" in demo.test_client().get(path).text
+    finally:
+        demo.extensions["shoalmark"].close()
+
+
+def test_a_plant_in_earnest_does_not_call_itself_a_demo(client: FlaskClient) -> None:
+    assert "Demo" not in client.get("/").text
