@@ -49,6 +49,7 @@ def test_every_setting_is_read(tmp_path):
         "SHOALMARK_TRUSTED_PROXIES": "1",
         "SHOALMARK_LOG_LEVEL": "Warning",
         "SHOALMARK_THREADS": "16",
+        "SHOALMARK_DEMO": "no",
     }
     settings = load_settings({**HOME, **environ})
     assert settings.database_url == "postgresql://mill@db/plant"
