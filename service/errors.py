@@ -27,13 +27,17 @@ from dataclasses import dataclass
 
 @dataclass(frozen=True)
 class Fault:
-    """One thing that is wrong with a request: where, what was got and what is expected."""
+    """One thing that is wrong with a request: where, what was got and what is expected.
+
+    ``supported`` is False for what is valid as such, but which this version cannot do yet.
+    """
 
     detail: str
     expected: str | None = None
     pointer: str | None = None
     parameter: str | None = None
     header: str | None = None
+    supported: bool = True
 
 
 class ServiceError(Exception):

@@ -110,7 +110,10 @@ def _flatten(messages: object, pointer: str) -> Iterator[tuple[Wrong, str]]:
 def refusal(error: ValidationError) -> InvalidRequest:
     """All complaints of a document as one error with a fault for each."""
     found = list(_flatten(error.messages, "#"))
-    faults = tuple(Fault(wrong.detail, wrong.expected, pointer) for wrong, pointer in found[:MOST_FAULTS])
+    faults = tuple(
+        Fault(wrong.detail, wrong.expected, pointer, supported=wrong.supported)
+        for wrong, pointer in found[:MOST_FAULTS]
+    )
     shown = "" if len(found) <= MOST_FAULTS else f", the first {MOST_FAULTS} are shown"
     kind = InvalidRequest if any(wrong.supported for wrong, _ in found) else NotSupported
     return kind(f"{counted(len(found))}{shown}; nothing was recorded.", faults=faults)

@@ -9,11 +9,11 @@ from typing import ParamSpec, TypeVar
 
 from budgets.declarations import Declaration
 from budgets.declarations import evaluate as evaluate_declaration
-from budgets.errors import BudgetsError
+from budgets.errors import BudgetsError, NotSupportedError
 from budgets.evidence.evaluation import Estimate, Evaluation
 from budgets.units import conversion
 from service.documents import DeclaredEvidence, Evidence, Study, StudyEvidence
-from service.errors import Fault, InvalidRequest
+from service.errors import Fault, InvalidRequest, NotSupported
 from service.schemas import load
 from service.store.unit_of_work import UnitOfWork
 
@@ -48,7 +48,9 @@ class FaultCollector:
         try:
             return step(*args, **kwargs)
         except InvalidRequest as error:
-            self.faults.extend(error.faults or (Fault(error.message, pointer=pointer),))
+            supported = not isinstance(error, NotSupported)
+            found = error.faults or (Fault(error.message, pointer=pointer),)
+            self.faults.extend(replace(fault, supported=fault.supported and supported) for fault in found)
         except BudgetsError as error:
             self.faults.extend(budget_faults(error, pointer))
         return None
@@ -58,9 +60,13 @@ class FaultCollector:
         self.faults.append(Fault(detail, expected=expected, pointer=pointer))
 
     def finish(self, message: str) -> None:
-        """End the collection. Raises InvalidRequest when anything was found."""
+        """End the collection. Raises InvalidRequest when anything was found.
+
+        It is NotSupported when nothing was wrong but what this version cannot do yet.
+        """
         if self.faults:
-            raise InvalidRequest(message, faults=tuple(self.faults))
+            kind = InvalidRequest if any(fault.supported for fault in self.faults) else NotSupported
+            raise kind(message, faults=tuple(self.faults))
 
 
 def budget_faults(error: BudgetsError, pointer: str) -> tuple[Fault, ...]:
@@ -68,7 +74,8 @@ def budget_faults(error: BudgetsError, pointer: str) -> tuple[Fault, ...]:
     if error.faults:
         return tuple(fault for part in error.faults for fault in budget_faults(part, pointer))
     where = "".join(f"/{step}" for step in error.where)
-    return (Fault(error.message, pointer=f"{pointer}{where}"),)
+    supported = not isinstance(error, NotSupportedError)
+    return (Fault(error.message, pointer=f"{pointer}{where}", supported=supported),)
 
 
 def resolve(unit_of_work: UnitOfWork, evidence: Evidence, *, code: str, unit: str, pointer: str) -> Behind:

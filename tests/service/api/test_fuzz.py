@@ -26,7 +26,9 @@ from schemathesis.specs.openapi.checks import (
 from tests.service.api.conftest import copied, open_app
 from tests.service.api.house import decision, done
 
-EXAMPLES_PER_OPERATION = 6
+pytestmark = pytest.mark.slow
+
+EXAMPLES_PER_OPERATION = {GenerationMode.POSITIVE: 6, GenerationMode.NEGATIVE: 3}
 
 CONFORMING = [
     schemathesis.checks.not_a_server_error,
@@ -94,7 +96,7 @@ def fuzz(
     there = next((known for prefix, known in THERE.items() if operation.path.startswith(prefix)), {})
 
     @settings(
-        max_examples=EXAMPLES_PER_OPERATION,
+        max_examples=EXAMPLES_PER_OPERATION[mode],
         derandomize=True,
         database=None,
         deadline=None,
