@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import hashlib
+import threading
+from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
 import pytest
@@ -164,6 +166,34 @@ def test_a_key_belongs_to_its_principal(app: Flask, callers: Callers) -> None:
     done(callers["mes"].post("/v1/decisions", decision("L1"), key=key))
     second = house.Caller(callers["mes"].client, other).post("/v1/decisions", decision("L2"), key=key)
     assert second.status_code == 201
+
+
+def test_twins_in_flight_are_one_decision(app: Flask, callers: Callers) -> None:
+    key, twins = house.fresh_key(), 6
+    together = threading.Barrier(twins)
+
+    def send(_: int) -> tuple[int, bool, str]:
+        caller = house.Caller(app.test_client(), callers["mes"].token)
+        together.wait()
+        response = caller.post("/v1/decisions", decision(), key=key)
+        return response.status_code, "Recorded-Earlier" in response.headers, response.get_json()["id"]
+
+    with ThreadPoolExecutor(twins) as pool:
+        answers = list(pool.map(send, range(twins)))
+    assert sorted(answers) == [(201, False, "tower-1.1"), *[(201, True, "tower-1.1")] * (twins - 1)]
+
+
+def test_only_one_of_many_requests_judges_a_lot(app: Flask, callers: Callers) -> None:
+    rivals = 6
+    together = threading.Barrier(rivals)
+
+    def send(number: int) -> int:
+        caller = house.Caller(app.test_client(), callers["mes"].token)
+        together.wait()
+        return caller.post("/v1/decisions", house.moved(decision(), minutes=number)).status_code
+
+    with ThreadPoolExecutor(rivals) as pool:
+        assert sorted(pool.map(send, range(rivals))) == [201, *[409] * (rivals - 1)]
 
 
 def test_errors_are_not_remembered_under_a_key(callers: Callers) -> None:
