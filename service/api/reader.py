@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import math
+import re
 from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
@@ -78,25 +79,40 @@ def _decode(body: bytes) -> str:
 
 
 def _parse(text: str) -> Any:
+    _check_depth(text)
     try:
         document = _FAST.decode(text)
     except _Trouble:
         raise _located(text) from None
     except json.JSONDecodeError as error:
-        where = f"line {error.lineno}, column {error.colno}"
-        raise Unreadable(f"The body is no JSON: {error.msg} at {where}.") from None
-    except RecursionError:
-        raise _too_deep() from None
-    # Only an escape can bring in a surrogate or NUL, and only many brackets a great depth.
+        raise _no_json(error) from None
+    # Only an escape can bring in a surrogate or NUL.
     if "\\u" in text and any(_unprintable_texts(document)):
         raise _located(text)
-    if text.count("[") + text.count("{") > DEEPEST and _depth_exceeds(document, DEEPEST):
-        raise _too_deep()
     return document
 
 
-def _too_deep() -> Unreadable:
-    return Unreadable(f"The body is nested too deep; at most {DEEPEST} levels are taken.")
+def _no_json(error: json.JSONDecodeError) -> Unreadable:
+    return Unreadable(f"The body is no JSON: {error.msg} at line {error.lineno}, column {error.colno}.")
+
+
+def _check_depth(text: str) -> None:
+    """Refuse a great depth before the parser recurses into it, on a thread's stack of unknown size."""
+    if text.count("[") + text.count("{") <= DEEPEST:
+        return
+    depth = 0
+    for token in _TOKEN.finditer(text):
+        sign = text[token.start()]
+        if sign in "[{":
+            depth += 1
+            if depth > DEEPEST:
+                raise Unreadable(f"The body is nested too deep; at most {DEEPEST} levels are taken.")
+        elif sign in "]}":
+            depth -= 1
+
+
+# A string, or a bracket. A string without its end goes to the end of the text, so this never goes back.
+_TOKEN = re.compile(r'"(?:[^"\\]++|\\.)*+"?|[\[\]{}]', re.DOTALL)
 
 
 # --- first pass -----------------------------------------------------------------------------------------
@@ -129,21 +145,6 @@ def _constant(text: str) -> Any:
 _FAST = json.JSONDecoder(
     object_pairs_hook=_object, parse_float=_fraction, parse_int=_whole, parse_constant=_constant
 )
-
-
-def _depth_exceeds(document: Any, most: int) -> bool:
-    level = [document]
-    for _ in range(most):
-        level = [
-            inner
-            for outer in level
-            if isinstance(outer, (dict, list))
-            for inner in (outer.values() if isinstance(outer, dict) else outer)
-            if isinstance(inner, (dict, list))
-        ]
-        if not level:
-            return False
-    return True
 
 
 def _has_bad_character(text: str) -> bool:
@@ -189,28 +190,10 @@ def _located(text: str) -> Unreadable:
     """Say all that is wrong with a text that parses, and where."""
     try:
         document = _SLOW.decode(text)
-    except RecursionError:
-        return _too_deep()
     except json.JSONDecodeError as error:
-        return Unreadable(f"The body is no JSON: {error.msg} at line {error.lineno}, column {error.colno}.")
-    if _pairs_exceed(document):
-        return _too_deep()
+        return _no_json(error)
     faults = list(_faults(document, "#"))
     return Unreadable(f"{counted(len(faults))}; nothing was recorded.", faults=tuple(faults[:MOST_FAULTS]))
-
-
-def _pairs_exceed(document: Any) -> bool:
-    level = [document]
-    for _ in range(DEEPEST):
-        level = [
-            inner
-            for outer in level
-            for inner in ((value for _, value in outer) if isinstance(outer, _Pairs) else outer)
-            if isinstance(inner, list)
-        ]
-        if not level:
-            return False
-    return True
 
 
 def _faults(item: Any, pointer: str) -> Iterator[Fault]:

@@ -95,6 +95,9 @@ def test_a_pair_of_surrogates_is_a_character() -> None:
         (b'{"a": ' * 10_000 + b"1" + b"}" * 10_000, "too deep"),
         (b"[" * 10_000 + b"]" * 10_000, "too deep"),
         (b"[" * 200_000, "too deep"),
+        (b'{"a": ' + b"[" * 200_000, "too deep"),
+        (b'{"a": "' + b'\\"[' * 500_000, "no JSON"),
+        (b'\\"' * 500_000 + b"[" * 100, "no JSON"),
         (b'{"a": NaN, "b": ' + b"[" * 10_000 + b"]" * 10_000 + b"}", "too deep"),
     ],
     ids=lambda value: value[:20].decode("latin-1") if isinstance(value, bytes) else value,
@@ -115,6 +118,8 @@ def test_the_depth_that_is_taken_is_exact() -> None:
 
 def test_brackets_inside_texts_are_no_depth() -> None:
     assert read(b'{"a": "' + b"[{" * 200 + b'"}') == {"a": "[{" * 200}
+    assert read(b'{"a": "' + b'\\"[' * 200 + b'"}') == {"a": '"[' * 200}
+    assert read(b'{"a": "\\\\", "b": [' + b"[]," * 200 + b"[]]}")["b"] == [[]] * 201
 
 
 @pytest.mark.parametrize("body", [b"[]", b"3", b'"text"', b"null"])
