@@ -111,13 +111,13 @@ def verify(anchor: Path | None) -> None:
     An anchor file holds lines `chain sequence hash`, as they went out with earlier answers.
     """
     from service.ledger import read_anchors
-    from service.store.verification import verify as check
+    from service.workflows.ledger import verify_record
 
     try:
         anchors = () if anchor is None else read_anchors(anchor.read_text("utf-8"))
     except ValueError as error:
         raise click.ClickException(f"{anchor}: {error}") from None
-    result = check(_database(), anchors)
+    result = verify_record(_database(), anchors)
     for chain in result.chains:
         click.echo(f"{chain.chain}: {chain.entries} entries, up to {chain.hash}")
     if result.finding is not None:

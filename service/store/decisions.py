@@ -83,6 +83,16 @@ class Decisions:
         query = query.order_by(*(column.desc() for column in order)).limit(limit)
         return [_decision(row) for row in self._session.rows(query, entries, decisions)]
 
+    def copies(self, chain: str, sequences: range) -> dict[int, tuple[str, str, int, str]]:
+        """Return the look-up columns (product, lot, round, outcome) of a stretch of a chain, by sequence."""
+        query = select(decisions).where(
+            decisions.c.chain == chain,
+            decisions.c.sequence >= sequences.start,
+            decisions.c.sequence < sequences.stop,
+        )
+        rows = self._session.rows(query, decisions)
+        return {row.sequence: (row.product, row.lot, row.round, row.outcome) for row in rows}
+
     @staticmethod
     def _query() -> Any:
         same_entry = and_(entries.c.chain == decisions.c.chain, entries.c.sequence == decisions.c.sequence)

@@ -54,6 +54,11 @@ class Studies:
         read = {"document": dict(document), "evaluation": dict(evaluation)}
         return StoredStudy(**{**values, **read})  # type: ignore[arg-type]
 
+    def all(self) -> list[StoredStudy]:
+        """Return all studies by code."""
+        rows = self._session.rows(select(studies).order_by(studies.c.code), studies)
+        return [_stored(row) for row in rows]
+
     def list(
         self,
         *,

@@ -11,7 +11,7 @@ from sqlalchemy import ColumnElement, Select, Table, and_, or_, select
 from service.ledger import Anchor, ChainCheck, Finding, Head, StoredEntry
 from service.store.record import LARGEST_PAGE, Ledger
 from service.store.session import Session
-from service.store.tables import decisions, entries, idempotency_keys, readings, studies
+from service.store.tables import decisions, entries, idempotency_keys, lots, readings, studies
 from service.store.triggers import missing_triggers
 from service.store.unit_of_work import Database
 
@@ -53,7 +53,9 @@ def verify(database: Database, anchors: Iterable[Anchor] = ()) -> Verification:
             if (finding := _chain_finding(check, unit.ledger, heads.get(chain))) is not None:
                 return Verification(tuple(verified), finding)
             verified.append(VerifiedChain(chain, check.sequence, check.hash))
-        finding = _pointer_finding(unit.session) or _trigger_finding(unit.session)
+        finding = (
+            _pointer_finding(unit.session) or _lot_finding(unit.session) or _trigger_finding(unit.session)
+        )
     return Verification(tuple(verified), finding)
 
 
@@ -78,6 +80,30 @@ def _pointer_finding(session: Session) -> Finding | None:
             return Finding(row.chain, row.sequence, detail)
     if (row := session.row(_decisions_without_row())) is not None:
         return Finding(row.chain, row.sequence, "this decision has no row in decisions")
+    return None
+
+
+def _lot_finding(session: Session) -> Finding | None:
+    """Compare where each lot stands with the last decision on it."""
+    same_decision = and_(decisions.c.chain == lots.c.chain, decisions.c.sequence == lots.c.sequence)
+    differs = or_(
+        decisions.c.chain.is_(None),
+        decisions.c.product != lots.c.product,
+        decisions.c.lot != lots.c.lot,
+        decisions.c.outcome != lots.c.outcome,
+        decisions.c.round != lots.c.rounds,
+    )
+    query = select(lots).outerjoin(decisions, same_decision).where(differs)
+    if (row := session.row(query.order_by(lots.c.chain, lots.c.sequence).limit(1))) is not None:
+        detail = f"the lot {row.lot} of {row.product} does not stand as its last decision says"
+        return Finding(row.chain, row.sequence, detail)
+    same_lot = and_(decisions.c.product == lots.c.product, decisions.c.lot == lots.c.lot)
+    later = select(decisions).outerjoin(lots, same_lot)
+    later = later.where(or_(lots.c.lot.is_(None), decisions.c.round > lots.c.rounds))
+    row = session.row(later.order_by(decisions.c.chain, decisions.c.sequence).limit(1))
+    if row is not None:
+        detail = f"the lot {row.lot} of {row.product} stands as if this decision had not been made"
+        return Finding(row.chain, row.sequence, detail)
     return None
 
 

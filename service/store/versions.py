@@ -54,6 +54,12 @@ class Versions:
         row = self._session.row(query.where(versions.c.kind == kind, versions.c.code == code))
         return 1 if row is None else int(row[0])
 
+    def all(self, kind: str) -> list[StoredVersion]:
+        """Return all versions of a kind, whatever their state."""
+        query = select(versions).where(versions.c.kind == kind)
+        rows = self._session.rows(query.order_by(versions.c.code, versions.c.version))
+        return [_stored(row) for row in rows]
+
     def all_in_force(self, kind: str | None = None) -> list[StoredVersion]:
         """Return everything in force, by kind and code."""
         query = select(versions).where(versions.c.state == "in_force")
@@ -203,6 +209,10 @@ class Rules:
     def for_budget(self, budget: str, version: int) -> list[StoredRule]:
         """Return all rules of a budget version."""
         return self._where(release_rules.c.budget == budget, release_rules.c.budget_version == version)
+
+    def all(self) -> list[StoredRule]:
+        """Return all rules, whether or not they are in force."""
+        return self._where()
 
     def in_force(self) -> list[StoredRule]:
         """Return all rules whose specification version and budget version are both in force."""

@@ -11,6 +11,7 @@ import json
 import os
 import re
 from collections.abc import Iterator
+from itertools import count
 from pathlib import Path
 from typing import Any
 
@@ -91,10 +92,13 @@ def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
     yield "budget-evaluation", caller.call("GET", figures, "engineer")
     limits = f"/v1/acceptance-limits/{plant.PRODUCT}/moisture"
     yield "acceptance-limits", caller.call("GET", limits, "line")
+    second = count(1)
     for outcome, values in {"release": (2.84, 2.88), "hold": (3.02, 3.06), "reject": (3.30, 3.34)}.items():
-        readings = [reading_of(value, len(outcome) + place) for place, value in enumerate(values)]
+        readings = [reading_of(value, next(second)) for value in values]
         request = plant.decision_request(f"W26-{outcome}", readings)
-        yield f"decision-{outcome}", caller.call("POST", "/v1/decisions", "line", request)
+        decision = caller.call("POST", "/v1/decisions", "line", request)
+        assert decision["outcome"] == outcome
+        yield f"decision-{outcome}", decision
     outside = [reading_of(4.8, number, calibration="wmp-7") for number in (31, 32)]
     request = plant.decision_request("W26-outside", outside)
     yield "decision-hold-outside-range", caller.call("POST", "/v1/decisions/preview", "line", request)
