@@ -126,6 +126,56 @@ def is_known(unit: str) -> bool:
     return True
 
 
+@dataclass(frozen=True)
+class Dimension:
+    """What a unit measures.
+
+    Parameters
+    ----------
+    exponents : tuple of (str, float)
+        Base dimensions with their powers, sorted; empty for plain numbers and ratios.
+    scale : float
+        Size of the unit in base units: 0.01 for ``%``.
+    has_offset : bool
+        Whether its zero is not that of the base unit (``degC``).
+    """
+
+    exponents: tuple[tuple[str, float], ...]
+    scale: float
+    has_offset: bool
+
+
+@lru_cache(maxsize=256)
+def dimension(unit: str) -> Dimension:
+    """Return what a unit measures.
+
+    Parameters
+    ----------
+    unit : str
+
+    Returns
+    -------
+    Dimension
+
+    Raises
+    ------
+    UnitsError
+        If the unit is unknown.
+
+    Examples
+    --------
+    >>> dimension("g/100 g")
+    Dimension(exponents=(), scale=0.01, has_offset=False)
+    """
+    parsed = _parsed(unit)
+    quantity = _registry().Quantity
+    base = quantity(Decimal(1), parsed.unit).to_base_units().magnitude
+    zero = quantity(Decimal(0), parsed.unit).to_base_units().magnitude
+    exponents = sorted((name, float(power)) for name, power in parsed.unit.dimensionality.items())
+    scale = float((Decimal(base) - Decimal(zero)) * parsed.scale)
+    return Dimension(tuple(exponents), scale, bool(zero != 0))
+
+
 @lru_cache(maxsize=1024)
 def conversion(from_unit: str, to_unit: str) -> Conversion:
     """Return how a value is converted from one unit to another.
