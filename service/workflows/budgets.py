@@ -45,6 +45,7 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
         for index, line in enumerate(document.components)
     ]
     bias = collector.attempt(f"#/model/quantities/{BIAS}/evidence", _bias_value, unit_of_work, document)
+    _check_bias_is_covered(document, collector)
     collector.finish("The evidence of the budget does not fit.")
     behind = tuple(item for item in found if item is not None)
     components = [
@@ -157,6 +158,19 @@ def _bias_value(unit_of_work: UnitOfWork, document: BudgetDocument) -> float | N
         )
         collector.finish("The bias has no value.")
     return behind.estimate.value
+
+
+def _check_bias_is_covered(document: BudgetDocument, collector: FaultCollector) -> None:
+    """Refuse a bias whose own uncertainty is in no component: another study's u(b) says nothing about it."""
+    quantity = document.model.quantities.get(BIAS)
+    if quantity is None or quantity.evidence is None:
+        return
+    if not any(line.quantity == BIAS and line.evidence == quantity.evidence for line in document.components):
+        collector.add(
+            "#/components",
+            "no component holds the uncertainty of this very bias",
+            f"a component of the quantity {BIAS!r} with the evidence that #/model/quantities/{BIAS} names",
+        )
 
 
 def _check_study_fits(study: Study, document: BudgetDocument, pointer: str) -> None:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import asdict, dataclass
-from typing import Any
+from itertools import islice
+from typing import Any, Final
 
 from budgets.budget import Budget, Procedure
 from budgets.conformity import Tolerance
@@ -60,8 +61,12 @@ def counts_from_text(text: str) -> Counts:
     return Counts(tuple(int(part) for part in text.split(",")))
 
 
+# Compiled and stored at approval; what a wide procedure has beyond is compiled when it occurs.
+MOST_STORED: Final = 100
+
+
 def balanced_counts(procedure: Procedure) -> Iterator[Counts]:
-    """Give every balanced way of doing the procedure; rules for these are compiled at approval."""
+    """Give every balanced way of doing the procedure, the fewest samples first."""
     for samples in range(procedure.samples.least, procedure.samples.most + 1):
         readings = procedure.readings_per_sample
         for readings_per_sample in range(readings.least, readings.most + 1):
@@ -141,7 +146,7 @@ def compile_pair(
         collector.add("#", f"{label}: {detail}")
     collector.finish("This measurement cannot prove this specification.")
     rules = {}
-    for counts in balanced_counts(budget.procedure):
+    for counts in dict.fromkeys((planned, *islice(balanced_counts(budget.procedure), MOST_STORED))):
         try:
             rule = compile_rule(budget, counts, requirement, characteristic)
         except LimitsError:

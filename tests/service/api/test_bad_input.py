@@ -18,7 +18,7 @@ from tests.service.api.house import decision, done, example
 
 def heads(app: Flask) -> list[Any]:
     with app.extensions["shoalmark"].database.reading() as unit_of_work:
-        return list(unit_of_work.ledger.heads())
+        return list(unit_of_work.ledger.heads().values())
 
 
 def problem(response: TestResponse, status: int, slug: str) -> dict[str, Any]:
@@ -231,6 +231,17 @@ def test_a_budget_on_missing_evidence_is_refused(app: Flask, callers: Callers) -
     assert "#/components/0/evidence/study" in places
     assert any(place.startswith("#/components/1/evidence") for place in places)
     assert "#/components/3/evidence/declaration/unit" in places
+    assert heads(app) == before
+
+
+def test_a_bias_needs_its_very_own_uncertainty(app: Flask, callers: Callers) -> None:
+    """The bias of one study with the uncertainty of another's would be covered by neither."""
+    before = heads(app)
+    document = example(documents.BudgetDocument)
+    document["components"] = [line for line in document["components"] if line["code"] != "bias"]
+    response = callers["engineer"].post("/v1/budgets/wmp-moisture-nir/versions", document)
+    found = problem(response, 422, "invalid-request")
+    assert "no component holds the uncertainty of this very bias" in str(found["errors"])
     assert heads(app) == before
 
 
