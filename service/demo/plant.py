@@ -1,8 +1,8 @@
-"""The documents of the demo plant: master data, studies, budget and specifications, as the API takes them.
+"""The documents of the demo plant: master data, studies, budgets and specifications, as the API takes them.
 
-The legal limit is that of the Codex standard for milk powders, CXS 207, water at most 5 % m/m (from memory);
-the customer's limit and everything else is invented. Dates are counted back from today, so that the evidence
-of the demo serves whenever it is run.
+The legal limits are those of the Codex standard for milk powders, CXS 207, for whole-milk powder: water at
+most 5 % m/m, milk fat at least 26 % and less than 42 % m/m (from memory). The customer's limits and all else
+are invented. Dates are counted back from today, so that the evidence of the demo serves whenever it is run.
 """
 
 from __future__ import annotations
@@ -10,8 +10,10 @@ from __future__ import annotations
 import csv
 import hashlib
 from collections.abc import Iterator
+from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
 from importlib.resources import files
+from importlib.resources.abc import Traversable
 from typing import Any, Final
 
 Document = dict[str, Any]
@@ -21,13 +23,44 @@ LINE: Final = "tower-1"
 ANALYZER: Final = "nir-1"
 CALIBRATION: Final = "wmp-7"
 LABORATORY: Final = "site-lab"
-BUDGET: Final = "wmp-moisture-nir"
+
+
+@dataclass(frozen=True)
+class Channel:
+    """What is invented about a characteristic that the analyzer reads directly."""
+
+    code: str
+    method: str
+    trueness: float  # standard uncertainty of the laboratory's trueness, %
+    sampling: float  # standard deviation between samples of a lot, %
+    validated_range: tuple[float, float]
+    latent_variables: int
+    standard_error_of_calibration: float
+
+
+CHANNELS: Final = (
+    Channel("moisture", "oven method", 0.05, 0.03, (2.0, 4.6), 6, 0.08),
+    Channel("fat", "gravimetric method", 0.08, 0.05, (25.0, 29.0), 7, 0.18),
+    Channel("protein", "nitrogen method", 0.06, 0.04, (23.5, 26.5), 8, 0.15),
+)
+
+
+def budget_code(characteristic: str) -> str:
+    """Name the budget of a characteristic on the analyzer."""
+    return f"wmp-{characteristic}-nir"
+
+
+BUDGET: Final = budget_code("moisture")
+
+
+def data_folder() -> Traversable:
+    """Give the folder of the raw data files."""
+    return files("service.demo").joinpath("data")
 
 
 def rows_of(name: str) -> list[dict[str, str]]:
     """Read a raw data file of the demo."""
-    text = files("service.demo").joinpath("data", name).read_text("utf-8")
-    return list(csv.DictReader(text.splitlines()))
+    return list(csv.DictReader(data_folder().joinpath(name).read_text("utf-8").splitlines()))
 
 
 def master_data() -> Iterator[tuple[str, Document]]:
@@ -41,22 +74,24 @@ def master_data() -> Iterator[tuple[str, Document]]:
             "default_specifications": ["legal", "customer-b"],
         },
     )
-    yield (
-        f"/v1/products/{PRODUCT}/characteristics/moisture",
-        {
-            "code": "moisture",
-            "product": PRODUCT,
-            "unit": "%",
-            "accepted_units": ["%", "g/kg", "g/100 g"],
-            "basis": "as is",
-            "natural_domain": {"lower": 0, "upper": 100},
-            "decimals": 2,
-            "derived_from": None,
-        },
-    )
+    for channel in CHANNELS:
+        yield (
+            f"/v1/products/{PRODUCT}/characteristics/{channel.code}",
+            {
+                "code": channel.code,
+                "product": PRODUCT,
+                "unit": "%",
+                "accepted_units": ["%", "g/kg", "g/100 g"],
+                "basis": "as is",
+                "natural_domain": {"lower": 0, "upper": 100},
+                "decimals": 2,
+                "derived_from": None,
+            },
+        )
+    codes = [channel.code for channel in CHANNELS]
     yield (
         f"/v1/analyzers/{ANALYZER}",
-        {"code": ANALYZER, "kind": "analyzer", "channels": ["moisture"], "decimals": {"moisture": 2}},
+        {"code": ANALYZER, "kind": "analyzer", "channels": codes, "decimals": dict.fromkeys(codes, 2)},
     )
     yield f"/v1/lines/{LINE}", {"code": LINE, "name": "Tower 1", "analyzers": [ANALYZER]}
     yield (
@@ -67,9 +102,11 @@ def master_data() -> Iterator[tuple[str, Document]]:
             "product": PRODUCT,
             "from": _days_ago(60),
             "samples": 420,
-            "latent_variables": {"moisture": 6},
-            "standard_error_of_calibration": {"moisture": 0.08},
-            "adjustment": {"moisture": {"slope": 1.0, "bias": 0.0}},
+            "latent_variables": {channel.code: channel.latent_variables for channel in CHANNELS},
+            "standard_error_of_calibration": {
+                channel.code: channel.standard_error_of_calibration for channel in CHANNELS
+            },
+            "adjustment": {channel.code: {"slope": 1.0, "bias": 0.0} for channel in CHANNELS},
             "flags": {"distance-from-calibration-set": {"largest": 3.0, "required": True}},
             "influences": {"sample_temperature": {"unit": "degC", "lower": 15, "upper": 30}},
         },
@@ -79,59 +116,77 @@ def master_data() -> Iterator[tuple[str, Document]]:
         {
             "code": LABORATORY,
             "kind": "laboratory",
-            "methods": {"moisture": {"method": "oven method", "trueness": {"declaration": _trueness()}}},
+            "methods": {
+                channel.code: {"method": channel.method, "trueness": {"declaration": _trueness(channel)}}
+                for channel in CHANNELS
+            },
         },
     )
 
 
 def studies() -> Iterator[Document]:
-    """Give the three studies, in the order in which they build on each other."""
-    yield _study("wmp-rep", "repeatability", "replicate-scans.csv", days_ago=40, on_analyzer=True)
-    yield _study("oven-dup", "duplicates", "oven-duplicates.csv", days_ago=38, laboratory=LABORATORY)
+    """Give the studies, in the order in which they build on each other."""
+    for channel in CHANNELS:
+        yield from _studies_of(channel.code)
+
+
+def _studies_of(characteristic: str) -> Iterator[Document]:
+    scans, determinations, pairs = (f"{characteristic}-{what}" for what in ("scans", "duplicates", "pairs"))
+    yield _study(scans, "repeatability", characteristic, "replicate-scans", days_ago=40, on_analyzer=True)
+    yield _study(
+        determinations, "duplicates", characteristic, "duplicates", days_ago=38, laboratory=LABORATORY
+    )
+    named = {"analyzer_repeatability": scans, "reference_repeatability": determinations}
     yield {
         **_study(
-            "wmp-val",
+            pairs,
             "agreement",
-            "validation-pairs.csv",
+            characteristic,
+            "validation-pairs",
             days_ago=30,
             on_analyzer=True,
             laboratory=LABORATORY,
         ),
         "independent": True,
         "named_sources": [
-            {
-                "source": "analyzer_repeatability",
-                "evidence": {"study": "wmp-rep", "estimate": "repeatability"},
-            },
-            {
-                "source": "reference_repeatability",
-                "evidence": {"study": "oven-dup", "estimate": "repeatability"},
-            },
+            {"source": source, "evidence": {"study": study, "estimate": "repeatability"}}
+            for source, study in named.items()
         ],
     }
 
 
-def budget() -> Document:
-    """Give the budget of moisture on the analyzer."""
+def budgets() -> Iterator[Document]:
+    """Give the budgets of what the analyzer reads directly and a specification requires."""
+    for channel in CHANNELS:
+        if channel.code != "protein":
+            yield budget(channel)
+
+
+def budget(channel: Channel = CHANNELS[0]) -> Document:
+    """Give the budget of one channel of the analyzer."""
+    name = channel.code
 
     def component(code: str, quantity: str, level: str, evidence: Document) -> Document:
         return {"code": code, "quantity": quantity, "level": level, "evidence": evidence}
 
-    sampling = {"meaning": "standard_deviation", "value": 0.03, "unit": "%", "reliability": 0.25}
+    def estimate(study: str, of: str) -> Document:
+        return {"study": f"{name}-{study}", "estimate": of}
+
+    lower, upper = channel.validated_range
     return {
-        "code": BUDGET,
+        "code": budget_code(name),
         "product": PRODUCT,
-        "characteristic": "moisture",
+        "characteristic": name,
         "unit": "%",
         "calibrations": {ANALYZER: CALIBRATION},
-        "validated_range": {"lower": 2.0, "upper": 4.6},
+        "validated_range": {"lower": lower, "upper": upper},
         "coverage_probability": 0.95,
         "bias_treatment": "corrected",
         "model": {
-            "expression": "moisture - bias",
+            "expression": f"{name} - bias",
             "quantities": {
-                "moisture": {"unit": "%", "from": "reading"},
-                "bias": {"unit": "%", "evidence": {"study": "wmp-val", "estimate": "bias"}},
+                name: {"unit": "%", "from": "reading"},
+                "bias": {"unit": "%", "evidence": estimate("pairs", "bias")},
             },
         },
         "procedure": {
@@ -139,18 +194,11 @@ def budget() -> Document:
             "readings_per_sample": {"least": 2, "plan": 2, "most": 4},
         },
         "components": [
-            component(
-                "repeatability", "moisture", "reading", {"study": "wmp-rep", "estimate": "repeatability"}
-            ),
-            component(
-                "sampling",
-                "moisture",
-                "sample",
-                {"declaration": {**sampling, "document": "sampling trial, invented"}},
-            ),
-            component("remainder", "moisture", "lot", {"study": "wmp-val", "estimate": "remainder"}),
-            component("bias", "bias", "calibration", {"study": "wmp-val", "estimate": "bias"}),
-            component("reference-trueness", "bias", "reference", {"declaration": _trueness()}),
+            component("repeatability", name, "reading", estimate("scans", "repeatability")),
+            component("sampling", name, "sample", {"declaration": _sampling(channel)}),
+            component("remainder", name, "lot", estimate("pairs", "remainder")),
+            component("bias", "bias", "calibration", estimate("pairs", "bias")),
+            component("reference-trueness", "bias", "reference", {"declaration": _trueness(channel)}),
         ],
         "correlations": [],
         "reason": "first budget of this calibration",
@@ -159,15 +207,45 @@ def budget() -> Document:
 
 def specifications() -> Iterator[Document]:
     """Give the legal specification and that of a customer."""
-    yield _specification(
-        "legal",
-        "legal",
-        5.0,
-        {"kind": "guarded_by_factor", "multiple": 1, "coverage_probability": 0.95, "sides": 1},
-    )
-    yield _specification(
-        "customer-b", "customer", 3.2, {"kind": "guarded_by_specific_risk", "largest_risk": 0.05}
-    )
+    factor = {"kind": "guarded_by_factor", "multiple": 1, "coverage_probability": 0.95, "sides": 1}
+    risk = {"kind": "guarded_by_specific_risk", "largest_risk": 0.05}
+    legal = [
+        _requirement("moisture", None, _limit(5.0), factor),
+        _requirement("fat", _limit(26.0), _limit(42.0, inclusive=False), factor),
+    ]
+    customer = [
+        _requirement("moisture", None, _limit(3.2), risk),
+        _requirement("fat", _limit(26.2), _limit(28.0), risk),
+    ]
+    for code, kind, requires in (("legal", "legal", legal), ("customer-b", "customer", customer)):
+        yield {
+            "code": code,
+            "product": PRODUCT,
+            "kind": kind,
+            "requires": requires,
+            "not_judged": ["microbiology"],
+            "reason": "first version",
+        }
+
+
+def _limit(value: float, *, inclusive: bool = True) -> Document:
+    return {"value": value, "unit": "%", "inclusive": inclusive}
+
+
+def _requirement(
+    characteristic: str, lower: Document | None, upper: Document | None, rule: Document
+) -> Document:
+    (method,) = [channel.method for channel in CHANNELS if channel.code == characteristic]
+    return {
+        "characteristic": characteristic,
+        "method": method,
+        "judged": "lot_mean",
+        "lower_tolerance_limit": lower,
+        "upper_tolerance_limit": upper,
+        "comparison": "absolute",
+        "decimals": 2,
+        "decision_rule": {**rule, "rejection": "at_tolerance_limit", "rounds": 1},
+    }
 
 
 def lots() -> Iterator[Document]:
@@ -187,19 +265,28 @@ def decision_request(lot: str, readings: list[Document]) -> Document:
         "product": PRODUCT,
         "line": LINE,
         "operator": "shift 2",
-        "units": {"moisture": "%"},
+        "units": {channel.code: "%" for channel in CHANNELS},
         "readings": readings,
     }
 
 
-def reading(sample: str, taken_at: str, moisture: float, *, distance: float, temperature: float) -> Document:
+def reading(
+    sample: str,
+    taken_at: str,
+    moisture: float,
+    fat: float = 27.1,
+    protein: float = 24.9,
+    *,
+    distance: float,
+    temperature: float,
+) -> Document:
     """Give one scan as the analyzer's computer sends it."""
     return {
         "sample": sample,
         "analyzer": ANALYZER,
         "calibration": CALIBRATION,
         "taken_at": taken_at,
-        "values": {"moisture": moisture},
+        "values": {"moisture": moisture, "fat": fat, "protein": protein},
         "flags": {"distance-from-calibration-set": distance},
         "influences": {"sample_temperature": temperature},
     }
@@ -212,61 +299,49 @@ def _reading(row: dict[str, str], last_day: int) -> Document:
     return reading(
         row["sample"],
         taken_at.isoformat(timespec="milliseconds"),
-        float(row["moisture"]),
+        *(float(row[channel.code]) for channel in CHANNELS),
         distance=float(row["distance_from_calibration_set"]),
         temperature=float(row["sample_temperature"]),
     )
 
 
-def _trueness() -> Document:
+def _trueness(channel: Channel) -> Document:
+    return _declared(channel.trueness, "ring test 12, invented")
+
+
+def _sampling(channel: Channel) -> Document:
+    return _declared(channel.sampling, "sampling trial, invented")
+
+
+def _declared(value: float, document: str) -> Document:
     return {
         "meaning": "standard_deviation",
-        "value": 0.05,
+        "value": value,
         "unit": "%",
         "reliability": 0.25,
-        "document": "ring test 12, invented",
-    }
-
-
-def _specification(code: str, kind: str, limit: float, rule: Document) -> Document:
-    return {
-        "code": code,
-        "product": PRODUCT,
-        "kind": kind,
-        "requires": [
-            {
-                "characteristic": "moisture",
-                "method": "oven method",
-                "judged": "lot_mean",
-                "lower_tolerance_limit": None,
-                "upper_tolerance_limit": {"value": limit, "unit": "%", "inclusive": True},
-                "comparison": "absolute",
-                "decimals": 2,
-                "decision_rule": {**rule, "rejection": "at_tolerance_limit", "rounds": 1},
-            }
-        ],
-        "not_judged": ["microbiology"],
-        "reason": "first version",
+        "document": document,
     }
 
 
 def _study(
     code: str,
     design: str,
-    file: str,
+    characteristic: str,
+    what: str,
     *,
     days_ago: int,
     on_analyzer: bool = False,
     laboratory: str | None = None,
 ) -> Document:
-    content = files("service.demo").joinpath("data", file).read_bytes()
+    file = f"{characteristic}-{what}.csv"
+    content = data_folder().joinpath(file).read_bytes()
     header, *rows = csv.reader(content.decode("utf-8").splitlines())
     text_columns = {"sample", "pair", "group"}
     return {
         "code": code,
         "design": design,
         "product": PRODUCT,
-        "characteristic": "moisture",
+        "characteristic": characteristic,
         "unit": "%",
         "calibrations": {ANALYZER: CALIBRATION} if on_analyzer else {},
         "laboratory": laboratory,

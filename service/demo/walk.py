@@ -11,10 +11,12 @@ from typing import Any, Final
 from rich.console import Console
 from rich.table import Table
 
+from budgets.reporting import acceptance_limit_text, number_text
 from service.demo import plant
 from service.demo.client import Client
 from service.demo.picture import number_line
 
+SIDES: Final = ("lower", "upper")
 FIRST_LOT: Final = "W26-04711"
 
 
@@ -40,11 +42,14 @@ class Walk:
         """Take the plant from nothing to a budget and specifications in force."""
         self._put_master_data()
         self._record_studies()
-        self._bring_into_force("budgets", plant.budget())
+        for budget in plant.budgets():
+            self._bring_into_force("budgets", budget)
         for specification in plant.specifications():
             self._bring_into_force("specifications", specification)
-        self._show_budget()
-        self._show_limits()
+        for budget in plant.budgets():
+            self._show_budget(budget["code"], budget["characteristic"])
+        for budget in plant.budgets():
+            self._show_limits(budget["characteristic"])
 
     def decide_first_lot(self) -> dict[str, Any]:
         """Judge a lot read a moment ago and show the answer."""
@@ -127,11 +132,11 @@ class Walk:
             f"approved by {approved['approved_by']}, {approved['state'].replace('_', ' ')}."
         )
 
-    def _show_budget(self) -> None:
-        path = f"/v1/budgets/{plant.BUDGET}/versions/1/evaluation"
+    def _show_budget(self, code: str, characteristic: str) -> None:
+        path = f"/v1/budgets/{code}/versions/1/evaluation"
         found = self._client.get(self._access.engineer, path)
         columns = ("component", "drawn anew per", "u of one draw", "u in the result", "dof", "share")
-        table = self._table("Budget of moisture, one sample read twice", *columns)
+        table = self._table(f"Budget of {characteristic}, one sample read twice", *columns)
         for line in found["components"]:
             table.add_row(
                 line["code"],
@@ -152,11 +157,11 @@ class Walk:
         )
         self._console.print(table)
 
-    def _show_limits(self) -> None:
-        path = f"/v1/acceptance-limits/{plant.PRODUCT}/moisture"
+    def _show_limits(self, characteristic: str) -> None:
+        path = f"/v1/acceptance-limits/{plant.PRODUCT}/{characteristic}"
         found = self._client.get(self._access.line, path)
         columns = ("specification", "samples x readings", "tolerance limit", "guard band", "acceptance limit")
-        table = self._table("Acceptance limits now", *columns, "largest risk")
+        table = self._table(f"Acceptance limits of {characteristic} now", *columns, "largest risk")
         for item in found["items"]:
             if item["procedure"]["readings_per_sample"] != 2:
                 continue
@@ -164,9 +169,9 @@ class Walk:
                 f"{item['specification']['code']} version {item['specification']['version']}",
                 f"{item['procedure']['samples']} x {item['procedure']['readings_per_sample']}"
                 + (", as planned" if item["planned"] else ""),
-                f"at most {item['upper_tolerance_limit']:g} %",
+                _span(*(_stated(item[f"{side}_tolerance_limit"]) for side in SIDES)),
                 f"{item['guard_band']['upper']:.3f} %",
-                f"{item['upper_acceptance_limit']:.3f} %",
+                _span(*(_inward(item[f"{side}_acceptance_limit"], side) for side in SIDES)),
                 f"{100 * item['largest_specific_risk']:.1f} %",
             )
         self._console.print(table)
@@ -180,7 +185,8 @@ class Walk:
         for verdict in answer["verdicts"]:
             self._console.print()
             self._console.print(
-                f"{verdict['specification']['code']}: {verdict['outcome']}, conformance probability "
+                f"{verdict['specification']['code']}, {verdict['characteristic']}: {verdict['outcome']}, "
+                "conformance probability "
                 f"{verdict['display']['conformance_probability']}"
             )
             for line in number_line(verdict):
@@ -199,6 +205,20 @@ class Walk:
         for position, column in enumerate(columns):
             table.add_column(column, justify="left" if position == 0 else "right", overflow="fold")
         return table
+
+
+def _stated(limit: float | None) -> str | None:
+    return None if limit is None else number_text(limit)
+
+
+def _inward(limit: float | None, side: str) -> str | None:
+    return None if limit is None else acceptance_limit_text(limit, 3, side=side)
+
+
+def _span(lower: str | None, upper: str | None) -> str:
+    if lower is None:
+        return f"at most {upper} %"
+    return f"at least {lower} %" if upper is None else f"{lower} to {upper} %"
 
 
 def _figure(value: float | None, form: str) -> str:

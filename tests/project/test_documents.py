@@ -76,16 +76,17 @@ def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
         yield MASTER_DATA[path.split("/")[-2]], put
     for study in plant.studies():
         recorded = caller.call("POST", "/v1/studies", "engineer", study)
-        yield f"evaluation-{study['design']}", recorded["evaluation"]
+        if study["characteristic"] == "moisture":
+            yield f"evaluation-{study['design']}", recorded["evaluation"]
     for kind, document in (
-        ("budget", plant.budget()),
+        *(("budget", each) for each in plant.budgets()),
         *(("specification", each) for each in plant.specifications()),
     ):
         drafted = caller.call("POST", f"/v1/{kind}s", "engineer", document)
         version = f"/v1/{kind}s/{document['code']}/versions/1"
         caller.call("POST", f"{version}/submit", "engineer")
         approved = caller.call("POST", f"{version}/approve", "approver", caller.signed())
-        if document["code"] != "legal":
+        if document["code"] in (plant.BUDGET, "customer-b"):
             yield f"{kind}-draft", drafted
             yield f"{kind}-in-force", approved
     figures = f"/v1/budgets/{plant.BUDGET}/versions/1/evaluation"
@@ -102,7 +103,9 @@ def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
     outside = [reading_of(4.8, number, calibration="wmp-7") for number in (31, 32)]
     request = plant.decision_request("W26-outside", outside)
     yield "decision-hold-outside-range", caller.call("POST", "/v1/decisions/preview", "line", request)
-    wrong = plant.decision_request("W26-wrong", [reading_of(2.9, 41, values={"moisture": "3,12"})])
+    wrong = plant.decision_request(
+        "W26-wrong", [reading_of(2.9, 41, values={"moisture": "3,12", "fat": 27.1})]
+    )
     yield "problem", caller.call("POST", "/v1/decisions", "line", wrong)
     yield "lot", caller.call("GET", f"/v1/lots/{plant.PRODUCT}/W26-hold", "line")
 

@@ -27,7 +27,7 @@ ALLOWED = {
     "service.workflows": {"service.workflows", "service.store", "service.schemas", "budgets", *LEAVES},
     "service.api": {"service.api", "service.workflows", "service.schemas", "budgets.errors", *LEAVES},
     "service.pages": {"service.pages", "service.workflows", "service.schemas", "budgets.errors", *LEAVES},
-    "service.demo": {"service.demo", "service.workflows", "service.store", "service.settings"},
+    "service.demo": {"service.demo", "service.workflows", "service.store", "service.settings", "budgets"},
     # The only ones that wire the parts together.
     "service": {"service", "budgets"},
     "service.cli": {"service", "budgets"},

@@ -67,12 +67,14 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
     ("statement", "words"),
     [
         (
-            "UPDATE release_rules SET numbers = replace(numbers, '\"upper_acceptance_limit\":3.018',"
-            " '\"upper_acceptance_limit\":3.118') WHERE specification = 'customer-b' AND counts = '2'",
+            "UPDATE release_rules SET numbers = replace(numbers, '\"upper_acceptance_limit\":3.048',"
+            " '\"upper_acceptance_limit\":3.148') WHERE specification = 'customer-b'"
+            " AND characteristic = 'moisture' AND counts = '2'",
             "the rule customer-b/1/moisture/wmp-moisture-nir/1/2 stands in the tables other than",
         ),
         (
-            "DELETE FROM release_rules WHERE specification = 'legal' AND counts = '2,2'",
+            "DELETE FROM release_rules WHERE specification = 'legal' AND characteristic = 'moisture'"
+            " AND counts = '2,2'",
             "the rule legal/1/moisture/wmp-moisture-nir/1/2,2 is missing",
         ),
         (
@@ -80,7 +82,7 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
             "the version specification/customer-b/1 stands in the tables other than",
         ),
         (
-            "UPDATE versions SET lapses_at = NULL WHERE kind = 'budget'",
+            "UPDATE versions SET lapses_at = NULL WHERE code = 'wmp-moisture-nir'",
             "the version budget/wmp-moisture-nir/1 stands in the tables other than",
         ),
         (
@@ -88,8 +90,8 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
             "the master calibration/wmp-7 stands in the tables other than",
         ),
         (
-            "UPDATE studies SET evaluation = replace(evaluation, '0.0', '0.1') WHERE code = 'wmp-rep'",
-            "the study wmp-rep stands in the tables other than",
+            "UPDATE studies SET evaluation = replace(evaluation, '0.0', '0.1') WHERE code = 'moisture-scans'",
+            "the study moisture-scans stands in the tables other than",
         ),
         (
             "UPDATE lots SET outcome = 'release' WHERE lot = 'W26-hold'",
@@ -102,7 +104,8 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
         ),
         (
             "INSERT INTO release_rules SELECT specification, 9, characteristic, budget, budget_version,"
-            " counts, numbers FROM release_rules WHERE specification = 'legal' AND counts = '2'",
+            " counts, numbers FROM release_rules WHERE specification = 'legal'"
+            " AND characteristic = 'moisture' AND counts = '2'",
             "but no entry says so",
         ),
     ],
