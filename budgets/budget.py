@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from itertools import combinations
 
+from budgets.budget_models import BIAS, faults_of_model
 from budgets.components import Component
-from budgets.errors import BudgetsError, ComponentError, ModelError, NotSupportedError, raise_collected
+from budgets.correlations import Correlation, check_correlations
+from budgets.errors import BudgetsError, ComponentError, ModelError, raise_collected
+from budgets.measurement_models import MeasurementModel
 
 LARGEST_COUNT = 50
 BIAS_TREATMENTS = ("corrected", "in_guard_band")
-BIAS = "bias"
 
 # A source that was taken out of a remainder is back in the budget when a component contains it
 # or is drawn anew at the level of that source.
@@ -65,15 +68,22 @@ class Budget:
         Corrected: the estimate is reading minus bias. In the guard band: the estimate is the reading.
     validated_range : tuple of float, shape (2,), unit of the characteristic
         The estimate must lie inside for the evidence to speak of it.
+    model : MeasurementModel or None
+        None: the estimate is the mean reading, less the bias. Otherwise every bias is a quantity of the
+        model, and ``bias`` is None.
+    correlations : tuple of Correlation
+        Between components of one quantity each; within one level.
+    validated_box : mapping of str to tuple of float
+        For the quantities of the model that are read: the range in which each was validated.
 
     Raises
     ------
-    ComponentError, ModelError, NotSupportedError
+    ComponentError, CorrelationError, ModelError, NotSupportedError
         With all faults found in ``faults``; double counting is one of them.
 
     Notes
     -----
-    The measurement model is ``estimate = reading - bias``: both sensitivity coefficients are of size one.
+    Without a model the estimate is ``reading - bias``: both sensitivity coefficients are of size one.
     """
 
     components: tuple[Component, ...]
@@ -82,18 +92,29 @@ class Budget:
     bias: float | None
     bias_treatment: str
     validated_range: tuple[float, float]
+    model: MeasurementModel | None = None
+    correlations: tuple[Correlation, ...] = ()
+    validated_box: Mapping[str, tuple[float, float]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         raise_collected(
             [
                 *_faults_of_members(self),
                 *_faults_of_names(self.components),
-                *_faults_of_bias(self),
+                *(_faults_of_default_model(self) if self.model is None else faults_of_model(self)),
                 *_double_counting(self.components),
                 *_missing_sources(self.components),
                 *_fewer_readings_than_studied(self),
             ]
         )
+        check_correlations(
+            self.correlations, {item.code: item.level for item in self.components if not item.matrix_terms}
+        )
+
+    @property
+    def characteristic(self) -> str:
+        """The quantity that is read, of a budget without a model."""
+        return next(item.quantity for item in self.components if item.quantity != BIAS)
 
 
 def _faults_of_members(budget: Budget) -> list[BudgetsError]:
@@ -136,21 +157,42 @@ def _faults_of_names(components: tuple[Component, ...]) -> list[BudgetsError]:
                 )
             )
         seen.add(component.code)
-    quantities = sorted({component.quantity for component in components} - {BIAS})
+    return faults
+
+
+def _faults_of_default_model(budget: Budget) -> list[BudgetsError]:
+    components = budget.components
+    faults: list[BudgetsError] = [
+        ComponentError(
+            f"{component.code} is of several quantities: that needs a measurement model",
+            where=("components", index, "quantities"),
+        )
+        for index, component in enumerate(components)
+        if component.matrix_terms
+    ]
+    quantities = sorted({component.quantity for component in components if component.quantity} - {BIAS})
     if len(quantities) > 1:
         faults.append(
-            NotSupportedError(
-                f"a model with several input quantities beside the bias ({', '.join(quantities)})",
+            ComponentError(
+                f"several quantities beside the bias ({', '.join(quantities)}) need a measurement model",
                 where=("components",),
             )
         )
-    if components and not quantities:
+    if components and not quantities and not faults:
         faults.append(
             ComponentError(
                 "no component belongs to the reading itself, only to its bias", where=("components",)
             )
         )
-    return faults
+    faults += [
+        ComponentError(
+            f"{component.code}: without a measurement model it can only be relative to the estimate",
+            where=("components", index, "relative_to"),
+        )
+        for index, component in enumerate(components)
+        if component.relative_to not in ("", *quantities)
+    ]
+    return [*faults, *_faults_of_bias(budget)]
 
 
 def _faults_of_bias(budget: Budget) -> list[BudgetsError]:
@@ -183,7 +225,7 @@ def _double_counting(components: tuple[Component, ...]) -> list[BudgetsError]:
     faults: list[BudgetsError] = []
     for (_, first), (index, second) in combinations(enumerate(components), 2):
         shared = [source for source in first.contains if source in second.contains]
-        if first.quantity != second.quantity or not shared:
+        if not shared or not set(first.inputs) & set(second.inputs):
             continue
         if _beyond_its_study(first, second) or _beyond_its_study(second, first):
             continue
@@ -206,7 +248,9 @@ def _missing_sources(components: tuple[Component, ...]) -> list[BudgetsError]:
     faults: list[BudgetsError] = []
     for index, component in enumerate(components):
         others = [
-            other for other in components if other is not component and other.quantity == component.quantity
+            other
+            for other in components
+            if other is not component and set(component.inputs) <= set(other.inputs)
         ]
         for source in component.taken_out:
             level = _LEVEL_OF_SOURCE[source]
@@ -242,7 +286,8 @@ def _fewer_readings_than_studied(budget: Budget) -> list[BudgetsError]:
         if not holds_it or 1 / least <= whole.reading_weight * (1 + 1e-9):
             continue
         if any(
-            part.quantity == whole.quantity and _beyond_its_study(part, whole) for part in budget.components
+            set(whole.inputs) <= set(part.inputs) and _beyond_its_study(part, whole)
+            for part in budget.components
         ):
             continue
         faults.append(

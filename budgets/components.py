@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 
+from budgets.correlations import is_possible
 from budgets.errors import ComponentError, EvidenceError
 from budgets.evidence.evaluation import Estimate, Term, effective_degrees_of_freedom, merged, variance
+from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of
 from budgets.levels import LEVELS
 
 __all__ = ["LEVELS", "Component"]
@@ -42,6 +45,14 @@ class Component:
         Sources subtracted from it, to be named by other components.
     reading_weight : float
         Mean of 1/(readings averaged) behind it; 1 when every value behind it was a single reading.
+    relative_terms : tuple of Term
+        Variance of one draw of the relative error: ``u^2 = s0^2 + (s1 x)^2``.
+    relative_to : str
+        Quantity whose estimate x is meant; empty for the component's own.
+    quantities : tuple of str
+        Of a component of several quantities at once; ``quantity`` and ``terms`` are empty then.
+    matrix_terms : tuple of MatrixTerm
+        Covariance of one draw of those quantities.
 
     Raises
     ------
@@ -64,6 +75,10 @@ class Component:
     source: str = ""
     taken_out: tuple[str, ...] = ()
     reading_weight: float = 1.0
+    relative_terms: tuple[Term, ...] = ()
+    relative_to: str = ""
+    quantities: tuple[str, ...] = ()
+    matrix_terms: tuple[MatrixTerm, ...] = ()
 
     def __post_init__(self) -> None:
         if self.level not in LEVELS:
@@ -90,20 +105,52 @@ class Component:
         self._check_variance()
 
     def _check_variance(self) -> None:
+        if self.matrix_terms:
+            self._check_matrix()
+            return
         try:
-            value = variance(merged(self.terms))
+            absolute = variance(merged(self.terms))
+            relative = variance(merged(self.relative_terms))
         except EvidenceError as error:
             raise ComponentError(f"component {self.code}: {error.message}", where=("terms",)) from error
-        if not (math.isfinite(value) and value > 0):
+        finite = math.isfinite(absolute) and math.isfinite(relative)
+        if not (finite and min(absolute, relative) >= 0 and absolute + relative > 0):
             raise ComponentError(
-                f"component {self.code}: its variance is {value:.6g}; a component needs a finite variance "
-                "above zero (a difference of variances that is not above zero proves nothing)",
+                f"component {self.code}: its variance is {absolute + relative:.6g}; a component needs "
+                "a finite variance above zero (a difference of variances not above it proves nothing)",
                 where=("terms",),
             )
 
+    def _check_matrix(self) -> None:
+        if self.terms or self.relative_terms or self.quantity:
+            raise ComponentError(
+                f"component {self.code}: it is of one quantity or of several, not both", where=("quantities",)
+            )
+        try:
+            matrix = covariance_of(self.matrix_terms)
+        except EvidenceError as error:
+            raise ComponentError(
+                f"component {self.code}: {error.message}", where=("matrix_terms",)
+            ) from error
+        if len(self.quantities) != len(matrix) or len(set(self.quantities)) != len(matrix):
+            raise ComponentError(
+                f"component {self.code}: the matrix has {len(matrix)} rows, one for each quantity",
+                where=("quantities",),
+            )
+        if not is_possible(matrix) or not matrix.trace() > 0:
+            raise ComponentError(
+                f"component {self.code}: its covariance matrix is not positive semi-definite, or zero",
+                where=("matrix_terms",),
+            )
+
+    @property
+    def inputs(self) -> tuple[str, ...]:
+        """The input quantities that the component belongs to."""
+        return self.quantities if self.matrix_terms else (self.quantity,)
+
     @property
     def variance(self) -> float:
-        """Variance of one draw, unit squared."""
+        """Variance of one draw, unit squared; without a part proportional to the value."""
         return variance(self.terms)
 
     @property
@@ -114,7 +161,7 @@ class Component:
     @property
     def degrees_of_freedom(self) -> float:
         """Degrees of freedom of one draw; ``math.inf`` when known."""
-        return effective_degrees_of_freedom(self.terms)
+        return effective_degrees_of_freedom(self.terms or self.relative_terms)
 
     @classmethod
     def from_estimate(
@@ -126,6 +173,8 @@ class Component:
         evaluation_type: str,
         *,
         distribution: str = "normal",
+        relative_to: str = "",
+        quantities: Mapping[str, str] | None = None,
     ) -> Component:
         """Return the component that an estimate feeds.
 
@@ -138,6 +187,10 @@ class Component:
         estimate : Estimate
         evaluation_type : {"A", "B"}
         distribution : str
+        relative_to : str
+        quantities : mapping of str to str or None
+            For an estimate of several quantities: what a column of its study is called in the model, where
+            that differs. ``quantity`` is passed over then.
 
         Returns
         -------
@@ -163,7 +216,7 @@ class Component:
             )
         return cls(
             code=code,
-            quantity=quantity,
+            quantity="" if estimate.matrix_terms else quantity,
             level=chosen,
             terms=estimate.terms,
             evaluation_type=evaluation_type,
@@ -173,4 +226,15 @@ class Component:
             source=estimate.name,
             taken_out=estimate.taken_out,
             reading_weight=estimate.reading_weight,
+            relative_terms=estimate.relative_terms,
+            relative_to=relative_to,
+            quantities=_named(estimate, quantities or {}),
+            matrix_terms=estimate.matrix_terms,
         )
+
+
+def _named(estimate: Estimate, quantities: Mapping[str, str]) -> tuple[str, ...]:
+    if not estimate.matrix_terms:
+        return ()
+    columns = estimate.matrix_terms[0].mean_square.quantities
+    return tuple(quantities.get(name, name) for name in columns)

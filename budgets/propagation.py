@@ -1,17 +1,30 @@
-"""The law of propagation for the default model: combined and expanded uncertainty."""
+"""The law of propagation: combined and expanded uncertainty of a budget."""
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
 
 from scipy.special import ndtri, stdtrit
 
 from budgets.budget import Budget, Count, Procedure
+from budgets.budget_models import BIAS
 from budgets.components import Component
-from budgets.errors import LimitsError, ProcedureError
-from budgets.evidence.evaluation import Term, effective_degrees_of_freedom
+from budgets.errors import ComponentError, LimitsError, ModelError, ProcedureError
+from budgets.evidence.evaluation import EvaluationWarning, effective_degrees_of_freedom, variance
 from budgets.levels import LEVELS
+from budgets.linear_propagation import CompiledPropagation, Line, lines_of
+from budgets.measurement_models import MeasurementModel, Quantity, SecondOrder
+from budgets.reading_patterns import ReadingPattern
+from budgets.second_order import second_order_terms, second_order_warnings
+
+# A budget without a model: the estimate, and the error of the bias that was taken off or left in.
+ESTIMATE, _ERROR = "estimate", "bias_error"
+_WITHOUT_BIAS = MeasurementModel(ESTIMATE, (Quantity(ESTIMATE),))
+_WITH_BIAS = MeasurementModel(
+    f"{ESTIMATE} - {_ERROR}", (Quantity(ESTIMATE), Quantity(_ERROR, source="given", estimate=0.0))
+)
 
 
 @dataclass(frozen=True)
@@ -71,9 +84,13 @@ class Contribution:
         Averaging weight of its level, less what another component covers.
     standard_uncertainty_of_one_draw : float, unit of the characteristic
     contribution : float, unit of the characteristic
-        ``sqrt(weight) * standard uncertainty of one draw``.
+        ``|sensitivity coefficient| * sqrt(weight) * standard uncertainty of one draw``.
     share_of_variance : float
-        Of the combined variance; the shares add up to 1.
+        Of the combined variance of first order; the shares add up to 1, correlated ones may be negative.
+    sensitivity_coefficient : float or None
+        Signed; None for a component of several quantities, whose one draw is given as it moves the measurand.
+    degrees_of_freedom : float
+        Of the component at these estimates.
     """
 
     component: Component
@@ -81,6 +98,8 @@ class Contribution:
     standard_uncertainty_of_one_draw: float
     contribution: float
     share_of_variance: float
+    sensitivity_coefficient: float | None = 1.0
+    degrees_of_freedom: float = math.inf
 
 
 @dataclass(frozen=True)
@@ -91,14 +110,17 @@ class CombinedUncertainty:
     standard_uncertainty: float
     effective_degrees_of_freedom: float
     contributions: tuple[Contribution, ...]
+    estimate: float | None = None
+    second_order: SecondOrder | None = None
+    warnings: tuple[EvaluationWarning, ...] = ()
 
 
-def averaging_weights(counts: Counts) -> dict[str, float]:
+def averaging_weights(counts: Counts | ReadingPattern) -> dict[str, float]:
     """Return by how much the mean of sample means reduces the variance of each level.
 
     Parameters
     ----------
-    counts : Counts
+    counts : Counts or ReadingPattern
 
     Returns
     -------
@@ -116,6 +138,8 @@ def averaging_weights(counts: Counts) -> dict[str, float]:
     >>> weights["reading"], weights["sample"], weights["lot"]
     (0.25, 0.5, 1.0)
     """
+    if isinstance(counts, ReadingPattern):
+        return counts.averaging_weights()
     samples = len(counts.readings_per_sample)
     per_sample = 1.0 / samples
     # sum over the readings j of w_j^2, with w_j = 1/(samples n_i)
@@ -125,48 +149,137 @@ def averaging_weights(counts: Counts) -> dict[str, float]:
     return weights
 
 
-def combined(budget: Budget, counts: Counts) -> CombinedUncertainty:
+def compiled(budget: Budget, counts: Counts | ReadingPattern) -> CompiledPropagation:
+    """Return the law of propagation of a budget, for any number of evaluations.
+
+    Parameters
+    ----------
+    budget : Budget
+    counts : Counts or ReadingPattern
+        Not checked against the procedure here; see `Counts.check`.
+
+    Returns
+    -------
+    CompiledPropagation
+        Of a budget without a model: of the quantity ``estimate``, that is the mean reading less the bias, or
+        the mean reading where the bias is in the guard band.
+    """
+    weights = averaging_weights(counts)
+    if budget.model is not None:
+        lines = lines_of(budget.components, weights, tuple(budget.model.given))
+        return CompiledPropagation(budget.model, lines, budget.correlations)
+    # The estimate itself is what proportional parts are proportional to, those of the bias too.
+    lines = tuple(
+        replace(line, inputs=(_ERROR if line.inputs == (BIAS,) else ESTIMATE,), relative_to=ESTIMATE)
+        for line in lines_of(budget.components, weights, (BIAS,))
+    )
+    has_bias = any(line.inputs == (_ERROR,) for line in lines)
+    return CompiledPropagation(_WITH_BIAS if has_bias else _WITHOUT_BIAS, lines, budget.correlations)
+
+
+def combined(
+    budget: Budget,
+    counts: Counts | ReadingPattern,
+    *,
+    estimates: Mapping[str, float] | None = None,
+    second_order: bool = False,
+) -> CombinedUncertainty:
     """Return the combined standard uncertainty of an estimate made with these counts.
 
     Parameters
     ----------
     budget : Budget
-    counts : Counts
+    counts : Counts or ReadingPattern
         Not checked against the procedure here; see `Counts.check`.
+    estimates : mapping of str to float or None
+        Of the quantities that are read, by their names; without a model that of the characteristic (less its
+        bias, where it is corrected). Needed with a model and with parts proportional to the value.
+    second_order : bool
+        True adds the terms of second order of a model.
 
     Returns
     -------
     CombinedUncertainty
-        In the unit of the characteristic.
+        In the unit of the measurand.
+
+    Raises
+    ------
+    ModelError
+        If estimates are needed and missing, or the model fails at them.
+    CorrelationError
+        If terms of second order are asked for with correlated inputs.
+    ComponentError
+        If the combined variance is not above zero.
 
     Notes
     -----
-    Source: JCGM 100:2008, 5.1.2, eq. (10), and G.4.1, eq. (G.2b) (from memory). Coefficients of equal mean
-    squares are added over the whole budget before the effective degrees of freedom are taken.
+    Source: JCGM 100:2008, 5.1.2, eq. (10) with its note, 5.2.2, eq. (16), G.4.1, eq. (G.2b) (from memory).
+    Coefficients of equal mean squares are added over the whole budget before the effective degrees of freedom
+    are taken; the terms of second order add to the variance and leave the degrees of freedom as they are.
     """
-    weights = averaging_weights(counts)
-    applied = [
-        (component, max(0.0, weights[component.level] - component.covered_weight))
-        for component in budget.components
-    ]
-    # JCGM 100 eq. (10) with c = +1 (reading) and -1 (bias): u_c^2 = sum W_l u_l^2
-    terms = [
-        Term(weight * term.coefficient, term.mean_square)
-        for component, weight in applied
-        for term in component.terms
-    ]
-    total = math.fsum(weight * component.variance for component, weight in applied)
-    contributions = tuple(
-        Contribution(
-            component=component,
-            weight=weight,
-            standard_uncertainty_of_one_draw=component.standard_uncertainty,
-            contribution=math.sqrt(weight * component.variance),
-            share_of_variance=weight * component.variance / total,
-        )
-        for component, weight in applied
+    law = compiled(budget, counts)
+    full = law.model.estimates(_estimates_for(budget, estimates))
+    value, coefficients = law.model.linearised(full)
+    total, terms, parts = law.combination(coefficients, full)
+    beyond = second_order_terms(law, budget.components, full) if second_order else None
+    whole = total + (0.0 if beyond is None else beyond.variance)
+    if not whole > 0:
+        raise ComponentError("with its terms of second order the combined variance is not above zero")
+    return CombinedUncertainty(
+        variance=whole,
+        standard_uncertainty=math.sqrt(whole),
+        effective_degrees_of_freedom=effective_degrees_of_freedom(terms),
+        contributions=tuple(
+            _contribution(component, line, part / total, coefficients, full)
+            for component, line, part in zip(budget.components, law.lines, parts, strict=True)
+        ),
+        estimate=None if estimates is None else value,
+        second_order=beyond,
+        warnings=second_order_warnings(total, beyond),
     )
-    return CombinedUncertainty(total, math.sqrt(total), effective_degrees_of_freedom(terms), contributions)
+
+
+def _estimates_for(budget: Budget, estimates: Mapping[str, float] | None) -> Mapping[str, float]:
+    if budget.model is not None:
+        return estimates or {}
+    if estimates is None:
+        if any(component.relative_terms for component in budget.components):
+            raise ModelError(
+                "the budget has parts that are proportional to the value: say at which estimate",
+                where=("estimates", budget.characteristic),
+            )
+        return {ESTIMATE: 0.0}
+    if set(estimates) != {budget.characteristic}:
+        raise ModelError(
+            f"the one estimate of this budget is that of {budget.characteristic}",
+            where=("estimates", budget.characteristic),
+        )
+    return {ESTIMATE: estimates[budget.characteristic]}
+
+
+def _contribution(
+    component: Component,
+    line: Line,
+    share: float,
+    coefficients: Mapping[str, float],
+    estimates: Mapping[str, float],
+) -> Contribution:
+    terms = line.terms_at(coefficients, estimates)
+    moved = math.sqrt(max(0.0, variance(terms)))
+    single = None if line.matrix_terms else coefficients[line.inputs[0]]
+    # Of several quantities, or where the model stands still, one draw is given as it moves the measurand.
+    one_draw = (
+        moved if single is None else math.sqrt(variance(line.terms_at({line.inputs[0]: 1.0}, estimates)))
+    )
+    return Contribution(
+        component=component,
+        weight=line.weight,
+        standard_uncertainty_of_one_draw=one_draw,
+        contribution=math.sqrt(line.weight) * moved,
+        share_of_variance=share,
+        sensitivity_coefficient=single,
+        degrees_of_freedom=effective_degrees_of_freedom(terms),
+    )
 
 
 def coverage_factor(coverage_probability: float, degrees_of_freedom: float, *, sides: int = 2) -> float:

@@ -8,43 +8,36 @@ can only know this when every variance says which mean squares it is made of, so
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 from budgets.errors import EvidenceError
+from budgets.evidence.evaluation_terms import (
+    MeanSquare,
+    Term,
+    effective_degrees_of_freedom,
+    finite_or_none,
+    merged,
+    term_document,
+    term_of,
+    variance,
+)
+from budgets.evidence.mean_square_matrices import MatrixTerm, matrix_term, matrix_term_document
 
-
-@dataclass(frozen=True)
-class MeanSquare:
-    """One mean square; equal codes mean the same mean square.
-
-    Parameters
-    ----------
-    code : str
-        ``<study>/<name>``, unique in the plant.
-    value : float, unit of the characteristic squared
-    degrees_of_freedom : float
-        ``math.inf`` where the figure counts as known.
-    """
-
-    code: str
-    value: float
-    degrees_of_freedom: float
-
-    def __post_init__(self) -> None:
-        if not (math.isfinite(self.value) and self.value >= 0):
-            raise EvidenceError(f"mean square {self.code} is {self.value}, not a finite number from 0 up")
-        if not self.degrees_of_freedom > 0:
-            raise EvidenceError(f"mean square {self.code} has {self.degrees_of_freedom} degrees of freedom")
-
-
-@dataclass(frozen=True)
-class Term:
-    """One term of a variance: a coefficient, which may be negative, times a mean square."""
-
-    coefficient: float
-    mean_square: MeanSquare
+__all__ = [
+    "Estimate",
+    "Evaluation",
+    "EvaluationWarning",
+    "Interval",
+    "MeanSquare",
+    "SetAside",
+    "Term",
+    "effective_degrees_of_freedom",
+    "json_able",
+    "merged",
+    "variance",
+]
 
 
 @dataclass(frozen=True)
@@ -73,90 +66,6 @@ class SetAside:
     reason: str
 
 
-def merged(terms: Iterable[Term]) -> tuple[Term, ...]:
-    """Add up the coefficients of equal mean squares.
-
-    Parameters
-    ----------
-    terms : iterable of Term
-        Terms in any order; the same mean square may occur several times.
-
-    Returns
-    -------
-    tuple of Term
-        One term per mean square, in order of first appearance; coefficients that cancel stay as 0.
-
-    Raises
-    ------
-    EvidenceError
-        If one code stands for two different mean squares.
-    """
-    coefficients: dict[str, float] = {}
-    mean_squares: dict[str, MeanSquare] = {}
-    for term in terms:
-        code = term.mean_square.code
-        if mean_squares.setdefault(code, term.mean_square) != term.mean_square:
-            raise EvidenceError(f"two different mean squares are called {code}")
-        coefficients[code] = coefficients.get(code, 0.0) + term.coefficient
-    return tuple(Term(coefficients[code], mean_squares[code]) for code in mean_squares)
-
-
-def variance(terms: Iterable[Term]) -> float:
-    """Return the variance that a sum over mean squares stands for.
-
-    Parameters
-    ----------
-    terms : iterable of Term
-
-    Returns
-    -------
-    float, unit squared
-        ``sum a_k MS_k``; may be negative for a difference of variances.
-    """
-    return math.fsum(term.coefficient * term.mean_square.value for term in terms)
-
-
-def effective_degrees_of_freedom(terms: Iterable[Term]) -> float:
-    """Return the effective degrees of freedom of a sum over independent mean squares.
-
-    Parameters
-    ----------
-    terms : iterable of Term
-        Equal mean squares are added up first, so what cancels does not count.
-
-    Returns
-    -------
-    float
-        ``math.inf`` when no part of the variance has finite degrees of freedom.
-
-    Notes
-    -----
-    Source: JCGM 100:2008, G.4.1, eq. (G.2b) (from memory), applied to independent mean squares. The value is
-    kept real; truncation to an integer is not done.
-
-    Examples
-    --------
-    >>> sep = MeanSquare("v/sep", 0.09, 59)
-    >>> ref = MeanSquare("d/ref", 0.02, 20)
-    >>> rep = MeanSquare("r/rep", 0.04, 10)
-    >>> terms = [Term(1, sep), Term(-1, ref), Term(-1, rep), Term(1, rep)]
-    >>> round(effective_degrees_of_freedom(terms), 1)
-    31.2
-    """
-    single = merged(terms)
-    # JCGM 100 G.2b: nu_eff = u^4 / sum (a_k MS_k)^2 / nu_k
-    total = variance(single)
-    spread = math.fsum(
-        (term.coefficient * term.mean_square.value) ** 2 / term.mean_square.degrees_of_freedom
-        for term in single
-    )
-    if spread == 0:
-        return math.inf
-    counted = [term for term in single if term.coefficient * term.mean_square.value != 0]
-    # A single mean square keeps its own number to the last digit.
-    return counted[0].mean_square.degrees_of_freedom if len(counted) == 1 else total * total / spread
-
-
 @dataclass(frozen=True)
 class Estimate:
     """One outcome of an evaluation.
@@ -183,6 +92,10 @@ class Estimate:
         Sources that were subtracted from it and that the budget therefore has to name again.
     reading_weight : float
         Mean of 1/(readings averaged) behind it; 1 when every value behind it was a single reading.
+    relative_terms : tuple of Term
+        Variance of the relative error, to be multiplied by the square of the value.
+    matrix_terms : tuple of MatrixTerm
+        Covariance of several quantities, where the estimate is one of them jointly; ``terms`` is empty then.
     """
 
     name: str
@@ -195,6 +108,8 @@ class Estimate:
     contains: tuple[str, ...] = ()
     taken_out: tuple[str, ...] = ()
     reading_weight: float = 1.0
+    relative_terms: tuple[Term, ...] = ()
+    matrix_terms: tuple[MatrixTerm, ...] = ()
 
     @property
     def variance(self) -> float:
@@ -220,8 +135,8 @@ class Estimate:
             "value": self.value,
             "variance": self.variance,
             "standard_uncertainty": self.standard_uncertainty,
-            "degrees_of_freedom": _finite(self.degrees_of_freedom),
-            "terms": [_term_document(term) for term in self.terms],
+            "degrees_of_freedom": finite_or_none(self.degrees_of_freedom),
+            "terms": [term_document(term) for term in self.terms],
             "interval": None
             if interval is None
             else {
@@ -236,6 +151,8 @@ class Estimate:
             "contains": list(self.contains),
             "taken_out": list(self.taken_out),
             "reading_weight": self.reading_weight,
+            "relative_terms": [term_document(term) for term in self.relative_terms],
+            "matrix_terms": [matrix_term_document(term) for term in self.matrix_terms],
         }
 
     @classmethod
@@ -244,7 +161,7 @@ class Estimate:
         interval = document["interval"]
         return cls(
             name=document["name"],
-            terms=tuple(_term(term) for term in document["terms"]),
+            terms=tuple(term_of(term) for term in document["terms"]),
             value=document["value"],
             interval=None if interval is None else Interval(**interval),
             may_feed=tuple(document["may_feed"]),
@@ -252,8 +169,10 @@ class Estimate:
             covered_weight=document["covered_weight"],
             contains=tuple(document["contains"]),
             taken_out=tuple(document["taken_out"]),
-            # Documents of the first version of this program lack it.
+            # Documents of the first version of this program lack these.
             reading_weight=document.get("reading_weight", 1.0),
+            relative_terms=tuple(term_of(term) for term in document.get("relative_terms", ())),
+            matrix_terms=tuple(matrix_term(term) for term in document.get("matrix_terms", ())),
         )
 
 
@@ -340,29 +259,4 @@ def json_able(thing: Any) -> Any:
         return [json_able(value) for value in thing]
     if isinstance(thing, bool) or thing is None or isinstance(thing, (str, int)):
         return thing
-    return _finite(float(thing))
-
-
-def _finite(value: float) -> float | None:
-    return value if math.isfinite(value) else None
-
-
-def _term_document(term: Term) -> dict[str, Any]:
-    square = term.mean_square
-    return {
-        "coefficient": term.coefficient,
-        "mean_square": {
-            "code": square.code,
-            "value": square.value,
-            "degrees_of_freedom": _finite(square.degrees_of_freedom),
-        },
-    }
-
-
-def _term(document: Mapping[str, Any]) -> Term:
-    square = document["mean_square"]
-    freedom = square["degrees_of_freedom"]
-    return Term(
-        document["coefficient"],
-        MeanSquare(square["code"], square["value"], math.inf if freedom is None else freedom),
-    )
+    return finite_or_none(float(thing))

@@ -3,7 +3,7 @@ import math
 import pytest
 
 from budgets.budget import Count, Procedure
-from budgets.errors import BudgetsError, ComponentError, ModelError, NotSupportedError
+from budgets.errors import BudgetsError, ComponentError, ModelError
 
 WHOLE = {"contains": ("repeatability", "remainder", "resolution"), "level": "lot"}
 BIAS = {"quantity": "bias", "level": "calibration"}
@@ -64,11 +64,8 @@ def test_a_bias_alone_is_no_budget(a_budget, a_component):
     refused(a_budget, a_component("b", **BIAS), bias=0.1, match="only to its bias")
 
 
-def test_several_input_quantities_are_not_supported_yet(a_budget, a_component):
-    error = refused(
-        a_budget, a_component("a"), a_component("b", quantity="protein"), match="moisture, protein"
-    )
-    assert isinstance(error, NotSupportedError)
+def test_several_input_quantities_need_a_model(a_budget, a_component):
+    refused(a_budget, a_component("a"), a_component("b", quantity="protein"), match="moisture, protein")
 
 
 def test_the_whole_and_its_part_are_counted_twice(a_budget, a_component):
