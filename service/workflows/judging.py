@@ -56,7 +56,8 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
     not_judged: dict[str, None] = {}
     for code in codes:
         specification = register.specifications.get(code)
-        if specification is None:
+        # A product may name a code before it is given to a specification, which may be another product's.
+        if specification is None or specification.document.product != request.product:
             rulings.append(_nothing_in_force(code))
             continue
         not_judged.update(dict.fromkeys(specification.document.not_judged))
@@ -203,7 +204,7 @@ def _nothing_in_force(code: str | None) -> Ruling:
     what = (
         "No specification is in force for this product."
         if code is None
-        else f"No version of {code} is in force."
+        else f"No version of {code} for this product is in force."
     )
     specification = None if code is None else {"code": code, "version": None}
     reason = {

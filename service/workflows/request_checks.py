@@ -7,8 +7,9 @@ from typing import Final
 
 from budgets.errors import BudgetsError
 from budgets.units import conversion
-from service.documents import DecisionRequest, Reading
+from service.documents import Calibration, DecisionRequest, Reading
 from service.errors import Conflict
+from service.schemas.base import counted, pointer_step
 from service.workflows.evidence import FaultCollector
 from service.workflows.register import Register
 
@@ -44,7 +45,7 @@ def check_request(register: Register, request: DecisionRequest, now: datetime) -
     _check_units(register, request, collector)
     for index, reading in enumerate(request.readings):
         _check_reading(register, request, reading, now, f"#/readings/{index}", collector)
-    collector.finish(f"{len(collector.faults)} faults; nothing was recorded.")
+    collector.finish(f"{counted(len(collector.faults))}; nothing was recorded.")
     _check_no_twins(request)
 
 
@@ -108,6 +109,8 @@ def _check_reading(
             f"{reading.calibration!r} is no calibration of {reading.analyzer!r}",
             "the code of one of its calibrations",
         )
+    else:
+        _check_conditions(calibration, reading, pointer, collector)
     if reading.taken_at > now + CLOCK_TOLERANCE:
         collector.add(f"{pointer}/taken_at", "lies in the future", "an instant that has passed")
     for code in reading.values:
@@ -119,6 +122,21 @@ def _check_reading(
             )
         elif code not in request.units:
             collector.add(f"#/units/{code}", "is missing", f"the unit of {code!r}")
+
+
+def _check_conditions(
+    calibration: Calibration, reading: Reading, pointer: str, collector: FaultCollector
+) -> None:
+    """Refuse flags and influences that the calibration does not know: a misspelt one would be ignored."""
+    for member in ("flags", "influences"):
+        known = getattr(calibration, member)
+        for name in getattr(reading, member):
+            if name not in known:
+                collector.add(
+                    f"{pointer}/{member}{pointer_step(name)}",
+                    f"the calibration {calibration.code!r} has no such member of its {member}",
+                    f"one of {', '.join(known)}" if known else "none",
+                )
 
 
 def _check_no_twins(request: DecisionRequest) -> None:

@@ -208,6 +208,14 @@ def test_a_specification_without_a_version_in_force_is_held() -> None:
     assert answer["verdicts"][0]["specification"] == {"code": "customer-b", "version": None}
 
 
+def test_a_code_that_became_another_products_specification_is_held() -> None:
+    others = a_specification()
+    others = replace(others, document=replace(others.document, product="skim-milk-powder"))
+    answer = judged(register=a_register(specifications={"customer-b": others}))
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["nothing-in-force"])
+    assert answer["verdicts"][0]["upper_tolerance_limit"] is None
+
+
 def test_a_product_without_specifications_is_held() -> None:
     products = dict(a_register().products)
     products["whole-milk-powder"] = replace(products["whole-milk-powder"], default_specifications=())
@@ -256,6 +264,11 @@ def test_the_worst_verdict_decides_the_lot() -> None:
         ({"readings": twice(2.9, analyzer="nir-9")}, "#/readings/0/analyzer"),
         ({"readings": twice(2.9, analyzer="nobody")}, "#/readings/0/analyzer"),
         ({"readings": twice(2.9, calibration="wmp-2-1")}, "#/readings/0/calibration"),
+        ({"readings": twice(2.9, flags={"distance": 9.0})}, "#/readings/0/flags/distance"),
+        (
+            {"readings": twice(2.9, influences={"sample_temprature": 24.0})},
+            "#/readings/0/influences/sample_temprature",
+        ),
         ({"readings": twice(2.9, values={"moisture": 2.9, "ash": 1.0})}, "#/readings/0/values/ash"),
         (
             {"readings": twice(2.9, taken_at=datetime(2026, 3, 2, 5, 18, tzinfo=UTC))},
@@ -267,6 +280,7 @@ def test_what_is_not_understood_is_a_fault_at_its_place(changes: dict[str, Any],
     with pytest.raises(InvalidRequest) as caught:
         judged(a_request(**changes))
     assert pointer in [fault.pointer for fault in caught.value.faults]
+    assert caught.value.message.startswith(("1 fault;", "2 faults;", "3 faults;", "4 faults;", "The request"))
 
 
 def test_all_faults_are_named_at_once() -> None:
