@@ -102,6 +102,7 @@ class Operation:
     query: Sequence[Form] = ()
     key: str | None = None  # "required" or "optional"
     if_match: bool = False
+    may_match: bool = False  # If-Match is honoured, and never asked for
     etag: bool = False
     conditional: bool = False
     problems: Sequence[int] = ()
@@ -113,6 +114,9 @@ class Operation:
             parameters.append({**_KEY, "required": self.key == "required"})
         if self.if_match:
             parameters.append(_IF_MATCH)
+        if self.may_match:
+            about = "The ETag that was read; another revision is then refused."
+            parameters.append({**_IF_MATCH, "description": about})
         if self.conditional:
             parameters.append({**_IF_MATCH, "name": "If-None-Match", "description": "An ETag read before."})
         described: Form = {"responses": self._responses(path_has_parameters), "parameters": parameters}
@@ -148,6 +152,8 @@ class Operation:
             statuses.update((400, 503))
         if self.if_match:
             statuses.update((412, 428))
+        if self.may_match:
+            statuses.add(412)
         if path_has_parameters:
             statuses.add(404)
         return statuses

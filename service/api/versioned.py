@@ -62,7 +62,16 @@ class Versioned:
         requests.no_body()
         request = requests.recording()
         return recorded(
-            versions.submit(requests.services(), requests.actor(), self.kind, code, version, request), 200
+            versions.submit(
+                requests.services(),
+                requests.actor(),
+                self.kind,
+                code,
+                version,
+                request,
+                if_match=requests.if_match(),
+            ),
+            200,
         )
 
     def sign(self, act: Act, code: str, version: int) -> Response:
@@ -72,7 +81,17 @@ class Versioned:
         requests.forget_signature()
         request = requests.recording()
         return recorded(
-            act(requests.services(), requests.actor(), self.kind, code, version, signed, request), 200
+            act(
+                requests.services(),
+                requests.actor(),
+                self.kind,
+                code,
+                version,
+                signed,
+                request,
+                if_match=requests.if_match(),
+            ),
+            200,
         )
 
     def get(self, code: str, version: int) -> Response:
@@ -127,9 +146,9 @@ def register_versions(blueprint: Blueprint, prefix: str, kind: Versioned, code: 
     add(kind.add, f"{prefix}/versions", "POST", recording, "add_version")
     add(kind.get, one, "GET", Operation(kind.form, conditional=True, problems=(422,)), "get_version")
     add(kind.replace, one, "PUT", replacing, "replace_version")
-    submitting = Operation(kind.form, key="required", etag=True, problems=(409,))
+    submitting = Operation(kind.form, key="required", etag=True, may_match=True, problems=(409,))
     add(kind.submit, f"{one}/submit", "POST", submitting, "submit_version")
-    signing = Operation(kind.form, body=SIGNED, key="required", etag=True, problems=(409,))
+    signing = Operation(kind.form, body=SIGNED, key="required", etag=True, may_match=True, problems=(409,))
     for name, act, about in (
         ("approve", versions.approve, "Put a submitted version in force; another person's act."),
         ("return", versions.return_, "Give a submitted version back as a draft."),

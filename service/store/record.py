@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import heapq
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from itertools import islice
 from typing import Any
 
@@ -87,6 +87,13 @@ class Ledger:
         for entry in found:
             position[entry.chain] = entry.sequence
         return found, position
+
+    def of_actor(self, chain: str, actor: str, kinds: Collection[str]) -> list[Entry]:
+        """Return what one actor did of some kinds, in order."""
+        query = select(*_AS_STORED).where(
+            entries.c.chain == chain, entries.c.actor == actor, entries.c.kind.in_(kinds)
+        )
+        return [entry_of(row) for row in self._session.rows(query.order_by(entries.c.sequence), entries)]
 
     def _rows(
         self, chain: str, after: int | None, limit: int, columns: Sequence[Any] = _AS_STORED

@@ -181,10 +181,16 @@ def _check_study_fits(study: Study, document: BudgetDocument, pointer: str) -> N
         if theirs != ours:
             collector.add(f"{pointer}/study", f"{study.code} is about the {member} {theirs!r}", f"{ours!r}")
     shared = study.calibrations.keys() & document.calibrations.keys()
-    if study.calibrations and not shared:
+    if study.calibrations and shared != document.calibrations.keys():
         collector.add(
             f"{pointer}/study",
             f"{study.code} was made on {', '.join(study.calibrations)}",
+            f"evidence for {', '.join(document.calibrations)}",
+        )
+    if study.design == "agreement" and not study.calibrations:
+        collector.add(
+            f"{pointer}/study",
+            f"{study.code} does not say on which calibration it was made",
             f"evidence for {', '.join(document.calibrations)}",
         )
     for analyzer in sorted(shared):

@@ -207,6 +207,16 @@ def _check_calibration(unit_of_work: UnitOfWork, calibration: Calibration, colle
     before = unit_of_work.master.get("calibration", calibration.code)
     if before is not None and before.document["analyzer"] != calibration.analyzer:
         collector.add("#/code", f"{calibration.code!r} belongs to another analyzer", "a code never used")
+    if before is not None:
+        # Budgets in force rest on evidence for this very model and adjustment.
+        now = dump(calibration)
+        for member in ("product", "adjustment"):
+            if before.document[member] != now[member]:
+                collector.add(
+                    f"#/{member}",
+                    f"differs from what {calibration.code!r} has",
+                    "the same; another model or adjustment is another calibration with a code of its own",
+                )
     if analyzer is None:
         return
     for member in ("latent_variables", "standard_error_of_calibration", "adjustment"):

@@ -115,6 +115,8 @@ def _draft(unit_of_work: UnitOfWork, actor: Actor, kind: VersionedKind, code: st
         product=product,
         characteristic=characteristic,
     )
+    if draft.version == 1:
+        unit_of_work.bump_revision()  # a decision may name the new code from now on
     return entry
 
 
@@ -151,10 +153,7 @@ def replace(
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = _in_state(unit_of_work, kind, code, version, "draft", act="replaced")
-        if stored.revision != if_match:
-            raise StaleVersion(
-                f"The draft stands at revision {stored.revision}, not {if_match}; read it again."
-            )
+        _check_revision(stored, if_match)
         kind_of.check(unit_of_work, document)
         product, characteristic = kind_of.subject(document)
         changes = {"product": product, "characteristic": characteristic, "drafted_by": actor.principal}
@@ -170,7 +169,14 @@ def replace(
 
 
 def submit(
-    services: Services, actor: Actor, kind: str, code: str, version: int, request: Request
+    services: Services,
+    actor: Actor,
+    kind: str,
+    code: str,
+    version: int,
+    request: Request,
+    *,
+    if_match: int | None = None,
 ) -> tuple[Answer, bool]:
     """Submit a draft for approval, after the same checks that the approval will make.
 
@@ -178,13 +184,15 @@ def submit(
     ------
     Conflict
         The version is no draft.
+    StaleVersion
+        It is another revision than ``if_match``.
     InvalidRequest
         It could not be approved as it stands.
     """
     require(actor, "submit a version")
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
-        stored = _in_state(unit_of_work, kind, code, version, "draft", act="submitted")
+        stored = _in_state(unit_of_work, kind, code, version, "draft", act="submitted", if_match=if_match)
         _approval(unit_of_work, stored)
         return _move(unit_of_work, actor, stored, "submitted", "submitted", submitted_by=actor.principal)
 
@@ -199,6 +207,8 @@ def approve(
     version: int,
     signed: SignedAct,
     request: Request,
+    *,
+    if_match: int | None = None,
 ) -> tuple[Answer, bool]:
     """Put a submitted version in force; the one before is superseded in the same entry.
 
@@ -208,6 +218,8 @@ def approve(
         No approver, no person, the own work, or a signature that does not match.
     Conflict
         The version is not submitted, or another budget serves the same analyzer.
+    StaleVersion
+        It is another revision than ``if_match``.
     InvalidRequest
         It cannot be computed, or this measurement cannot prove a specification.
     """
@@ -215,8 +227,8 @@ def approve(
     verify_signature(services, require_person(actor, "approve"), signed.signature)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
-        stored = _in_state(unit_of_work, kind, code, version, "submitted", act="approved")
-        require_another(actor, frozenset({stored.drafted_by, stored.submitted_by or stored.drafted_by}))
+        stored = _in_state(unit_of_work, kind, code, version, "submitted", act="approved", if_match=if_match)
+        require_another(actor, _authors(unit_of_work, actor, stored))
         approval = _approval(unit_of_work, stored)
         before = unit_of_work.versions.in_force(kind, code)
         changes = {
@@ -253,13 +265,15 @@ def return_(
     version: int,
     signed: SignedAct,
     request: Request,
+    *,
+    if_match: int | None = None,
 ) -> tuple[Answer, bool]:
-    """Give a submitted version back as a draft. Raises Forbidden or Conflict."""
+    """Give a submitted version back as a draft. Raises Forbidden, Conflict or StaleVersion."""
     require(actor, "return a version")
     verify_signature(services, require_person(actor, "return"), signed.signature)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
-        stored = _in_state(unit_of_work, kind, code, version, "submitted", act="returned")
+        stored = _in_state(unit_of_work, kind, code, version, "submitted", act="returned", if_match=if_match)
         return _move(
             unit_of_work, actor, stored, "draft", "returned", reason=signed.reason, submitted_by=None
         )
@@ -275,13 +289,19 @@ def withdraw(
     version: int,
     signed: SignedAct,
     request: Request,
+    *,
+    if_match: int | None = None,
 ) -> tuple[Answer, bool]:
-    """Withdraw an open version or, by an approver, the one in force. Raises Forbidden or Conflict."""
+    """Withdraw an open version or, by an approver, the one in force.
+
+    Raises Forbidden, Conflict or StaleVersion.
+    """
     require(actor, "withdraw an open version")
     verify_signature(services, require_person(actor, "withdraw"), signed.signature)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = _stored(unit_of_work, kind, code, version)
+        _check_revision(stored, if_match)
         if stored.state == "in_force":
             require(actor, "withdraw a version in force")
             unit_of_work.bump_revision()
@@ -415,12 +435,38 @@ def _stored(unit_of_work: UnitOfWork, kind: str, code: str, version: int) -> Sto
 
 
 def _in_state(
-    unit_of_work: UnitOfWork, kind: str, code: str, version: int, state: str, *, act: str
+    unit_of_work: UnitOfWork,
+    kind: str,
+    code: str,
+    version: int,
+    state: str,
+    *,
+    act: str,
+    if_match: int | None = None,
 ) -> StoredVersion:
     stored = _stored(unit_of_work, kind, code, version)
     if stored.state != state:
         raise _wrong_state(stored, act, state)
+    _check_revision(stored, if_match)
     return stored
+
+
+def _check_revision(stored: StoredVersion, if_match: int | None) -> None:
+    if if_match is not None and stored.revision != if_match:
+        raise StaleVersion(
+            f"The version stands at revision {stored.revision}, not {if_match}; read it again."
+        )
+
+
+def _authors(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> frozenset[str]:
+    """Say who worked on a version; ``actor`` too, if only earlier than those whom the version names."""
+    named = {stored.drafted_by, stored.submitted_by or stored.drafted_by}
+    acts = tuple(f"{stored.kind}-{what}" for what in ("drafted", "redrafted", "submitted"))
+    for entry in unit_of_work.ledger.of_actor(PLANT_CHAIN, actor.principal, acts):
+        version = entry.content["version"]
+        if (version["code"], version["version"]) == (stored.code, stored.version):
+            named.add(actor.principal)
+    return frozenset(named)
 
 
 def _wrong_state(stored: StoredVersion, act: str, needed: str) -> Conflict:

@@ -97,6 +97,28 @@ def test_a_calibration_stands_under_its_analyzer(callers: Callers) -> None:
     assert done(callers["mes"].get("/v1/analyzers/oven/calibrations"), 200)["items"] == []
 
 
+@pytest.mark.parametrize(
+    ("member", "value"),
+    [("adjustment", {"moisture": {"slope": 1.0, "bias": 0.2}}), ("product", "skim-milk-powder")],
+)
+def test_another_model_or_adjustment_is_another_calibration(
+    callers: Callers, member: str, value: Any
+) -> None:
+    engineer = callers["engineer"]
+    done(
+        engineer.put(
+            "/v1/products/skim-milk-powder",
+            example(documents.Product, code="skim-milk-powder", default_specifications=[]),
+        )
+    )
+    path = "/v1/analyzers/nir-1/calibrations/wmp-7"
+    changed = {**done(engineer.get(path), 200), member: value}
+    response = engineer.put(path, changed, If_Match='"1"')
+    assert response.status_code == 422
+    assert [fault["pointer"] for fault in response.get_json()["errors"]] == [f"#/{member}"]
+    done(engineer.put("/v1/analyzers/nir-1/calibrations/wmp-7b", {**changed, "code": "wmp-7b"}))
+
+
 def test_lists_continue_where_they_ended(at_start: Callers) -> None:
     put_master_data(at_start["engineer"])
     seen: list[str] = []

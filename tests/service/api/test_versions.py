@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from typing import Any
 
 import pytest
@@ -86,6 +87,76 @@ def test_nobody_approves_alone(callers: Callers) -> None:
     assert (response.status_code, "signature" in response.get_json()["detail"]) == (403, True)
     assert "guessed once" not in response.get_data(as_text=True)
     done(callers["max"].post(f"{one}/approve", signed()), 200)
+
+
+def test_whoever_worked_on_a_version_before_another_does_not_approve_it(callers: Callers) -> None:
+    path, document = KINDS[0]
+    one = f"{path}/versions/1"
+    done(callers["ada"].post("/v1/specifications", document))
+    replaced = {**document, "reason": "a word changed"}
+    done(callers["engineer"].put(one, replaced, If_Match='"1"'), 200)
+    done(callers["engineer"].post(f"{one}/submit"), 200)
+    response = callers["ada"].post(f"{one}/approve", signed())
+    assert (response.status_code, "another person" in response.get_json()["detail"]) == (403, True)
+    done(callers["max"].post(f"{one}/approve", signed()), 200)
+    # The next version is another's work, which ada may approve.
+    done(callers["engineer"].post(f"{path}/versions", replaced))
+    done(callers["engineer"].post(f"{path}/versions/2/submit"), 200)
+    done(callers["ada"].post(f"{path}/versions/2/approve", signed()), 200)
+
+
+def test_an_act_on_a_version_may_insist_on_what_was_read(callers: Callers) -> None:
+    path, document = KINDS[0]
+    one = f"{path}/versions/1"
+    drafted(callers, path, document)
+
+    def send(name: str, act: str, body: Any, etag: str) -> int:
+        headers = {"Idempotency-Key": house.fresh_key(), "If-Match": etag}
+        return callers[name].send("POST", f"{one}/{act}", body, headers=headers).status_code
+
+    assert [send("engineer", "submit", None, etag) for etag in ('"2"', '"1"')] == [412, 200]
+    assert [send("max", "return", signed(), etag) for etag in ('"1"', '"2"')] == [412, 200]
+    assert [send("engineer", "submit", None, etag) for etag in ('"2"', '"3"')] == [412, 200]
+    assert [send("max", "approve", signed(), etag) for etag in ('"2"', '"4"')] == [412, 200]
+    assert [send("max", "withdraw", signed(), etag) for etag in ('"4"', '"5"')] == [412, 200]
+
+
+def test_a_code_can_be_named_as_soon_as_it_is_drafted(callers: Callers) -> None:
+    path, document = KINDS[0]
+    done(callers["mes"].post("/v1/decisions/preview", house.decision()), 200)  # the register is read
+    drafted(callers, path, document)
+    request = house.decision(specifications=["new-one"])
+    answer = done(callers["mes"].post("/v1/decisions/preview", request), 200)
+    assert [reason["code"] for reason in answer["reasons"]] == ["nothing-in-force"]
+
+
+def test_evidence_covers_every_analyzer_of_the_budget(callers: Callers) -> None:
+    engineer = callers["engineer"]
+    second = example(documents.Analyzer, code="nir-2")
+    done(engineer.put("/v1/analyzers/nir-2", second))
+    calibration = example(documents.Calibration, code="wmp-7-2", analyzer="nir-2")
+    done(engineer.put("/v1/analyzers/nir-2/calibrations/wmp-7-2", calibration))
+    document = example(
+        documents.BudgetDocument, code="both", calibrations={"nir-1": "wmp-7", "nir-2": "wmp-7-2"}
+    )
+    response = engineer.post("/v1/budgets", document)
+    assert response.status_code == 422
+    faults = {fault["pointer"]: fault["detail"] for fault in response.get_json()["errors"]}
+    assert faults["#/components/0/evidence/study"] == "wmp-rep-2026-01 was made on nir-1"
+
+
+def test_a_validation_says_which_calibration_it_is_for(callers: Callers) -> None:
+    engineer = callers["engineer"]
+    study = {**house.agreement_study(), "code": "anywhere", "calibrations": {}}
+    done(engineer.post("/v1/studies", study))
+    document = json.loads(
+        json.dumps(example(documents.BudgetDocument, code="new-one")).replace("wmp-val-2026-01", "anywhere")
+    )
+    response = engineer.post("/v1/budgets", document)
+    assert response.status_code == 422
+    assert {fault["detail"] for fault in response.get_json()["errors"]} == {
+        "anywhere does not say on which calibration it was made"
+    }
 
 
 def test_a_repeated_approval_is_one_act_whatever_the_password(callers: Callers) -> None:
