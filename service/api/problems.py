@@ -48,7 +48,7 @@ KINDS: dict[type[ServiceError], Kind] = {
     errors.KeyMissing: Kind("idempotency-key-missing", "A recording call needs an idempotency key", 400),
     errors.KeyReused: Kind("idempotency-key-reused", "The key was used for another request", 422),
     errors.TooLarge: Kind("too-large", "The body is too large", 413),
-    errors.Unauthenticated: Kind("unauthenticated", "The request says not who makes it", 401),
+    errors.Unauthenticated: Kind("unauthenticated", "The request does not say who makes it", 401),
     errors.Forbidden: Kind("forbidden", "The principal may not do this", 403),
     errors.NotFound: Kind("not-found", "There is no such thing", 404),
     errors.Conflict: Kind("conflict", "The present state does not allow it", 409),

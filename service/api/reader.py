@@ -65,7 +65,9 @@ def read(body: bytes) -> dict[str, Any]:
         raise Unreadable("The body is empty; a JSON object is expected.")
     document = _parse(_decode(body))
     if not isinstance(document, dict):
-        raise InvalidRequest("1 fault.", faults=(Fault(got(document), "a JSON object", "#"),))
+        raise InvalidRequest(
+            "1 fault; nothing was recorded.", faults=(Fault(got(document), "a JSON object", "#"),)
+        )
     return document
 
 
@@ -207,7 +209,11 @@ def _faults(item: Any, pointer: str) -> Iterator[Fault]:
         seen: set[str] = set()
         for name, value in item:
             if name in seen:
-                yield Fault(f"the member {got(name)[4:]} stands here twice", "each member once", pointer)
+                yield Fault(
+                    f"the member {got(name).removeprefix('got the text ')} stands here twice",
+                    "each member once",
+                    pointer,
+                )
             seen.add(name)
             if _has_bad_character(name):
                 yield Fault("a member name holds a lone surrogate or a NUL", "another name", pointer)

@@ -58,12 +58,15 @@ def actor() -> Actor:
 
 def body(kind: type[T]) -> T:
     """Read the body as a document. Raises Unreadable, TooLarge or InvalidRequest."""
+    if request.query_string:
+        query()  # a call with a body has no parameters, and nothing that is sent is ignored
     g.body = request_document()
     return load(kind, g.body)
 
 
 def no_body() -> None:
     """Refuse a body where none is described, except an empty object. Raises InvalidRequest."""
+    query()
     if request.get_data(cache=False).strip() not in (b"", b"{}"):
         fault = Fault("got a body", "no body, or an empty object", "#")
         raise InvalidRequest("1 fault; nothing was recorded.", faults=(fault,))

@@ -123,11 +123,12 @@ def _start(environment: dict[str, str], settings: Settings, folder: Path) -> sub
 
 def _say_how_to_go_on(console: Console, settings: Settings, access: Access, folder: Path) -> None:
     address = f"http://{settings.host}:{settings.port}"
-    lot = f"T-{datetime.now(UTC):%H%M%S}"
+    now = datetime.now(UTC)
+    lot = f"T-{now:%H%M%S}"
     request = plant.decision_request(
         lot,
         [
-            plant.reading("1", f"2026-03-02T06:12:{second}+01:00", moisture, distance=1.4, temperature=24.0)
+            plant.reading("1", f"{now:%Y-%m-%d}T00:00:{second}Z", moisture, distance=1.4, temperature=24.0)
             | {"measurement": f"{lot}-{second}"}
             for second, moisture in (("04.120", 2.84), ("41.480", 2.88))
         ],

@@ -54,7 +54,7 @@ class BoundsSchema(StrictSchema):
     lower = Number(allow_none=True, load_default=None)
     upper = Number(allow_none=True, load_default=None)
 
-    @validates_schema
+    @validates_schema(skip_on_field_errors=False)
     def _in_order(self, data: dict[str, Any], **_: Any) -> None:
         lower, upper = data.get("lower"), data.get("upper")
         if lower is not None and upper is not None and lower >= upper:
@@ -192,7 +192,7 @@ class PlantSchema(StrictSchema):
     replicate_level = Later(load_default=None, about="Replicate disagreement is not supported yet.")
     reason = Text(2000, lines=True, required=True)
 
-    @validates_schema
+    @validates_schema(skip_on_field_errors=False)
     def _known_zone(self, data: dict[str, Any], **_: Any) -> None:
         name = data.get("time_zone")
         if name is None:

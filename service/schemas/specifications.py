@@ -54,7 +54,7 @@ class DecisionRuleSchema(StrictSchema):
     replicate_level = Later(load_only=True)
     largest_lot_risk = Later(load_only=True)
 
-    @validates_schema
+    @validates_schema(skip_on_field_errors=False)
     def _one_round(self, data: dict[str, Any], **_: Any) -> None:
         if data.get("rounds", 1) > 1:
             wrong = Wrong("not supported yet: further rounds", "1", supported=False)

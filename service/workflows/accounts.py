@@ -149,6 +149,8 @@ def _append(unit_of_work: UnitOfWork, kind: str, content: dict[str, Any]) -> Ent
 def _check_code(code: str) -> None:
     if _CODE.fullmatch(code) is None:
         raise InvalidRequest(f"{code!r} is not a code: small letters, digits and hyphens, at most 63.")
+    if code == COMMAND_LINE:
+        raise InvalidRequest(f"{code!r} names what is done by command in the record; take another code.")
 
 
 def _check_roles(roles: tuple[str, ...]) -> None:

@@ -34,6 +34,9 @@ def lapse_instant(serves_until: date, plant: Plant) -> datetime:
 
 
 def serving_end(design: str, done_on: date, plant: Plant) -> date | None:
-    """Give the last day on which a study of ``design`` serves when it does not say so itself."""
-    days = plant.serving_days.get(design)
+    """Give the last day on which a study of ``design`` serves when it does not say so itself.
+
+    A design that the plant says nothing of serves as long as by default: evidence always lapses.
+    """
+    days = plant.serving_days.get(design, DEFAULT_PLANT.serving_days.get(design))
     return None if days is None else done_on + timedelta(days=days)

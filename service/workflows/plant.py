@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Final
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
+from budgets.evidence.study_data import DESIGNS
 from service.documents import Plant
 from service.schemas import load
 from service.store.rows import StoredVersion
@@ -28,6 +29,9 @@ def _check(unit_of_work: UnitOfWork, document: Plant) -> None:
         ZoneInfo(document.time_zone)
     except (ZoneInfoNotFoundError, ValueError, OSError):
         collector.add("#/time_zone", f"got {document.time_zone!r}", "a time zone of the IANA data base")
+    for design in document.serving_days:
+        if design not in DESIGNS:
+            collector.add(f"#/serving_days/{design}", "is no study design", f"one of {', '.join(DESIGNS)}")
     collector.finish("The plant document cannot be used.")
 
 

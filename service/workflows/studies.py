@@ -167,7 +167,31 @@ def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
         unit=study.unit,
         pointer=f"#/named_sources/{index}/evidence",
     )
+    if behind.study is not None:
+        _check_source_fits(behind.study, study, named.source, f"#/named_sources/{index}/evidence/study")
     return NamedSource(source=named.source, estimate=behind.estimate)
+
+
+def _check_source_fits(theirs: Study, ours: Study, source: str, pointer: str) -> None:
+    """Refuse to take out of a validation what was found on something else.
+
+    A reference method may have been studied on another product, an analyzer only on its own calibration.
+    """
+    collector = FaultCollector()
+    if theirs.characteristic != ours.characteristic:
+        detail = f"{theirs.code} is about the characteristic {theirs.characteristic!r}"
+        collector.add(pointer, detail, f"{ours.characteristic!r}")
+    if source.startswith(("analyzer", "presentation")):
+        if theirs.product != ours.product:
+            collector.add(
+                pointer, f"{theirs.code} is about the product {theirs.product!r}", f"{ours.product!r}"
+            )
+        if theirs.calibrations != ours.calibrations:
+            detail = f"{theirs.code} was not made on the calibration of this study"
+            collector.add(
+                pointer, detail, f"a study made on {', '.join(ours.calibrations.values()) or 'none'}"
+            )
+    collector.finish("A named source belongs to something else.")
 
 
 def _check_references(unit_of_work: UnitOfWork, study: Study, collector: FaultCollector) -> None:

@@ -72,6 +72,7 @@ def test_a_revoked_token_is_listed_as_such(run: Run) -> None:
     [
         (["token", "add", "mes"], "", "Roles: none given"),
         (["token", "revoke", "nobody.1"], "", "There is no token"),
+        (["token", "add", "command-line", "--role", "line"], "", "take another code"),
         (
             ["user", "add", "kim", "--name", "Kim", "--role", "line", "--password-file", "-"],
             "short",

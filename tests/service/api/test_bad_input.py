@@ -286,6 +286,22 @@ def test_a_wrong_query_has_all_its_faults_at_once(callers: Callers) -> None:
     assert {fault["parameter"] for fault in found["errors"]} == {"limit", "outcome", "colour"}
 
 
+def test_a_call_that_records_takes_no_parameters(app: Flask, callers: Callers) -> None:
+    before = heads(app)
+    found = problem(
+        callers["mes"].post("/v1/decisions?preview=true", house.decision()), 422, "invalid-request"
+    )
+    assert [fault["parameter"] for fault in found["errors"]] == ["preview"]
+    path = "/v1/products/whole-milk-powder?force=yes"
+    changed = example(documents.Product, name="Another")
+    found = problem(callers["engineer"].put(path, changed, If_Match='"1"'), 422, "invalid-request")
+    assert [fault["parameter"] for fault in found["errors"]] == ["force"]
+    path = "/v1/budgets/wmp-moisture-nir/versions/1/submit?now=1"
+    found = problem(callers["engineer"].post(path), 422, "invalid-request")
+    assert [fault["parameter"] for fault in found["errors"]] == ["now"]
+    assert heads(app) == before
+
+
 def test_a_body_where_none_is_described_is_refused(app: Flask, callers: Callers) -> None:
     done(callers["engineer"].post("/v1/specifications", house.specification("new-one", 3.0)))
     before = heads(app)

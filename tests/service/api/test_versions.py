@@ -148,15 +148,19 @@ def test_evidence_covers_every_analyzer_of_the_budget(callers: Callers) -> None:
 def test_a_validation_says_which_calibration_it_is_for(callers: Callers) -> None:
     engineer = callers["engineer"]
     study = {**house.agreement_study(), "code": "anywhere", "calibrations": {}}
-    done(engineer.post("/v1/studies", study))
+    refused = engineer.post("/v1/studies", study)
+    assert [fault["pointer"] for fault in refused.get_json()["errors"]] == [
+        "#/named_sources/0/evidence/study"
+    ]
+    done(engineer.post("/v1/studies", {**study, "named_sources": study["named_sources"][1:]}))
     document = json.loads(
         json.dumps(example(documents.BudgetDocument, code="new-one")).replace("wmp-val-2026-01", "anywhere")
     )
     response = engineer.post("/v1/budgets", document)
     assert response.status_code == 422
-    assert {fault["detail"] for fault in response.get_json()["errors"]} == {
-        "anywhere does not say on which calibration it was made"
-    }
+    details = [fault["detail"] for fault in response.get_json()["errors"]]
+    # The bias as a quantity of the model and as a component.
+    assert details.count("anywhere does not say on which calibration it was made") == 2
 
 
 def test_a_repeated_approval_is_one_act_whatever_the_password(callers: Callers) -> None:
@@ -170,6 +174,13 @@ def test_a_repeated_approval_is_one_act_whatever_the_password(callers: Callers) 
     assert again.get_json() == first.get_json()
     other = callers["max"].post(f"{one}/approve", signed("another reason"), key=key)
     assert other.get_json()["type"] == "/problems/idempotency-key-reused"
+
+
+def test_a_plant_speaks_of_designs_that_there_are(callers: Callers) -> None:
+    days = {"repeatability": 365, "agrement": 365}
+    response = callers["engineer"].post("/v1/plant/versions", example(documents.Plant, serving_days=days))
+    assert response.status_code == 422
+    assert [fault["pointer"] for fault in response.get_json()["errors"]] == ["#/serving_days/agrement"]
 
 
 def test_a_code_is_given_once(callers: Callers) -> None:

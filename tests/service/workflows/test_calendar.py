@@ -5,6 +5,7 @@ from datetime import UTC, date, datetime, time
 
 import pytest
 
+from budgets.evidence.study_data import DESIGNS
 from service.workflows.calendar import DEFAULT_PLANT, lapse_instant, serving_end
 
 BERLIN = replace(DEFAULT_PLANT, time_zone="Europe/Berlin", lapse_hour=time(11))
@@ -31,3 +32,10 @@ def test_a_plant_that_works_on_saturdays_lapses_on_saturdays() -> None:
 def test_a_study_serves_as_long_as_the_plant_says_for_its_design() -> None:
     assert serving_end("repeatability", date(2026, 1, 14), DEFAULT_PLANT) == date(2027, 1, 14)
     assert serving_end("unheard-of", date(2026, 1, 14), DEFAULT_PLANT) is None
+
+
+def test_a_design_that_the_plant_does_not_name_serves_as_long_as_by_default() -> None:
+    plant = replace(DEFAULT_PLANT, serving_days={"repeatability": 30})
+    assert serving_end("repeatability", date(2026, 1, 14), plant) == date(2026, 2, 13)
+    for design in DESIGNS:
+        assert serving_end(design, date(2026, 1, 14), plant) is not None
