@@ -75,10 +75,11 @@ def _faults_of_quantities(components: Sequence[Component], model: MeasurementMod
             for name in component.inputs
             if name not in model.names
         ]
-        if component.matrix_terms and set(component.inputs) & set(model.given):
+        given = [name for name in component.inputs if name in model.given]
+        if given and len(given) < len(component.inputs):
             faults.append(
                 ComponentError(
-                    f"{component.code}: errors of one scan belong to quantities that are read",
+                    f"{component.code}: its quantities are all read, and averaged, or all given",
                     where=(*where, member),
                 )
             )

@@ -6,10 +6,11 @@ A bare figure ("the laboratory's error is 0.2") is refused until it says what it
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Callable
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 
-from budgets.errors import BudgetsError, ComponentError, NotSupportedError, raise_collected
+from budgets.errors import BudgetsError, ComponentError, raise_collected
 from budgets.evidence.evaluation import Estimate, Evaluation, MeanSquare, Term
 from budgets.levels import levels_from
 from budgets.propagation import coverage_factor
@@ -17,6 +18,8 @@ from budgets.propagation import coverage_factor
 # ISO 5725-6:1994, 4.1.4 (from memory): r = f s_r with f = 2.8, the rounded 1.96 sqrt(2).
 CRITICAL_RANGE_FACTOR = 2.8
 EXACT_CRITICAL_RANGE_FACTOR = 1.96 * math.sqrt(2)
+
+_SHA256 = re.compile(r"[0-9a-f]{64}", re.IGNORECASE)
 
 DISTRIBUTIONS = ("rectangular", "triangular", "trapezoidal", "arcsine", "normal")
 
@@ -37,8 +40,11 @@ _REQUIRED: dict[str, tuple[str, ...]] = {
     "half_width": ("distribution",),
 }
 MEANINGS: tuple[str, ...] = tuple(_OPTIONS)
-_LATER_MEANINGS = ("relative",)
-_ALWAYS = ("meaning", "value", "unit", "document", "title")
+_RELATIVE = "relative"
+# Of a relative figure: what the fraction is, one of the meanings above; nothing can be relative to a display.
+RELATIVE_MEANINGS: tuple[str, ...] = tuple(name for name in _OPTIONS if name != "resolution")
+FRACTIONS = {None: 1.0, "1": 1.0, "%": 0.01, "ppm": 1e-6}
+_ALWAYS = ("meaning", "value", "unit", "document", "title", "edition", "sha256")
 
 
 @dataclass(frozen=True)
@@ -48,7 +54,7 @@ class Declaration:
     Parameters
     ----------
     meaning : str or None
-        One of ``MEANINGS``.
+        One of ``MEANINGS``, or ``relative``.
     value : float
         The figure, in ``unit``.
     unit : str or None
@@ -69,8 +75,16 @@ class Declaration:
         Of a trapezoidal distribution, 0 (triangular) to 1 (rectangular).
     reliability : float or None
         Relative uncertainty of the figure itself, e.g. 0.25.
-    document, title : str
+    document, title, edition : str
         Where the figure stands.
+    sha256 : str or None
+        Of the document: 64 hexadecimal digits.
+    figure : str or None
+        Of a ``relative`` declaration: what the fraction is, one of ``RELATIVE_MEANINGS``. The value is then a
+        fraction of the measured value, its ``unit`` one of ``FRACTIONS`` (none: a plain fraction).
+    absolute : float or None
+        Of a ``relative`` declaration: the figure of the same meaning that holds besides, in the unit of the
+        characteristic: ``u^2 = s0^2 + (s1 x)^2``.
     """
 
     meaning: str | None
@@ -88,6 +102,10 @@ class Declaration:
     reliability: float | None = None
     document: str = ""
     title: str = ""
+    edition: str = ""
+    sha256: str | None = None
+    figure: str | None = None
+    absolute: float | None = None
 
 
 def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) -> Evaluation:
@@ -111,14 +129,14 @@ def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) ->
     ------
     ComponentError
         If the meaning is missing or unknown, an option does not belong to it, is missing or out of range.
-    NotSupportedError
-        For a relative figure.
     UnitsError
         If the stated unit does not convert.
 
     Notes
     -----
-    Source: JCGM 100:2008, 4.3.3 to 4.3.9 and G.4.2, eq. (G.3); ISO 5725-6:1994, 4.1.4 (from memory).
+    Source: JCGM 100:2008, 4.3.3 to 4.3.9 and G.4.2, eq. (G.3); ISO 5725-6:1994, 4.1.4 (from memory). A figure
+    relative to the value gives an estimate with ``relative_terms``: its uncertainty is evaluated where it is
+    used, ``u^2 = s0^2 + (s1 x)^2`` (common practice, no source).
 
     Examples
     --------
@@ -127,6 +145,8 @@ def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) ->
     80.0
     """
     meaning = _known_meaning(declaration)
+    if meaning == _RELATIVE:
+        return _relative(declaration, code)
     raise_collected(_faults_of_presence(declaration, meaning) or _faults_of_values(declaration))
     scale = 1.0
     if unit is not None and declaration.unit is not None:
@@ -144,6 +164,10 @@ def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) ->
         contains = {"repeatability_limit": ("repeatability", "resolution"), "resolution": ("resolution",)}
         first = "reference" if meaning not in contains else "reading"
         estimates = (_estimate(name, (term,), first, contains.get(meaning, ())),)
+    return _evaluation(declaration, estimates)
+
+
+def _evaluation(declaration: Declaration, estimates: tuple[Estimate, ...]) -> Evaluation:
     return Evaluation(
         design="declaration",
         estimates=estimates,
@@ -156,18 +180,71 @@ def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) ->
     )
 
 
+def _relative(declaration: Declaration, code: str) -> Evaluation:
+    """Evaluate a fraction of the value as the figure that it is a fraction of.
+
+    Raises
+    ------
+    ComponentError
+        As `evaluate`, and if it does not say what figure the fraction is.
+    """
+    figure = declaration.figure
+    faults: list[BudgetsError] = []
+    if figure not in RELATIVE_MEANINGS:
+        faults.append(
+            ComponentError(
+                f"what is {declaration.value:g} of the value? Say one of: {', '.join(RELATIVE_MEANINGS)}",
+                where=("figure",),
+            )
+        )
+    if declaration.unit not in FRACTIONS:
+        faults.append(
+            ComponentError(
+                f"a relative figure is a fraction, in % or in ppm, not in {declaration.unit!r}",
+                where=("unit",),
+            )
+        )
+    raise_collected(faults)
+    plain = replace(declaration, meaning=figure, figure=None, absolute=None, unit=None)
+    fraction = FRACTIONS[declaration.unit]
+    limit = declaration.repeatability_limit
+    scaled = replace(
+        plain,
+        value=declaration.value * fraction,
+        repeatability_limit=None if limit is None else limit * fraction,
+    )
+    relative = evaluate(scaled, code=f"{code}/relative").estimates
+    if declaration.absolute is None:
+        return _evaluation(
+            declaration, tuple(replace(item, terms=(), relative_terms=item.terms) for item in relative)
+        )
+    if limit is not None:
+        raise ComponentError(
+            "a reproducibility limit with an absolute part: give the repeatability limit as a declaration of "
+            "its own",
+            where=("absolute",),
+        )
+    try:
+        absolute = evaluate(replace(plain, value=declaration.absolute), code=code).estimates
+    except ComponentError as error:
+        # The other members were seen to be right, so it is this figure.
+        raise ComponentError(f"absolute: {error.message}", where=("absolute",)) from error
+    both = zip(absolute, relative, strict=True)
+    return _evaluation(declaration, tuple(replace(a, relative_terms=r.terms) for a, r in both))
+
+
 def _known_meaning(declaration: Declaration) -> str:
     meaning = declaration.meaning
-    if meaning in _LATER_MEANINGS:
-        raise NotSupportedError("a figure relative to the value", where=("meaning",))
     if meaning is None:
         raise ComponentError(
-            f"what does the figure {declaration.value:g} mean? Say one of: {', '.join(MEANINGS)}",
+            f"what does the figure {declaration.value:g} mean? Say one of: "
+            f"{', '.join((*MEANINGS, _RELATIVE))}",
             where=("meaning",),
         )
-    if meaning not in _OPTIONS:
+    if meaning not in (*MEANINGS, _RELATIVE):
         raise ComponentError(
-            f"{meaning!r} is no meaning of a figure; say one of: {', '.join(MEANINGS)}", where=("meaning",)
+            f"{meaning!r} is no meaning of a figure; say one of: {', '.join((*MEANINGS, _RELATIVE))}",
+            where=("meaning",),
         )
     return meaning
 
@@ -220,6 +297,8 @@ def _faults_of_values(declaration: Declaration) -> list[BudgetsError]:
     check("repeatability_limit", lambda v: v > 0, "above 0")
     check("top_to_base_ratio", lambda v: 0 <= v <= 1, "from 0 to 1")
     check("reliability", lambda v: 0 < v < 1, "between 0 and 1")
+    if declaration.sha256 is not None and not _SHA256.fullmatch(declaration.sha256):
+        faults.append(ComponentError("sha256 must be 64 hexadecimal digits", where=("sha256",)))
     if isinstance(declaration.factor, str):
         if declaration.factor != "exact":
             faults.append(ComponentError("factor must be a number or 'exact'", where=("factor",)))

@@ -95,7 +95,9 @@ def projected(term: MatrixTerm, coefficients: Sequence[float]) -> Term:
     Returns
     -------
     Term
-        ``c' S c`` with the degrees of freedom of S: quantities evaluated jointly make one term.
+        ``c' S c`` with the degrees of freedom of S: quantities evaluated jointly make one term. It is the
+        coefficient of a mean square of 1, so that the same matrix met with other coefficients counts as the
+        same mean square; this is exact where they are proportional and cautious elsewhere.
 
     Notes
     -----
@@ -112,7 +114,7 @@ def projected(term: MatrixTerm, coefficients: Sequence[float]) -> Term:
     c = np.asarray(coefficients)
     # A rounding error may leave a tiny negative number where the exact one is zero.
     value = max(0.0, float(c @ array @ c))
-    return Term(term.coefficient, MeanSquare(square.code, value, square.degrees_of_freedom))
+    return Term(term.coefficient * value, MeanSquare(square.code, 1.0, square.degrees_of_freedom))
 
 
 def matrix_term_document(term: MatrixTerm) -> dict[str, Any]:

@@ -40,12 +40,21 @@ class Layout:
         Columns of numbers; the others are labels.
     nullable : tuple of str
         Columns of numbers in which a cell may be empty.
+    others_are_numbers : bool
+        Whether any other column is one of numbers, named by the user, in which a cell may be empty.
     """
 
     required: tuple[str, ...]
     optional: tuple[str, ...]
     numbers: tuple[str, ...]
     nullable: tuple[str, ...] = ()
+    others_are_numbers: bool = False
+
+    def is_number(self, column: str) -> bool:
+        """Say whether a column holds numbers."""
+        return column in self.numbers or (
+            self.others_are_numbers and column not in self.required + self.optional
+        )
 
 
 @dataclass(frozen=True)
@@ -59,10 +68,13 @@ class NamedSource:
         ``subsampling``.
     estimate : Estimate
         Variance of one draw.
+    quantity : str
+        In the design ``covariance``: the quantity whose error it is, unless the estimate is of all of them.
     """
 
     source: str
     estimate: Estimate
+    quantity: str = ""
 
 
 @dataclass(frozen=True)
@@ -125,8 +137,8 @@ def read_columns(
     if not chosen:
         raise EvidenceError("the study has no data", where=("rows",))
     faults: list[BudgetsError] = []
-    labels: dict[str, list[str]] = {name: [] for name in data.columns if name not in layout.numbers}
-    numbers: dict[str, list[float | None]] = {name: [] for name in data.columns if name in layout.numbers}
+    labels: dict[str, list[str]] = {name: [] for name in data.columns if not layout.is_number(name)}
+    numbers: dict[str, list[float | None]] = {name: [] for name in data.columns if layout.is_number(name)}
     for i in chosen:
         row = data.rows[i]
         if len(row) != len(data.columns):
@@ -159,7 +171,7 @@ def _faults_of_columns(columns: Sequence[str], layout: Layout) -> list[BudgetsEr
             f"the column {name!r} is unknown to this design; it expects {expected}", where=("columns", i)
         )
         for i, name in enumerate(columns)
-        if name not in known
+        if name not in known and not layout.is_number(name)
     ]
     faults += [
         EvidenceError(f"the column {name!r} occurs twice", where=("columns", i))
@@ -186,7 +198,7 @@ def _label(cell: object, name: str) -> str:
 
 def _number(cell: object, name: str, layout: Layout) -> float | None:
     if cell is None:
-        if name in layout.nullable:
+        if name in layout.nullable or layout.others_are_numbers:
             return None
         raise EvidenceError(f"{name}: the cell is empty; expected a number")
     if isinstance(cell, Mapping):

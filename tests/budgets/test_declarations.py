@@ -4,8 +4,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from budgets.components import Component
 from budgets.declarations import MEANINGS, Declaration, evaluate
-from budgets.errors import ComponentError, NotSupportedError, UnitsError
+from budgets.errors import ComponentError, UnitsError
+from budgets.evidence.evaluation import variance
 from budgets.propagation import expanded_uncertainty
 
 
@@ -107,9 +109,77 @@ def test_a_bare_figure_is_refused_with_all_meanings():
         stated("error", 0.2)
 
 
-def test_a_relative_figure_is_not_supported_yet():
-    with pytest.raises(NotSupportedError):
-        stated("relative", 0.02)
+@pytest.mark.parametrize(
+    ("unit", "value", "options", "fraction"),
+    [
+        (None, 0.02, {"figure": "standard_deviation"}, 0.02),
+        ("%", 2.0, {"figure": "expanded", "coverage_factor": 2.0}, 0.01),
+        ("ppm", 300.0, {"figure": "half_width", "distribution": "rectangular"}, 300e-6 / math.sqrt(3)),
+        ("1", 0.056, {"figure": "repeatability_limit"}, 0.02),
+        ("%", 1.0, {"figure": "expanded_with_probability", "coverage_probability": 0.95}, 0.01 / 1.959964),
+    ],
+)
+def test_a_relative_figure_is_a_fraction_of_the_value(unit, value, options, fraction):
+    evaluation = evaluate(Declaration("relative", value, unit=unit, **options), code="declared", unit="mg/kg")
+    estimate = evaluation.estimate()
+    assert estimate.terms == ()
+    (term,) = estimate.relative_terms
+    assert math.sqrt(term.mean_square.value) == pytest.approx(fraction, rel=1e-6)
+    assert evaluation.to_document()["diagnostics"]["meaning"] == "relative"
+    component = Component.from_estimate("declared", "moisture", None, estimate, "B")
+    assert component.relative_terms == estimate.relative_terms
+
+
+def test_a_relative_figure_with_an_absolute_part():
+    stated = Declaration("relative", 2.0, unit="%", figure="expanded", coverage_factor=2.0, absolute=0.1)
+    estimate = evaluate(stated, code="declared").estimate()
+    assert estimate.standard_uncertainty == pytest.approx(0.05)
+    assert math.sqrt(estimate.relative_terms[0].mean_square.value) == pytest.approx(0.01)
+    codes = {estimate.terms[0].mean_square.code, estimate.relative_terms[0].mean_square.code}
+    assert codes == {"declared/standard_uncertainty", "declared/relative/standard_uncertainty"}
+
+
+def test_relative_limits_of_two_laboratories():
+    stated = Declaration("relative", 8.4, unit="%", figure="reproducibility_limit", repeatability_limit=5.6)
+    evaluation = evaluate(stated, code="declared")
+    within = evaluation.estimate("repeatability").relative_terms
+    assert math.sqrt(variance(within)) == pytest.approx(0.02)
+    between = variance(evaluation.estimate("between_laboratories").relative_terms)
+    assert math.sqrt(between) == pytest.approx(math.sqrt(0.03**2 - 0.02**2))
+
+
+@pytest.mark.parametrize(
+    ("options", "where"),
+    [
+        ({}, ("figure",)),
+        ({"figure": "resolution"}, ("figure",)),
+        ({"figure": "relative"}, ("figure",)),
+        ({"figure": "standard_deviation", "unit": "g/kg"}, ("unit",)),
+        ({"figure": "standard_deviation", "coverage_factor": 2.0}, ("coverage_factor",)),
+        ({"figure": "expanded"}, ("coverage_factor",)),
+        ({"figure": "standard_deviation", "absolute": -1.0}, ("absolute",)),
+        ({"figure": "reproducibility_limit", "repeatability_limit": 0.01, "absolute": 1.0}, ("absolute",)),
+    ],
+)
+def test_a_relative_figure_says_what_it_is_a_fraction_of(options, where):
+    with pytest.raises(ComponentError) as caught:
+        evaluate(Declaration("relative", 0.02, **options), code="declared")
+    assert caught.value.where == where
+
+
+@pytest.mark.parametrize("option", [{"figure": "expanded"}, {"absolute": 1.0}])
+def test_what_belongs_to_a_relative_figure_belongs_to_no_other(option):
+    with pytest.raises(ComponentError, match="does not belong to resolution"):
+        evaluate(Declaration("resolution", 0.02, **option), code="declared")
+
+
+def test_a_document_is_named_by_title_edition_and_hash():
+    named = {"title": "ring test 12", "edition": "2025", "sha256": "0a" * 32}
+    diagnostics = evaluate(Declaration("resolution", 0.02, **named), code="declared").diagnostics
+    assert named.items() <= diagnostics.items()
+    with pytest.raises(ComponentError) as caught:
+        evaluate(Declaration("resolution", 0.02, sha256="0a"), code="declared")
+    assert caught.value.where == ("sha256",)
 
 
 @pytest.mark.parametrize(

@@ -275,8 +275,11 @@ ORDERS = st.permutations(range(4))
 def test_order_scale_and_empty_components_change_nothing(order, scale, x):
     """Laws: the order of the components; the unit; a component that weighs nothing."""
     components = [
-        line("a", "x", 0.1, 5), line("b", "x", 0.2, 9, "reading"), line("c", "y", 0.1, 7), line("d", "y", 0.3),
-    ]  # fmt: skip
+        line("a", "x", 0.1, 5),
+        line("b", "x", 0.2, 9, "reading"),
+        line("c", "y", 0.1, 7),
+        line("d", "y", 0.3),
+    ]
     at = {"x": x, "y": 1.5}
     first = combined(a_budget("x*y", components), Counts((2,)), estimates=at)
     moved = combined(a_budget("x*y", [components[i] for i in order]), Counts((2,)), estimates=at)

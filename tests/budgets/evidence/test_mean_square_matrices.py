@@ -38,7 +38,7 @@ def test_terms_add_up_and_project():
     assert covariance_of(terms).tolist() == [[0.04, 0.01], [0.01, 0.08]]
     # c'Sc, by hand
     term = projected(terms[0], (1.0, -2.0))
-    assert term.mean_square.value == pytest.approx(0.04 - 0.04 + 0.36)
+    assert term.coefficient == pytest.approx(0.04 - 0.04 + 0.36)
     single = projected(terms[1], (1.0, -2.0))
     assert single == Term(-2.0, MeanSquare("r/fat", 0.02, math.inf))
     with pytest.raises(EvidenceError, match="different quantities"):

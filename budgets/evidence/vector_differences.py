@@ -1,0 +1,143 @@
+"""Differences of scans from reference values, several quantities at once."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+
+from budgets.errors import BudgetsError, EvidenceError, raise_collected
+from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning
+from budgets.evidence.mean_square_matrices import MatrixTerm
+from budgets.evidence.study_tables import Study
+from budgets.evidence.sums import grouped
+from budgets.evidence.vector_remainder import remainder
+from budgets.evidence.vectors import (
+    Array,
+    centred,
+    joint_estimate,
+    matrix_figures,
+    scatter_matrix,
+    warnings_of_freedom,
+)
+
+REFERENCE = "_reference"
+_WHOLE = (
+    "repeatability",
+    "presentation",
+    "resolution",
+    "reference_repeatability",
+    "subsampling",
+    "remainder",
+)
+
+
+def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
+    """Return the covariance of differences from reference values.
+
+    Parameters
+    ----------
+    study : Study
+    quantities : tuple of str
+
+    Returns
+    -------
+    Evaluation
+
+    Raises
+    ------
+    EvidenceError
+        If the data do not serve; see `budgets.evidence.covariance`.
+    """
+    if study.options.get("independent") is not True:
+        raise EvidenceError(
+            "pairs must be independent of the calibration (independent: true)",
+            where=("options", "independent"),
+        )
+    missing = [name for name in quantities if f"{name}{REFERENCE}" not in study.numbers]
+    alone = [
+        name
+        for name in study.numbers
+        if name.endswith(REFERENCE) and name.removesuffix(REFERENCE) not in quantities
+    ]
+    if missing or alone:
+        raise EvidenceError(
+            f"a quantity and its reference values go together: {', '.join(missing + alone)} stands alone",
+            where=("columns",),
+        )
+    values, readings, references = _pair_means(study, quantities)
+    n = len(values)
+    scatter = centred(values)
+    matrix = scatter_matrix(f"{study.code}/prediction_covariance", quantities, scatter.T @ scatter, n - 1)
+    whole = joint_estimate(
+        "prediction_covariance",
+        [MatrixTerm(1.0, matrix)],
+        "lot",
+        contains=_WHOLE,
+        reading_weight=float(readings.mean()),
+    )
+    # JCGM 100, 5.2.3, eq. (17): the covariance of means
+    bias = joint_estimate("bias_covariance", [MatrixTerm(1 / n, matrix)], "calibration")
+    left, figures = remainder(study, matrix, float(readings.mean()), references)
+    return Evaluation(
+        design="covariance",
+        estimates=(whole, bias, *left),
+        used=len(study.labels["pair"]),
+        diagnostics={
+            "pairs": n,
+            "biases": (values[0] + (values - values[0]).mean(axis=0)).tolist(),
+            **matrix_figures("prediction", matrix),
+            **figures,
+        },
+        warnings=(*warnings_of_freedom(n - 1, len(quantities)), *_warnings_of_remainder(left)),
+    )
+
+
+def _pair_means(study: Study, quantities: tuple[str, ...]) -> tuple[Array, Array, dict[str, float]]:
+    """Return differences of means, 1/readings of every pair, and the mean of 1/references by quantity."""
+    labels = study.labels["pair"]
+    faults: list[BudgetsError] = []
+    differences: list[list[float]] = []
+    readings: list[float] = []
+    reciprocals: dict[str, list[float]] = {name: [] for name in quantities}
+    for label, rows in grouped(labels, range(len(labels))).items():
+        where = ("rows", study.rows[int(rows[0])])
+        row: list[float] = []
+        counts: set[int] = set()
+        for name in quantities:
+            own = _given(study, name, rows)
+            reference = _given(study, f"{name}{REFERENCE}", rows)
+            if not own or not reference:
+                faults.append(EvidenceError(f"pair {label} has no {name} on one side", where=where))
+                continue
+            counts.add(len(own))
+            reciprocals[name].append(1 / len(reference))
+            row.append(math.fsum(own) / len(own) - math.fsum(reference) / len(reference))
+        if len(counts) > 1:
+            faults.append(EvidenceError(f"pair {label}: a scan gives every quantity", where=where))
+        differences.append(row)
+        readings.append(1 / max(counts, default=1))
+    raise_collected(faults)
+    means = {name: math.fsum(values) / len(values) for name, values in reciprocals.items()}
+    return np.array(differences), np.array(readings), means
+
+
+def _given(study: Study, column: str, rows: Sequence[float]) -> list[float]:
+    return [value for row in rows if (value := study.numbers[column][int(row)]) is not None]
+
+
+def _warnings_of_remainder(left: Sequence[Estimate]) -> tuple[EvaluationWarning, ...]:
+    if not left:
+        detail = (
+            "no remainder is offered without the repeatability of the analyzer and every reference method: "
+            "the covariance of prediction is used whole, and more readings do not make it smaller"
+        )
+        return (EvaluationWarning("remainder-not-offered", detail),)
+    if left[0].usable:
+        return ()
+    detail = (
+        "the remainder is no covariance that is significantly above zero in every quantity: it is shown but "
+        "cannot be used; the covariance of prediction is used whole"
+    )
+    return (EvaluationWarning("remainder-not-significant", detail),)
