@@ -42,7 +42,7 @@ def run(*, check: bool, port: int | None) -> int:
     folder = Path(tempfile.mkdtemp(prefix="shoalmark-demo-"))
     server: subprocess.Popen[bytes] | None = None
     try:
-        environment = _environment(folder, port or _free_port())
+        environment = _environment(folder, _free_port(port))
         settings = load_settings(environment)
         console.print("Demo plant, invented: a milk drying plant. Not for real release decisions.\n")
         access = open_accounts(settings)
@@ -154,13 +154,15 @@ def _say_how_to_go_on(console: Console, settings: Settings, access: Access, fold
     say()
 
 
-def _free_port() -> int:
-    """Give the usual port when nobody has it, else any."""
-    for port in (USUAL_PORT, 0):
+def _free_port(wanted: int | None) -> int:
+    """Give the port that is wanted, else the usual one when nobody has it, else any."""
+    for port in (USUAL_PORT, 0) if wanted is None else (wanted,):
         with socket.socket() as probe, suppress(OSError):
             probe.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
             probe.bind((HOST, port))
             return int(probe.getsockname()[1])
+    if wanted is not None:
+        raise SystemExit(f"The port {wanted} of the loopback address is in use; choose another one.")
     raise SystemExit("There is no free port on the loopback address.")
 
 

@@ -364,6 +364,8 @@ class Later(_Stating, fields.Raw):
         form: dict[str, Any] = {"type": "null"} if empty is None else {"type": "array", "maxItems": 0}
         super().__init__(schema=form, allow_none=empty is None, **kwargs)
         self._empty = empty
+        if empty is not None:
+            self.expected = "an empty list, or no such member"
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
         if self._empty is not None and value == self._empty:

@@ -223,6 +223,13 @@ def _check(unit_of_work: UnitOfWork, document: BudgetDocument) -> None:
         collector.add(
             "#/unit", f"got {document.unit!r}", f"{characteristic.document['unit']!r}, the unit there"
         )
+    for name, quantity in document.model.quantities.items():
+        if quantity.unit != document.unit:
+            collector.add(
+                f"#/model/quantities/{name}/unit",
+                f"got {quantity.unit!r}",
+                f"{document.unit!r}, as the budget",
+            )
     for analyzer, code in document.calibrations.items():
         _check_calibration(unit_of_work, document, analyzer, code, collector)
     collector.finish("The budget refers to what does not exist or does not fit.")

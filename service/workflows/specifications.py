@@ -69,6 +69,13 @@ def _check_requirement(
     if len(collector.faults) == before:
         collector.attempt(pointer, tolerance, requirement, characteristic)
     collector.attempt(f"{pointer}/decision_rule", decision_rule, requirement.decision_rule)
+    one_sided = None in limits.values()
+    if one_sided and requirement.decision_rule.least_capability_index is not None:
+        collector.add(
+            f"{pointer}/decision_rule/least_capability_index",
+            "a capability index needs two tolerance limits",
+            "largest_standard_uncertainty, for one limit",
+        )
 
 
 def _check_unit(

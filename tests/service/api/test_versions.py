@@ -145,6 +145,27 @@ def test_evidence_covers_every_analyzer_of_the_budget(callers: Callers) -> None:
     assert faults["#/components/0/evidence/study"] == "wmp-rep-2026-01 was made on nir-1"
 
 
+@pytest.mark.parametrize(("quantity", "unit"), [("moisture", "kg"), ("bias", "g/kg")])
+def test_quantities_of_the_model_have_the_unit_of_the_budget(
+    callers: Callers, quantity: str, unit: str
+) -> None:
+    document = example(documents.BudgetDocument, code="new-one")
+    document["model"]["quantities"][quantity]["unit"] = unit
+    response = callers["engineer"].post("/v1/budgets", document)
+    assert response.status_code == 422
+    pointers = [fault["pointer"] for fault in response.get_json()["errors"]]
+    assert pointers == [f"#/model/quantities/{quantity}/unit"]
+
+
+def test_a_capability_index_is_no_condition_for_one_limit(callers: Callers) -> None:
+    document = house.specification("new-one", 3.1)
+    document["requires"][0]["decision_rule"] = {"kind": "simple", "least_capability_index": 2}
+    response = callers["engineer"].post("/v1/specifications", document)
+    assert response.status_code == 422
+    pointers = [fault["pointer"] for fault in response.get_json()["errors"]]
+    assert pointers == ["#/requires/0/decision_rule/least_capability_index"]
+
+
 def test_a_validation_says_which_calibration_it_is_for(callers: Callers) -> None:
     engineer = callers["engineer"]
     study = {**house.agreement_study(), "code": "anywhere", "calibrations": {}}

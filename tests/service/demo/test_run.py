@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import re
+import socket
 import subprocess
 import sys
 from pathlib import Path
@@ -29,4 +30,22 @@ def test_the_check_walks_the_job_and_ends_well(tmp_path: Path) -> None:
     assert int(outcomes["release"]) > int(outcomes["hold"]) > int(outcomes["reject"]) > 0
     assert "The record is whole." in result.stdout
     # Nothing of it is left: no database, no server.
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_port_in_use_is_said_before_anything_is_built(tmp_path: Path) -> None:
+    with socket.socket() as taken:
+        taken.bind(("127.0.0.1", 0))
+        taken.listen()
+        port = taken.getsockname()[1]
+        result = subprocess.run(
+            [sys.executable, "-c", "from service.cli import main; main()", "demo", "--port", str(port)],
+            cwd=ROOT,
+            env={**os.environ, "TMPDIR": str(tmp_path)},
+            capture_output=True,
+            text=True,
+            timeout=60,
+        )
+    assert result.returncode == 1
+    assert f"The port {port} of the loopback address is in use" in result.stderr
     assert list(tmp_path.iterdir()) == []
