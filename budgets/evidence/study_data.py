@@ -11,7 +11,7 @@ from budgets.evidence import agreement, covariance, duplicates, repeatability
 from budgets.evidence.evaluation import Evaluation, SetAside
 from budgets.evidence.study_tables import Cell, Layout, NamedSource, Study, StudyData, read_columns
 
-__all__ = ["DESIGNS", "Cell", "NamedSource", "StudyData", "StudyDesign", "evaluate_study"]
+__all__ = ["DESIGNS", "VECTOR_DESIGNS", "Cell", "NamedSource", "StudyData", "StudyDesign", "evaluate_study"]
 
 
 @dataclass(frozen=True)
@@ -33,13 +33,12 @@ DESIGNS: dict[str, StudyDesign] = {
         StudyDesign(
             "agreement", agreement.LAYOUT, agreement.evaluate, options=agreement.OPTIONS, takes_sources=True
         ),
-        StudyDesign(
-            "covariance",
-            covariance.LAYOUT,
-            covariance.evaluate,
-            options=covariance.OPTIONS,
-            takes_sources=True,
-        ),
+    )
+}
+# Designs whose table holds several characteristics at once.
+VECTOR_DESIGNS: dict[str, StudyDesign] = {
+    "covariance": StudyDesign(
+        "covariance", covariance.LAYOUT, covariance.evaluate, options=covariance.OPTIONS, takes_sources=True
     )
 }
 _LATER_DESIGNS = (
@@ -67,7 +66,7 @@ def evaluate_study(
     Parameters
     ----------
     design : str
-        One of ``DESIGNS``.
+        One of ``DESIGNS`` or ``VECTOR_DESIGNS``.
     data : StudyData
     study : str
         Code of the study, the prefix of the codes of its mean squares.
@@ -94,11 +93,10 @@ def evaluate_study(
     """
     if design in _LATER_DESIGNS:
         raise NotSupportedError(f"the study design {design}", where=("design",))
-    if design not in DESIGNS:
-        raise EvidenceError(
-            f"{design!r} is no study design; there are {', '.join(DESIGNS)}", where=("design",)
-        )
-    chosen = DESIGNS[design]
+    known = {**DESIGNS, **VECTOR_DESIGNS}
+    if design not in known:
+        raise EvidenceError(f"{design!r} is no study design; there are {', '.join(known)}", where=("design",))
+    chosen = known[design]
     given = dict(options or {})
     raise_collected([*_faults_of_requests(chosen, given, named_sources), *_faults_of_rows(set_aside, data)])
 

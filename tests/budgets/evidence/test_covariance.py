@@ -148,9 +148,9 @@ def test_the_chain_from_scans_to_a_derived_characteristic():
 def test_scalars_can_stand_for_the_covariance_of_the_analyzer():
     sources = [
         NamedSource(source, scalar(f"{source}-{name}", u), name)
-        for source, u in (("analyzer_repeatability", 0.1), ("reference_repeatability", 0.03), ("presentation", 0.02))
+        for source, u in KNOWN.items()
         for name in CHANNELS
-    ]  # fmt: skip
+    ]
     evaluation = evaluated(pairs(60), options={"independent": True}, named_sources=sources)
     left = evaluation.estimate("remainder_covariance")
     assert left.taken_out == ("repeatability", "presentation")
@@ -191,7 +191,8 @@ def test_without_sources_the_whole_is_all_there_is():
     assert [w.code for w in evaluation.warnings] == ["remainder-not-offered"]
 
 
-LABORATORIES = ("reproducibility",)
+KNOWN = {"analyzer_repeatability": 0.1, "reference_repeatability": 0.03, "presentation": 0.02}
+RING_TEST = scalar("ring", 0.1, contains=("reproducibility",))
 REPLICATES = (("a", 1.0, 2.0), ("a", 1.5, 2.5), ("b", 1.0, 1.0))
 
 
@@ -241,7 +242,7 @@ def test_data_that_do_not_serve_are_refused(columns, rows, options, where):
         (lambda s: [NamedSource("presentation", scalar("r", 0.1))], EvidenceError),
         (lambda s: [NamedSource("presentation", scalar("r", 0.1, usable=False), "fat")], EvidenceError),
         (lambda s: [NamedSource("presentation", scalar("r", 0.0), "fat")], EvidenceError),
-        (lambda s: [NamedSource("presentation", scalar("r", 0.1, contains=LABORATORIES), "fat")], EvidenceError),
+        (lambda s: [NamedSource("presentation", RING_TEST, "fat")], EvidenceError),
         (lambda s: [s[0], s[0]], EvidenceError),
     ],
 )  # fmt: skip
