@@ -218,7 +218,7 @@ def combined(
     are taken; the terms of second order add to the variance and leave the degrees of freedom as they are.
     """
     law = compiled(budget, counts)
-    full = law.model.estimates(_estimates_for(budget, estimates))
+    full = law.model.estimates(estimates_for(budget, estimates))
     value, coefficients = law.model.linearised(full)
     total, terms, parts = law.combination(coefficients, full)
     beyond = second_order_terms(law, budget.components, full) if second_order else None
@@ -239,7 +239,23 @@ def combined(
     )
 
 
-def _estimates_for(budget: Budget, estimates: Mapping[str, float] | None) -> Mapping[str, float]:
+def estimates_for(budget: Budget, estimates: Mapping[str, float] | None) -> Mapping[str, float]:
+    """Return estimates under the names that `compiled` knows.
+
+    Parameters
+    ----------
+    budget : Budget
+    estimates : mapping of str to float or None
+
+    Returns
+    -------
+    mapping of str to float
+
+    Raises
+    ------
+    ModelError
+        If the budget needs estimates and none are given, or others than it has.
+    """
     if budget.model is not None:
         return estimates or {}
     if estimates is None:
