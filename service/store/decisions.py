@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import asdict
 from typing import Any
 
-from sqlalchemy import Row, and_, bindparam, select, tuple_
+from sqlalchemy import Row, and_, bindparam, func, select, tuple_
 
 from service.ledger import Entry
 from service.store.record import entry_of
@@ -153,7 +153,7 @@ class Readings:
         self._session = session
         self._added: dict[ReadingIdentity, StoredReading] = {}
 
-    def find(self, identities: Iterable[ReadingIdentity]) -> list[StoredReading]:
+    def find(self, identities: Iterable[ReadingIdentity]) -> Sequence[StoredReading]:
         """Return those of the identities that were used before."""
         wanted = list(dict.fromkeys(identities))
         names = ("analyzer", "identity", "sample")
@@ -161,6 +161,21 @@ class Readings:
         rows = self._session.rows_among(readings, names, earlier)
         found = [self._added[each] for each in wanted if each in self._added]
         return found + [StoredReading(**row._mapping) for row in rows]
+
+    def count(self) -> int:
+        """Return how many readings are marked as used."""
+        row = self._session.row(select(func.count().label("number")).select_from(readings), readings)
+        assert row is not None
+        return int(row.number)
+
+    def list(self, *, after: ReadingIdentity | None = None, limit: int = 1000) -> list[StoredReading]:
+        """Return readings in the order of their identities, beginning after one of them."""
+        order = (readings.c.analyzer, readings.c.identity, readings.c.sample)
+        query = select(readings)
+        if after is not None:
+            query = query.where(tuple_(*order) > after)
+        rows = self._session.rows(query.order_by(*order).limit(limit), readings)
+        return [StoredReading(**row._mapping) for row in rows]
 
     def add(self, identities: Iterable[ReadingIdentity], entry: Entry) -> None:
         """Mark readings as used by an entry."""

@@ -12,6 +12,7 @@ from typing import Any
 
 from service.ledger import Entry, Finding
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.judged_readings import JudgedReadings
 from service.workflows.rules import RuleKey
 
 Key = tuple[Any, ...]
@@ -40,8 +41,25 @@ class Expected:
         elif entry.kind == "study-recorded":
             code = content["study"]["code"]
             self.rows["study", code] = ((content["study"], content["evaluation"]), where)
+        elif entry.kind in ("person-added", "token-added", "token-revoked"):
+            self._add_account(entry, where)
         elif act in VERSION_ACTS:
             self._add_version(subject, content, where)
+
+    def _add_account(self, entry: Entry, where: Where) -> None:
+        """Take up a person or a token; passwords and secrets are in no entry."""
+        content = entry.content
+        code = content["code"]
+        if entry.kind == "person-added":
+            # No act disables or renames a person, or gives other roles.
+            self.rows["person", code] = ((content["name"], tuple(content["roles"]), None), where)
+        elif entry.kind == "token-added":
+            person = content["principal"] if content["person"] else None
+            row = (content["principal"], person, tuple(content["roles"]), entry.recorded_at, None)
+            self.rows["token", code] = (row, where)
+        else:
+            (*rest, _), _ = self.rows["token", code]
+            self.rows["token", code] = ((*rest, entry.recorded_at), where)
 
     def _add_version(self, kind: str, content: dict[str, Any], where: Where) -> None:
         version = content["version"]
@@ -62,12 +80,18 @@ class Expected:
 def finding_of(unit_of_work: UnitOfWork) -> Finding | None:
     """Compare all projections with the record and give the first difference."""
     expected = Expected()
+    judged = JudgedReadings(unit_of_work)
     for chain in unit_of_work.ledger.chain_names():
         for page in _pages(unit_of_work, chain):
             for entry in page:
                 expected.add(entry)
-            if (finding := _decision_finding(unit_of_work, chain, page)) is not None:
+            finding = _decision_finding(unit_of_work, chain, page) or judged.finding_among(page)
+            if finding is not None:
                 return finding
+    return judged.finding_beyond() or _row_finding(unit_of_work, expected)
+
+
+def _row_finding(unit_of_work: UnitOfWork, expected: Expected) -> Finding | None:
     found = dict(_rows(unit_of_work))
     for key, (row, (chain, sequence)) in expected.rows.items():
         if key not in found:
@@ -113,6 +137,11 @@ def _rows(unit_of_work: UnitOfWork) -> Iterator[tuple[Key, Any]]:
             )
     for rule in unit_of_work.rules.all():
         yield ("rule", *RuleKey.of(rule).to_document().values()), rule.numbers
+    for person in unit_of_work.people.list():
+        yield ("person", person.code), (person.name, person.roles, person.disabled_at)
+    for token in unit_of_work.tokens.list():
+        row = (token.principal, token.person, token.roles, token.created_at, token.revoked_at)
+        yield ("token", token.code), row
 
 
 def _name(key: Key) -> str:

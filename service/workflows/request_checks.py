@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from datetime import UTC, datetime, timedelta
-from typing import Final
+from typing import Any, Final
 
 from budgets.errors import BudgetsError
 from budgets.units import conversion
@@ -21,8 +22,18 @@ ReadingIdentity = tuple[str, str, str]
 
 def reading_identity(reading: Reading) -> ReadingIdentity:
     """Name a reading so that it counts once: analyzer, measurement or instant to the millisecond, sample."""
-    moment = reading.taken_at.astimezone(UTC).isoformat(timespec="milliseconds")
-    return reading.analyzer, reading.measurement or moment, reading.sample
+    return _identity(reading.analyzer, reading.measurement, reading.taken_at, reading.sample)
+
+
+def recorded_identity(reading: Mapping[str, Any]) -> ReadingIdentity:
+    """Name a reading as it stands in an entry: the same name as reading_identity gave it."""
+    taken_at = datetime.fromisoformat(reading["taken_at"])
+    return _identity(reading["analyzer"], reading.get("measurement"), taken_at, reading["sample"])
+
+
+def _identity(analyzer: str, measurement: str | None, taken_at: datetime, sample: str) -> ReadingIdentity:
+    moment = taken_at.astimezone(UTC).isoformat(timespec="milliseconds")
+    return analyzer, measurement or moment, sample
 
 
 def check_request(register: Register, request: DecisionRequest, now: datetime) -> None:

@@ -15,6 +15,7 @@ from service.demo.run import open_accounts
 from service.settings import load_settings
 from service.store.tables import APPEND_ONLY
 from service.store.unit_of_work import Database
+from service.workflows.accounts import add_token, revoke_token
 from service.workflows.ledger import verify_record
 from tests.project.test_documents import Caller, documents_of
 
@@ -27,6 +28,7 @@ def template(tmp_path_factory: pytest.TempPathFactory) -> Path:
     access = open_accounts(settings)
     services = create_services(settings)
     list(documents_of(Caller(create_app(services).test_client(), access)))
+    revoke_token(services.database, add_token(services.database, "old-mes", ("line",)).code)
     services.close()
     return folder / "shoalmark.sqlite3"
 
@@ -108,6 +110,54 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
             " AND characteristic = 'moisture' AND counts = '2'",
             "but no entry says so",
         ),
+        (
+            "DELETE FROM readings WHERE identity = '2026-03-02T05:12:03.120+00:00'",
+            "the reading nir-1/2026-03-02T05:12:03.120+00:00/1 is missing from the readings",
+        ),
+        (
+            "UPDATE readings SET sample = '9' WHERE identity = '2026-03-02T05:12:03.120+00:00'",
+            "the reading nir-1/2026-03-02T05:12:03.120+00:00/1 is missing from the readings",
+        ),
+        (
+            "UPDATE readings SET sequence = 1 WHERE identity = '2026-03-02T05:12:03.120+00:00'",
+            "the reading nir-1/2026-03-02T05:12:03.120+00:00/1 stands in the tables as one of another",
+        ),
+        (
+            "INSERT INTO readings VALUES ('nir-1', '2026-03-02T05:12:55.120+00:00', '1', 'tower-1', 1)",
+            "tower-1.1: the reading nir-1/2026-03-02T05:12:55.120+00:00/1 stands in the tables as judged",
+        ),
+        (
+            "UPDATE people SET roles = 'engineer approver' WHERE code = 'engineer-a'",
+            "the person engineer-a stands in the tables other than",
+        ),
+        (
+            "UPDATE people SET disabled_at = '2026-01-01T00:00:00.000000Z' WHERE code = 'approver-b'",
+            "the person approver-b stands in the tables other than",
+        ),
+        (
+            "INSERT INTO people SELECT 'approver-c', name, roles, password_hash, chain, sequence, disabled_at"
+            " FROM people WHERE code = 'approver-b'",
+            "the person approver-c stands in the tables, but no entry says so",
+        ),
+        ("DELETE FROM people WHERE code = 'approver-b'", "the person approver-b is missing from the tables"),
+        (
+            "UPDATE tokens SET roles = 'line approver' WHERE code = 'mes.1'",
+            "the token mes.1 stands in the tables other than",
+        ),
+        (
+            "UPDATE tokens SET person = 'approver-b' WHERE code = 'engineer-a.1'",
+            "the token engineer-a.1 stands in the tables other than",
+        ),
+        (
+            "UPDATE tokens SET revoked_at = NULL WHERE code = 'old-mes.1'",
+            "the token old-mes.1 stands in the tables other than",
+        ),
+        (
+            "INSERT INTO tokens SELECT 'ghost.1', principal, person, roles, 'abc', created_at, revoked_at,"
+            " chain, sequence FROM tokens WHERE code = 'engineer-a.1'",
+            "the token ghost.1 stands in the tables, but no entry says so",
+        ),
+        ("DELETE FROM tokens WHERE code = 'old-mes.1'", "the token old-mes.1 is missing from the tables"),
     ],
 )
 def test_an_altered_table_is_named(file: Path, database: Database, statement: str, words: str) -> None:
