@@ -13,7 +13,7 @@ from service.api import requests
 from service.api.answers import answer, conditional, listed, recorded
 from service.api.operations import PAGING, SIGNED, Operation, describe, parameter
 from service.errors import NotFound
-from service.workflows import versions
+from service.workflows import approvals, versions
 
 STATES = ("draft", "submitted", "in_force", "superseded", "withdrawn")
 
@@ -62,7 +62,7 @@ class Versioned:
         requests.no_body()
         request = requests.recording()
         return recorded(
-            versions.submit(
+            approvals.submit(
                 requests.services(),
                 requests.actor(),
                 self.kind,
@@ -150,9 +150,9 @@ def register_versions(blueprint: Blueprint, prefix: str, kind: Versioned, code: 
     add(kind.submit, f"{one}/submit", "POST", submitting, "submit_version")
     signing = Operation(kind.form, body=SIGNED, key="required", etag=True, may_match=True, problems=(409,))
     for name, act, about in (
-        ("approve", versions.approve, "Put a submitted version in force; another person's act."),
-        ("return", versions.return_, "Give a submitted version back as a draft."),
-        ("withdraw", versions.withdraw, "Withdraw an open version, or the one in force."),
+        ("approve", approvals.approve, "Put a submitted version in force; another person's act."),
+        ("return", approvals.return_, "Give a submitted version back as a draft."),
+        ("withdraw", approvals.withdraw, "Withdraw an open version, or the one in force."),
     ):
 
         def sign(code: str, version: int, act: Act = act) -> Response:

@@ -1,0 +1,209 @@
+"""A version submitted, approved by another person, returned or withdrawn; one for every kind.
+
+What is computed and stored at approval is given by a VersionedKind; see specifications.py, budgets.py and
+plant.py.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+from service.access import require, require_another, require_person
+from service.documents import Actor, SignedAct
+from service.ledger import Entry
+from service.schemas import load
+from service.store.rows import StoredVersion
+from service.store.unit_of_work import UnitOfWork
+from service.workflows.accounts import verify_signature
+from service.workflows.recording import PLANT_CHAIN, Request
+from service.workflows.services import Services
+from service.workflows.version_steps import (
+    KINDS,
+    Answer,
+    append_version,
+    changed_version,
+    check_revision,
+    in_state,
+    recorded,
+    version_of,
+    wrong_state,
+)
+from service.workflows.versioned_kind import Approval
+
+
+def submit(
+    services: Services,
+    actor: Actor,
+    kind: str,
+    code: str,
+    version: int,
+    request: Request,
+    *,
+    if_match: int | None = None,
+) -> tuple[Answer, bool]:
+    """Submit a draft for approval, after the same checks that the approval will make.
+
+    Raises
+    ------
+    Conflict
+        The version is no draft.
+    StaleVersion
+        It is another revision than ``if_match``.
+    InvalidRequest
+        It could not be approved as it stands.
+    """
+    require(actor, "submit a version")
+
+    def perform(unit_of_work: UnitOfWork) -> Entry:
+        stored = in_state(unit_of_work, kind, code, version, "draft", act="submitted", if_match=if_match)
+        _approval(unit_of_work, stored)
+        return _move(unit_of_work, actor, stored, "submitted", "submitted", submitted_by=actor.principal)
+
+    return recorded(services, actor, request, perform)
+
+
+def approve(
+    services: Services,
+    actor: Actor,
+    kind: str,
+    code: str,
+    version: int,
+    signed: SignedAct,
+    request: Request,
+    *,
+    if_match: int | None = None,
+) -> tuple[Answer, bool]:
+    """Put a submitted version in force; the one before is superseded in the same entry.
+
+    Raises
+    ------
+    Forbidden
+        No approver, no person, the own work, or a signature that does not match.
+    Conflict
+        The version is not submitted, or another budget serves the same analyzer.
+    StaleVersion
+        It is another revision than ``if_match``.
+    InvalidRequest
+        It cannot be computed, or this measurement cannot prove a specification.
+    """
+    require(actor, "approve a version")
+    verify_signature(services, require_person(actor, "approve"), signed.signature)
+
+    def perform(unit_of_work: UnitOfWork) -> Entry:
+        stored = in_state(unit_of_work, kind, code, version, "submitted", act="approved", if_match=if_match)
+        require_another(actor, _authors(unit_of_work, actor, stored))
+        approval = _approval(unit_of_work, stored)
+        before = unit_of_work.versions.in_force(kind, code)
+        changes = {
+            "approved_by": actor.principal,
+            "in_force_from": unit_of_work.now(PLANT_CHAIN),
+            "evaluation": approval.evaluation,
+            "lapses_at": approval.lapses_at,
+        }
+        entry = append_version(
+            unit_of_work,
+            actor,
+            changed_version(stored, state="in_force", **changes),
+            "approved",
+            reason=signed.reason,
+            supersedes=None if before is None else before.version,
+            release_rules=approval.rules_document(),
+        )
+        if before is not None:
+            unit_of_work.versions.set_state(before, "superseded", entry)
+        unit_of_work.versions.set_state(stored, "in_force", entry, **changes)
+        for key, numbers in approval.rules:
+            unit_of_work.rules.add(key.stored(numbers))
+        unit_of_work.bump_revision()
+        return entry
+
+    return recorded(services, actor, request, perform)
+
+
+def return_(
+    services: Services,
+    actor: Actor,
+    kind: str,
+    code: str,
+    version: int,
+    signed: SignedAct,
+    request: Request,
+    *,
+    if_match: int | None = None,
+) -> tuple[Answer, bool]:
+    """Give a submitted version back as a draft. Raises Forbidden, Conflict or StaleVersion."""
+    require(actor, "return a version")
+    verify_signature(services, require_person(actor, "return"), signed.signature)
+
+    def perform(unit_of_work: UnitOfWork) -> Entry:
+        stored = in_state(unit_of_work, kind, code, version, "submitted", act="returned", if_match=if_match)
+        return _move(
+            unit_of_work, actor, stored, "draft", "returned", reason=signed.reason, submitted_by=None
+        )
+
+    return recorded(services, actor, request, perform)
+
+
+def withdraw(
+    services: Services,
+    actor: Actor,
+    kind: str,
+    code: str,
+    version: int,
+    signed: SignedAct,
+    request: Request,
+    *,
+    if_match: int | None = None,
+) -> tuple[Answer, bool]:
+    """Withdraw an open version or, by an approver, the one in force.
+
+    Raises Forbidden, Conflict or StaleVersion.
+    """
+    require(actor, "withdraw an open version")
+    verify_signature(services, require_person(actor, "withdraw"), signed.signature)
+
+    def perform(unit_of_work: UnitOfWork) -> Entry:
+        stored = version_of(unit_of_work, kind, code, version)
+        check_revision(stored, if_match)
+        if stored.state == "in_force":
+            require(actor, "withdraw a version in force")
+            unit_of_work.bump_revision()
+        elif stored.state not in {"draft", "submitted"}:
+            raise wrong_state(stored, "withdrawn", "draft, submitted or in force")
+        return _move(unit_of_work, actor, stored, "withdrawn", "withdrawn", reason=signed.reason)
+
+    return recorded(services, actor, request, perform)
+
+
+def _move(
+    unit_of_work: UnitOfWork,
+    actor: Actor,
+    stored: StoredVersion,
+    state: str,
+    what: str,
+    *,
+    reason: str | None = None,
+    **changes: Any,
+) -> Entry:
+    changed = changed_version(stored, state=state, **changes)
+    entry = append_version(unit_of_work, actor, changed, what, reason=reason)
+    unit_of_work.versions.set_state(stored, state, entry, **changes)
+    return entry
+
+
+def _approval(unit_of_work: UnitOfWork, stored: StoredVersion) -> Approval:
+    kind = KINDS[stored.kind]
+    document = load(kind.document_class, stored.document)
+    kind.check(unit_of_work, document)
+    return kind.approval(unit_of_work, stored, document)
+
+
+def _authors(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> frozenset[str]:
+    """Say who worked on a version; ``actor`` too, if only earlier than those whom the version names."""
+    named = {stored.drafted_by, stored.submitted_by or stored.drafted_by}
+    acts = tuple(f"{stored.kind}-{what}" for what in ("drafted", "redrafted", "submitted"))
+    for entry in unit_of_work.ledger.of_actor(PLANT_CHAIN, actor.principal, acts):
+        version = entry.content["version"]
+        if (version["code"], version["version"]) == (stored.code, stored.version):
+            named.add(actor.principal)
+    return frozenset(named)
