@@ -81,7 +81,7 @@ def acceptance_interval(
     if factor is None:
         _refuse(tolerance, standard_uncertainty, width, largest)
     accepted = _limits(tolerance, lower, upper, factor * standard_uncertainty)
-    _check_reach(accepted, tolerance, standard_uncertainty, domain, validated_range)
+    check_reach(accepted, tolerance, standard_uncertainty, domain, validated_range)
     return accepted
 
 
@@ -138,13 +138,27 @@ def _guard_by_risk(risk: float, width: float, u: float, nu: float) -> tuple[floa
     return float(brentq(excess, one_sided, half, xtol=_FULL_PRECISION, rtol=_FULL_PRECISION)), largest
 
 
-def _check_reach(
+def check_reach(
     accepted: AcceptanceInterval,
     tolerance: Tolerance,
     standard_uncertainty: float,
     domain: tuple[float | None, float | None],
     validated_range: tuple[float | None, float | None],
 ) -> None:
+    """Check that something of an acceptance interval lies where the evidence speaks.
+
+    Parameters
+    ----------
+    accepted : AcceptanceInterval
+    tolerance : Tolerance
+    standard_uncertainty : float, unit of the characteristic
+    domain, validated_range : tuple of float or None, unit of the characteristic
+
+    Raises
+    ------
+    EmptyAcceptanceError
+        If nothing does.
+    """
     lowest = -math.inf if accepted.lower is None else accepted.lower
     highest = math.inf if accepted.upper is None else accepted.upper
     for name, (start, end), remedy in (

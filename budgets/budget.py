@@ -10,7 +10,8 @@ from itertools import combinations
 from budgets.budget_models import BIAS, faults_of_model
 from budgets.components import Component
 from budgets.correlations import Correlation, check_correlations
-from budgets.errors import BudgetsError, ComponentError, ModelError, raise_collected
+from budgets.errors import BudgetsError, ComponentError, EvidenceError, ModelError, raise_collected
+from budgets.evidence.evaluation import merged
 from budgets.measurement_models import MeasurementModel
 
 LARGEST_COUNT = 50
@@ -101,6 +102,7 @@ class Budget:
             [
                 *_faults_of_members(self),
                 *_faults_of_names(self.components),
+                *_faults_of_mean_squares(self.components),
                 *(_faults_of_default_model(self) if self.model is None else faults_of_model(self)),
                 *_double_counting(self.components),
                 *_missing_sources(self.components),
@@ -158,6 +160,14 @@ def _faults_of_names(components: tuple[Component, ...]) -> list[BudgetsError]:
             )
         seen.add(component.code)
     return faults
+
+
+def _faults_of_mean_squares(components: tuple[Component, ...]) -> list[BudgetsError]:
+    try:
+        merged([term for item in components for term in (*item.terms, *item.relative_terms)])
+    except EvidenceError as error:
+        return [ComponentError(error.message, where=("components",))]
+    return []
 
 
 def _faults_of_default_model(budget: Budget) -> list[BudgetsError]:

@@ -18,8 +18,8 @@ from numpy.typing import ArrayLike, NDArray
 from budgets.components import Component
 from budgets.correlations import Correlation, correlation_matrix
 from budgets.errors import ComponentError, ModelError
-from budgets.evidence.evaluation import Term, effective_degrees_of_freedom
-from budgets.evidence.mean_square_matrices import MatrixTerm, projected
+from budgets.evidence.evaluation import Term, effective_degrees_of_freedom, variance
+from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of, projected
 from budgets.measurement_models import MeasurementModel
 
 
@@ -199,6 +199,40 @@ class CompiledPropagation:
                 where=("components",),
             )
         return total, [term for terms in each for term in terms], parts
+
+    def input_covariance(self, estimates: Mapping[str, float]) -> NDArray[np.float64]:
+        """Return the covariance matrix of the input quantities at their estimates.
+
+        Parameters
+        ----------
+        estimates : mapping of str to float
+            Of all quantities.
+
+        Returns
+        -------
+        ndarray, shape (n, n)
+            In the order of ``model.names``: the sum over the levels of covariance times averaging weight.
+        """
+        names = self.model.names
+        total = np.zeros((len(names), len(names)))
+        deviations: list[float] = []
+        for line in self.lines:
+            if line.matrix_terms:
+                places = [names.index(name) for name in line.inputs]
+                total[np.ix_(places, places)] += line.weight * covariance_of(line.matrix_terms)
+                deviations.append(0.0)
+                continue
+            own = line.weight * variance(line.terms_at({line.inputs[0]: 1.0}, estimates))
+            total[(names.index(line.inputs[0]),) * 2] += own
+            deviations.append(math.sqrt(own))
+        codes = [line.code for line in self.lines]
+        for item in self.correlations:
+            one, other = (codes.index(code) for code in item.between)
+            i, j = (names.index(self.lines[k].inputs[0]) for k in (one, other))
+            product = item.coefficient * deviations[one] * deviations[other]
+            total[i, j] += product
+            total[j, i] += product
+        return total
 
     def at_many(
         self,

@@ -11,7 +11,7 @@ import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, fields
 from functools import cached_property
-from typing import Any
+from typing import Any, TypedDict
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -29,7 +29,9 @@ from budgets.conformity import (
 from budgets.decision_rules import DecisionRule
 from budgets.distribution_tables import DistributionTable
 from budgets.errors import ModelError
-from budgets.propagation import Counts, combined, coverage_factor
+from budgets.level_dependence import level_dependent_acceptance
+from budgets.propagation import Counts, coverage_factor
+from budgets.uncertainty_at_limits import uncertainty_at_limits
 
 RELEASE, HOLD, REJECT = 0, 1, 2
 OUTCOMES: tuple[str, ...] = ("release", "hold", "reject")
@@ -47,6 +49,7 @@ class Judgement:
     risk_below: float
     risk_above: float
     specific_consumers_risk: float
+    combined_standard_uncertainty: float | None = None
 
 
 @dataclass(frozen=True)
@@ -62,6 +65,12 @@ class Judgements:
 
     outcomes: NDArray[np.int8]
     conformance_probability: NDArray[np.float64]
+
+
+class _Options(TypedDict):
+    bias: float
+    domain: tuple[float | None, float | None]
+    validated_range: tuple[float | None, float | None]
 
 
 @dataclass(frozen=True)
@@ -87,6 +96,11 @@ class ReleaseRule:
     measurement_capability_index : float or None
     largest_specific_risk : float
         Risk that a lot does not conform whose estimate lies exactly at an acceptance limit.
+    constant_standard_uncertainty : float or None, unit of the characteristic
+        None unless the uncertainty depends on the estimate; ``combined_standard_uncertainty`` is then the
+        largest one at a tolerance limit.
+    proportional_standard_uncertainty : float
+        The part proportional to the estimate, as a fraction.
     """
 
     lower_tolerance_limit: float | None
@@ -106,6 +120,8 @@ class ReleaseRule:
     decision_rule: DecisionRule
     measurement_capability_index: float | None
     largest_specific_risk: float
+    constant_standard_uncertainty: float | None = None
+    proportional_standard_uncertainty: float = 0.0
 
     @classmethod
     def compile(
@@ -138,24 +154,38 @@ class ReleaseRule:
         ------
         ProcedureError
             If the counts are outside of the procedure.
+        ModelError
+            If the budget has a measurement model: see `budgets.derived_release`.
         LimitsError
             If the decision rule cannot be used with this measurement; `EmptyAcceptanceError` when it
             would accept nothing.
+        NotSupportedError
+            For an uncertainty that depends on the estimate beside correlations or limits below zero.
 
         Notes
         -----
         Source: JCGM 106:2012, clause 8 (from memory).
         """
+        if budget.model is not None:
+            raise ModelError(
+                "a characteristic computed from several quantities has no fixed acceptance limits; it is "
+                "judged at its readings",
+                where=("model",),
+            )
         counts.check(budget.procedure)
-        result = combined(budget, counts)
-        u, nu = result.standard_uncertainty, result.effective_degrees_of_freedom
         shift = 0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias
-        accepted = acceptance_interval(
-            rule, tolerance, u, nu, bias=shift, domain=domain, validated_range=budget.validated_range
+        uncertain = uncertainty_at_limits(budget, counts, tolerance)
+        u, nu = uncertain.standard_uncertainty, uncertain.degrees_of_freedom
+        dependence = uncertain.dependence
+        options: _Options = {"bias": shift, "domain": domain, "validated_range": budget.validated_range}
+        accepted = (
+            acceptance_interval(rule, tolerance, u, nu, **options)
+            if dependence is None
+            else level_dependent_acceptance(rule, tolerance, dependence, nu, **options)
         )
         factor = coverage_factor(budget.coverage_probability, nu)
         at_limits = [
-            float(math.fsum(tails(limit, u, nu, tolerance, bias=shift)))
+            float(math.fsum(tails(limit, uncertain.at(limit), nu, tolerance, bias=shift)))
             for limit in (accepted.lower, accepted.upper)
             if limit is not None
         ]
@@ -177,7 +207,21 @@ class ReleaseRule:
             decision_rule=rule,
             measurement_capability_index=measurement_capability_index(tolerance, u),
             largest_specific_risk=max(at_limits),
+            constant_standard_uncertainty=None if dependence is None else dependence.constant,
+            proportional_standard_uncertainty=0.0 if dependence is None else dependence.proportional,
         )
+
+    @property
+    def acceptance_limits(self) -> str:
+        """How the acceptance limits are to be read: they are the same for every estimate."""
+        return "fixed"
+
+    def standard_uncertainty_at(self, estimate: float) -> float:
+        """Return the standard uncertainty of an estimate."""
+        constant = self.constant_standard_uncertainty
+        if constant is None:
+            return self.combined_standard_uncertainty
+        return math.hypot(constant, self.proportional_standard_uncertainty * estimate)
 
     def to_document(self) -> dict[str, Any]:
         """Return the rule as JSON-able members; null stands for infinite degrees of freedom."""
@@ -189,7 +233,8 @@ class ReleaseRule:
     @classmethod
     def from_document(cls, document: Mapping[str, Any]) -> ReleaseRule:
         """Return the rule that `to_document` wrote, to the last bit."""
-        members = {item.name: document[item.name] for item in fields(cls)}
+        # Members that the first version of this program did not write have their defaults.
+        members = {item.name: document[item.name] for item in fields(cls) if item.name in document}
         members["decision_rule"] = DecisionRule(**document["decision_rule"])
         if members["effective_degrees_of_freedom"] is None:
             members["effective_degrees_of_freedom"] = math.inf
@@ -231,7 +276,7 @@ class ReleaseRule:
         if not math.isfinite(estimate):
             raise ModelError(f"the estimate must be a finite number, not {estimate}", where=("estimate",))
         tolerance = self._tolerance
-        u, nu = self.combined_standard_uncertainty, self.effective_degrees_of_freedom
+        u, nu = self.standard_uncertainty_at(estimate), self.effective_degrees_of_freedom
         below, above = tails(estimate, u, nu, tolerance, bias=self.bias_shift)
         probability = conformance_probability(estimate, u, nu, tolerance, bias=self.bias_shift)
         return Judgement(
@@ -240,6 +285,7 @@ class ReleaseRule:
             risk_below=float(below),
             risk_above=float(above),
             specific_consumers_risk=min(1.0, float(below + above)),
+            combined_standard_uncertainty=u,
         )
 
     def _outcome(self, estimate: float) -> int:
@@ -283,7 +329,11 @@ class ReleaseRule:
         if not np.isfinite(estimates).all():
             raise ModelError("every estimate must be a finite number", where=("estimates",))
         self._fill_outcomes(estimates, outcomes)
-        u = self.combined_standard_uncertainty
+        u: float | NDArray[np.float64] = self.combined_standard_uncertainty
+        if self.constant_standard_uncertainty is not None:
+            u = np.hypot(
+                self.constant_standard_uncertainty, self.proportional_standard_uncertainty * estimates
+            )
         lower, upper = shifted(self._tolerance, self.bias_shift)
         if lower is None or upper is None:
             if upper is not None:
@@ -303,7 +353,7 @@ class ReleaseRule:
         self._distribute(probabilities)
         self._distribute(far)
         probabilities -= far
-        if half_width < 0:
+        if upper < lower:
             np.maximum(probabilities, 0.0, out=probabilities)
 
     def _distribute(self, z: NDArray[np.float64]) -> None:

@@ -4,6 +4,7 @@ import pytest
 
 from budgets.budget import Count, Procedure
 from budgets.errors import BudgetsError, ComponentError, ModelError
+from budgets.evidence.evaluation import MeanSquare, Term
 
 WHOLE = {"contains": ("repeatability", "remainder", "resolution"), "level": "lot"}
 BIAS = {"quantity": "bias", "level": "calibration"}
@@ -122,3 +123,11 @@ def test_fewer_readings_than_the_study_averaged_need_the_repeatability_beyond_it
     # The repeatability of another quantity brings nothing back.
     other = a_component("other", contains=("repeatability",), covered_weight=0.25, quantity="bias")
     refused(a_budget, whole, other, bias=0.0, match="2 faults")
+
+
+def test_one_code_stands_for_one_mean_square(a_budget, a_component):
+    twice = [(Term(1.0, MeanSquare("same", value, 9)),) for value in (0.01, 0.02)]
+    error = refused(
+        a_budget, *(a_component(str(i), terms=t) for i, t in enumerate(twice)), match="are called same"
+    )
+    assert error.where == ("components",)

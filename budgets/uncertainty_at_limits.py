@@ -1,0 +1,78 @@
+"""The uncertainty of a budget at the limits of a specification, and how it depends on the estimate."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from budgets.budget import Budget
+from budgets.conformity import Tolerance
+from budgets.errors import NotSupportedError
+from budgets.evidence.evaluation import variance
+from budgets.level_dependence import LevelDependence
+from budgets.propagation import Counts, combined, compiled
+
+
+@dataclass(frozen=True)
+class UncertaintyAtLimits:
+    """The uncertainty that the acceptance limits are made with.
+
+    Parameters
+    ----------
+    standard_uncertainty : float, unit of the characteristic
+        The largest one at a tolerance limit.
+    degrees_of_freedom : float
+        The least at a tolerance limit: one number everywhere, the cautious one.
+    dependence : LevelDependence or None
+        None where the uncertainty is the same for all estimates.
+    """
+
+    standard_uncertainty: float
+    degrees_of_freedom: float
+    dependence: LevelDependence | None
+
+    def at(self, estimate: float) -> float:
+        """Return the standard uncertainty of an estimate."""
+        return self.standard_uncertainty if self.dependence is None else self.dependence.at(estimate)
+
+
+def uncertainty_at_limits(budget: Budget, counts: Counts, tolerance: Tolerance) -> UncertaintyAtLimits:
+    """Return the uncertainty of a budget without a model at the tolerance limits.
+
+    Parameters
+    ----------
+    budget : Budget
+    counts : Counts
+    tolerance : Tolerance
+
+    Returns
+    -------
+    UncertaintyAtLimits
+
+    Raises
+    ------
+    NotSupportedError
+        For correlations beside parts proportional to the value.
+    """
+    if not any(component.relative_terms for component in budget.components):
+        result = combined(budget, counts)
+        return UncertaintyAtLimits(result.standard_uncertainty, result.effective_degrees_of_freedom, None)
+    if budget.correlations:
+        raise NotSupportedError(
+            "correlations beside parts proportional to the value", where=("correlations",)
+        )
+    lines = compiled(budget, counts).lines
+    dependence = LevelDependence(
+        math.sqrt(math.fsum(line.weight * variance(line.terms) for line in lines)),
+        math.sqrt(math.fsum(line.weight * variance(line.relative_terms) for line in lines)),
+    )
+    at_limits = [
+        combined(budget, counts, estimates={budget.characteristic: limit})
+        for limit in (tolerance.lower, tolerance.upper)
+        if limit is not None
+    ]
+    return UncertaintyAtLimits(
+        max(result.standard_uncertainty for result in at_limits),
+        min(result.effective_degrees_of_freedom for result in at_limits),
+        dependence,
+    )
