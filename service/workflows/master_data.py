@@ -25,7 +25,7 @@ from service.store.rows import StoredDocument
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.evidence import FaultCollector, resolve
 from service.workflows.paging import page_of, start_after
-from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record
+from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record, was_recorded
 from service.workflows.services import Services
 
 
@@ -67,6 +67,8 @@ def put(
         It exists, and If-Match is missing or names another revision.
     InvalidRequest
         It refers to something that does not exist.
+    KeyReused
+        The key was used for another request.
     """
     require(actor, "change master data")
     kind_of = KINDS[kind]
@@ -74,7 +76,8 @@ def put(
     content = dump(document)
     with services.database.reading() as unit_of_work:
         stored = unit_of_work.master.get(kind, key)
-    if stored is not None and stored.document == content:
+        repeated = was_recorded(unit_of_work, actor, request)
+    if not repeated and stored is not None and stored.document == content:
         return MasterAnswer(stored.document, stored.revision)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:

@@ -57,6 +57,11 @@ def record(
     return services.writer.submit(act)
 
 
+def was_recorded(unit_of_work: UnitOfWork, actor: Actor, request: Request) -> bool:
+    """Say whether the key of a request stands for something: then only the writer may answer it."""
+    return request.key is not None and unit_of_work.keys.find(actor.principal, request.key) is not None
+
+
 def entry_reference(entry: Entry) -> dict[str, Any]:
     """Name an entry so that whoever got the answer can find and witness it."""
     return {"chain": entry.chain, "sequence": entry.sequence, "hash": entry.hash}

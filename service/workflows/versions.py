@@ -16,8 +16,9 @@ from service.schemas import dump
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows import budgets
+from service.workflows.evidence import FaultCollector
 from service.workflows.paging import page_of, start_after
-from service.workflows.recording import PLANT_CHAIN, Page, Request
+from service.workflows.recording import PLANT_CHAIN, Page, Request, was_recorded
 from service.workflows.services import Services
 from service.workflows.version_steps import (
     KINDS,
@@ -85,12 +86,14 @@ def _draft(unit_of_work: UnitOfWork, actor: Actor, kind: VersionedKind, code: st
             f"Version {open_version.version} of {code!r} is still {open_version.state}; "
             "replace, return or withdraw it first.",
         )
+    number = unit_of_work.versions.next_number(kind.name, code)
+    _check_subject_is_kept(unit_of_work, kind, code, number, document)
     kind.check(unit_of_work, document)
     product, characteristic = kind.subject(document)
     draft = StoredVersion(
         kind=kind.name,
         code=code,
-        version=unit_of_work.versions.next_number(kind.name, code),
+        version=number,
         state="draft",
         revision=1,
         product=product,
@@ -121,6 +124,22 @@ def _draft(unit_of_work: UnitOfWork, actor: Actor, kind: VersionedKind, code: st
     return entry
 
 
+def _check_subject_is_kept(
+    unit_of_work: UnitOfWork, kind: VersionedKind, code: str, version: int, document: Any
+) -> None:
+    """Refuse a further version about something else than the first: it would take that one out of force."""
+    first = unit_of_work.versions.get(kind.name, code, 1)
+    if first is None or version == 1:
+        return
+    collector = FaultCollector()
+    kept = {"product": first.product, "characteristic": first.characteristic}
+    for (member, before), now in zip(kept.items(), kind.subject(document), strict=True):
+        if now != before:
+            detail = f"{code!r} is a {kind.name} of the {member} {before!r}"
+            collector.add(f"#/{member}", detail, f"{before!r}; for another one draft a new code")
+    collector.finish("The versions of a code are about one thing.")
+
+
 def replace(
     services: Services,
     actor: Actor,
@@ -140,6 +159,8 @@ def replace(
         If-Match is missing, or names another revision.
     Conflict
         The version is no draft any more.
+    InvalidRequest
+        The document cannot be a version of this code, or the key was used for another request.
     """
     require(actor, "draft a version")
     kind_of = KINDS[kind]
@@ -147,14 +168,16 @@ def replace(
     content = dump(document)
     with services.database.reading() as unit_of_work:
         stored = version_of(unit_of_work, kind, code, version)
-        if stored.state == "draft" and stored.document == content:
-            return answer_of(stored), False
-    if if_match is None:
+        repeated = was_recorded(unit_of_work, actor, request)
+    if not repeated and stored.state == "draft" and stored.document == content:
+        return answer_of(stored), False
+    if not repeated and if_match is None:
         raise PreconditionRequired("Replacing a draft needs If-Match with the ETag that was read.")
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = in_state(unit_of_work, kind, code, version, "draft", act="replaced")
         check_revision(stored, if_match)
+        _check_subject_is_kept(unit_of_work, kind_of, code, version, document)
         kind_of.check(unit_of_work, document)
         product, characteristic = kind_of.subject(document)
         changes = {"product": product, "characteristic": characteristic, "drafted_by": actor.principal}

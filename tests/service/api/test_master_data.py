@@ -79,6 +79,20 @@ def test_a_put_may_carry_a_key_and_is_then_repeatable(at_start: Callers) -> None
     assert again.get_json() == first.get_json()
 
 
+def test_a_used_key_is_refused_for_another_body_also_where_that_body_stands(at_start: Callers) -> None:
+    key, path = fresh_key(), "/v1/products/whole-milk-powder"
+    engineer, document = at_start["engineer"], example(documents.Product)
+    other = {**document, "name": "Another name"}
+    first = engineer.put(path, document, Idempotency_Key=key)
+    done(engineer.put(path, other, If_Match='"1"'), 200)
+    response = engineer.put(path, other, Idempotency_Key=key)  # it stands, but the key is that of the first
+    assert (response.status_code, response.get_json()["type"]) == (422, "/problems/idempotency-key-reused")
+    again = engineer.put(path, document, Idempotency_Key=key)
+    assert (again.status_code, again.headers["ETag"]) == (201, '"1"')
+    assert again.headers["Recorded-Earlier"] == "true"
+    assert again.get_json() == first.get_json()
+
+
 def test_if_match_on_what_is_not_there_is_a_412(at_start: Callers) -> None:
     response = at_start["engineer"].put(PATHS[0][0], example(documents.Product), If_Match='"1"')
     assert response.status_code == 412

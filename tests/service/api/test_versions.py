@@ -52,6 +52,46 @@ def test_a_draft_is_replaced_submitted_returned_and_withdrawn(
     assert [item["version"] for item in listed] == [1]
 
 
+def test_a_used_key_is_refused_for_another_body_also_where_that_body_stands(callers: Callers) -> None:
+    engineer, key = callers["engineer"], house.fresh_key()
+    drafted(callers, *KINDS[0])
+    one = f"{KINDS[0][0]}/versions/1"
+    better, best = ({**KINDS[0][1], "reason": reason} for reason in ("better", "best"))
+    first = engineer.put(one, better, If_Match='"1"', Idempotency_Key=key)
+    done(engineer.put(one, best, If_Match='"2"'), 200)
+    response = engineer.put(one, best, Idempotency_Key=key)  # it stands, but the key is that of the first
+    assert (response.status_code, response.get_json()["type"]) == (422, "/problems/idempotency-key-reused")
+    again = engineer.put(one, better, Idempotency_Key=key)
+    assert again.headers["Recorded-Earlier"] == "true"
+    assert done(again, 200) == done(first, 200)
+
+
+@pytest.mark.parametrize(
+    ("collection", "document", "member", "other"),
+    [
+        ("budgets/wmp-moisture-nir", example(documents.BudgetDocument), "characteristic", "fat"),
+        ("budgets/wmp-moisture-nir", example(documents.BudgetDocument), "product", "butter"),
+        ("specifications/legal", house.specification("legal", 4.9), "product", "butter"),
+    ],
+)
+def test_the_versions_of_a_code_are_about_one_thing(
+    callers: Callers, collection: str, document: dict[str, Any], member: str, other: str
+) -> None:
+    engineer, path = callers["engineer"], f"/v1/{collection}/versions"
+    done(
+        engineer.put(
+            "/v1/products/butter", example(documents.Product, code="butter", default_specifications=[])
+        )
+    )
+    wrong = {**document, member: other}
+    drafted_wrong = engineer.post(path, wrong)
+    done(engineer.post(path, document))
+    for response in (drafted_wrong, engineer.put(f"{path}/2", wrong, If_Match='"1"')):
+        assert response.status_code == 422
+        fault = response.get_json()["errors"][0]
+        assert (fault["pointer"], document[member] in fault["expected"]) == (f"#/{member}", True)
+
+
 def test_an_approved_version_supersedes_the_one_before(callers: Callers) -> None:
     engineer, approver = callers["engineer"], callers["max"]
     second = done(engineer.post("/v1/specifications/legal/versions", house.specification("legal", 4.9)))
