@@ -10,6 +10,9 @@ from service.documents import Plant
 
 WEEKDAYS: Final = ("monday", "tuesday", "wednesday", "thursday", "friday", "saturday", "sunday")
 NOTICE: Final = timedelta(days=30)
+# So far from the ends of the calendar that neither a week of days off nor a time zone leads beyond them.
+_FIRST: Final = date.min + timedelta(days=2)
+_LAST: Final = date.max - timedelta(days=9)
 
 # In force until the plant approves a document of its own.
 DEFAULT_PLANT: Final = Plant(
@@ -26,7 +29,8 @@ def lapse_instant(serves_until: date, plant: Plant) -> datetime:
 
     Evidence never lapses in the middle of a weekend, when nobody is there to renew it.
     """
-    day = serves_until
+    # Studies recorded before there was a bound may name any day, and have to be read all the same.
+    day = min(max(serves_until, _FIRST), _LAST)
     while WEEKDAYS[day.weekday()] not in plant.working_days:
         day += timedelta(days=1)
     local = datetime.combine(day, plant.lapse_hour, tzinfo=ZoneInfo(plant.time_zone))

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import dataclasses
+import re
 from datetime import UTC, datetime
-from typing import Any
+from typing import Any, Final
 from zoneinfo import ZoneInfo
 
 from budgets.evidence.agreement import NamedSource
@@ -24,6 +25,10 @@ from service.workflows.evidence import FaultCollector, resolve
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record
 from service.workflows.services import Services
+
+LONGEST_SERVICE: Final = 3650
+"""Days that a study may serve at most, whoever says how long: as much as a plant may say for a design."""
+_SHA256: Final = re.compile(r"[0-9A-Fa-f]{64}")
 
 
 def preview(services: Services, actor: Actor, study: Study) -> dict[str, Any]:
@@ -116,6 +121,7 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
     collector = FaultCollector()
     _check_references(unit_of_work, study, collector)
     _check_dates(study, plant_document, collector)
+    _check_source(study, collector)
     sources = [
         collector.attempt(f"#/named_sources/{index}/evidence", _source, unit_of_work, study, index)
         for index in range(len(study.named_sources))
@@ -223,3 +229,18 @@ def _check_dates(study: Study, plant_document: Plant, collector: FaultCollector)
     today = datetime.now(UTC).astimezone(ZoneInfo(plant_document.time_zone)).date()
     if study.done_on > today:
         collector.add("#/done_on", f"got {study.done_on.isoformat()}", f"a day not after {today.isoformat()}")
+    if study.serves_until is not None and (study.serves_until - study.done_on).days > LONGEST_SERVICE:
+        collector.add(
+            "#/serves_until",
+            f"got {study.serves_until.isoformat()}",
+            f"a day at most {LONGEST_SERVICE} days after done_on: evidence grows old",
+        )
+
+
+def _check_source(study: Study, collector: FaultCollector) -> None:
+    # Not in the schema, which has to read the studies that stand in the record.
+    digest = None if study.source is None else study.source.sha256
+    if digest is not None and _SHA256.fullmatch(digest) is None:
+        collector.add(
+            "#/source/sha256", f"got {digest!r}", "64 hexadecimal digits, as `sha256sum` prints them"
+        )

@@ -168,6 +168,10 @@ def study(**changes: Any) -> dict[str, Any]:
         (study(calibrations={"nir-1": "wmp-9"}), "#/calibrations/nir-1"),
         (study(laboratory="no-lab"), "#/laboratory"),
         (study(done_on="9999-01-01", serves_until=None), "#/done_on"),
+        (study(done_on="2016-01-01", serves_until="2025-12-30"), "#/serves_until"),
+        (study(serves_until="9999-12-31"), "#/serves_until"),
+        (study(source={"name": "a.csv", "sha256": "0" * 63}), "#/source/sha256"),
+        (study(source={"name": "a.csv", "sha256": "g" * 64}), "#/source/sha256"),
     ],
     ids=[
         "empty",
@@ -183,6 +187,10 @@ def study(**changes: Any) -> dict[str, Any]:
         "calibration",
         "laboratory",
         "future",
+        "3651 days",
+        "for ever",
+        "short digest",
+        "no digest",
     ],
 )
 def test_unusable_studies_are_refused_with_their_place(
@@ -194,6 +202,12 @@ def test_unusable_studies_are_refused_with_their_place(
         assert any(place.startswith(pointer) for place in pointers(found)), found
     assert heads(app) == before
     assert callers["engineer"].get("/v1/studies/new-study").status_code == 404
+
+
+def test_a_study_may_serve_for_3650_days_and_name_its_file(callers: Callers) -> None:
+    source = {"name": "a.csv", "sha256": "0f" * 32}
+    document = study(done_on="2016-01-01", serves_until="2025-12-29", source=source)
+    assert done(callers["engineer"].post("/v1/studies", document))["study"]["source"] == source
 
 
 def test_limits_the_wrong_way_round_are_refused(app: Flask, callers: Callers) -> None:

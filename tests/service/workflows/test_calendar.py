@@ -6,7 +6,7 @@ from datetime import UTC, date, datetime, time
 import pytest
 
 from budgets.evidence.study_data import DESIGNS
-from service.workflows.calendar import DEFAULT_PLANT, lapse_instant, serving_end
+from service.workflows.calendar import DEFAULT_PLANT, WEEKDAYS, lapse_instant, serving_end
 
 BERLIN = replace(DEFAULT_PLANT, time_zone="Europe/Berlin", lapse_hour=time(11))
 
@@ -27,6 +27,15 @@ def test_evidence_lapses_at_the_plants_hour_of_a_working_day(serves_until: date,
 def test_a_plant_that_works_on_saturdays_lapses_on_saturdays() -> None:
     plant = replace(BERLIN, working_days=("saturday",))
     assert lapse_instant(date(2026, 3, 6), plant) == datetime(2026, 3, 7, 10, tzinfo=UTC)
+
+
+@pytest.mark.parametrize("zone", ["Etc/GMT+12", "Etc/GMT-14"])
+@pytest.mark.parametrize("hour", [time(0), time(23, 59)])
+@pytest.mark.parametrize("day", WEEKDAYS)
+def test_any_day_has_an_instant_at_which_evidence_lapses(zone: str, hour: time, day: str) -> None:
+    plant = replace(BERLIN, time_zone=zone, lapse_hour=hour, working_days=(day,))
+    assert lapse_instant(date.max, plant).year == 9999
+    assert lapse_instant(date.min, plant).year == 1
 
 
 def test_a_study_serves_as_long_as_the_plant_says_for_its_design() -> None:
