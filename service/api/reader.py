@@ -47,6 +47,9 @@ def request_document() -> dict[str, Any]:
     if request.mimetype != "application/json":
         got_type = request.mimetype or "no content type"
         raise UnsupportedMediaType(f"Got {got_type}; the body has to be application/json.")
+    charset = request.mimetype_params.get("charset", "utf-8")
+    if charset.lower() != "utf-8":  # read as UTF-8 it could be other text than was meant (RFC 8259, 8.1)
+        raise UnsupportedMediaType(f"Got the charset {charset[:40]}; the body has to be UTF-8.")
     if request.content_length is not None and request.content_length > LARGEST_BODY:
         raise TooLarge(f"The body has {request.content_length} bytes; at most {LARGEST_BODY} are taken.")
     request.max_content_length = LARGEST_BODY

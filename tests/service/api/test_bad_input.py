@@ -102,6 +102,27 @@ def test_other_content_types_are_refused(callers: Callers) -> None:
     assert (response.status_code, response.content_type) == (415, "application/problem+json")
 
 
+@pytest.mark.parametrize(
+    ("content_type", "taken"),
+    [
+        ("application/json; charset=utf-8", True),
+        ('application/json; charset="UTF-8"', True),
+        ("application/json; charset=latin-1", False),
+        ("application/json;charset=utf-16", False),
+    ],
+)
+def test_a_body_in_another_charset_is_refused(callers: Callers, content_type: str, taken: bool) -> None:
+    """JSON that systems exchange is UTF-8: RFC 8259, 8.1 (from memory)."""
+    client, token = callers["mes"].client, callers["mes"].token
+    response = client.post(
+        "/v1/decisions/preview",
+        data=json.dumps(decision("L1"), ensure_ascii=False).encode(),
+        content_type=content_type,
+        headers={"Authorization": f"Bearer {token}"},
+    )
+    assert response.status_code == (200 if taken else 415), response.get_data(as_text=True)
+
+
 def test_a_body_beyond_the_bound_is_a_413(callers: Callers) -> None:
     raw = b'{"lot": "' + b"x" * (8 * 1024 * 1024) + b'"}'
     response = callers["mes"].send("POST", "/v1/decisions/preview", raw=raw)
