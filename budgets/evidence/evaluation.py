@@ -130,6 +130,10 @@ class Estimate:
     def to_document(self) -> dict[str, Any]:
         """Return the estimate as JSON-able members; null stands for infinite degrees of freedom."""
         interval = self.interval
+        seldom = {
+            "relative_terms": [term_document(term) for term in self.relative_terms],
+            "matrix_terms": [matrix_term_document(term) for term in self.matrix_terms],
+        }
         return {
             "name": self.name,
             "value": self.value,
@@ -151,8 +155,8 @@ class Estimate:
             "contains": list(self.contains),
             "taken_out": list(self.taken_out),
             "reading_weight": self.reading_weight,
-            "relative_terms": [term_document(term) for term in self.relative_terms],
-            "matrix_terms": [matrix_term_document(term) for term in self.matrix_terms],
+            # Only where there are any: most estimates are of one quantity and of one size.
+            **{name: terms for name, terms in seldom.items() if terms},
         }
 
     @classmethod

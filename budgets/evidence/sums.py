@@ -59,13 +59,16 @@ def f_quantile(tail: float, first: float, second: float) -> float:
     return float(fdtri(first, second, 1 - tail))
 
 
-def standard_deviation_factors(degrees_of_freedom: float) -> tuple[float, float]:
-    """Return by which factors the 95 % interval of a standard deviation lies around its estimate.
+def standard_deviation_factors(
+    degrees_of_freedom: float, *, confidence: float = CONFIDENCE
+) -> tuple[float, float]:
+    """Return by which factors the interval of a standard deviation lies around its estimate.
 
     Parameters
     ----------
     degrees_of_freedom : float
         Finite.
+    confidence : float
 
     Returns
     -------
@@ -81,7 +84,7 @@ def standard_deviation_factors(degrees_of_freedom: float) -> tuple[float, float]
     >>> round(lower, 3), round(upper, 3)
     (0.688, 1.826)
     """
-    tail = (1 - CONFIDENCE) / 2
+    tail = (1 - confidence) / 2
     nu = degrees_of_freedom
     return math.sqrt(nu / float(chdtri(nu, tail))), math.sqrt(nu / float(chdtri(nu, 1 - tail)))
 

@@ -1,0 +1,1 @@
+"""Published worked examples and tables as data, and what this program computes for them."""
