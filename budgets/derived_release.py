@@ -18,7 +18,8 @@ from budgets.decision_rules import DecisionRule
 from budgets.errors import LimitsError, ModelError
 from budgets.linear_propagation import CompiledPropagation
 from budgets.model_validation import ValidatedBox, validate_over_box
-from budgets.propagation import Counts, compiled, coverage_factor
+from budgets.propagation import Counts, check_counts, compiled, coverage_factor
+from budgets.reading_patterns import ReadingPattern
 from budgets.stored_propagation import propagation_document, propagation_from_document
 
 
@@ -83,7 +84,7 @@ class DerivedReleaseRule:
     def compile(
         cls,
         budget: Budget,
-        counts: Counts,
+        counts: Counts | ReadingPattern,
         tolerance: Tolerance,
         rule: DecisionRule,
         *,
@@ -95,7 +96,7 @@ class DerivedReleaseRule:
         ----------
         budget : Budget
             With a measurement model and a ``validated_box`` for every quantity that is read.
-        counts : Counts
+        counts : Counts or ReadingPattern
             Within the procedure of the budget.
         tolerance : Tolerance
         rule : DecisionRule
@@ -119,7 +120,7 @@ class DerivedReleaseRule:
         """
         if budget.model is None:
             raise ModelError("a budget without a model has fixed acceptance limits", where=("model",))
-        counts.check(budget.procedure)
+        check_counts(counts, budget.procedure)
         law = compiled(budget, counts)
         box = validate_over_box(law, budget.validated_box)
         made = cls(law, tolerance, rule, budget.coverage_probability, domain, budget.validated_range, box)

@@ -24,6 +24,7 @@ from budgets.propagation import (
     expanded_uncertainty,
 )
 from budgets.reading_patterns import ReadingPattern
+from budgets.second_order import second_order_terms, second_order_warnings
 
 FEW_DEGREES_OF_FREEDOM = 5.0
 _HALF = 0.25  # of the variance
@@ -221,9 +222,23 @@ def explain(
         tuple(components),
         _subtotals(result),
         _limits(judged, result.standard_uncertainty, result.effective_degrees_of_freedom),
-        (*result.warnings, *_warnings(result)),
+        (*_curvature(law, budget, full, result), *_warnings(result)),
         basis,
     )
+
+
+def _curvature(
+    law: CompiledPropagation, budget: Budget, estimates: Mapping[str, float], result: CombinedUncertainty
+) -> tuple[EvaluationWarning, ...]:
+    """Return the warning that terms of second order matter, where they can be had."""
+    if budget.model is None:
+        return ()
+    try:
+        beyond = second_order_terms(law, budget.components, estimates)
+    except BudgetsError:
+        # Correlated inputs, or a model with a kink: there are no such terms.
+        return ()
+    return second_order_warnings(result.variance, beyond)
 
 
 def _with_factor(law: CompiledPropagation, index: int, factor: float) -> CompiledPropagation:
@@ -274,13 +289,12 @@ def _remark(
 
 
 def _subtotals(result: CombinedUncertainty) -> tuple[Subtotal, ...]:
-    first_order = result.variance - (0.0 if result.second_order is None else result.second_order.variance)
     found = []
     for level in LEVELS:
         shares = [part.share_of_variance for part in result.contributions if part.component.level == level]
         if shares:
             share = math.fsum(shares)
-            variance = share * first_order
+            variance = share * result.variance
             found.append(Subtotal(level, variance, math.sqrt(max(0.0, variance)), share))
     return tuple(found)
 

@@ -65,6 +65,22 @@ class Counts:
             _check_count("readings of a sample", number, procedure.readings_per_sample)
 
 
+def check_counts(counts: Counts | ReadingPattern, procedure: Procedure) -> None:
+    """Check what was done against the procedure of a budget.
+
+    Parameters
+    ----------
+    counts : Counts or ReadingPattern
+    procedure : Procedure
+
+    Raises
+    ------
+    ProcedureError
+        If fewer than ``least`` or more than ``most`` samples or readings of a sample were done.
+    """
+    Counts(counts.readings_per_sample).check(procedure)
+
+
 def _check_count(what: str, number: int, planned: Count) -> None:
     if not planned.least <= number <= planned.most:
         raise ProcedureError(

@@ -134,6 +134,12 @@ class ReadingPattern:
             return self.groups[next(name for name in outer if name in self.groups)]
         return [""] * len(self.groups["sample"])
 
+    @property
+    def readings_per_sample(self) -> tuple[int, ...]:
+        """The number of readings of each sample, in order of first appearance."""
+        samples = self.groups["sample"]
+        return tuple(samples.count(label) for label in dict.fromkeys(samples))
+
     def reading_weights(self) -> tuple[float, ...]:
         """Return the weight of every reading in the estimate.
 

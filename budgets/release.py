@@ -30,7 +30,8 @@ from budgets.decision_rules import DecisionRule
 from budgets.distribution_tables import DistributionTable
 from budgets.errors import ModelError
 from budgets.level_dependence import level_dependent_acceptance
-from budgets.propagation import Counts, coverage_factor
+from budgets.propagation import Counts, check_counts, coverage_factor
+from budgets.reading_patterns import ReadingPattern
 from budgets.uncertainty_at_limits import uncertainty_at_limits
 
 RELEASE, HOLD, REJECT = 0, 1, 2
@@ -127,7 +128,7 @@ class ReleaseRule:
     def compile(
         cls,
         budget: Budget,
-        counts: Counts,
+        counts: Counts | ReadingPattern,
         tolerance: Tolerance,
         rule: DecisionRule,
         *,
@@ -138,7 +139,7 @@ class ReleaseRule:
         Parameters
         ----------
         budget : Budget
-        counts : Counts
+        counts : Counts or ReadingPattern
             Must be within the procedure of the budget.
         tolerance : Tolerance
             In the unit of the budget.
@@ -172,7 +173,7 @@ class ReleaseRule:
                 "judged at its readings",
                 where=("model",),
             )
-        counts.check(budget.procedure)
+        check_counts(counts, budget.procedure)
         shift = 0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias
         uncertain = uncertainty_at_limits(budget, counts, tolerance)
         u, nu = uncertain.standard_uncertainty, uncertain.degrees_of_freedom

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decimal
 
 from budgets.decision_rules import DecisionRule
+from budgets.derived_release import DerivedJudgement, DerivedReleaseRule
 from budgets.errors import ModelError
 from budgets.release import Judgement, ReleaseRule
 
@@ -259,22 +260,76 @@ def statement(
     specification is met or not, and the decision rule. The expanded uncertainty is given with its coverage
     factor and probability, JCGM 100:2008, 7.2.3 (from memory).
     """
-    shown = rounded(estimate, rule.expanded_uncertainty)
-    k = f"{rule.coverage_factor:.2f}"
-    result = (
+    # Where the uncertainty depends on the estimate, the one at this estimate is stated.
+    u = judgement.combined_standard_uncertainty
+    expanded = rule.expanded_uncertainty if u is None else rule.coverage_factor * u
+    shown = rounded(estimate, expanded)
+    accepted = _acceptance_text(
+        rule.lower_acceptance_limit, rule.upper_acceptance_limit, shown.decimals + 1, unit
+    )
+    return " ".join(
+        (
+            _result_text(characteristic, unit, shown, rule.coverage_factor, rule.coverage_probability),
+            f"Tolerance limits: {_pair_text(rule.lower_tolerance_limit, rule.upper_tolerance_limit, unit)}; "
+            f"acceptance limits: {accepted}.",
+            _verdict_text(judgement, rule.decision_rule),
+        )
+    )
+
+
+def statement_at_reading(
+    *, characteristic: str, unit: str, rule: DerivedReleaseRule, judgement: DerivedJudgement
+) -> str:
+    """Return the sentences that state the result of a derived characteristic.
+
+    Parameters
+    ----------
+    characteristic, unit : str
+    rule : DerivedReleaseRule
+    judgement : DerivedJudgement
+
+    Returns
+    -------
+    str
+        As `statement`; the acceptance limits are said to be those at this reading.
+
+    Raises
+    ------
+    ModelError
+        If a figure cannot be printed.
+
+    Notes
+    -----
+    Source: ISO/IEC 17025:2017, 7.8.6.2 (from memory).
+    """
+    shown = rounded(judgement.estimate, judgement.expanded_uncertainty)
+    accepted = _acceptance_text(
+        judgement.lower_acceptance_limit, judgement.upper_acceptance_limit, shown.decimals + 1, unit
+    )
+    tolerance = _pair_text(rule.tolerance.lower, rule.tolerance.upper, unit)
+    return " ".join(
+        (
+            _result_text(characteristic, unit, shown, judgement.coverage_factor, rule.coverage_probability),
+            f"Tolerance limits: {tolerance}; acceptance limits at this reading: {accepted or 'none'}.",
+            _verdict_text(judgement, rule.decision_rule),
+        )
+    )
+
+
+def _result_text(
+    characteristic: str, unit: str, shown: Rounded, coverage_factor: float, coverage_probability: float
+) -> str:
+    return (
         f"{characteristic}: ({shown.estimate} ± {shown.expanded_uncertainty}) {unit}, expanded uncertainty "
-        f"with k = {k} for a coverage probability of {_percent(rule.coverage_probability)} %."
+        f"with k = {coverage_factor:.2f} for a coverage probability of {_percent(coverage_probability)} %."
     )
-    limits = (
-        f"Tolerance limits: {_pair_text(rule.lower_tolerance_limit, rule.upper_tolerance_limit, unit)}; "
-        f"acceptance limits: {_acceptance_text(rule, shown.decimals + 1, unit)}."
-    )
-    verdict = (
+
+
+def _verdict_text(judgement: Judgement | DerivedJudgement, rule: DecisionRule) -> str:
+    return (
         f"Outcome: {judgement.outcome}; conformance probability "
-        f"{probability_text(judgement.conformance_probability)}. "
-        f"Decision rule: {rule_text(rule.decision_rule)}."
+        f"{probability_text(judgement.conformance_probability)}. Decision rule: {rule_text(rule)}."
     )
-    return f"{result} {limits} {verdict}"
 
 
 def _pair_text(lower: float | None, upper: float | None, unit: str) -> str:
@@ -283,8 +338,7 @@ def _pair_text(lower: float | None, upper: float | None, unit: str) -> str:
     )
 
 
-def _acceptance_text(rule: ReleaseRule, decimals: int, unit: str) -> str:
-    lower, upper = rule.lower_acceptance_limit, rule.upper_acceptance_limit
+def _acceptance_text(lower: float | None, upper: float | None, decimals: int, unit: str) -> str:
     return _joined(
         None if lower is None else acceptance_limit_text(lower, decimals, side="lower"),
         None if upper is None else acceptance_limit_text(upper, decimals, side="upper"),

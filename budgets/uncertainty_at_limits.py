@@ -11,6 +11,7 @@ from budgets.errors import NotSupportedError
 from budgets.evidence.evaluation import variance
 from budgets.level_dependence import LevelDependence
 from budgets.propagation import Counts, combined, compiled
+from budgets.reading_patterns import ReadingPattern
 
 
 @dataclass(frozen=True)
@@ -36,13 +37,15 @@ class UncertaintyAtLimits:
         return self.standard_uncertainty if self.dependence is None else self.dependence.at(estimate)
 
 
-def uncertainty_at_limits(budget: Budget, counts: Counts, tolerance: Tolerance) -> UncertaintyAtLimits:
+def uncertainty_at_limits(
+    budget: Budget, counts: Counts | ReadingPattern, tolerance: Tolerance
+) -> UncertaintyAtLimits:
     """Return the uncertainty of a budget without a model at the tolerance limits.
 
     Parameters
     ----------
     budget : Budget
-    counts : Counts
+    counts : Counts or ReadingPattern
     tolerance : Tolerance
 
     Returns

@@ -144,3 +144,15 @@ def test_the_explained_uncertainty_is_the_combined_one(a_budget):
     assert explained.expanded_uncertainty == expanded_uncertainty(
         result.standard_uncertainty, 0.95, result.effective_degrees_of_freedom
     )
+
+
+@pytest.mark.parametrize(
+    ("expression", "codes"), [("x**2", ["second-order-matters"]), ("3*x", []), ("abs(x)", [])]
+)
+def test_a_model_that_curves_is_warned_of(expression, codes):
+    components = (Component("x", "x", "lot", (Term(1.0, MeanSquare("x", 0.04, 50)),), "A"),)
+    once = Procedure(Count(1, 1, 1), Count(1, 1, 1))
+    model = MeasurementModel(expression, (Quantity("x"),))
+    budget = Budget(components, once, 0.95, None, "corrected", (-9.0, 9.0), model)
+    explained = explain(budget, Counts((1,)), estimates={"x": 0.5})
+    assert [warning.code for warning in explained.warnings] == codes

@@ -150,9 +150,10 @@ def test_a_rule_for_an_uncertainty_that_depends_on_the_estimate():
         assert ("release", "hold", "reject")[outcome] == one.outcome
         assert probability == pytest.approx(one.conformance_probability, abs=2e-10)
     assert ReleaseRule.from_document(json.loads(json.dumps(rule.to_document()))) == rule
-    assert "Outcome: release" in statement(
-        characteristic="moisture", unit="%", estimate=3.0, rule=rule, judgement=verdict
-    )
+    text = statement(characteristic="moisture", unit="%", estimate=3.0, rule=rule, judgement=verdict)
+    # U at this estimate, not the larger one at the limit.
+    assert f"± {rule.coverage_factor * math.hypot(s0, 0.06):.2f})" in text
+    assert "Outcome: release" in text
 
 
 def test_rules_of_the_first_version_still_load():

@@ -3,9 +3,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from budgets.budget import Count, Procedure
 from budgets.errors import ProcedureError
 from budgets.levels import LEVELS
-from budgets.propagation import Counts, averaging_weights
+from budgets.propagation import Counts, averaging_weights, check_counts
 from budgets.reading_patterns import ReadingPattern, least_squares_weights
 
 
@@ -93,3 +94,11 @@ def test_least_squares_weights_are_the_best(deviations, common):
 def test_least_squares_that_do_not_exist_are_refused(covariance):
     with pytest.raises(ProcedureError):
         least_squares_weights(covariance)
+
+
+def test_a_pattern_is_checked_against_the_procedure():
+    pattern = ReadingPattern({"sample": ("b", "a", "b", "b")})
+    assert pattern.readings_per_sample == (3, 1)
+    check_counts(pattern, Procedure(Count(1, 1, 2), Count(1, 2, 3)))
+    with pytest.raises(ProcedureError, match="3 readings of a sample"):
+        check_counts(pattern, Procedure(Count(1, 1, 2), Count(1, 2, 2)))

@@ -86,6 +86,8 @@ def test_the_remainder_takes_out_what_the_study_s_own_replicates_left():
     assert remainder.taken_out == ("repeatability",)
     assert "presentation" in remainder.contains
     assert remainder.interval.lower < 0.06 < remainder.interval.upper
+    whole = evaluation.estimate("standard_error_of_prediction")
+    assert whole.reading_weight == evaluation.diagnostics["mean_reciprocal_readings"]
     beyond = evaluation.estimate("repeatability_beyond_study")
     assert beyond.covered_weight == pytest.approx(1 / 3)
     assert "readings-averaged" in codes(evaluation)
