@@ -281,12 +281,38 @@ class PlannedProcedure:
 
 @dataclass(frozen=True)
 class BudgetComponent:
-    """A line of the budget: which quantity, at which level it is drawn anew, what stands behind it."""
+    """A line of the budget: which quantity, at which level it is drawn anew, what stands behind it.
+
+    Errors of several quantities that go together are one line: ``quantities`` says what a column of the study
+    is called in the model, and ``quantity`` is None. ``relative_to`` names the quantity that a proportional
+    part is proportional to, where that is another one.
+    """
 
     code: str
-    quantity: str
+    quantity: str | None
     level: str
     evidence: Evidence
+    quantities: Mapping[str, str] = field(default_factory=dict)
+    relative_to: str | None = None
+
+
+@dataclass(frozen=True)
+class TypeBSource:
+    """The document that a figure was taken from."""
+
+    document: str
+    edition: str | None = None
+    sha256: str | None = None
+
+
+@dataclass(frozen=True)
+class BudgetCorrelation:
+    """A correlation between two lines of the budget that are drawn anew together."""
+
+    between: tuple[str, str]
+    level: str
+    coefficient: float
+    evidence: TypeBSource
 
 
 @dataclass(frozen=True)
@@ -305,6 +331,8 @@ class BudgetDocument:
     procedure: PlannedProcedure
     components: tuple[BudgetComponent, ...]
     reason: str
+    correlations: tuple[BudgetCorrelation, ...] = ()
+    validated_ranges: Mapping[str, Bounds] = field(default_factory=dict)
 
 
 # --- studies ------------------------------------------------------------------------------------------
@@ -320,10 +348,14 @@ class SetAsideRow:
 
 @dataclass(frozen=True)
 class NamedSource:
-    """A source that is known to be inside a standard error of prediction, with its own evidence."""
+    """A source that is known to be inside a standard error of prediction, with its own evidence.
+
+    ``quantity`` says whose error it is in a study of several characteristics.
+    """
 
     source: str
     evidence: Evidence
+    quantity: str | None = None
 
 
 @dataclass(frozen=True)
@@ -339,7 +371,7 @@ Cell = float | int | str | None | Mapping[str, float]
 
 @dataclass(frozen=True)
 class Study:
-    """A body of test data with a design."""
+    """A body of test data with a design; ``characteristics`` names all of them where it is about several."""
 
     code: str
     design: str
@@ -356,6 +388,7 @@ class Study:
     procedure: str | None = None
     independent: bool | None = None
     named_sources: tuple[NamedSource, ...] = ()
+    characteristics: tuple[str, ...] = ()
     set_aside: tuple[SetAsideRow, ...] = ()
     source: DataSource | None = None
 
@@ -375,6 +408,10 @@ class Reading:
     flags: Mapping[str, float] = field(default_factory=dict)
     influences: Mapping[str, float] = field(default_factory=dict)
     measurement: str | None = None
+    presentation: str | None = None
+    increment: str | None = None
+    session: str | None = None
+    weight: float | None = None
 
 
 @dataclass(frozen=True)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from service.documents import DecisionRequest, Reading
 from service.schemas.base import StrictSchema
-from service.schemas.fields import ByKey, Code, Instant, Later, Name, Number, Parts, Text
+from service.schemas.fields import ByKey, Code, Instant, Name, Number, Parts, Text
 
 LONGEST_LOT = 64
 
@@ -13,7 +13,6 @@ class ReadingSchema(StrictSchema):
     """A scan: one look of one analyzer at one sample, with a value per channel."""
 
     loads_to = Reading
-    without = frozenset({"presentation", "increment", "session", "weight"})
     sample = Text(64, required=True)
     analyzer = Code(required=True)
     calibration = Code(required=True)
@@ -22,10 +21,14 @@ class ReadingSchema(StrictSchema):
     flags = ByKey(Name(), Number(), most=100, load_default=dict)
     influences = ByKey(Name(), Number(), most=100, load_default=dict)
     measurement = Text(64, allow_none=True, load_default=None)
-    presentation = Later(load_only=True)
-    increment = Later(load_only=True)
-    session = Later(load_only=True)
-    weight = Later(load_only=True)
+    presentation = Text(
+        64, allow_none=True, load_default=None, about="Readings of one filling of the cup; else the sample's."
+    )
+    increment = Text(64, allow_none=True, load_default=None, about="Readings of one increment of the lot.")
+    session = Text(64, allow_none=True, load_default=None, about="Readings between two set-ups.")
+    weight = Number(
+        least=0, most=1, allow_none=True, load_default=None, about="Weights of all readings add up to 1."
+    )
 
 
 class DecisionRequestSchema(StrictSchema):

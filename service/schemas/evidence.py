@@ -8,7 +8,7 @@ from typing import Any
 
 from marshmallow import fields
 
-from budgets.declarations import DISTRIBUTIONS, MEANINGS
+from budgets.declarations import DISTRIBUTIONS, MEANINGS, RELATIVE_MEANINGS
 from service.documents import DeclaredEvidence, StudyEvidence
 from service.schemas.base import StrictSchema, complaint, got
 from service.schemas.fields import Choice, Code, Count, Name, Number, Part, Text, _Stating
@@ -36,7 +36,7 @@ class DeclarationSchema(StrictSchema):
     """A stated figure and what it means; which options belong to which meaning is judged by budgets."""
 
     meaning = Choice(
-        *MEANINGS, later=("relative",), required=True, about="What the figure means; a bare one is refused."
+        *MEANINGS, "relative", required=True, about="What the figure means; a bare one is refused."
     )
     value = Number(required=True, least=0)
     unit = Text(32)
@@ -50,8 +50,12 @@ class DeclarationSchema(StrictSchema):
     distribution = Choice(*DISTRIBUTIONS)
     top_to_base_ratio = Number(least=0, most=1)
     reliability = Number(above=0, about="Relative uncertainty of the figure itself, as 0.25.")
-    document = Text(200)
+    figure = Choice(*RELATIVE_MEANINGS, about="Of a relative figure: what the fraction is.")
+    absolute = Number(least=0, about="Of a relative figure: the part that does not depend on the value.")
     title = Text(200)
+    document = Text(200, about="The document that the figure was taken from.")
+    edition = Text(100)
+    sha256 = Text(64, about="Of the document.")
 
 
 class StudyEvidenceSchema(StrictSchema):

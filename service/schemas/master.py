@@ -89,7 +89,15 @@ class CharacteristicSchema(StrictSchema):
     basis = Text(100, required=True, about="To what the value refers: as is, in solids-not-fat.")
     natural_domain = Part(BoundsSchema, required=True, about="Where values can lie at all.")
     decimals = Count(most=12, required=True)
-    derived_from = Later(load_default=None, about="Derived characteristics are not supported yet.")
+    derived_from = Parts(
+        Code(),
+        least=1,
+        most=20,
+        distinct=True,
+        allow_none=True,
+        load_default=None,
+        about="The characteristics of one scan that it is computed from; null when it is read directly.",
+    )
     external_codes = external_codes()
 
 

@@ -101,6 +101,9 @@ class NamedSourceSchema(StrictSchema):
     loads_to = NamedSource
     source = Choice(*SOURCES, required=True)
     evidence = EvidenceField(required=True)
+    quantity = Code(
+        allow_none=True, load_default=None, about="Whose error it is, in a study of several characteristics."
+    )
 
 
 class DataSourceSchema(StrictSchema):
@@ -116,7 +119,7 @@ class StudySchema(StrictSchema):
 
     loads_to = Study
     code = Code(required=True)
-    design = Name(required=True, about="repeatability, duplicates or agreement.")
+    design = Name(required=True, about="repeatability, duplicates, agreement or covariance.")
     product = Code(required=True)
     characteristic = Code(required=True)
     unit = Text(32, required=True)
@@ -132,6 +135,13 @@ class StudySchema(StrictSchema):
         about="Whether the samples are independent of those the calibration was made from.",
     )
     named_sources = Parts(NamedSourceSchema, most=20, load_default=())
+    characteristics = Parts(
+        Code(),
+        most=20,
+        distinct=True,
+        load_default=(),
+        about="All of them, in a study of several characteristics of one scan.",
+    )
     columns = Parts(Text(64), least=1, most=MOST_COLUMNS, distinct=True, required=True)
     rows = RowsField(required=True)
     set_aside = Parts(SetAsideRowSchema, most=MOST_ROWS, load_default=())
