@@ -6,11 +6,13 @@ import hashlib
 import json
 from typing import Any
 
+from budgets.derived_release import DerivedReleaseRule
 from service.access import require
 from service.documents import Actor
 from service.errors import Conflict, NotFound
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
-from service.workflows.rules import RuleKey, counts_from_text, counts_text, planned_counts
+from service.workflows.rule_figures import FIGURES, figures_of
+from service.workflows.rules import AnyRule, RuleKey, counts_from_text, counts_text, planned_counts
 from service.workflows.services import Services
 
 
@@ -76,7 +78,6 @@ def _items(
         counts = counts_from_text(key.counts).readings_per_sample
         if key != ours or len(set(counts)) != 1:
             continue
-        nu = rule.effective_degrees_of_freedom
         items.append(
             {
                 "analyzer": analyzer,
@@ -90,20 +91,24 @@ def _items(
                 "planned": key.counts == planned,
                 "state": "lapsed" if lapsed else "in_force",
                 "lapses_at": budget.lapses_at,
-                "lower_tolerance_limit": rule.lower_tolerance_limit,
-                "upper_tolerance_limit": rule.upper_tolerance_limit,
-                "lower_acceptance_limit": rule.lower_acceptance_limit,
-                "upper_acceptance_limit": rule.upper_acceptance_limit,
-                "guard_band": {"lower": rule.guard_band_lower, "upper": rule.guard_band_upper},
                 "bias": budget.budget.bias,
                 "bias_treatment": budget.budget.bias_treatment,
-                "combined_standard_uncertainty": rule.combined_standard_uncertainty,
-                "effective_degrees_of_freedom": None if nu == float("inf") else nu,
-                "coverage_probability": rule.coverage_probability,
-                "coverage_factor": rule.coverage_factor,
-                "expanded_uncertainty": rule.expanded_uncertainty,
-                "measurement_capability_index": rule.measurement_capability_index,
-                "largest_specific_risk": rule.largest_specific_risk,
+                **_figures(rule),
             }
         )
     return items
+
+
+def _figures(rule: AnyRule) -> dict[str, Any]:
+    """Write the figures of a rule; those that a derived characteristic has only at its readings are null."""
+    if isinstance(rule, DerivedReleaseRule):
+        return {
+            **dict.fromkeys(FIGURES),
+            "acceptance_limits": rule.acceptance_limits,
+            "lower_tolerance_limit": rule.tolerance.lower,
+            "upper_tolerance_limit": rule.tolerance.upper,
+            "coverage_probability": rule.coverage_probability,
+            "smallest_standard_uncertainty": rule.box.smallest_standard_uncertainty,
+            "largest_standard_uncertainty": rule.box.largest_standard_uncertainty,
+        }
+    return figures_of(rule, rule.acceptance_limits)

@@ -2,14 +2,22 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from datetime import date
 from typing import Any, Final
 
 from budgets.budget import Budget
-from budgets.evidence.evaluation import effective_degrees_of_freedom
-from budgets.propagation import CombinedUncertainty, combined, coverage_factor
-from service.documents import BudgetComponent, BudgetDocument, Characteristic, Specification, Study
-from service.errors import Conflict
+from budgets.errors import NotSupportedError
+from budgets.units import convert
+from service.documents import (
+    BudgetComponent,
+    BudgetDocument,
+    Characteristic,
+    Evidence,
+    Specification,
+    Study,
+)
+from service.errors import Conflict, Fault
 from service.ledger import format_instant
 from service.schemas import load
 from service.store.rows import StoredVersion
@@ -17,17 +25,18 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import Behind, FaultCollector, resolve
-from service.workflows.rules import RuleKey, compile_pair, planned_counts
+from service.workflows.rules import RuleKey, compile_pair
 from service.workflows.stored_budgets import (
     ResolvedBudget,
     assemble_budget,
     budget_evaluation,
-    budget_from_evaluation,
     component_of,
+    is_default_model,
 )
 from service.workflows.versioned_kind import Approval, VersionedKind
 
-BIAS: Final = "bias"
+# The designs that compare the analyzer with a reference method.
+VALIDATIONS: Final = ("agreement", "covariance")
 
 
 def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> ResolvedBudget:
@@ -44,83 +53,39 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
         collector.attempt(f"#/components/{index}/evidence", _behind, unit_of_work, document, line, index)
         for index, line in enumerate(document.components)
     ]
-    bias = collector.attempt(f"#/model/quantities/{BIAS}/evidence", _bias_value, unit_of_work, document)
-    _check_bias_is_covered(document, collector)
+    estimates = {
+        name: collector.attempt(
+            f"#/model/quantities/{name}/evidence", _value, unit_of_work, document, name, quantity.evidence
+        )
+        for name, quantity in document.model.quantities.items()
+        if quantity.evidence is not None
+    }
+    _check_values_are_covered(document, collector)
     collector.finish("The evidence of the budget does not fit.")
     behind = tuple(item for item in found if item is not None)
+    _check_ranges(document, behind, collector)
+    _check_trueness(document, behind, collector)
+    collector.finish("The budget claims more than its evidence shows.")
     components = [
         collector.attempt(f"#/components/{index}", component_of, line, item.estimate, item.evaluation_type)
         for index, (line, item) in enumerate(zip(document.components, behind, strict=True))
     ]
     collector.finish("The components of the budget do not fit.")
     ready = [component for component in components if component is not None]
-    budget = collector.attempt("#", assemble_budget, document, ready, bias)
+    values = {name: value for name, value in estimates.items() if value is not None}
+    budget = collector.attempt("#", assemble_budget, document, ready, values)
+    collector.faults = [_in_document(fault) for fault in collector.faults]
     collector.finish("The budget does not hold together.")
     assert budget is not None
-    return ResolvedBudget(budget, behind, _serves_until(behind))
+    return ResolvedBudget(budget, behind, values, _serves_until(behind))
 
 
-def figures(unit_of_work: UnitOfWork, stored: StoredVersion) -> dict[str, Any]:
-    """Give a budget's figures for the planned procedure: as stored at approval, else as they would be now.
-
-    Raises
-    ------
-    InvalidRequest
-        The draft cannot be computed.
-    """
-    document = load(BudgetDocument, stored.document)
-    if stored.evaluation is not None:
-        evaluation = stored.evaluation
-        budget = budget_from_evaluation(document, evaluation)
-    else:
-        resolved = resolve_budget(unit_of_work, document)
-        evaluation, budget = budget_evaluation(stored.document, resolved), resolved.budget
-    counts = planned_counts(budget.procedure)
-    result = combined(budget, counts)
-    nu = result.effective_degrees_of_freedom
-    factor = coverage_factor(budget.coverage_probability, nu)
-    return {
-        "code": stored.code,
-        "version": stored.version,
-        "state": stored.state,
-        "unit": document.unit,
-        "digest": evaluation["digest"],
-        "serves_until": evaluation["serves_until"],
-        "bias": budget.bias,
-        "bias_treatment": budget.bias_treatment,
-        "samples": len(counts.readings_per_sample),
-        "readings_per_sample": counts.readings_per_sample[0],
-        "combined_standard_uncertainty": result.standard_uncertainty,
-        "effective_degrees_of_freedom": _finite(nu),
-        "coverage_probability": budget.coverage_probability,
-        "coverage_factor": factor,
-        "expanded_uncertainty": factor * result.standard_uncertainty,
-        "components": _lines(document, result),
-    }
-
-
-def _lines(document: BudgetDocument, result: CombinedUncertainty) -> list[dict[str, Any]]:
-    lines = []
-    for line, part in zip(document.components, result.contributions, strict=True):
-        lines.append(
-            {
-                "code": line.code,
-                "quantity": line.quantity,
-                "level": line.level,
-                "evaluation_type": part.component.evaluation_type,
-                "standard_uncertainty": part.standard_uncertainty_of_one_draw,
-                "degrees_of_freedom": _finite(effective_degrees_of_freedom(part.component.terms)),
-                "averaging_weight": part.weight,
-                "sensitivity_coefficient": -1.0 if line.quantity == BIAS else 1.0,
-                "contribution": part.contribution,
-                "share_of_variance": part.share_of_variance,
-            }
-        )
-    return lines
-
-
-def _finite(degrees_of_freedom: float) -> float | None:
-    return None if degrees_of_freedom == float("inf") else degrees_of_freedom
+def _in_document(fault: Fault) -> Fault:
+    """Point to the member of the document, where the computation calls it otherwise."""
+    pointer = (fault.pointer or "#").replace("#/validated_box", "#/validated_ranges", 1)
+    pointer = pointer.replace("#/expression", "#/model/expression", 1)
+    pointer = pointer.replace("#/quantities", "#/model/quantities", 1)
+    return replace(fault, pointer=pointer)
 
 
 # --- evidence that fits --------------------------------------------------------------------------------
@@ -129,26 +94,23 @@ def _finite(degrees_of_freedom: float) -> float | None:
 def _behind(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComponent, index: int) -> Behind:
     pointer = f"#/components/{index}/evidence"
     code = f"{document.code}/{line.code}"
-    behind = resolve(unit_of_work, line.evidence, code=code, unit=document.unit, pointer=pointer)
+    names = [line.quantity] if line.quantity is not None else list(line.quantities.values())
+    units = {document.model.quantities[name].unit for name in names}
+    if len(units) > 1:
+        raise NotSupportedError("errors of quantities of several units that go together")
+    behind = resolve(unit_of_work, line.evidence, code=code, unit=units.pop(), pointer=pointer)
     if behind.study is not None:
-        _check_study_fits(behind.study, document, pointer)
+        _check_study_fits(unit_of_work, behind.study, document, pointer)
     return behind
 
 
-def _bias_value(unit_of_work: UnitOfWork, document: BudgetDocument) -> float | None:
-    quantity = document.model.quantities.get(BIAS)
-    if quantity is None or quantity.evidence is None:
-        return None
-    pointer = f"#/model/quantities/{BIAS}/evidence"
-    behind = resolve(
-        unit_of_work,
-        quantity.evidence,
-        code=f"{document.code}/{BIAS}",
-        unit=document.unit,
-        pointer=pointer,
-    )
+def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, evidence: Evidence) -> float | None:
+    """Give the value of a quantity that evidence stands behind, as a bias."""
+    pointer = f"#/model/quantities/{name}/evidence"
+    unit = document.model.quantities[name].unit
+    behind = resolve(unit_of_work, evidence, code=f"{document.code}/{name}", unit=unit, pointer=pointer)
     if behind.study is not None:
-        _check_study_fits(behind.study, document, pointer)
+        _check_study_fits(unit_of_work, behind.study, document, pointer)
     collector = FaultCollector()
     if behind.estimate.value is None:
         collector.add(
@@ -156,30 +118,89 @@ def _bias_value(unit_of_work: UnitOfWork, document: BudgetDocument) -> float | N
             f"{behind.estimate.name!r} has no value, only an uncertainty",
             "an estimate that has a value, such as 'bias'",
         )
-        collector.finish("The bias has no value.")
+        collector.finish("A quantity has no value.")
     return behind.estimate.value
 
 
-def _check_bias_is_covered(document: BudgetDocument, collector: FaultCollector) -> None:
-    """Refuse a bias whose own uncertainty is in no component: another study's u(b) says nothing about it."""
-    quantity = document.model.quantities.get(BIAS)
-    if quantity is None or quantity.evidence is None:
-        return
-    if not any(line.quantity == BIAS and line.evidence == quantity.evidence for line in document.components):
+def _check_values_are_covered(document: BudgetDocument, collector: FaultCollector) -> None:
+    """Refuse a value whose own uncertainty is in no component: that of another study says nothing of it.
+
+    A line of several quantities holds theirs together, with their covariance.
+    """
+    for name, quantity in document.model.quantities.items():
+        if quantity.evidence is None:
+            continue
+        own = any(
+            line.quantity == name and line.evidence == quantity.evidence for line in document.components
+        )
+        if not own and not any(name in line.quantities.values() for line in document.components):
+            collector.add(
+                "#/components",
+                f"no component holds the uncertainty of this very {name}",
+                f"a component of the quantity {name!r} with the evidence of #/model/quantities/{name}",
+            )
+
+
+def _check_ranges(document: BudgetDocument, behind: tuple[Behind, ...], collector: FaultCollector) -> None:
+    """Refuse a validated range beyond all reference values of the validation (ISO 12099, from memory)."""
+    for item in behind:
+        if item.study is None or item.study.design != "agreement":
+            continue
+        name = item.study.characteristic
+        own = name == document.characteristic
+        bounds = document.validated_range if own else document.validated_ranges.get(name)
+        lowest, highest = (
+            convert(item.diagnostics[f"reference_{end}"], item.study.unit, document.unit)
+            for end in ("lowest", "highest")
+        )
+        if bounds is None or bounds.lower is None or bounds.upper is None:
+            continue
+        if bounds.lower < lowest or bounds.upper > highest:
+            collector.add_once(
+                "#/validated_range" if own else f"#/validated_ranges/{name}",
+                f"got {bounds.lower:g} to {bounds.upper:g}; the reference values of {item.study.code} run "
+                f"from {lowest:g} to {highest:g}",
+                "a range within them, best the bulk of them",
+            )
+
+
+def _check_trueness(document: BudgetDocument, behind: tuple[Behind, ...], collector: FaultCollector) -> None:
+    """Refuse a bias against a laboratory whose own trueness is in no component.
+
+    All reference values of a study share the bias of their laboratory: it sits in the bias that was found,
+    and no scatter shows it.
+    """
+    pairs = list(zip(document.components, behind, strict=True))
+    against = {
+        name
+        for line, item in pairs
+        if line.level == "calibration" and item.study is not None and item.study.design in VALIDATIONS
+        for name in ([line.quantity] if line.quantity else line.quantities.values())
+    }
+    known = {
+        name
+        for line in document.components
+        if line.level == "reference"
+        for name in ([line.quantity] if line.quantity else line.quantities.values())
+    }
+    for name in sorted(against - known):
         collector.add(
             "#/components",
-            "no component holds the uncertainty of this very bias",
-            f"a component of the quantity {BIAS!r} with the evidence that #/model/quantities/{BIAS} names",
+            f"no component of {name!r} at the level 'reference' holds the trueness of the laboratory",
+            "one from a ring test, a certified material or the between-laboratory part of its limit",
         )
 
 
-def _check_study_fits(study: Study, document: BudgetDocument, pointer: str) -> None:
+def _check_study_fits(unit_of_work: UnitOfWork, study: Study, document: BudgetDocument, pointer: str) -> None:
     """Refuse evidence that was made for something else than this budget speaks of."""
     collector = FaultCollector()
-    for member in ("product", "characteristic"):
-        theirs, ours = getattr(study, member), getattr(document, member)
-        if theirs != ours:
-            collector.add(f"{pointer}/study", f"{study.code} is about the {member} {theirs!r}", f"{ours!r}")
+    if study.product != document.product:
+        detail = f"{study.code} is about the product {study.product!r}"
+        collector.add(f"{pointer}/study", detail, f"{document.product!r}")
+    ours = {document.characteristic, *_derived_from(unit_of_work, document)}
+    for theirs in {study.characteristic, *study.characteristics} - ours:
+        detail = f"{study.code} is about the characteristic {theirs!r}"
+        collector.add(f"{pointer}/study", detail, " or ".join(sorted(ours)))
     shared = study.calibrations.keys() & document.calibrations.keys()
     if study.calibrations and shared != document.calibrations.keys():
         collector.add(
@@ -203,6 +224,12 @@ def _check_study_fits(study: Study, document: BudgetDocument, pointer: str) -> N
     collector.finish("The evidence belongs to something else.")
 
 
+def _derived_from(unit_of_work: UnitOfWork, document: BudgetDocument) -> tuple[str, ...]:
+    key = f"{document.product}/{document.characteristic}"
+    stored = unit_of_work.master.get("characteristic", key)
+    return () if stored is None else tuple(stored.document["derived_from"] or ())
+
+
 def _serves_until(behind: tuple[Behind, ...]) -> str | None:
     days: list[date] = [item.serves_until for item in behind if item.serves_until is not None]
     return min(days).isoformat() if days else None
@@ -223,17 +250,47 @@ def _check(unit_of_work: UnitOfWork, document: BudgetDocument) -> None:
         collector.add(
             "#/unit", f"got {document.unit!r}", f"{characteristic.document['unit']!r}, the unit there"
         )
-    for name, quantity in document.model.quantities.items():
-        if quantity.unit != document.unit:
-            collector.add(
-                f"#/model/quantities/{name}/unit",
-                f"got {quantity.unit!r}",
-                f"{document.unit!r}, as the budget",
-            )
+    else:
+        _check_what_is_read(unit_of_work, document, collector)
+        _check_units_of_default_model(document, collector)
     for analyzer, code in document.calibrations.items():
         _check_calibration(unit_of_work, document, analyzer, code, collector)
     collector.finish("The budget refers to what does not exist or does not fit.")
     resolve_budget(unit_of_work, document)
+
+
+def _check_what_is_read(
+    unit_of_work: UnitOfWork, document: BudgetDocument, collector: FaultCollector
+) -> None:
+    """A quantity that is read is the characteristic itself, or one that it is derived from, in its unit."""
+    channels = _derived_from(unit_of_work, document) or (document.characteristic,)
+    if not is_default_model(document):
+        for name, quantity in document.model.quantities.items():
+            if quantity.source == "reading" and name not in document.validated_ranges:
+                pointer = f"#/validated_ranges/{name}"
+                collector.add(pointer, "is missing", f"the range in which {name} was validated")
+    for name, quantity in document.model.quantities.items():
+        if quantity.source != "reading":
+            continue
+        pointer = f"#/model/quantities/{name}"
+        stored = unit_of_work.master.get("characteristic", f"{document.product}/{name}")
+        if name not in channels or stored is None:
+            collector.add(
+                pointer, f"{name!r} is not read for this characteristic", f"{' or '.join(channels)}"
+            )
+        elif stored.document["unit"] != quantity.unit:
+            unit = stored.document["unit"]
+            collector.add(f"{pointer}/unit", f"got {quantity.unit!r}", f"{unit!r}, the unit of {name}")
+
+
+def _check_units_of_default_model(document: BudgetDocument, collector: FaultCollector) -> None:
+    """Without an expression to carry units, reading and bias are both in the unit of the budget."""
+    if not is_default_model(document):
+        return
+    for name, quantity in document.model.quantities.items():
+        if quantity.source is None and quantity.unit != document.unit:
+            pointer = f"#/model/quantities/{name}/unit"
+            collector.add(pointer, f"got {quantity.unit!r}", f"{document.unit!r}, as the budget")
 
 
 def _check_calibration(

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
 from datetime import date
-from typing import ParamSpec, TypeVar
+from typing import Any, ParamSpec, TypeVar
 
 from budgets.declarations import Declaration
 from budgets.declarations import evaluate as evaluate_declaration
@@ -28,6 +28,7 @@ class Behind:
     estimate: Estimate
     evaluation_type: str
     study: Study | None = None
+    diagnostics: Mapping[str, Any] = field(default_factory=dict)
 
     @property
     def serves_until(self) -> date | None:
@@ -58,6 +59,11 @@ class FaultCollector:
     def add(self, pointer: str, detail: str, expected: str | None = None) -> None:
         """Keep one fault."""
         self.faults.append(Fault(detail, expected=expected, pointer=pointer))
+
+    def add_once(self, pointer: str, detail: str, expected: str | None = None) -> None:
+        """Keep one fault unless something is known to be wrong at that place."""
+        if all(fault.pointer != pointer for fault in self.faults):
+            self.add(pointer, detail, expected)
 
     def finish(self, message: str) -> None:
         """End the collection. Raises InvalidRequest when anything was found.
@@ -110,22 +116,23 @@ def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str, po
     estimate = collector.attempt(pointer, evaluation.estimate, evidence.estimate)
     collector.finish("Evidence is missing.")
     assert estimate is not None
-    return Behind(_in_unit(estimate, study.unit, unit, pointer), "A", study)
+    return Behind(_in_unit(estimate, study.unit, unit, pointer), "A", study, evaluation.diagnostics)
 
 
 def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer: str) -> Behind:
     collector = FaultCollector()
-    members = dict(evidence.declaration)
-    stated_unit = members.pop("unit", None)
-    if stated_unit is None:
+    members = evidence.declaration
+    # A relative figure is a fraction and needs no unit.
+    if members.get("unit") is None and members.get("meaning") != "relative":
         collector.add(
             f"{pointer}/declaration/unit", "is missing", f"the unit of the figure, such as {unit!r}"
         )
     evaluation = collector.attempt(
-        f"{pointer}/declaration", lambda: evaluate_declaration(Declaration(**members), code=code)
+        f"{pointer}/declaration",
+        lambda: evaluate_declaration(Declaration(**members), code=code, unit=unit),
     )
     collector.finish("A declaration cannot be used.")
-    assert evaluation is not None and stated_unit is not None
+    assert evaluation is not None
     if evidence.estimate is None and len(evaluation.estimates) > 1:
         names = ", ".join(estimate.name for estimate in evaluation.estimates)
         collector.add(f"{pointer}/estimate", "the declaration gives several estimates", f"one of {names}")
@@ -134,13 +141,15 @@ def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer:
     estimate = collector.attempt(pointer, evaluation.estimate, name)
     collector.finish("A declaration cannot be used.")
     assert estimate is not None
-    return Behind(_in_unit(estimate, stated_unit, unit, f"{pointer}/declaration/unit"), "B")
+    return Behind(estimate, "B")
 
 
 def _in_unit(estimate: Estimate, from_unit: str, to_unit: str, pointer: str) -> Estimate:
     """Express an estimate in another unit: errors are differences, so an offset of the unit cancels."""
     if from_unit == to_unit:
         return estimate
+    if estimate.matrix_terms:
+        raise NotSupported("Not supported yet: a covariance in another unit than the study's.")
     collector = FaultCollector()
     found = collector.attempt(pointer, conversion, from_unit, to_unit)
     collector.finish("A unit does not convert.")

@@ -14,6 +14,8 @@ from service.workflows.calendar import NOTICE
 from service.workflows.measured import Hold, Measured, measure
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
 from service.workflows.request_checks import check_request
+from service.workflows.rule_figures import FIGURES, figures_of
+from service.workflows.rules import rule_here
 from service.workflows.wording import about_the_value, display
 
 # The worst verdict decides the lot.
@@ -105,26 +107,24 @@ def _rule_on(
     measured: Measured,
 ) -> Ruling:
     characteristic = register.characteristics[request.product, requirement.characteristic]
-    rule, unusable = _release_rule(register, specification, requirement, measured)
+    rule, limits, unusable = _release_rule(register, specification, requirement, measured)
     holds = (*measured.holds, *unusable)
-    judgement = None
-    if rule is not None and measured.estimate is not None and not holds:
-        judgement = rule.judge(measured.estimate)
-    outcome = "hold" if judgement is None else judgement.outcome
-    shown = None
+    judgement = shown = None
     if rule is not None and measured.estimate is not None:
+        judgement = None if holds else rule.judge(measured.estimate)
         shown = display(rule, measured.estimate, judgement, characteristic)
+    outcome = "hold" if judgement is None else judgement.outcome
     verdict = {
         "characteristic": requirement.characteristic,
         "unit": characteristic.unit,
         "specification": _reference(specification),
         "outcome": outcome,
         "estimate": measured.estimate,
-        **_figures(rule, judgement),
+        **_figures(rule, limits, judgement),
         "decision_rule": _decision_rule(requirement),
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
-        "samples": 0 if measured.counts is None else len(measured.counts.readings_per_sample),
-        "readings": 0 if measured.counts is None else sum(measured.counts.readings_per_sample),
+        "samples": measured.samples,
+        "readings": measured.readings,
         "display": shown,
     }
     reasons = [_reason(hold, requirement.characteristic, specification) for hold in holds]
@@ -139,64 +139,32 @@ def _release_rule(
     specification: SpecificationInForce,
     requirement: Requirement,
     measured: Measured,
-) -> tuple[ReleaseRule | None, tuple[Hold, ...]]:
-    """Find the stored rule for what was done; no rule when there is nothing to apply it to."""
-    if measured.budget is None or measured.counts is None:
-        return None, ()
-    if any(hold.code == "too-few-readings" for hold in measured.holds):
-        return None, ()
+) -> tuple[ReleaseRule | None, str | None, tuple[Hold, ...]]:
+    """Find the stored rule for what was done, as it is at these readings, and how its limits are to be read.
+
+    There is no rule when there is nothing to apply it to.
+    """
+    nothing = measured.budget is None or measured.done is None or measured.estimate is None
+    if nothing or any(hold.code == "too-few-readings" for hold in measured.holds):
+        return None, None, ()
+    assert measured.budget is not None and measured.done is not None and measured.estimate is not None
     try:
-        return register.rule(specification, requirement, measured.budget, measured.counts), ()
+        rule = register.rule(specification, requirement, measured.budget, measured.done)
+        return rule_here(rule, measured.means, measured.estimate), rule.acceptance_limits, ()
     except BudgetsError as error:
         hold = Hold(
             "cannot-be-proved", error.message, "Read as the procedure plans. A person decides on this lot."
         )
-        return None, (hold,)
+        return None, None, (hold,)
 
 
-def _figures(rule: ReleaseRule | None, judgement: Judgement | None) -> dict[str, Any]:
+def _figures(rule: ReleaseRule | None, limits: str | None, judgement: Judgement | None) -> dict[str, Any]:
     """Write the figures of the rule, and the probabilities where the reading can be trusted."""
-    if rule is None:
-        return dict.fromkeys(_FIGURES)
-    nu = rule.effective_degrees_of_freedom
     return {
-        "combined_standard_uncertainty": rule.combined_standard_uncertainty,
-        "effective_degrees_of_freedom": None if nu == float("inf") else nu,
-        "coverage_probability": rule.coverage_probability,
-        "coverage_factor": rule.coverage_factor,
-        "expanded_uncertainty": rule.expanded_uncertainty,
-        "lower_tolerance_limit": rule.lower_tolerance_limit,
-        "upper_tolerance_limit": rule.upper_tolerance_limit,
-        "lower_acceptance_limit": rule.lower_acceptance_limit,
-        "upper_acceptance_limit": rule.upper_acceptance_limit,
-        "acceptance_limits": "fixed",
-        "guard_band": {"lower": rule.guard_band_lower, "upper": rule.guard_band_upper},
-        "uncorrected_bias": rule.bias_shift,
-        "measurement_capability_index": rule.measurement_capability_index,
-        "largest_specific_risk": rule.largest_specific_risk,
+        **(dict.fromkeys(FIGURES) if rule is None else figures_of(rule, limits)),
         "conformance_probability": None if judgement is None else judgement.conformance_probability,
         "specific_consumers_risk": None if judgement is None else judgement.specific_consumers_risk,
     }
-
-
-_FIGURES: Final = (
-    "combined_standard_uncertainty",
-    "effective_degrees_of_freedom",
-    "coverage_probability",
-    "coverage_factor",
-    "expanded_uncertainty",
-    "lower_tolerance_limit",
-    "upper_tolerance_limit",
-    "lower_acceptance_limit",
-    "upper_acceptance_limit",
-    "acceptance_limits",
-    "guard_band",
-    "uncorrected_bias",
-    "measurement_capability_index",
-    "largest_specific_risk",
-    "conformance_probability",
-    "specific_consumers_risk",
-)
 
 
 def _nothing_in_force(code: str | None) -> Ruling:
@@ -220,7 +188,7 @@ def _nothing_in_force(code: str | None) -> Ruling:
         "specification": specification,
         "outcome": "hold",
         "estimate": None,
-        **dict.fromkeys(_FIGURES),
+        **_figures(None, None, None),
         "decision_rule": None,
         "budget": None,
         "samples": 0,

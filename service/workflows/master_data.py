@@ -180,6 +180,12 @@ def _check_characteristic(
         collector.add(
             "#/accepted_units", "the unit itself is missing", f"a list with {characteristic.unit!r}"
         )
+    for index, code in enumerate(characteristic.derived_from or ()):
+        pointer = f"#/derived_from/{index}"
+        key = f"{characteristic.product}/{code}"
+        source = _expect(unit_of_work, collector, "characteristic", key, pointer)
+        if source is not None and source.document["derived_from"]:
+            collector.add(pointer, f"{code!r} is derived itself", "a characteristic that is read directly")
     before = unit_of_work.master.get("characteristic", f"{characteristic.product}/{characteristic.code}")
     if before is not None and before.document["unit"] != characteristic.unit:
         # Budgets, specifications and the record speak in this unit.

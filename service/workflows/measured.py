@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping
 from dataclasses import dataclass
 from math import fsum
 from typing import Final
 
-from budgets.budget import Count
+from budgets.errors import ModelError
 from budgets.propagation import Counts
+from budgets.reading_patterns import ReadingPattern
 from budgets.units import conversion
 from service.documents import Calibration, DecisionRequest, Reading
-from service.errors import Fault, InvalidRequest, NotSupported
+from service.errors import Fault, InvalidRequest
+from service.workflows.evidence import FaultCollector
 from service.workflows.register import BudgetInForce, Register
 
 _ASK_THE_LABORATORY: Final = "Have the laboratory analyse a sample of this lot."
@@ -32,11 +35,16 @@ class Hold:
 
 @dataclass(frozen=True)
 class Measured:
-    """The readings of one characteristic, in its own unit, joined to an estimate."""
+    """What was read for one characteristic, joined: a mean for each quantity that is read, in its own unit.
+
+    ``done`` says how the readings were grouped, ``estimate`` is the value of the measurement model.
+    """
 
     budget: BudgetInForce | None
-    counts: Counts | None
-    mean: float | None
+    done: Counts | ReadingPattern | None
+    samples: int
+    readings: int
+    means: Mapping[str, float]
     estimate: float | None
     holds: tuple[Hold, ...]
 
@@ -47,45 +55,96 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
     Raises
     ------
     InvalidRequest
-        More samples or readings than the procedure has, or analyzers that no one budget names.
+        More samples or readings than the procedure has, readings that cannot be grouped as they say, or
+        analyzers that no one budget names.
     """
-    scans = [reading for reading in request.readings if code in reading.values]
+    channels = register.characteristics[request.product, code].derived_from or (code,)
+    scans = [reading for reading in request.readings if all(name in reading.values for name in channels)]
     if not scans:
+        what = " and ".join(channels)
         missing = Hold(
             "characteristic-missing",
-            f"No reading of {code} was sent.",
-            f"Send {code} with the readings of every lot. " + _A_PERSON,
+            f"No reading of {what} was sent.",
+            f"Send {what} with the readings of every lot. " + _A_PERSON,
         )
-        return Measured(None, None, None, None, (missing,))
+        return Measured(None, None, 0, 0, {}, None, (missing,))
     budget = _budget(register, request, code, scans)
-    unit = register.characteristics[request.product, code].unit
-    convert = conversion(request.units[code], unit)
-    by_sample: dict[str, list[float]] = {}
-    for reading in scans:
-        by_sample.setdefault(reading.sample, []).append(convert(reading.values[code]))
-    # The mean of sample means (mathematics of the averaging weights in budgets.propagation).
-    mean = fsum(fsum(values) / len(values) for values in by_sample.values()) / len(by_sample)
-    counts = Counts(tuple(len(values) for values in by_sample.values()))
+    by_channel = {name: _values(register, request, name, scans) for name in channels}
+    done = _done(scans)
+    samples = list(dict.fromkeys(reading.sample for reading in scans))
+    weights = _weights(scans)
+    means = {
+        name: fsum(weight * value for weight, value in zip(weights, values, strict=True))
+        for name, values in by_channel.items()
+    }
     holds = [
         hold for reading in scans for hold in _scan_holds(register.calibrations[reading.calibration], reading)
     ]
+    estimate = None
     if budget is None:
-        return Measured(None, counts, mean, None, (*_nothing_in_force(code), *_unique(holds)))
-    correction = budget.budget.bias if budget.document.bias_treatment == "corrected" else None
-    estimate = mean - (correction or 0.0)
-    values = [value - (correction or 0.0) for sample in by_sample.values() for value in sample]
-    holds.extend(_calibration_holds(budget, scans))
-    holds.extend(_range_holds(budget, values, unit))
-    holds.extend(_count_holds(budget, counts))
-    if budget.lapses_at is not None and recorded_at >= budget.lapses_at:
-        holds.append(
-            Hold(
-                "evidence-lapsed",
-                f"The evidence behind {budget.document.code} served until {budget.lapses_at}.",
-                "Renew the study that lapsed and have the budget approved. " + _ASK_THE_LABORATORY,
-            )
-        )
-    return Measured(budget, counts, mean, estimate, tuple(_unique(holds)))
+        holds = [*_nothing_in_force(code), *holds]
+    else:
+        estimate = _estimate(budget, means)
+        holds.extend(_calibration_holds(budget, scans))
+        holds.extend(_range_holds(register, budget, by_channel, estimate))
+        holds.extend(_count_holds(budget, [sum(r.sample == name for r in scans) for name in samples]))
+        holds.extend(_lapse_holds(budget, recorded_at))
+    return Measured(budget, done, len(samples), len(scans), means, estimate, tuple(_unique(holds)))
+
+
+def _values(register: Register, request: DecisionRequest, name: str, scans: list[Reading]) -> list[float]:
+    """Give the readings of one channel in the unit of its characteristic."""
+    convert = conversion(request.units[name], register.characteristics[request.product, name].unit)
+    return [convert(reading.values[name]) for reading in scans]
+
+
+def _weights(scans: list[Reading]) -> list[float]:
+    """Give each reading its weight: as sent, else such that the estimate is the mean of sample means."""
+    if scans[0].weight is not None:
+        return [reading.weight or 0.0 for reading in scans]
+    per_sample = Counter(reading.sample for reading in scans)
+    return [1 / (len(per_sample) * per_sample[reading.sample]) for reading in scans]
+
+
+def _done(scans: list[Reading]) -> Counts | ReadingPattern:
+    """Say how the readings were grouped; mere counts where nothing but their samples tells them apart.
+
+    Raises
+    ------
+    InvalidRequest
+        Some readings have weights and others not, the weights do not add up to 1, or groups are not nested.
+    """
+    grouped = any(reading.presentation or reading.increment or reading.session for reading in scans)
+    analyzers = {reading.analyzer for reading in scans}
+    weighted = {reading.weight is not None for reading in scans}
+    if weighted == {True, False}:
+        fault = Fault("some readings have a weight and some have none", pointer="#/readings")
+        raise InvalidRequest("1 fault; nothing was recorded.", faults=(fault,))
+    if not grouped and len(analyzers) == 1 and weighted == {False}:
+        return Counts(tuple(Counter(reading.sample for reading in scans).values()))
+    collector = FaultCollector()
+    pattern = collector.attempt("#/readings", _pattern, scans)
+    collector.finish("The readings cannot be grouped as they say.")
+    assert pattern is not None
+    return pattern
+
+
+def _pattern(scans: list[Reading]) -> ReadingPattern:
+    """Group the readings; by default those of a sample share one increment and one presentation.
+
+    Labels are those within the sample, or within the analyzer, as a line would number them.
+    """
+    weights = tuple(reading.weight for reading in scans if reading.weight is not None)
+    return ReadingPattern(
+        groups={
+            "presentation": tuple(f"{r.sample}/{r.increment or ''}/{r.presentation or ''}" for r in scans),
+            "increment": tuple(f"{r.sample}/{r.increment or ''}" for r in scans),
+            "sample": tuple(r.sample for r in scans),
+            "session": tuple(f"{r.analyzer}/{r.session or ''}" for r in scans),
+            "instrument": tuple(r.analyzer for r in scans),
+        },
+        weights=weights or None,
+    )
 
 
 def _budget(
@@ -93,12 +152,26 @@ def _budget(
 ) -> BudgetInForce | None:
     analyzers = list(dict.fromkeys(reading.analyzer for reading in scans))
     budgets = [register.budgets.get((request.product, code, analyzer)) for analyzer in analyzers]
-    if len(analyzers) == 1:
-        return budgets[0]
-    fault = Fault(f"{code} was read on {' and '.join(analyzers)}", pointer="#/readings")
-    if any(budget is None or budget is not budgets[0] for budget in budgets):
+    if any(budget is not budgets[0] for budget in budgets):
+        fault = Fault(f"{code} was read on {' and '.join(analyzers)}", pointer="#/readings")
         raise InvalidRequest("A lot read on two analyzers needs a budget that names both.", faults=(fault,))
-    raise NotSupported("Not supported yet: one lot read on two analyzers.", faults=(fault,))
+    return budgets[0]
+
+
+def _estimate(budget: BudgetInForce, means: Mapping[str, float]) -> float | None:
+    """Give the value of the measurement model; none where the model has none at these readings."""
+    if budget.budget.model is None:
+        (mean,) = means.values()
+        return mean - _correction(budget)
+    try:
+        return budget.budget.model.value(means)
+    except ModelError:
+        return None
+
+
+def _correction(budget: BudgetInForce) -> float:
+    bias = budget.budget.bias if budget.document.bias_treatment == "corrected" else None
+    return bias or 0.0
 
 
 def _nothing_in_force(code: str) -> tuple[Hold, ...]:
@@ -159,47 +232,79 @@ def _calibration_holds(budget: BudgetInForce, scans: list[Reading]) -> list[Hold
     ]
 
 
-def _range_holds(budget: BudgetInForce, values: list[float], unit: str) -> list[Hold]:
-    lower, upper = budget.budget.validated_range
-    outside = [value for value in values if not lower <= value <= upper]
-    if not outside:
-        return []
-    detail = f"{outside[0]:.6g} {unit} lies outside of the validated range, {lower:g} to {upper:g} {unit}."
-    return [Hold("outside-validated-range", detail, _ASK_THE_LABORATORY)]
+def _range_holds(
+    register: Register,
+    budget: BudgetInForce,
+    by_channel: Mapping[str, list[float]],
+    estimate: float | None,
+) -> list[Hold]:
+    """Every reading has to lie where it was validated; of a derived characteristic the estimate too."""
+    product, characteristic = budget.document.product, budget.document.characteristic
+    checked: list[tuple[str, list[float], tuple[float, float]]] = []
+    if budget.budget.model is None:
+        values = [value - _correction(budget) for value in by_channel[characteristic]]
+        checked.append((characteristic, values, budget.budget.validated_range))
+    else:
+        checked += [(name, by_channel[name], ends) for name, ends in budget.budget.validated_box.items()]
+        if estimate is None:
+            return [Hold("outside-validated-range", "The model has no value here.", _ASK_THE_LABORATORY)]
+        checked.append((characteristic, [estimate], budget.budget.validated_range))
+    holds = []
+    for name, values, (lower, upper) in checked:
+        outside = [value for value in values if not lower <= value <= upper]
+        if outside:
+            unit = register.characteristics[product, name].unit
+            detail = (
+                f"{name}: {outside[0]:.6g} {unit} lies outside of the validated range, "
+                f"{lower:g} to {upper:g} {unit}."
+            )
+            holds.append(Hold("outside-validated-range", detail, _ASK_THE_LABORATORY))
+    return holds
 
 
-def _count_holds(budget: BudgetInForce, counts: Counts) -> list[Hold]:
+def _count_holds(budget: BudgetInForce, readings_per_sample: list[int]) -> list[Hold]:
     """Too many is a fault: many readings in one call must not shrink the uncertainty beyond the plan."""
     procedure = budget.budget.procedure
-    samples, fewest = len(counts.readings_per_sample), min(counts.readings_per_sample)
-    faults = [
+    samples = ("samples", len(readings_per_sample), procedure.samples)
+    readings = "readings of a sample"
+    fault = tuple(
         Fault(
             f"got {number} {what}",
             expected=f"at most {planned.most}, by {budget.document.code}",
             pointer="#/readings",
         )
-        for what, number, planned in _done(
-            samples, max(counts.readings_per_sample), procedure.samples, procedure.readings_per_sample
+        for what, number, planned in (
+            samples,
+            (readings, max(readings_per_sample), procedure.readings_per_sample),
         )
         if number > planned.most
-    ]
-    if faults:
-        raise InvalidRequest("More was read than the procedure of the budget has.", faults=tuple(faults))
+    )
+    if fault:
+        raise InvalidRequest("More was read than the procedure of the budget has.", faults=fault)
     return [
         Hold(
             "too-few-readings",
             f"{number} {what}, fewer than the {planned.least} that {budget.document.code} needs.",
             "Send what the procedure asks for with every lot. " + _A_PERSON,
         )
-        for what, number, planned in _done(samples, fewest, procedure.samples, procedure.readings_per_sample)
+        for what, number, planned in (
+            samples,
+            (readings, min(readings_per_sample), procedure.readings_per_sample),
+        )
         if number < planned.least
     ]
 
 
-def _done(
-    samples: int, readings: int, planned: Count, planned_readings: Count
-) -> list[tuple[str, int, Count]]:
-    return [("samples", samples, planned), ("readings of a sample", readings, planned_readings)]
+def _lapse_holds(budget: BudgetInForce, recorded_at: str) -> list[Hold]:
+    if budget.lapses_at is None or recorded_at < budget.lapses_at:
+        return []
+    return [
+        Hold(
+            "evidence-lapsed",
+            f"The evidence behind {budget.document.code} served until {budget.lapses_at}.",
+            "Renew the study that lapsed and have the budget approved. " + _ASK_THE_LABORATORY,
+        )
+    ]
 
 
 def _unique(holds: list[Hold]) -> list[Hold]:

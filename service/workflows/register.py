@@ -9,7 +9,7 @@ from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.propagation import Counts
-from budgets.release import ReleaseRule
+from budgets.reading_patterns import ReadingPattern
 from service.documents import (
     Analyzer,
     BudgetDocument,
@@ -25,7 +25,7 @@ from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.calendar import DEFAULT_PLANT
-from service.workflows.rules import RuleKey, compile_rule, counts_text
+from service.workflows.rules import AnyRule, RuleKey, compile_rule, counts_text, stored_rule
 from service.workflows.stored_budgets import budget_from_evaluation
 
 # Unbalanced numbers of readings are many; beyond this bound they are compiled anew each time.
@@ -65,29 +65,31 @@ class Register:
     specification_products: Mapping[str, str]
     specifications: Mapping[str, SpecificationInForce]
     budgets: Mapping[tuple[str, str, str], BudgetInForce]
-    rules: Mapping[RuleKey, ReleaseRule]
-    compiled: dict[RuleKey, ReleaseRule] = field(default_factory=dict)
+    rules: Mapping[RuleKey, AnyRule]
+    compiled: dict[RuleKey, AnyRule] = field(default_factory=dict)
 
     def rule(
         self,
         specification: SpecificationInForce,
         requirement: Requirement,
         budget: BudgetInForce,
-        counts: Counts,
-    ) -> ReleaseRule:
+        done: Counts | ReadingPattern,
+    ) -> AnyRule:
         """Give the stored rule for what was done; compile it from the stored budget where none was stored."""
+        characteristic = self.characteristics[budget.document.product, requirement.characteristic]
+        if isinstance(done, ReadingPattern):
+            return compile_rule(budget.budget, done, requirement, characteristic)
         key = RuleKey(
             specification=specification.document.code,
             specification_version=specification.version,
             characteristic=requirement.characteristic,
             budget=budget.document.code,
             budget_version=budget.version,
-            counts=counts_text(counts),
+            counts=counts_text(done),
         )
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
-            characteristic = self.characteristics[budget.document.product, requirement.characteristic]
-            rule = compile_rule(budget.budget, counts, requirement, characteristic)
+            rule = compile_rule(budget.budget, done, requirement, characteristic)
             if len(self.compiled) < MOST_COMPILED:
                 self.compiled[key] = rule
         return rule
@@ -118,10 +120,7 @@ def load_register(unit_of_work: UnitOfWork, revision: int) -> Register:
             for budget in budgets
             for analyzer in budget.document.calibrations
         },
-        rules={
-            RuleKey.of(stored): ReleaseRule.from_document(stored.numbers)
-            for stored in unit_of_work.rules.in_force()
-        },
+        rules={RuleKey.of(stored): stored_rule(stored.numbers) for stored in unit_of_work.rules.in_force()},
     )
 
 

@@ -2,21 +2,26 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import asdict, dataclass
+from collections.abc import Iterator, Mapping
+from dataclasses import asdict, dataclass, replace
 from itertools import islice
+from math import fsum
 from typing import Any, Final
 
 from budgets.budget import Budget, Procedure
-from budgets.conformity import Tolerance
+from budgets.conformity import Tolerance, measurement_capability_index, tails
 from budgets.decision_rules import DecisionRule
+from budgets.derived_release import DerivedReleaseRule, release_rule_kind
 from budgets.errors import LimitsError
 from budgets.propagation import Counts
+from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
 from budgets.units import convert
 from service.documents import Characteristic, Requirement, RuleOfDecision, ToleranceLimit
 from service.store.rows import StoredRule
 from service.workflows.evidence import FaultCollector
+
+AnyRule = ReleaseRule | DerivedReleaseRule
 
 
 @dataclass(frozen=True)
@@ -107,16 +112,70 @@ def tolerance(requirement: Requirement, characteristic: Characteristic) -> Toler
 
 
 def compile_rule(
-    budget: Budget, counts: Counts, requirement: Requirement, characteristic: Characteristic
-) -> ReleaseRule:
+    budget: Budget,
+    done: Counts | ReadingPattern,
+    requirement: Requirement,
+    characteristic: Characteristic,
+) -> AnyRule:
     """Compile one release rule. Raises the errors of budgets, an empty acceptance interval among them."""
     domain = characteristic.natural_domain
-    return ReleaseRule.compile(
+    kind = ReleaseRule if budget.model is None else DerivedReleaseRule
+    return kind.compile(
         budget,
-        counts,
+        done,
         tolerance(requirement, characteristic),
         decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
+    )
+
+
+def stored_rule(numbers: Mapping[str, Any]) -> AnyRule:
+    """Rebuild a rule from its stored numbers."""
+    if release_rule_kind(numbers) == "fixed":
+        return ReleaseRule.from_document(numbers)
+    return DerivedReleaseRule.from_document(numbers)
+
+
+def rule_here(rule: AnyRule, means: Mapping[str, float], estimate: float) -> ReleaseRule:
+    """Give the rule with the uncertainty, and the acceptance limits, that hold at these readings.
+
+    Raises
+    ------
+    LimitsError
+        The decision rule cannot be used at these readings, or accepts nothing there.
+    """
+    if isinstance(rule, ReleaseRule):
+        if rule.constant_standard_uncertainty is None:
+            return rule
+        here = rule.standard_uncertainty_at(estimate)
+        return replace(
+            rule, combined_standard_uncertainty=here, expanded_uncertainty=rule.coverage_factor * here
+        )
+    judged, limits = rule.judge(means), rule.tolerance
+    if judged.detail:
+        raise LimitsError(judged.detail)
+    u, nu = judged.combined_standard_uncertainty, judged.effective_degrees_of_freedom
+    lower, upper = judged.lower_acceptance_limit, judged.upper_acceptance_limit
+    return ReleaseRule(
+        lower_tolerance_limit=limits.lower,
+        upper_tolerance_limit=limits.upper,
+        lower_inclusive=limits.lower_inclusive,
+        upper_inclusive=limits.upper_inclusive,
+        lower_acceptance_limit=lower,
+        upper_acceptance_limit=upper,
+        guard_band_lower=None if lower is None or limits.lower is None else lower - limits.lower,
+        guard_band_upper=None if upper is None or limits.upper is None else limits.upper - upper,
+        combined_standard_uncertainty=u,
+        effective_degrees_of_freedom=nu,
+        coverage_probability=rule.coverage_probability,
+        coverage_factor=judged.coverage_factor,
+        expanded_uncertainty=judged.expanded_uncertainty,
+        bias_shift=0.0,
+        decision_rule=rule.decision_rule,
+        measurement_capability_index=measurement_capability_index(limits, u),
+        largest_specific_risk=max(
+            fsum(tails(limit, u, nu, limits)) for limit in (lower, upper) if limit is not None
+        ),
     )
 
 

@@ -14,6 +14,7 @@ from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.units import conversion
 from service.access import require
 from service.documents import Actor, Plant, Study
+from service.documents import NamedSource as DocumentedSource
 from service.errors import Conflict, Fault, NotFound
 from service.ledger import Entry
 from service.schemas import dump
@@ -174,20 +175,22 @@ def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
         pointer=f"#/named_sources/{index}/evidence",
     )
     if behind.study is not None:
-        _check_source_fits(behind.study, study, named.source, f"#/named_sources/{index}/evidence/study")
-    return NamedSource(source=named.source, estimate=behind.estimate)
+        _check_source_fits(behind.study, study, named, f"#/named_sources/{index}/evidence/study")
+    return NamedSource(source=named.source, estimate=behind.estimate, quantity=named.quantity or "")
 
 
-def _check_source_fits(theirs: Study, ours: Study, source: str, pointer: str) -> None:
+def _check_source_fits(theirs: Study, ours: Study, named: DocumentedSource, pointer: str) -> None:
     """Refuse to take out of a validation what was found on something else.
 
     A reference method may have been studied on another product, an analyzer only on its own calibration.
     """
     collector = FaultCollector()
-    if theirs.characteristic != ours.characteristic:
-        detail = f"{theirs.code} is about the characteristic {theirs.characteristic!r}"
-        collector.add(pointer, detail, f"{ours.characteristic!r}")
-    if source.startswith(("analyzer", "presentation")):
+    wanted = {named.quantity} if named.quantity else set(ours.characteristics or (ours.characteristic,))
+    found = {theirs.characteristic, *theirs.characteristics}
+    if not wanted <= found:
+        detail = f"{theirs.code} is about {' and '.join(sorted(found))}"
+        collector.add(pointer, detail, f"a study about {' and '.join(sorted(wanted))}")
+    if named.source.startswith(("analyzer", "presentation")):
         if theirs.product != ours.product:
             collector.add(
                 pointer, f"{theirs.code} is about the product {theirs.product!r}", f"{ours.product!r}"
@@ -201,15 +204,10 @@ def _check_source_fits(theirs: Study, ours: Study, source: str, pointer: str) ->
 
 
 def _check_references(unit_of_work: UnitOfWork, study: Study, collector: FaultCollector) -> None:
-    key = f"{study.product}/{study.characteristic}"
-    characteristic = unit_of_work.master.get("characteristic", key)
     if unit_of_work.master.get("product", study.product) is None:
         collector.add("#/product", f"there is no product {study.product!r}", "the code of a product")
-    elif characteristic is None:
-        collector.add("#/characteristic", f"there is no characteristic {key!r}", "one of the product")
     else:
-        unit = characteristic.document["unit"]
-        collector.attempt("#/unit", conversion, study.unit, unit)
+        _check_characteristics(unit_of_work, study, collector)
     for analyzer, calibration in study.calibrations.items():
         stored = unit_of_work.master.get("calibration", calibration)
         if stored is None or stored.document["analyzer"] != analyzer:
@@ -222,6 +220,33 @@ def _check_references(unit_of_work: UnitOfWork, study: Study, collector: FaultCo
         collector.add(
             "#/laboratory", f"there is no laboratory {study.laboratory!r}", "the code of a laboratory"
         )
+
+
+def _check_characteristics(unit_of_work: UnitOfWork, study: Study, collector: FaultCollector) -> None:
+    named = {"#/characteristic": study.characteristic}
+    named |= {f"#/characteristics/{index}": code for index, code in enumerate(study.characteristics)}
+    for pointer, code in named.items():
+        key = f"{study.product}/{code}"
+        stored = unit_of_work.master.get("characteristic", key)
+        if stored is None:
+            collector.add(pointer, f"there is no characteristic {key!r}", "one of the product")
+        else:
+            collector.attempt("#/unit", conversion, study.unit, stored.document["unit"])
+    if study.design != "covariance":
+        if study.characteristics:
+            collector.add(
+                "#/characteristics", f"{study.design} is about one characteristic", "no such member"
+            )
+        return
+    if study.characteristic not in study.characteristics:
+        collector.add(
+            "#/characteristics", f"{study.characteristic!r} is missing", "all that the study is about"
+        )
+    for index, column in enumerate(study.columns):
+        base = column.removesuffix("_reference")
+        if base not in (*study.characteristics, "sample", "pair", "scan"):
+            expected = ", ".join(study.characteristics)
+            collector.add(f"#/columns/{index}", f"{column!r} is no characteristic of the study", expected)
 
 
 def _check_dates(study: Study, plant_document: Plant, collector: FaultCollector) -> None:

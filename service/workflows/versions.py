@@ -15,7 +15,6 @@ from service.ledger import Entry
 from service.schemas import dump
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
-from service.workflows import budgets
 from service.workflows.evidence import FaultCollector
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import PLANT_CHAIN, Page, Request, was_recorded
@@ -225,14 +224,6 @@ def listing(
         )
         found = unit_of_work.versions.list(kind, code=code, state=state, limit=limit + 1, before=before)
     return page_of(found, limit, answer_of, lambda stored: f"{stored.code}.{stored.version}")
-
-
-def evaluation(services: Services, actor: Actor, code: str, version: int) -> Answer:
-    """Give the figures of a budget version, stored at approval or as of now. Raises NotFound."""
-    require(actor, "read")
-    with services.database.reading() as unit_of_work:
-        stored = version_of(unit_of_work, "budget", code, version)
-        return budgets.figures(unit_of_work, stored)
 
 
 def _find(unit_of_work: UnitOfWork, kind: str, cursor: str) -> StoredVersion | None:

@@ -10,8 +10,10 @@ from typing import Any
 import pytest
 from scipy.stats import norm
 
+from budgets.budget import Count, Procedure
+from budgets.measurement_models import MeasurementModel, Quantity
 from service.documents import DecisionRequest, Reading, Requirement, RuleOfDecision, ToleranceLimit
-from service.errors import Conflict, InvalidRequest, NotSupported
+from service.errors import Conflict, InvalidRequest
 from service.workflows.judging import judge
 from service.workflows.register import Register
 from tests.service.workflows.registers import (
@@ -20,6 +22,7 @@ from tests.service.workflows.registers import (
     STANDARD_UNCERTAINTY,
     a_budget,
     a_budget_in_force,
+    a_component,
     a_reading,
     a_register,
     a_request,
@@ -315,10 +318,74 @@ def test_a_lot_read_on_two_analyzers_needs_a_budget_that_names_both() -> None:
     other = a_reading(2.9, 2, analyzer="nir-2", calibration="wmp-2-1")
     with pytest.raises(InvalidRequest, match="names both"):
         judged(a_request(a_reading(2.9, 1), other))
-    budget = a_budget_in_force()
-    both = {("whole-milk-powder", "moisture", analyzer): budget for analyzer in ("nir-1", "nir-2")}
-    with pytest.raises(NotSupported):
-        judged(a_request(a_reading(2.9, 1), other), a_register(budgets=both))
+
+
+def test_on_two_analyzers_what_is_drawn_anew_with_each_is_averaged() -> None:
+    """Rule 19 by hand: the instrument part halves in variance, repeatability is that of two readings."""
+    components = (
+        a_component("repeatability", "moisture", "reading", 0.06 * math.sqrt(2)),
+        a_component("between-instruments", "moisture", "instrument", 0.05),
+        a_component("bias", "bias", "calibration", 0.08),
+    )
+    procedure = Procedure(samples=Count(1, 1, 2), readings_per_sample=Count(1, 2, 4))
+    budget = a_budget_in_force(budget=a_budget(components=components, procedure=procedure))
+    document = replace(budget.document, calibrations={"nir-1": "wmp-7", "nir-2": "wmp-2-1"})
+    both = {
+        ("whole-milk-powder", "moisture", analyzer): replace(budget, document=document)
+        for analyzer in ("nir-1", "nir-2")
+    }
+    shared = dict.fromkeys(both, next(iter(both.values())))
+    other = a_reading(2.9, 2, analyzer="nir-2", calibration="wmp-2-1")
+    verdict = judged(a_request(a_reading(2.8, 1), other), a_register(budgets=shared))["verdicts"][0]
+    assert verdict["estimate"] == pytest.approx(2.85 - BIAS)
+    u = math.sqrt(0.06**2 + 0.05**2 / 2 + 0.08**2)
+    assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
+
+
+# --- readings in groups, weights -----------------------------------------------------------------------
+
+
+def grouped_budget(**changes: Any) -> Register:
+    components = (
+        a_component("repeatability", "moisture", "reading", 0.04),
+        a_component("presentation", "moisture", "presentation", 0.05),
+        a_component("session", "moisture", "session", 0.03),
+        a_component("bias", "bias", "calibration", 0.08),
+    )
+    budget = a_budget_in_force(budget=a_budget(components=components, **changes))
+    return a_register(budgets={("whole-milk-powder", "moisture", "nir-1"): budget})
+
+
+def test_readings_of_one_filling_share_its_error_and_those_of_two_do_not() -> None:
+    register = grouped_budget()
+    one = judged(a_request(*twice(2.9)), register)["verdicts"][0]
+    refilled = (a_reading(2.9, 1, presentation="a"), a_reading(2.9, 2, presentation="b"))
+    two = judged(a_request(*refilled), register)["verdicts"][0]
+    common = 0.04**2 / 2 + 0.03**2 + 0.08**2
+    assert one["combined_standard_uncertainty"] == pytest.approx(math.sqrt(common + 0.05**2), rel=1e-12)
+    assert two["combined_standard_uncertainty"] == pytest.approx(math.sqrt(common + 0.05**2 / 2), rel=1e-12)
+
+
+def test_weights_make_estimate_and_uncertainty_together() -> None:
+    readings = (a_reading(2.8, 1, weight=0.25), a_reading(3.0, 2, weight=0.75))
+    verdict = judged(a_request(*readings), grouped_budget())["verdicts"][0]
+    assert verdict["estimate"] == pytest.approx(0.25 * 2.8 + 0.75 * 3.0 - BIAS, rel=1e-14)
+    u = math.sqrt(0.04**2 * (0.25**2 + 0.75**2) + 0.05**2 + 0.03**2 + 0.08**2)
+    assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
+
+
+@pytest.mark.parametrize("weights", [(0.5, None), (0.5, 0.6)])
+def test_weights_that_do_not_make_a_mean_are_refused(weights: tuple[float | None, ...]) -> None:
+    readings = (a_reading(2.9, number, weight=weight) for number, weight in enumerate(weights))
+    with pytest.raises(InvalidRequest):
+        judged(a_request(*readings))
+
+
+def test_unbalanced_readings_get_the_uncertainty_of_what_was_done() -> None:
+    readings = [a_reading(2.9, n, sample="1" if n < 3 else "2") for n in range(5)]
+    verdict = judged(a_request(*readings), grouped_budget())["verdicts"][0]
+    u = math.sqrt(0.04**2 * (1 / 3 + 1 / 2) / 4 + 0.05**2 / 2 + 0.03**2 + 0.08**2)
+    assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
 
 
 # --- what the answer says ------------------------------------------------------------------------------
@@ -368,3 +435,76 @@ def test_a_stored_rule_is_used_as_it_stands() -> None:
     answer = judged(register=a_register(rules={key: stored}))
     assert answer["verdicts"][0]["upper_acceptance_limit"] == 2.5
     assert answer["outcome"] == "hold"
+
+
+# --- a characteristic computed from several channels of a scan -----------------------------------------
+
+
+def derived_register() -> Register:
+    """Judge a ratio of two channels, in per cent; u(fat) = 0.2, u(moisture) = 0.1, common to all."""
+    model = MeasurementModel(
+        "100 * fat / (100 - moisture)", (Quantity("fat", "%"), Quantity("moisture", "%")), "%"
+    )
+    budget = a_budget(
+        components=(a_component("fat", "fat", "lot", 0.2), a_component("moisture", "moisture", "lot", 0.1)),
+        bias=None,
+        model=model,
+        validated_range=(20.0, 35.0),
+        validated_box={"fat": (25.0, 29.0), "moisture": (2.0, 4.6)},
+    )
+    in_force = a_budget_in_force(budget=budget)
+    document = replace(in_force.document, characteristic="fat-in-dry-matter")
+    characteristics = dict(a_register().characteristics)
+    key = ("whole-milk-powder", "fat-in-dry-matter")
+    characteristics[key] = replace(
+        characteristics["whole-milk-powder", "fat"], code=key[1], derived_from=("fat", "moisture")
+    )
+    requirement = a_requirement(
+        characteristic=key[1], lower_tolerance_limit=ToleranceLimit(27.0, "%"), upper_tolerance_limit=None
+    )
+    return a_register(
+        characteristics=characteristics,
+        budgets={(*key, "nir-1"): replace(in_force, document=document)},
+        specifications={"customer-b": a_specification("customer-b", requirement)},
+    )
+
+
+def both_channels(fat: float, moisture: float) -> DecisionRequest:
+    readings = (a_reading(0, n, values={"fat": fat, "moisture": moisture}) for n in (1, 2))
+    return a_request(*readings, units={"fat": "%", "moisture": "%"})
+
+
+def test_a_derived_characteristic_is_judged_at_its_readings() -> None:
+    """The law of propagation by hand: JCGM 100:2008, 5.1.2, eq. (10) (from memory)."""
+    verdict = judged(both_channels(27.0, 4.0), derived_register())["verdicts"][0]
+    estimate = 100 * 27.0 / 96
+    u = math.hypot(100 / 96 * 0.2, 100 * 27.0 / 96**2 * 0.1)
+    assert verdict["acceptance_limits"] == "at_this_reading"
+    assert verdict["estimate"] == pytest.approx(estimate, rel=1e-14)
+    assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
+    assert verdict["lower_acceptance_limit"] == pytest.approx(27.0 + Z * u, rel=1e-12)
+    assert verdict["conformance_probability"] == pytest.approx(norm.cdf((estimate - 27.0) / u), rel=1e-12)
+    assert verdict["outcome"] == "release"
+
+
+@pytest.mark.parametrize(
+    ("fat", "moisture", "outcome", "reason"),
+    [(26.2, 4.0, "hold", "in-guard-band"), (25.5, 4.0, "reject", "outside-tolerance")],
+)
+def test_a_derived_value_is_held_or_rejected_like_any(
+    fat: float, moisture: float, outcome: str, reason: str
+) -> None:
+    answer = judged(both_channels(fat, moisture), derived_register())
+    assert (answer["outcome"], reasons(answer)) == (outcome, [reason])
+
+
+def test_every_channel_of_a_derived_value_has_its_own_validated_range() -> None:
+    answer = judged(both_channels(27.0, 1.0), derived_register())
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["outside-validated-range"])
+    assert "moisture" in answer["reasons"][0]["detail"]
+
+
+def test_a_derived_value_needs_all_its_channels_in_one_scan() -> None:
+    apart = (a_reading(0, 1, values={"fat": 27.0}), a_reading(0, 2, values={"moisture": 3.0}))
+    answer = judged(a_request(*apart, units={"fat": "%", "moisture": "%"}), derived_register())
+    assert (answer["outcome"], reasons(answer)) == ("hold", ["characteristic-missing"])
