@@ -201,8 +201,30 @@ _EVALUATION = _object(
     },
 )
 
+_TWO_LIMITS = _object("Acceptance limits.", {"lower": _LIMIT, "upper": _LIMIT})
+_ALTERNATIVE = _object(
+    "The budget with this component changed; null where nothing is left without it.",
+    {
+        "combined_standard_uncertainty": _NUMBER_OR_NULL,
+        "effective_degrees_of_freedom": _NUMBER_OR_NULL,
+        "expanded_uncertainty": _NUMBER_OR_NULL,
+        "acceptance_limits": _or_null(_TWO_LIMITS),
+    },
+)
+_LINE: Form = {
+    "code": _CODE,
+    "quantities": _list(_TEXT),
+    "level": _TEXT,
+    "evaluation_type": {"type": "string", "enum": ["A", "B"]},
+    "standard_uncertainty": {**_NUMBER, "description": "Of one draw."},
+    "degrees_of_freedom": {**_NUMBER_OR_NULL, "description": "null: infinite"},
+    "averaging_weight": {**_NUMBER, "description": "What averaging leaves of the variance of one draw."},
+    "sensitivity_coefficient": {**_NUMBER_OR_NULL, "description": "null: of several quantities"},
+    "contribution": _NUMBER,
+    "share_of_variance": _NUMBER,
+}
 _BUDGET_FIGURES = _object(
-    "A budget's figures for its planned procedure.",
+    "A budget explained, for its planned procedure.",
     {
         "code": _CODE,
         "version": _WHOLE,
@@ -210,12 +232,61 @@ _BUDGET_FIGURES = _object(
         "unit": _TEXT,
         "digest": _TEXT,
         "serves_until": _TEXT_OR_NULL,
-        "bias": _NUMBER,
+        "estimates": {"type": "object", "description": "Values of biases and the like."},
         "bias_treatment": _TEXT,
         "samples": _WHOLE,
         "readings_per_sample": _WHOLE,
+        "at": {"type": "object", "description": "The readings at which it is shown, and their estimate."},
         **_UNCERTAINTY,
-        "components": _list({"type": "object"}),
+        "specification": _or_null(_REFERENCE),
+        "acceptance_limits": _or_null(_TWO_LIMITS),
+        "levels": _list(
+            _object(
+                "What the components of a level give together.",
+                {
+                    "level": _TEXT,
+                    "variance": _NUMBER,
+                    "contribution": _NUMBER,
+                    "share_of_variance": _NUMBER,
+                },
+            )
+        ),
+        "components": _list(
+            _object(
+                "A component, and what would be without it or with half of it.",
+                {**_LINE, "evidence": {"type": "object"}, "without": _ALTERNATIVE, "halved": _ALTERNATIVE},
+                remark={**_TEXT, "description": "Why the expanded uncertainty rises without it, if it does."},
+            )
+        ),
+        "warnings": _list({"type": "object"}),
+    },
+)
+_COMPARED = {**_UNCERTAINTY, "version": _WHOLE, "state": _STATE, "acceptance_limits": _or_null(_TWO_LIMITS)}
+_BUDGET_COMPARISON = _object(
+    "Two versions of a budget, line by line.",
+    {
+        "code": _CODE,
+        "unit": _TEXT,
+        "was": _object("The version compared with.", _COMPARED),
+        "becomes": _object("The version asked about.", _COMPARED),
+        "specification": _or_null(_REFERENCE),
+        "components": _list(
+            _object(
+                "A line; the limits are those of the old budget with this line alone changed.",
+                {
+                    "code": _CODE,
+                    "changed": _YES,
+                    "was": _or_null(_object("Before.", _LINE)),
+                    "becomes": _or_null(_object("After.", _LINE)),
+                    "acceptance_limits": _or_null(_TWO_LIMITS),
+                    "moves_lower_limit_by": _NUMBER_OR_NULL,
+                    "moves_upper_limit_by": _NUMBER_OR_NULL,
+                },
+            )
+        ),
+        "document_changes": _list(
+            _object("Another member that differs.", {"member": _TEXT, "was": {}, "becomes": {}})
+        ),
     },
 )
 
@@ -303,6 +374,7 @@ ANSWERS: dict[str, Form] = {
     ),
     "StudyPage": page_of(_STUDY_SUMMARY),
     "BudgetFigures": _BUDGET_FIGURES,
+    "BudgetComparison": _BUDGET_COMPARISON,
     "AcceptanceLimits": _ACCEPTANCE_LIMITS,
     "Lot": _object("How a lot stands.", {**_LOT, "last_decision": ref("Decision")}),
     "LotPage": page_of(_object("How a lot stands.", _LOT)),

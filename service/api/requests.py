@@ -191,5 +191,14 @@ def _wrong_parameter(name: str, value: str, expected: str) -> Fault:
     return Fault(got(value), expected, parameter=name)
 
 
+def version_number(value: str | None, name: str) -> int | None:
+    """Read a query parameter that is the number of a version. Raises InvalidRequest."""
+    if value is None:
+        return None
+    if not (value.isascii() and value.isdigit() and len(value) < 10 and int(value) > 0):
+        raise _bad_query([Fault(f"got {value[:60]!r}", "the number of a version", parameter=name)])
+    return int(value)
+
+
 def _bad_query(faults: list[Fault]) -> InvalidRequest:
     return InvalidRequest(f"{counted(len(faults))} in the query.", faults=tuple(faults))

@@ -121,7 +121,7 @@ def agreement_study() -> dict[str, Any]:
     draw = random.Random(13)
     rows = []
     for pair in range(1, 61):
-        true = draw.gauss(3.2, 0.7)
+        true = draw.uniform(1.3, 5.7)
         reading = true + 0.03 + draw.gauss(0, 0.06) + draw.gauss(0, 0.03)
         rows.append(
             [f"V{pair:02d}", round(reading, 3), round(true + draw.gauss(0, 0.04), 3), f"batch-{pair % 12}"]

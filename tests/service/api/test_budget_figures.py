@@ -1,0 +1,134 @@
+"""A budget explained, two versions compared, and drafts that claim more than their evidence shows."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import pytest
+
+from service import documents
+from tests.service.api.conftest import Callers
+from tests.service.api.house import done, example
+
+VERSIONS = "/v1/budgets/wmp-moisture-nir/versions"
+
+
+def draft(callers: Callers, document: dict[str, Any]) -> None:
+    done(callers["engineer"].post(VERSIONS, document))
+
+
+def figures(callers: Callers, version: int = 1, query: str = "?specification=legal") -> dict[str, Any]:
+    return done(callers["engineer"].get(f"{VERSIONS}/{version}/evaluation{query}"), 200)
+
+
+def test_the_levels_add_up_to_the_variance(callers: Callers) -> None:
+    found = figures(callers)
+    variance = found["combined_standard_uncertainty"] ** 2
+    assert math.fsum(level["variance"] for level in found["levels"]) == pytest.approx(variance, rel=1e-12)
+    assert [level["level"] for level in found["levels"]] == ["reading", "lot", "calibration", "reference"]
+
+
+def test_without_a_component_the_rest_is_left(callers: Callers) -> None:
+    found = figures(callers)
+    parts = {part["code"]: part for part in found["components"]}
+    for code, part in parts.items():
+        rest = math.fsum(other["contribution"] ** 2 for name, other in parts.items() if name != code)
+        assert part["without"]["combined_standard_uncertainty"] == pytest.approx(math.sqrt(rest), rel=1e-12)
+        half = rest + part["contribution"] ** 2 / 4
+        assert part["halved"]["combined_standard_uncertainty"] == pytest.approx(math.sqrt(half), rel=1e-12)
+    # The legal limit is an upper one: with less uncertainty more is accepted.
+    accepted = found["acceptance_limits"]["upper"]
+    assert parts["remainder"]["without"]["acceptance_limits"]["upper"] > accepted
+
+
+def test_without_a_specification_there_are_no_limits(callers: Callers) -> None:
+    found = figures(callers, query="")
+    assert found["specification"] is None
+    assert found["acceptance_limits"] is None
+
+
+def test_a_specification_that_says_nothing_of_it_is_refused(callers: Callers) -> None:
+    response = callers["engineer"].get(f"{VERSIONS}/1/evaluation?specification=nobody")
+    assert response.status_code == 422
+    assert response.get_json()["errors"][0]["parameter"] == "specification"
+
+
+def test_two_versions_are_compared_line_by_line(callers: Callers) -> None:
+    document = example(documents.BudgetDocument, reason="a better ring test")
+    trueness = document["components"][3]["evidence"]["declaration"]
+    trueness["value"] /= 2
+    draft(callers, document)
+    compared = done(callers["engineer"].get(f"{VERSIONS}/2/comparison?specification=legal"), 200)
+    assert (compared["was"]["version"], compared["becomes"]["version"]) == (1, 2)
+    assert [line["code"] for line in compared["components"] if line["changed"]] == ["reference-trueness"]
+    (line,) = [line for line in compared["components"] if line["changed"]]
+    assert line["becomes"]["contribution"] == pytest.approx(line["was"]["contribution"] / 2, rel=1e-12)
+    moved = compared["becomes"]["acceptance_limits"]["upper"] - compared["was"]["acceptance_limits"]["upper"]
+    # Only this line changed, so it alone moves the limit.
+    assert line["moves_upper_limit_by"] == pytest.approx(moved, rel=1e-9)
+    assert moved > 0
+    assert [change["member"] for change in compared["document_changes"]] == ["reason"]
+
+
+def test_a_version_is_compared_with_another_one_when_asked(callers: Callers) -> None:
+    same = done(callers["engineer"].get(f"{VERSIONS}/1/comparison?against=1"), 200)
+    assert not any(line["changed"] for line in same["components"])
+    assert callers["engineer"].get(f"{VERSIONS}/1/comparison?against=0").status_code == 422
+    assert callers["engineer"].get(f"{VERSIONS}/1/comparison?against=7").status_code == 404
+
+
+def faults_of(callers: Callers, document: dict[str, Any]) -> dict[str, str]:
+    response = callers["engineer"].post(VERSIONS, document)
+    assert response.status_code == 422, response.get_data(as_text=True)
+    return {fault["pointer"]: fault["detail"] for fault in response.get_json()["errors"]}
+
+
+def test_a_range_beyond_all_reference_values_is_refused(callers: Callers) -> None:
+    document = example(documents.BudgetDocument, validated_range={"lower": 0.1, "upper": 50})
+    assert (
+        "the reference values of wmp-val-2026-01 run from"
+        in faults_of(callers, document)["#/validated_range"]
+    )
+
+
+def test_a_bias_without_the_trueness_of_its_laboratory_is_refused(callers: Callers) -> None:
+    document = example(documents.BudgetDocument)
+    document["components"] = document["components"][:3]
+    assert "trueness of the laboratory" in faults_of(callers, document)["#/components"]
+
+
+@pytest.mark.parametrize(
+    ("expression", "words"),
+    [
+        ("moisture - bias + __import__('os')", "expression"),
+        ("moisture - bias.real", "expression"),
+        ("(lambda: 1)() - bias", "expression"),
+        ("moisture - bias - ash", "ash"),
+        ("(" * 300 + "moisture" + ")" * 300 + " - bias", "expression"),
+        ("moisture ** 9 ** 9 ** 9 - bias", ""),
+        ("moisture[0] - bias", "expression"),
+        ("moisture -", "expression"),
+    ],
+)
+def test_an_expression_is_arithmetic_and_nothing_else(callers: Callers, expression: str, words: str) -> None:
+    document = example(documents.BudgetDocument, validated_ranges={"moisture": {"lower": 1.5, "upper": 5.5}})
+    document["model"]["expression"] = expression
+    faults = faults_of(callers, document)
+    assert any(place.startswith(("#/model", "#/components")) for place in faults), faults
+    assert words in str(faults)
+
+
+def test_correlations_that_cannot_hold_together_are_refused(callers: Callers) -> None:
+    document = example(documents.BudgetDocument)
+    document["correlations"] = [
+        {
+            "between": ["repeatability", "nobody"],
+            "level": "reading",
+            "coefficient": 0.5,
+            "evidence": {"document": "a guess"},
+        }
+    ]
+    faults = faults_of(callers, document)
+    assert "no component 'nobody'" in str(faults)
+    assert any(place.startswith("#/correlations/0") for place in faults)
