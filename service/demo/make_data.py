@@ -119,8 +119,11 @@ def main() -> None:
     scans = list(_replicate_scans(simulation))
     determinations = list(_duplicate_determinations(simulation))
     pairs = list(_validation_pairs(simulation))
+    _write("three-channel-scans", ("sample", "scan", *CHANNELS), ((*where, *texts(v)) for where, v in scans))
     _write(
-        "three-channel-scans", ("sample", "replicate", *CHANNELS), ((*where, *texts(v)) for where, v in scans)
+        "three-channel-pairs",
+        ("pair", *CHANNELS, *(f"{channel}_reference" for channel in CHANNELS)),
+        ((where[0], *texts(scan), *texts(found)) for where, scan, found in pairs),
     )
     for place, channel in enumerate(CHANNELS):
         _write(

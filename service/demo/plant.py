@@ -1,8 +1,9 @@
 """The documents of the demo plant: master data, studies, budgets and specifications, as the API takes them.
 
 The legal limits are those of the Codex standard for milk powders, CXS 207, for whole-milk powder: water at
-most 5 % m/m, milk fat at least 26 % and less than 42 % m/m (from memory). The customer's limits and all else
-are invented. Dates are counted back from today, so that the evidence of the demo serves whenever it is run.
+most 5 % m/m, milk fat at least 26 % and less than 42 % m/m, milk protein at least 34 % m/m in milk
+solids-not-fat (from memory). The customer's limits and all else are invented. Dates are counted back from
+today, so that the evidence of the demo serves whenever it is run.
 """
 
 from __future__ import annotations
@@ -38,10 +39,12 @@ class Channel:
     standard_error_of_calibration: float
 
 
+DERIVED: Final = "protein-in-snf"
+
 CHANNELS: Final = (
-    Channel("moisture", "oven method", 0.05, 0.03, (2.0, 4.6), 6, 0.08),
-    Channel("fat", "gravimetric method", 0.08, 0.05, (25.0, 29.0), 7, 0.18),
-    Channel("protein", "nitrogen method", 0.06, 0.04, (23.5, 26.5), 8, 0.15),
+    Channel("moisture", "oven method", 0.05, 0.03, (2.2, 4.5), 6, 0.08),
+    Channel("fat", "gravimetric method", 0.08, 0.05, (25.3, 28.8), 7, 0.18),
+    Channel("protein", "nitrogen method", 0.06, 0.04, (23.7, 26.3), 8, 0.15),
 )
 
 
@@ -90,6 +93,19 @@ def master_data() -> Iterator[tuple[str, Document]]:
         )
     codes = [channel.code for channel in CHANNELS]
     yield (
+        f"/v1/products/{PRODUCT}/characteristics/{DERIVED}",
+        {
+            "code": DERIVED,
+            "product": PRODUCT,
+            "unit": "%",
+            "accepted_units": ["%"],
+            "basis": "in solids-not-fat",
+            "natural_domain": {"lower": 0, "upper": 100},
+            "decimals": 1,
+            "derived_from": ["protein", "moisture", "fat"],
+        },
+    )
+    yield (
         f"/v1/analyzers/{ANALYZER}",
         {"code": ANALYZER, "kind": "analyzer", "channels": codes, "decimals": dict.fromkeys(codes, 2)},
     )
@@ -128,6 +144,39 @@ def studies() -> Iterator[Document]:
     """Give the studies, in the order in which they build on each other."""
     for channel in CHANNELS:
         yield from _studies_of(channel.code)
+    yield from _covariance_studies()
+
+
+def _covariance_studies() -> Iterator[Document]:
+    """Give the studies of the three channels together: errors of one scan go together."""
+    several = {"characteristics": [channel.code for channel in CHANNELS]}
+    scans = _study("scan-cov", "covariance", "three-channel", "scans", days_ago=40, on_analyzer=True)
+    yield {**scans, "characteristic": "protein", **several}
+    pairs = _study(
+        "pair-cov",
+        "covariance",
+        "three-channel",
+        "pairs",
+        days_ago=30,
+        on_analyzer=True,
+        laboratory=LABORATORY,
+    )
+    references = [
+        {
+            "source": "reference_repeatability",
+            "quantity": channel.code,
+            "evidence": {"study": f"{channel.code}-duplicates", "estimate": "repeatability"},
+        }
+        for channel in CHANNELS
+    ]
+    scans_source = {"study": "scan-cov", "estimate": "repeatability_covariance"}
+    yield {
+        **pairs,
+        "characteristic": "protein",
+        **several,
+        "independent": True,
+        "named_sources": [{"source": "analyzer_repeatability", "evidence": scans_source}, *references],
+    }
 
 
 def _studies_of(characteristic: str) -> Iterator[Document]:
@@ -160,6 +209,7 @@ def budgets() -> Iterator[Document]:
     for channel in CHANNELS:
         if channel.code != "protein":
             yield budget(channel)
+    yield derived_budget()
 
 
 def budget(channel: Channel = CHANNELS[0]) -> Document:
@@ -205,6 +255,58 @@ def budget(channel: Channel = CHANNELS[0]) -> Document:
     }
 
 
+def derived_budget() -> Document:
+    """Give the budget of protein in solids-not-fat: an expression of three channels of one scan."""
+    names = [channel.code for channel in CHANNELS]
+    biases = {name: f"{name}_bias" for name in names}
+
+    def joint(code: str, level: str, study: str, estimate: str, **quantities: str) -> Document:
+        evidence = {"study": study, "estimate": estimate}
+        return {"code": code, "quantities": quantities, "level": level, "evidence": evidence}
+
+    own = dict(zip(names, names, strict=True))
+    singles = [
+        {
+            "code": f"{channel.code}-{code}",
+            "quantity": quantity,
+            "level": level,
+            "evidence": {"declaration": declared},
+        }
+        for channel in CHANNELS
+        for code, quantity, level, declared in (
+            ("sampling", channel.code, "sample", _sampling(channel)),
+            ("trueness", biases[channel.code], "reference", _trueness(channel)),
+        )
+    ]
+    return {
+        **{name: value for name, value in budget().items() if name not in ("model", "components")},
+        "code": budget_code(DERIVED),
+        "characteristic": DERIVED,
+        "validated_range": {"lower": 32.0, "upper": 40.0},
+        "validated_ranges": {
+            channel.code: {"lower": channel.validated_range[0], "upper": channel.validated_range[1]}
+            for channel in CHANNELS
+        },
+        "model": {
+            "expression": "100 * (protein - protein_bias) / "
+            "(100 - (moisture - moisture_bias) - (fat - fat_bias))",
+            "quantities": {
+                **{name: {"unit": "%", "from": "reading"} for name in names},
+                **{
+                    biases[name]: {"unit": "%", "evidence": {"study": f"{name}-pairs", "estimate": "bias"}}
+                    for name in names
+                },
+            },
+        },
+        "components": [
+            joint("scan-repeatability", "reading", "scan-cov", "repeatability_covariance", **own),
+            joint("scan-remainder", "lot", "pair-cov", "remainder_covariance", **own),
+            joint("scan-bias", "calibration", "pair-cov", "bias_covariance", **biases),
+            *singles,
+        ],
+    }
+
+
 def specifications() -> Iterator[Document]:
     """Give the legal specification and that of a customer."""
     factor = {"kind": "guarded_by_factor", "multiple": 1, "coverage_probability": 0.95, "sides": 1}
@@ -212,6 +314,7 @@ def specifications() -> Iterator[Document]:
     legal = [
         _requirement("moisture", None, _limit(5.0), factor),
         _requirement("fat", _limit(26.0), _limit(42.0, inclusive=False), factor),
+        _requirement(DERIVED, _limit(34.0), None, factor),
     ]
     customer = [
         _requirement("moisture", None, _limit(3.2), risk),
@@ -235,10 +338,10 @@ def _limit(value: float, *, inclusive: bool = True) -> Document:
 def _requirement(
     characteristic: str, lower: Document | None, upper: Document | None, rule: Document
 ) -> Document:
-    (method,) = [channel.method for channel in CHANNELS if channel.code == characteristic]
+    methods = {channel.code: channel.method for channel in CHANNELS}
     return {
         "characteristic": characteristic,
-        "method": method,
+        "method": methods.get(characteristic, "computed from one scan"),
         "judged": "lot_mean",
         "lower_tolerance_limit": lower,
         "upper_tolerance_limit": upper,

@@ -101,21 +101,22 @@ class Walk:
         self._console.print(table)
 
     def _record_studies(self) -> None:
-        columns = ("study", "rows", "estimate", "standard uncertainty", "degrees of freedom", "95 % interval")
+        columns = ("study", "rows", "estimate", "u", "degrees of freedom", "95 % interval")
         table = self._table("Studies, evaluated from raw data", *columns)
         for study in plant.studies():
             answer = self._client.post(self._access.engineer, "/v1/studies", study)
             evaluation = answer["evaluation"]
             for position, estimate in enumerate(evaluation["estimates"]):
-                name = estimate["name"] if estimate["usable"] else f"{estimate['name']} (not usable)"
+                name = estimate["name"].replace("_", " ")
+                if not estimate["usable"]:
+                    name = f"{name} (not usable)"
                 if estimate["value"] is not None:
                     name = f"{name} = {estimate['value']:.4f} %"
                 table.add_row(
                     study["code"] if position == 0 else "",
                     str(evaluation["used"]) if position == 0 else "",
                     name,
-                    _figure(estimate["standard_uncertainty"], ".4f"),
-                    _figure(estimate["degrees_of_freedom"], ".1f"),
+                    *_known_to(estimate),
                     _interval(estimate["interval"]),
                 )
         self._console.print(table)
@@ -133,20 +134,35 @@ class Walk:
         )
 
     def _show_budget(self, code: str, characteristic: str) -> None:
-        path = f"/v1/budgets/{code}/versions/1/evaluation"
+        """Show a budget as a person reads it: grouped by the level at which errors are drawn anew."""
+        path = f"/v1/budgets/{code}/versions/1/evaluation?specification=legal"
         found = self._client.get(self._access.engineer, path)
-        columns = ("component", "drawn anew per", "u of one draw", "u in the result", "dof", "share")
-        table = self._table(f"Budget of {characteristic}, one sample read twice", *columns)
-        for line in found["components"]:
+        columns = ("component", "u of one draw", "c", "u in the result", "dof", "share", "limit without")
+        table = self._table(f"Budget of {characteristic}, one sample read twice", *columns, "limit halved")
+        for level in found["levels"]:
+            lines = [line for line in found["components"] if line["level"] == level["level"]]
+            for line in lines:
+                table.add_row(
+                    line["code"],
+                    f"{line['standard_uncertainty']:.4f} %",
+                    _figure(line["sensitivity_coefficient"], "+.2f", missing=""),
+                    f"{line['contribution']:.4f} %",
+                    _figure(line["degrees_of_freedom"], ".1f"),
+                    f"{100 * line['share_of_variance']:.0f} %",
+                    _moved(line["without"]),
+                    _moved(line["halved"]),
+                )
             table.add_row(
-                line["code"],
-                line["level"],
-                f"{line['standard_uncertainty']:.4f} %",
-                f"{line['contribution']:.4f} %",
-                _figure(line["degrees_of_freedom"], ".1f"),
-                f"{100 * line['share_of_variance']:.0f} %",
+                f"[italic]each {level['level']}[/italic]",
+                "",
+                "",
+                f"[italic]{level['contribution']:.4f} %[/italic]",
+                "",
+                f"[italic]{100 * level['share_of_variance']:.0f} %[/italic]",
+                "",
+                "",
+                end_section=True,
             )
-        table.add_section()
         table.add_row(
             "combined",
             "",
@@ -154,6 +170,8 @@ class Walk:
             f"{found['combined_standard_uncertainty']:.4f} %",
             _figure(found["effective_degrees_of_freedom"], ".1f"),
             f"U = {found['expanded_uncertainty']:.3f} %",
+            _moved(found),
+            "",
         )
         self._console.print(table)
 
@@ -165,14 +183,17 @@ class Walk:
         for item in found["items"]:
             if item["procedure"]["readings_per_sample"] != 2:
                 continue
+            fixed = item["acceptance_limits"] == "fixed"
             table.add_row(
                 f"{item['specification']['code']} version {item['specification']['version']}",
                 f"{item['procedure']['samples']} x {item['procedure']['readings_per_sample']}"
                 + (", as planned" if item["planned"] else ""),
                 _span(*(_stated(item[f"{side}_tolerance_limit"]) for side in SIDES)),
-                f"{item['guard_band']['upper']:.3f} %",
-                _span(*(_inward(item[f"{side}_acceptance_limit"], side) for side in SIDES)),
-                f"{100 * item['largest_specific_risk']:.1f} %",
+                f"{item['guard_band']['upper']:.3f} %" if fixed else "",
+                _span(*(_inward(item[f"{side}_acceptance_limit"], side) for side in SIDES))
+                if fixed
+                else "by the readings",
+                f"{100 * item['largest_specific_risk']:.1f} %" if fixed else "",
             )
         self._console.print(table)
 
@@ -203,7 +224,8 @@ class Walk:
         self._console.print(f"\n[bold]{title}[/bold]")
         table = Table()
         for position, column in enumerate(columns):
-            table.add_column(column, justify="left" if position == 0 else "right", overflow="fold")
+            first = position == 0
+            table.add_column(column, justify="left" if first else "right", no_wrap=first, overflow="fold")
         return table
 
 
@@ -221,8 +243,26 @@ def _span(lower: str | None, upper: str | None) -> str:
     return f"at least {lower} %" if upper is None else f"{lower} to {upper} %"
 
 
-def _figure(value: float | None, form: str) -> str:
-    return "∞" if value is None else format(value, form)
+def _moved(figures: dict[str, Any]) -> str:
+    """Write the acceptance limits that a budget would have."""
+    limits = figures["acceptance_limits"]
+    if limits is None or limits == {"lower": None, "upper": None}:
+        return "none"
+    lower, upper = (_inward(limits[side], side) for side in SIDES)
+    if lower is None:
+        return f"≤ {upper} %"
+    return f"≥ {lower} %" if upper is None else f"{lower} .. {upper}"
+
+
+def _figure(value: float | None, form: str, *, missing: str = "∞") -> str:
+    return missing if value is None else format(value, form)
+
+
+def _known_to(estimate: dict[str, Any]) -> tuple[str, str]:
+    """Write how well an estimate is known; of several quantities at once there is no one figure."""
+    if estimate.get("matrix_terms"):
+        return "of three channels", ""
+    return _figure(estimate["standard_uncertainty"], ".4f"), _figure(estimate["degrees_of_freedom"], ".1f")
 
 
 def _interval(interval: dict[str, Any] | None) -> str:

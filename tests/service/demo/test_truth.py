@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from budgets.declarations import Declaration
@@ -33,6 +34,8 @@ def all_evaluated() -> dict[str, dict[str, Evaluation]]:
     """Evaluate the studies of every channel, those of agreement on the others."""
     found: dict[str, dict[str, Evaluation]] = {}
     for study in plant.studies():
+        if study["design"] == "covariance":
+            continue
         mine = found.setdefault(study["characteristic"], {})
         names = {"repeatability": "analyzer_repeatability", "duplicates": "reference_repeatability"}
         sources = (
@@ -87,6 +90,44 @@ def test_the_remainder_is_found_without_the_bias_of_the_laboratory(evaluations: 
     assert remainder.standard_uncertainty < with_the_laboratory
 
 
+def test_the_correlations_within_a_scan_are_found() -> None:
+    """Intervals by Fisher's z (common practice, no source): 80 degrees of freedom, three channels."""
+    (study,) = [study for study in plant.studies() if study["code"] == "scan-cov"]
+    found = np.array(evaluated(study).diagnostics["repeatability_correlations"])
+    assert evaluated(study).diagnostics["quantities"] == list(make_data.CHANNELS)
+    for i, j in ((0, 1), (0, 2), (1, 2)):
+        distance = np.arctanh(found[i, j]) - np.arctanh(make_data.SCAN_CORRELATION[i, j])
+        assert abs(distance) < 2.4 / math.sqrt(80 - 2)  # three at once: each at 98.3 %
+
+
+def test_the_correlations_of_the_remainder_have_the_right_signs(evaluations: Found) -> None:
+    scans, pairs = (study for study in plant.studies() if study["design"] == "covariance")
+    sources = [
+        NamedSource("analyzer_repeatability", evaluated(scans).estimate("repeatability_covariance")),
+        *(
+            NamedSource(
+                "reference_repeatability",
+                evaluations[channel]["duplicates"].estimate("repeatability"),
+                quantity=channel,
+            )
+            for channel in TRUTH
+        ),
+    ]
+    study = evaluate_study(
+        "covariance",
+        StudyData(tuple(pairs["columns"]), tuple(map(tuple, pairs["rows"]))),
+        study="pair-cov",
+        named_sources=sources,
+        options={"independent": True},
+    )
+    assert study.estimate("remainder_covariance").usable
+    matrix = np.array(study.diagnostics["remainder_matrix"])
+    truth = np.array([truth.remainder for truth in TRUTH.values()])
+    # The standard deviations within a factor of two; the strongest correlation with its sign.
+    assert (np.abs(np.log2(np.sqrt(np.diag(matrix)) / truth)) < 1).all()
+    assert matrix[1, 2] < 0
+
+
 @pytest.mark.slow
 def test_the_intervals_hold_as_often_as_they_say(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Twelve 95 % intervals from each of 60 seeds: a simulation, within four standard errors (0.8 %)."""
@@ -129,4 +170,4 @@ def test_the_seeded_script_makes_the_files_that_are_kept(
     make_data.main()
     made = {path.name: path.read_bytes() for path in tmp_path.iterdir()}
     assert made == {path.name: path.read_bytes() for path in kept.iterdir()}
-    assert len(made) == 11
+    assert len(made) == 12
