@@ -7,14 +7,13 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from budgets.correlations import is_possible
+from budgets.distributions import check_shape
 from budgets.errors import ComponentError, EvidenceError
 from budgets.evidence.evaluation import Estimate, Term, effective_degrees_of_freedom, merged, variance
 from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of
 from budgets.levels import LEVELS
 
 __all__ = ["LEVELS", "Component"]
-
-DISTRIBUTIONS = ("normal", "rectangular", "triangular", "trapezoidal", "arcsine")
 
 
 @dataclass(frozen=True)
@@ -53,6 +52,8 @@ class Component:
         Of a component of several quantities at once; ``quantity`` and ``terms`` are empty then.
     matrix_terms : tuple of MatrixTerm
         Covariance of one draw of those quantities.
+    top_to_base_ratio : float or None
+        Of a trapezoidal distribution.
 
     Raises
     ------
@@ -79,6 +80,7 @@ class Component:
     relative_to: str = ""
     quantities: tuple[str, ...] = ()
     matrix_terms: tuple[MatrixTerm, ...] = ()
+    top_to_base_ratio: float | None = None
 
     def __post_init__(self) -> None:
         if self.level not in LEVELS:
@@ -92,11 +94,10 @@ class Component:
                 f"not {self.evaluation_type!r}",
                 where=("evaluation_type",),
             )
-        if self.distribution not in DISTRIBUTIONS:
-            raise ComponentError(
-                f"component {self.code}: {self.distribution!r} is none of {', '.join(DISTRIBUTIONS)}",
-                where=("distribution",),
-            )
+        try:
+            check_shape(self.distribution, self.top_to_base_ratio)
+        except ComponentError as error:
+            raise ComponentError(f"component {self.code}: {error.message}", where=error.where) from error
         if not 0 <= self.covered_weight <= 1:
             raise ComponentError(
                 f"component {self.code}: the covered weight {self.covered_weight} is not within 0 to 1",
@@ -172,7 +173,7 @@ class Component:
         estimate: Estimate,
         evaluation_type: str,
         *,
-        distribution: str = "normal",
+        distribution: str | None = None,
         relative_to: str = "",
         quantities: Mapping[str, str] | None = None,
     ) -> Component:
@@ -186,7 +187,8 @@ class Component:
             None takes the default level of the estimate.
         estimate : Estimate
         evaluation_type : {"A", "B"}
-        distribution : str
+        distribution : str or None
+            None takes that of the estimate.
         relative_to : str
         quantities : mapping of str to str or None
             For an estimate of several quantities: what a column of its study is called in the model, where
@@ -220,7 +222,7 @@ class Component:
             level=chosen,
             terms=estimate.terms,
             evaluation_type=evaluation_type,
-            distribution=distribution,
+            distribution=estimate.distribution if distribution is None else distribution,
             covered_weight=estimate.covered_weight,
             contains=estimate.contains,
             source=estimate.name,
@@ -230,6 +232,7 @@ class Component:
             relative_to=relative_to,
             quantities=_named(estimate, quantities or {}),
             matrix_terms=estimate.matrix_terms,
+            top_to_base_ratio=estimate.top_to_base_ratio if distribution is None else None,
         )
 
 

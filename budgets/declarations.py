@@ -10,6 +10,7 @@ import re
 from collections.abc import Callable
 from dataclasses import dataclass, fields, replace
 
+from budgets.distributions import relative_half_width
 from budgets.errors import BudgetsError, ComponentError, raise_collected
 from budgets.evidence.evaluation import Estimate, Evaluation, MeanSquare, Term
 from budgets.levels import levels_from
@@ -163,7 +164,9 @@ def evaluate(declaration: Declaration, *, code: str, unit: str | None = None) ->
         term = Term(1.0, MeanSquare(f"{code}/{name}", figure**2, _degrees_of_freedom(declaration)))
         contains = {"repeatability_limit": ("repeatability", "resolution"), "resolution": ("resolution",)}
         first = "reference" if meaning not in contains else "reading"
-        estimates = (_estimate(name, (term,), first, contains.get(meaning, ())),)
+        single = _estimate(name, (term,), first, contains.get(meaning, ()))
+        shape = _shape(declaration)
+        estimates = (replace(single, distribution=shape, top_to_base_ratio=declaration.top_to_base_ratio),)
     return _evaluation(declaration, estimates)
 
 
@@ -343,17 +346,17 @@ def _expanded_with_probability(declaration: Declaration) -> float:
 
 
 def _half_width(declaration: Declaration) -> float:
-    shape, a = declaration.distribution, declaration.value
-    if shape == "normal":
+    shape = declaration.distribution
+    if shape is None or shape == "normal":
         return _expanded_with_probability(declaration)
-    if shape == "trapezoidal":
-        ratio = declaration.top_to_base_ratio or 0.0
-        return a * math.sqrt((1 + ratio**2) / 6)  # JCGM 100, 4.3.9, eq. (9a)
-    if shape == "triangular":
-        return a / math.sqrt(6)  # JCGM 100, 4.3.9, eq. (9b)
-    if shape == "arcsine":
-        return a / math.sqrt(2)  # JCGM 101:2008, 6.4.6
-    return a / math.sqrt(3)  # JCGM 100, 4.3.7, eq. (7)
+    # JCGM 100, 4.3.7, eq. (7), and 4.3.9, eq. (9a) and (9b); JCGM 101, 6.4.6
+    return declaration.value / relative_half_width(shape, declaration.top_to_base_ratio)
+
+
+def _shape(declaration: Declaration) -> str:
+    if declaration.meaning == "resolution":
+        return "rectangular"
+    return declaration.distribution or "normal"
 
 
 _STANDARD_UNCERTAINTY: dict[str, Callable[[Declaration], float]] = {

@@ -6,13 +6,12 @@ import math
 from collections.abc import Mapping, Sequence
 
 from budgets.components import Component
-from budgets.errors import CorrelationError, NotSupportedError
+from budgets.distributions import excess
+from budgets.errors import CorrelationError
 from budgets.evidence.evaluation import EvaluationWarning, variance
 from budgets.linear_propagation import CompiledPropagation
 from budgets.measurement_models import SecondOrder
 
-# Fourth central moment over u^4, less the 3 of the normal distribution.
-EXCESS = {"normal": 0.0, "rectangular": -1.2, "triangular": -0.6, "arcsine": -1.5}
 _MATTERS = 0.05
 
 
@@ -37,8 +36,8 @@ def second_order_terms(
     ------
     CorrelationError
         If inputs are correlated: the terms hold for independent inputs only.
-    NotSupportedError
-        For a trapezoidal component, whose fourth moment is not kept.
+    ComponentError
+        For a trapezoidal component without its ratio of top to base.
 
     Notes
     -----
@@ -52,14 +51,9 @@ def second_order_terms(
             where=("correlations",),
         )
     variances: dict[str, float] = {}
-    excess: dict[str, float] = {}
+    cumulants: dict[str, float] = {}
     owners: dict[str, str] = {}
     for index, (line, component) in enumerate(zip(law.lines, components, strict=True)):
-        if component.distribution not in EXCESS:
-            raise NotSupportedError(
-                f"terms of second order with a {component.distribution} component",
-                where=("components", index, "distribution"),
-            )
         name = line.inputs[0]
         terms = line.terms_at({name: 1.0}, estimates)
         for term in terms:
@@ -72,8 +66,9 @@ def second_order_terms(
         own = variance(terms)
         variances[name] = variances.get(name, 0.0) + line.weight * own
         # The fourth cumulant of a mean of n draws is that of one over n^3; the weight is 1/n.
-        excess[name] = excess.get(name, 0.0) + EXCESS[component.distribution] * line.weight**3 * own**2
-    moments = {name: 3 * value**2 + excess[name] for name, value in variances.items()}
+        shape = excess(component.distribution, component.top_to_base_ratio)
+        cumulants[name] = cumulants.get(name, 0.0) + shape * line.weight**3 * own**2
+    moments = {name: 3 * value**2 + cumulants[name] for name, value in variances.items()}
     return law.model.second_order(estimates, variances, fourth_moments=moments)
 
 

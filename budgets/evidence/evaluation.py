@@ -96,6 +96,10 @@ class Estimate:
         Variance of the relative error, to be multiplied by the square of the value.
     matrix_terms : tuple of MatrixTerm
         Covariance of several quantities, where the estimate is one of them jointly; ``terms`` is empty then.
+    distribution : str
+        Shape of the distribution of the error.
+    top_to_base_ratio : float or None
+        Of a trapezoidal distribution.
     """
 
     name: str
@@ -110,6 +114,8 @@ class Estimate:
     reading_weight: float = 1.0
     relative_terms: tuple[Term, ...] = ()
     matrix_terms: tuple[MatrixTerm, ...] = ()
+    distribution: str = "normal"
+    top_to_base_ratio: float | None = None
 
     @property
     def variance(self) -> float:
@@ -130,9 +136,11 @@ class Estimate:
     def to_document(self) -> dict[str, Any]:
         """Return the estimate as JSON-able members; null stands for infinite degrees of freedom."""
         interval = self.interval
-        seldom = {
+        seldom: dict[str, Any] = {
             "relative_terms": [term_document(term) for term in self.relative_terms],
             "matrix_terms": [matrix_term_document(term) for term in self.matrix_terms],
+            "distribution": None if self.distribution == "normal" else self.distribution,
+            "top_to_base_ratio": self.top_to_base_ratio,
         }
         return {
             "name": self.name,
@@ -155,8 +163,8 @@ class Estimate:
             "contains": list(self.contains),
             "taken_out": list(self.taken_out),
             "reading_weight": self.reading_weight,
-            # Only where there are any: most estimates are of one quantity and of one size.
-            **{name: terms for name, terms in seldom.items() if terms},
+            # Only where there are any: most estimates are of one quantity, normal and of one size.
+            **{name: member for name, member in seldom.items() if member not in (None, [])},
         }
 
     @classmethod
@@ -177,6 +185,8 @@ class Estimate:
             reading_weight=document.get("reading_weight", 1.0),
             relative_terms=tuple(term_of(term) for term in document.get("relative_terms", ())),
             matrix_terms=tuple(matrix_term(term) for term in document.get("matrix_terms", ())),
+            distribution=document.get("distribution", "normal"),
+            top_to_base_ratio=document.get("top_to_base_ratio"),
         )
 
 

@@ -343,7 +343,7 @@ def test_second_order_is_refused_where_it_does_not_hold():
         with pytest.raises(CorrelationError, match="independent inputs"):
             combined(budget, Counts((1,)), estimates=at, second_order=True)
     odd = a_budget("x*y", [line("a", "x", 0.2, distribution="trapezoidal"), components[1]])
-    with pytest.raises(NotSupportedError, match="trapezoidal"):
+    with pytest.raises(ComponentError, match="needs its ratio"):
         combined(odd, Counts((1,)), estimates=at, second_order=True)
 
 
