@@ -127,6 +127,18 @@ def verify(anchor: Path | None) -> None:
 
 
 @main.command()
+def published() -> None:
+    """Compute the published checks on this machine and print a dated report; exit status 1 if one differs."""
+    from datetime import UTC, datetime
+
+    from service.published.report import passed, run_all, text_report
+
+    rows = run_all()
+    click.echo(text_report(rows, dated=datetime.now(UTC)), nl=False)
+    sys.exit(0 if passed(rows) else 1)
+
+
+@main.command()
 def openapi() -> None:
     """Print the description of the HTTP API."""
     from service import describe_api

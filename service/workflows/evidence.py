@@ -127,6 +127,9 @@ def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer:
         collector.add(
             f"{pointer}/declaration/unit", "is missing", f"the unit of the figure, such as {unit!r}"
         )
+    if not members.get("document"):
+        # Type B: whoever audits the budget goes back to the document (JCGM 100:2008, 4.3.1, from memory).
+        collector.add(f"{pointer}/declaration/document", "is missing", "the document of the figure, by name")
     evaluation = collector.attempt(
         f"{pointer}/declaration",
         lambda: evaluate_declaration(Declaration(**members), code=code, unit=unit),

@@ -28,6 +28,7 @@ ALLOWED = {
     "service.api": {"service.api", "service.workflows", "service.schemas", "budgets.errors", *LEAVES},
     "service.pages": {"service.pages", "service.workflows", "service.schemas", "budgets.errors", *LEAVES},
     "service.demo": {"service.demo", "service.workflows", "service.store", "service.settings", "budgets"},
+    "service.published": {"service.published", "budgets"},
     # The only ones that wire the parts together.
     "service": {"service", "budgets"},
     "service.cli": {"service", "budgets"},

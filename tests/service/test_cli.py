@@ -114,6 +114,14 @@ def test_every_account_and_token_stands_in_the_record(run: Run, tmp_path: Path) 
     assert "The record is whole." in run("verify").stdout
 
 
+def test_the_published_checks_are_computed_and_reported(run: Run) -> None:
+    result = run("published")
+    assert result.exit_code == 0
+    assert "Published checks, computed on 20" in result.stdout
+    assert "JCGM 100:2008" in result.stdout
+    assert " 0 differs" in result.stdout
+
+
 def test_the_settings_in_force_are_shown_with_secrets_masked(
     run: Run, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -98,6 +98,13 @@ def test_a_bias_without_the_trueness_of_its_laboratory_is_refused(callers: Calle
     assert "trueness of the laboratory" in faults_of(callers, document)["#/components"]
 
 
+def test_a_stated_figure_names_the_document_it_was_taken_from(callers: Callers) -> None:
+    document = example(documents.BudgetDocument)
+    document["components"][3]["evidence"]["declaration"].pop("document")
+    faults = faults_of(callers, document)
+    assert faults == {"#/components/3/evidence/declaration/document": "is missing"}
+
+
 @pytest.mark.parametrize(
     ("expression", "words"),
     [
