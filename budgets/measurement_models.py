@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from budgets.errors import BudgetsError, ModelError, UnitsError, raise_collected
-from budgets.expression_values import array_slopes, array_values, exact_slopes, exact_values
+from budgets.expression_arrays import array_slopes, array_values
+from budgets.expression_values import exact_slopes, exact_values
 from budgets.expressions import Expression, is_name, parse
 from budgets.model_dimensions import check_dimensions
 from budgets.taylor import taylor_polynomial
