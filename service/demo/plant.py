@@ -116,7 +116,7 @@ def master_data() -> Iterator[tuple[str, Document]]:
             "code": CALIBRATION,
             "analyzer": ANALYZER,
             "product": PRODUCT,
-            "from": _days_ago(60),
+            "from": "2026-01-10",
             "samples": 420,
             "latent_variables": {channel.code: channel.latent_variables for channel in CHANNELS},
             "standard_error_of_calibration": {

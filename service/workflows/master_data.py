@@ -192,9 +192,24 @@ def _check_characteristic(
         collector.add(
             "#/unit", f"got {characteristic.unit!r}", f"{before.document['unit']!r}; the unit stays"
         )
+    if before is not None and _has_budget_in_force(unit_of_work, characteristic):
+        # Rules were compiled, and will be, with these: they change with a budget, not under it.
+        now = dump(characteristic)
+        for member in ("natural_domain", "derived_from"):
+            if before.document[member] != now[member]:
+                expected = f"{before.document[member]}, as long as a budget is in force"
+                collector.add(f"#/{member}", f"got {now[member]}", expected)
     lower, upper = characteristic.natural_domain.lower, characteristic.natural_domain.upper
     if lower is not None and upper is not None and lower >= upper:
         collector.add("#/natural_domain", f"got {lower} to {upper}", "a lower bound below the upper one")
+
+
+def _has_budget_in_force(unit_of_work: UnitOfWork, characteristic: Characteristic) -> bool:
+    subject = (characteristic.product, characteristic.code)
+    return any(
+        (version.product, version.characteristic) == subject
+        for version in unit_of_work.versions.all_in_force("budget")
+    )
 
 
 def _check_line(unit_of_work: UnitOfWork, line: Line, collector: FaultCollector) -> None:

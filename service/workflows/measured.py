@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from math import fsum
 from typing import Final
+from zoneinfo import ZoneInfo
 
 from budgets.errors import ModelError
 from budgets.propagation import Counts
@@ -78,7 +79,9 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         for name, values in by_channel.items()
     }
     holds = [
-        hold for reading in scans for hold in _scan_holds(register.calibrations[reading.calibration], reading)
+        hold
+        for reading in scans
+        for hold in _scan_holds(register.calibrations[reading.calibration], reading, register.plant.time_zone)
     ]
     estimate = None
     if budget is None:
@@ -184,8 +187,15 @@ def _nothing_in_force(code: str) -> tuple[Hold, ...]:
     )
 
 
-def _scan_holds(calibration: Calibration, reading: Reading) -> list[Hold]:
+def _scan_holds(calibration: Calibration, reading: Reading, time_zone: str) -> list[Hold]:
     holds = []
+    taken_on = reading.taken_at.astimezone(ZoneInfo(time_zone)).date()
+    if taken_on < calibration.starts_on:
+        detail = (
+            f"Sample {reading.sample} was read on {taken_on}, before the calibration {calibration.code} "
+            f"began on {calibration.starts_on}."
+        )
+        holds.append(Hold("before-calibration", detail, "Check the clock of the analyzer. " + _A_PERSON))
     for name, limit in calibration.flags.items():
         words = name.replace("-", " ")
         value = reading.flags.get(name)

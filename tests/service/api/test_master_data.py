@@ -143,3 +143,13 @@ def test_lists_continue_where_they_ended(at_start: Callers) -> None:
         seen += [item["code"] for item in page["items"]]
         cursor = page["next"]
     assert sorted(seen) == ["fat", "moisture", "protein"]
+
+
+def test_the_natural_domain_stays_while_a_budget_is_in_force(callers: Callers) -> None:
+    """Rules compiled at approval and rules compiled for other counts rest on the same domain."""
+    path = "/v1/products/whole-milk-powder/characteristics/moisture"
+    found = callers["engineer"].get(path)
+    document = found.get_json() | {"natural_domain": {"lower": 0, "upper": 50}}
+    response = callers["engineer"].put(path, document, **{"If-Match": found.headers["ETag"]})
+    assert response.status_code == 422
+    assert [fault["pointer"] for fault in response.get_json()["errors"]] == ["#/natural_domain"]

@@ -131,6 +131,7 @@ def test_a_bias_left_to_the_guard_band_stays_in_the_estimate() -> None:
     ("changes", "reason"),
     [
         ({"calibration": "wmp-8"}, "another-calibration"),
+        ({"taken_at": datetime(2026, 1, 9, 23, 59, tzinfo=UTC)}, "before-calibration"),
         ({"flags": {}}, "flag-missing"),
         ({"flags": {"distance-from-calibration-set": 3.1}}, "scan-flagged"),
         ({"influences": {"sample_temperature": 14.9}}, "influence-outside-range"),
