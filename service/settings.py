@@ -9,7 +9,7 @@ import difflib
 import os
 import secrets
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 from urllib.parse import parse_qsl, quote, urlencode, urlsplit
@@ -57,7 +57,11 @@ TABLE: tuple[Setting, ...] = (
         "How many proxies stand before the service and may say where a request came from.",
     ),
     Setting("SHOALMARK_LOG_LEVEL", "info", "The least level that is logged: debug, info, warning or error."),
-    Setting("SHOALMARK_THREADS", "8", "How many requests are worked on at the same time."),
+    Setting(
+        "SHOALMARK_THREADS",
+        "one more than twice the processors, at most 8",
+        "How many requests are worked on at the same time.",
+    ),
     Setting(
         "SHOALMARK_DEMO",
         "no",
@@ -65,6 +69,14 @@ TABLE: tuple[Setting, ...] = (
     ),
 )
 NAMES = tuple(setting.name for setting in TABLE)
+
+
+def default_threads() -> int:
+    """Return how many requests one process works on: most of a request is computation, one at a time.
+
+    Further threads only wait for each other; the server warns of more than this.
+    """
+    return min(8, 2 * (os.cpu_count() or 1) + 1)
 
 
 @dataclass(frozen=True)
@@ -79,7 +91,7 @@ class Settings:
     tls_key: Path | None = None
     trusted_proxies: int = 0
     log_level: str = "info"
-    threads: int = 8
+    threads: int = field(default_factory=default_threads)
     demo: bool = False
     given: frozenset[str] = frozenset()
 
@@ -115,7 +127,7 @@ def load_settings(environ: Mapping[str, str]) -> Settings:
         tls_key=source.file("TLS_KEY"),
         trusted_proxies=source.number("TRUSTED_PROXIES", 0, 0, 10),
         log_level=source.text("LOG_LEVEL", "info").lower(),
-        threads=source.number("THREADS", 8, 1, 64),
+        threads=source.number("THREADS", default_threads(), 1, 64),
         demo=source.flag("DEMO"),
         given=frozenset(source.given),
     )

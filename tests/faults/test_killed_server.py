@@ -106,6 +106,10 @@ def test_a_second_serving_process_is_refused_and_says_who_serves(plant: Plant) -
     assert "Traceback" not in result.stderr
 
 
+def test_a_server_with_default_settings_has_nothing_to_warn_of(plant: Plant) -> None:
+    assert plant.server.log() == ""
+
+
 def test_no_worker_outlives_a_killed_supervisor(plant: Plant) -> None:
     """Otherwise the port and the lock would stay taken and a restart would fail."""
     for _ in range(3):

@@ -2,6 +2,7 @@
 
 import re
 import subprocess
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -47,3 +48,11 @@ def test_the_readme_opens_with_one_paragraph_and_two_commands_of_one_line() -> N
     opening = text.split("\n\n")[1]
     assert not opening.startswith(("#", "```", "-", "|"))
     assert len(opening.split()) > 40
+
+
+def test_every_requirement_is_bounded_on_both_sides() -> None:
+    project = tomllib.loads((ROOT / "pyproject.toml").read_text("utf-8"))["project"]
+    extras = [each for some in project["optional-dependencies"].values() for each in some]
+    for requirement in (*project["dependencies"], *extras):
+        if not requirement.startswith("shoalmark["):
+            assert re.fullmatch(r"[\w\[\]-]+>=[\d.]+,<[\d.]+", requirement), requirement

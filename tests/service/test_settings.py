@@ -20,14 +20,16 @@ def test_without_any_setting_the_defaults_work():
     settings = load_settings(HOME)
     assert settings.data_folder == Path("/people/shift/.local/share/shoalmark")
     assert settings.database_url == "sqlite:////people/shift/.local/share/shoalmark/shoalmark.sqlite3"
-    assert (settings.host, settings.port, settings.threads, settings.trusted_proxies) == (
-        "127.0.0.1",
-        8080,
-        8,
-        0,
-    )
+    assert (settings.host, settings.port, settings.trusted_proxies) == ("127.0.0.1", 8080, 0)
     assert (settings.log_level, settings.tls_certificate, settings.tls_key) == ("info", None, None)
     assert settings.given == frozenset()
+
+
+@pytest.mark.parametrize(("processors", "threads"), [(None, 3), (1, 3), (2, 5), (3, 7), (4, 8), (64, 8)])
+def test_threads_follow_the_processors(monkeypatch, processors, threads):
+    monkeypatch.setattr(os, "cpu_count", lambda: processors)
+    assert load_settings(HOME).threads == threads
+    assert load_settings({**HOME, "SHOALMARK_THREADS": "8"}).threads == 8
 
 
 def test_the_data_folder_follows_the_xdg_variable_when_it_is_absolute():
