@@ -20,6 +20,7 @@ from sqlalchemy.dialects.postgresql import ARRAY
 from service.errors import NotFound
 from service.ledger import GENESIS, Entry, Head, format_instant, write_entry
 from service.store.accounts import People, Tokens
+from service.store.clock_watch import ClockWatch
 from service.store.decisions import Decisions, Lots, Readings
 from service.store.engine import BEGIN_OPTION, driver_errors, make_engine
 from service.store.master_data import Master
@@ -86,7 +87,14 @@ def system_clock() -> datetime:
 class UnitOfWork:
     """One transaction; made by ``Database.reading`` and ``Database.writing`` only."""
 
-    def __init__(self, connection: Connection, clock: Clock | None, locked: frozenset[str] | None) -> None:
+    def __init__(
+        self,
+        connection: Connection,
+        clock: Clock | None,
+        locked: frozenset[str] | None,
+        watch: ClockWatch | None = None,
+    ) -> None:
+        self._watch = watch
         self._connection = connection
         self.session = session = Session(connection, may_write=locked is not None)
         self._locked = locked or frozenset()
@@ -120,7 +128,10 @@ class UnitOfWork:
         """
         heads = self._read_heads()
         if self._moment is None:
-            self._moment = format_instant(self._read_clock())
+            instant = self._read_clock()
+            self._moment = format_instant(instant)
+            if self._watch is not None:
+                self._watch.look(instant, self._latest)
         previous = heads[chain].recorded_at if chain in heads else ""
         return max(self._moment, previous, self._latest)
 
@@ -238,6 +249,7 @@ class Database:
         """Without a clock SQLite takes this machine's time and PostgreSQL its own."""
         self.url = url
         self._clock = clock
+        self._watch = ClockWatch()
         self._engine = make_engine(url)
         self.dialect = self._engine.dialect.name
         if hasattr(os, "register_at_fork"):
@@ -266,7 +278,7 @@ class Database:
                 connection = connection.execution_options(**{BEGIN_OPTION: "BEGIN IMMEDIATE"})
             else:
                 connection = connection.execution_options(isolation_level="READ COMMITTED")
-            unit = UnitOfWork(connection, clock or self._clock, frozenset(chains))
+            unit = UnitOfWork(connection, clock or self._clock, frozenset(chains), self._watch)
             unit.hold()
             yield unit
 

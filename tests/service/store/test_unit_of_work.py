@@ -97,6 +97,29 @@ def test_recorded_at_never_goes_back_in_any_chain(database_url):
     database.close()
 
 
+def test_a_clock_far_behind_the_record_is_warned_of_once_a_minute(database, monkeypatch, caplog):
+    monotonic = [1000.0]
+    monkeypatch.setattr("service.store.clock_watch.monotonic", lambda: monotonic[0])
+    at = {
+        seconds: (lambda seconds=seconds: START + timedelta(seconds=seconds)) for seconds in (0, -300, -301)
+    }
+    perform_now(database, note(chain=PLANT), at[0])
+    perform_now(database, note(), at[-300])  # a line's chain: the newest entry of all chains counts
+    assert caplog.records == []
+    perform_now(database, note(), at[-301])
+    perform_now(database, note(), at[-301])
+    with database.reading() as unit:
+        unit.now(LINE)
+    (record,) = caplog.records
+    assert record.levelname == "WARNING"
+    assert format_instant(START) in record.getMessage()
+    assert format_instant(START - timedelta(seconds=301)) in record.getMessage()
+    monotonic[0] += 61
+    perform_now(database, note(), at[-301])
+    perform_now(database, note(), at[0])
+    assert len(caplog.records) == 2
+
+
 def test_the_clock_is_the_databases_on_postgresql_and_ours_on_sqlite(database, monkeypatch):
     monkeypatch.setattr("service.store.unit_of_work.system_clock", lambda: START)
     recorded_at = perform_now(database, note()).entry.recorded_at
