@@ -53,6 +53,16 @@ def test_the_file_is_what_the_program_writes(app: Flask) -> None:
     assert written == api.openapi_document(app), "run: shoalmark openapi > openapi.yaml"
 
 
+def test_people_can_read_the_file() -> None:
+    """Text of several lines stands as a literal block, and none is full of escapes."""
+    for event in yaml.parse((ROOT / "openapi.yaml").read_text()):
+        if isinstance(event, yaml.ScalarEvent):
+            lines = event.end_mark.line - event.start_mark.line
+            literal = event.style == "|"
+            assert literal == ("\n" in event.value), event.value
+            assert literal or (lines == 0 and event.style != '"'), event.value
+
+
 def test_its_version_is_that_of_the_distribution(document: dict[str, Any]) -> None:
     project = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]
     assert document["info"]["version"] == project["version"]
