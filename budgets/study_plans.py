@@ -190,8 +190,8 @@ def precision_plan(
         interval_lower=lower - 1,
         interval_upper=upper - 1,
         coverage_probability=coverage_probability,
-        statement=f"{what} know{'s' if count == 1 else ''} the standard deviation to within {100 * (lower - 1):.0f} % / "
-        f"+{100 * (upper - 1):.0f} % ({freedom} degrees of freedom)",
+        statement=f"the standard deviation will be known to within {100 * (lower - 1):.0f} % / "
+        f"+{100 * (upper - 1):.0f} % ({freedom} degrees of freedom) from {what}",
     )
 
 

@@ -50,17 +50,17 @@ def test_the_plan_is_the_smallest_that_is_good_enough(wanted, probability, each)
 
 
 def test_samples_that_are_settled_ask_for_more_values_of_each():
-    assert precision_plan(0.25, samples=1).statement.startswith("1 sample with 49 readings")
+    assert precision_plan(0.25, samples=1).statement.endswith("from 1 sample with 49 readings each")
     plan = precision_plan(0.25, samples=4)
     assert (plan.samples, plan.values_per_sample, plan.degrees_of_freedom) == (4, 13, 48)
-    assert plan.statement.startswith("4 samples with 13 readings each know the standard deviation to within")
+    assert plan.statement.endswith("(48 degrees of freedom) from 4 samples with 13 readings each")
     assert "determinations" in precision_plan(0.25, design="duplicates", samples=4).statement
 
 
 def test_pairs_lose_one_degree_of_freedom_to_the_bias():
     plan = precision_plan(0.25, design="agreement")
     assert (plan.samples, plan.values, plan.degrees_of_freedom) == (49, 49, 48)
-    assert plan.statement.startswith("49 pairs know")
+    assert plan.statement.endswith("from 49 pairs")
 
 
 def test_the_power_is_that_of_the_noncentral_t_distribution():
