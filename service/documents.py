@@ -371,7 +371,10 @@ Cell = float | int | str | None | Mapping[str, float]
 
 @dataclass(frozen=True)
 class Study:
-    """A body of test data with a design; ``characteristics`` names all of them where it is about several."""
+    """A body of test data with a design; ``characteristics`` names all of them where it is about several.
+
+    ``options`` are what the design takes beside its data; the design refuses those that it does not know.
+    """
 
     code: str
     design: str
@@ -391,6 +394,7 @@ class Study:
     characteristics: tuple[str, ...] = ()
     set_aside: tuple[SetAsideRow, ...] = ()
     source: DataSource | None = None
+    options: Mapping[str, Any] = field(default_factory=dict)
 
 
 # --- decisions ----------------------------------------------------------------------------------------

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import Any
 
 from marshmallow import ValidationError, fields, validates_schema
@@ -14,6 +15,8 @@ from service.schemas.fields import ByKey, Choice, Code, Count, Day, Flag, Name, 
 
 MOST_ROWS = 5000
 MOST_COLUMNS = 50
+LONGEST_TEXT = 64
+DEEPEST_OPTION = 2
 SOURCES = (
     "analyzer_repeatability",
     "presentation",
@@ -52,7 +55,7 @@ def _is_cell(cell: object) -> bool:
         except OverflowError:  # a whole number of more than 308 digits
             return False
     if isinstance(cell, str):
-        return len(cell) <= 64 and cell.isprintable()
+        return len(cell) <= LONGEST_TEXT and cell.isprintable()
     return isinstance(cell, dict) and cell.keys() == {"below"} and type(cell["below"]) in (int, float)
 
 
@@ -87,6 +90,47 @@ class RowsField(_Stating, fields.Raw):
         return [list(row) for row in value]
 
 
+class OptionField(_Stating, fields.Raw):
+    """What an option of a design may be; whether it suits the design is judged by the design."""
+
+    expected = (
+        f"a finite JSON number, true or false, a text of at most {LONGEST_TEXT} characters, "
+        f"or a list or object of such, {DEEPEST_OPTION} deep at most"
+    )
+
+    def __init__(self, **kwargs: Any) -> None:
+        kinds = ["number", "boolean", "string", "array", "object"]
+        super().__init__(schema={"type": kinds}, **kwargs)
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
+        try:
+            return _option(value, DEEPEST_OPTION)
+        except ValueError:
+            raise self.wrong(value) from None
+
+    def _serialize(self, value: Any, attr: str | None, obj: Any, **kwargs: Any) -> Any:
+        if isinstance(value, Mapping):
+            return {name: self._serialize(item, name, value) for name, item in value.items()}
+        if isinstance(value, (list, tuple)):
+            return [self._serialize(item, None, value) for item in value]
+        return value
+
+
+def _option(value: Any, deepest: int) -> Any:
+    """Give an option as it is kept, its lists as tuples. Raises ValueError."""
+    if isinstance(value, (list, dict)) and (deepest == 0 or len(value) > MOST_ROWS):
+        raise ValueError
+    if isinstance(value, list):
+        return tuple(_option(item, deepest - 1) for item in value)
+    if isinstance(value, dict):
+        if not all(_is_cell(name) for name in value):
+            raise ValueError
+        return {name: _option(item, deepest - 1) for name, item in value.items()}
+    if value is None or not (isinstance(value, bool) or _is_cell(value)):
+        raise ValueError
+    return value
+
+
 class SetAsideRowSchema(StrictSchema):
     """A row that does not count, and why; rows are numbered from 1."""
 
@@ -119,7 +163,7 @@ class StudySchema(StrictSchema):
 
     loads_to = Study
     code = Code(required=True)
-    design = Name(required=True, about="repeatability, duplicates, agreement or covariance.")
+    design = Name(required=True, about="The study design, as repeatability or agreement.")
     product = Code(required=True)
     characteristic = Code(required=True)
     unit = Text(32, required=True)
@@ -146,6 +190,15 @@ class StudySchema(StrictSchema):
     rows = RowsField(required=True)
     set_aside = Parts(SetAsideRowSchema, most=MOST_ROWS, load_default=())
     source = Part(DataSourceSchema, allow_none=True, load_default=None)
+    options = ByKey(
+        Name(), OptionField(), most=20, load_default=dict, about="What the design takes beside its data."
+    )
+
+    @validates_schema(skip_on_field_errors=True)
+    def _said_once(self, data: dict[str, Any], **_: Any) -> None:
+        if "independent" in data["options"]:
+            wrong = Wrong("independent is a member of the study", "no such option")
+            raise ValidationError({"options": {"independent": [wrong]}})
 
     @validates_schema(skip_on_field_errors=True)
     def _dates_in_order(self, data: dict[str, Any], **_: Any) -> None:

@@ -136,7 +136,7 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
         study=study.code,
         # Documents count rows from 1, as people do; the computation from 0.
         set_aside=tuple(SetAside(aside.row - 1, aside.reason) for aside in study.set_aside),
-        options={} if study.independent is None else {"independent": study.independent},
+        options=_options(study),
         named_sources=tuple(source for source in sources if source is not None),
         readings_decimals=_readings_decimals(unit_of_work, study),
     )
@@ -151,9 +151,14 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
     )
 
 
+def _options(study: Study) -> dict[str, Any]:
+    own = {} if study.independent is None else {"independent": study.independent}
+    return {**study.options, **own}
+
+
 def _in_document(fault: Fault) -> Fault:
-    """Point to the member of the document; what is an option to a design is a member of its own there."""
-    pointer = (fault.pointer or "#").replace("#/options/", "#/", 1)
+    """Point to the member of the document; one option of a design is a member of its own there."""
+    pointer = (fault.pointer or "#").replace("#/options/independent", "#/independent", 1)
     return dataclasses.replace(fault, pointer=pointer)
 
 
