@@ -106,6 +106,11 @@ def _fault(item: NamedSource, sources: Mapping[str, object], pairs: Sequence[Pai
             "bias between laboratories is constant within a study and therefore not in its standard error "
             "of prediction; name the repeatability of the reference method"
         )
+    if estimate.relative_terms:
+        return (
+            f"{item.source}: {estimate.name!r} depends on the level; name the figure pooled over the "
+            "levels of the pairs"
+        )
     if not estimate.usable or estimate.variance <= 0:
         return f"{item.source}: the estimate {estimate.name!r} is not usable"
     if item.source == "reference_run" and pairs[0].run is None:

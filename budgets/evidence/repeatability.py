@@ -6,7 +6,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from budgets.errors import EvidenceError
+from budgets.errors import BudgetsError, EvidenceError, raise_collected
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
 from budgets.evidence.screening import Finding, cochran_findings, grubbs_findings
 from budgets.evidence.study_tables import Layout, Study
@@ -17,6 +17,7 @@ from budgets.evidence.sums import (
     standard_deviation_interval,
     sum_of_squares,
 )
+from budgets.evidence.variance_over_level import VarianceOverLevel, enough_levels, variance_over_level
 
 LAYOUT = Layout(required=("sample", "reading"), optional=("replicate",), numbers=("reading",))
 
@@ -35,18 +36,20 @@ def evaluate(study: Study) -> Evaluation:
     Returns
     -------
     Evaluation
-        Estimate ``repeatability``: one mean square with ``sum (n_i - 1)`` degrees of freedom.
+        Estimate ``repeatability``: one mean square with ``sum (n_i - 1)`` degrees of freedom; where the
+        scatter grows with the level, ``repeatability_over_level`` beside it.
 
     Raises
     ------
     EvidenceError
-        If no sample was read twice, or the replicates show no scatter.
+        If no sample was read twice, a replicate occurs twice, or the replicates show no scatter.
 
     Notes
     -----
-    Source: ISO 5725-2:1994, 7.4.5.1 (from memory).
+    Source: ISO 5725-2:1994, 7.4.5.1 and 7.5 (from memory).
     """
     readings = study.full("reading")
+    _check_replicates(study)
     if len(set(readings)) == 1:
         raise EvidenceError("all readings are equal; they say nothing about repeatability", where=("rows",))
     groups = grouped(study.labels["sample"], readings)
@@ -66,26 +69,93 @@ def evaluate(study: Study) -> Evaluation:
             where=("rows",),
         )
     deviation = math.sqrt(square)
+    fit = _over_level(replicated)
     findings = cochran_findings(list(replicated.items()))
     findings += [found for label, values in replicated.items() for found in grubbs_findings(label, values)]
     return Evaluation(
         design="repeatability",
-        estimates=(repeatability_estimate(study.code, square, freedom, ("reading", "presentation")),),
+        estimates=(
+            repeatability_estimate(study.code, square, freedom, ("reading", "presentation")),
+            *_estimates_over_level(study.code, fit),
+        ),
         used=sum(map(len, replicated.values())),
         diagnostics={
             "repeatability_standard_deviation": deviation,
             "samples": len(groups),
             "samples_with_replicates": len(replicated),
             "groups": _group_figures(replicated),
+            "level_dependence": None if fit is None else fit.to_document(),
             "findings": [found.to_document() for found in findings],
         },
         warnings=(
             *precision_warnings(sum(map(len, replicated.values())), freedom),
             *_warnings_of_samples(len(groups), len(replicated)),
+            *_warnings_of_level(fit),
             *resolution_warnings(deviation, study.decimals),
             *finding_warnings(findings),
         ),
     )
+
+
+def _check_replicates(study: Study) -> None:
+    """Refuse the same replicate of a sample twice: it is one reading, copied."""
+    if "replicate" not in study.labels:
+        return
+    first: dict[tuple[str, str], int] = {}
+    faults: list[BudgetsError] = []
+    keys = zip(study.labels["sample"], study.labels["replicate"], strict=True)
+    for row, key in zip(study.rows, keys, strict=True):
+        if first.setdefault(key, row) != row:
+            faults.append(
+                EvidenceError(
+                    f"replicate {key[1]} of sample {key[0]} stands in row {first[key]} already",
+                    where=("rows", row),
+                )
+            )
+    raise_collected(faults)
+
+
+def _over_level(groups: Mapping[str, Sequence[float]]) -> VarianceOverLevel | None:
+    """Fit the scatter over the level, where the study has levels enough to tell."""
+    levels = [mean(values) for values in groups.values()]
+    freedom = [len(values) - 1 for values in groups.values()]
+    if not enough_levels(levels, freedom):
+        return None
+    variances = [sum_of_squares(values) / (len(values) - 1) for values in groups.values()]
+    return variance_over_level(levels, variances, freedom)
+
+
+def _estimates_over_level(code: str, fit: VarianceOverLevel | None) -> tuple[Estimate, ...]:
+    """Return the repeatability as a constant and a proportional part, where the level matters."""
+    if fit is None or not fit.significant:
+        return ()
+    constant, proportional = (
+        (Term(1.0, MeanSquare(f"{code}/repeatability_{name}", square, nu)),) if square > 0 else ()
+        for name, (square, nu) in zip(("constant", "proportional"), fit.parts, strict=True)
+    )
+    return (
+        Estimate(
+            name="repeatability_over_level",
+            terms=constant,
+            value=None,
+            interval=None,
+            may_feed=("reading", "presentation"),
+            usable=True,
+            contains=("repeatability", "resolution"),
+            relative_terms=proportional,
+        ),
+    )
+
+
+def _warnings_of_level(fit: VarianceOverLevel | None) -> tuple[EvaluationWarning, ...]:
+    if fit is None or not fit.significant:
+        return ()
+    low, high = (math.sqrt(fit.variance(level)) for level in (fit.levels[0], fit.levels[-1]))
+    detail = (
+        f"the scatter depends on the level: {low:.2g} at {fit.levels[0]:.4g}, {high:.2g} at "
+        f"{fit.levels[-1]:.4g}; one pooled figure is wrong at both ends, repeatability_over_level is not"
+    )
+    return (EvaluationWarning("level-dependent", detail),)
 
 
 def repeatability_estimate(

@@ -177,6 +177,7 @@ def test_the_laboratory_s_bias_would_make_the_difference_negative():
         ("operator", {}, "no source that can be taken out"),
         ("presentation", {"usable": False}, "not usable"),
         ("presentation", {"terms": (Term(-1.0, MeanSquare("a", 1.0, 2)),)}, "not usable"),
+        ("presentation", {"relative_terms": (Term(1.0, MeanSquare("b", 1.0, 2)),)}, "depends on the level"),
         ("reference_run", {}, "column run"),
     ],
 )

@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from budgets.components import Component
 from budgets.errors import EvidenceError
 from budgets.evidence.study_data import StudyData, evaluate_study
 
@@ -82,3 +83,47 @@ def test_data_that_show_no_repeatability_are_refused(groups, match):
     with pytest.raises(EvidenceError, match=match) as caught:
         evaluated(groups)
     assert caught.value.where == ("rows",)
+
+
+def levels_with_scatter(s0, s1, seed=5, readings=6):
+    generator = np.random.default_rng(seed)
+    return {f"P{x}": list(x + generator.normal(0, math.hypot(s0, s1 * x), readings)) for x in range(1, 11)}
+
+
+def test_a_scatter_that_grows_with_the_level_gets_an_estimate_with_two_parts():
+    evaluation = evaluated(levels_with_scatter(0.01, 0.03))
+    over = evaluation.estimate("repeatability_over_level")
+    fit = evaluation.diagnostics["level_dependence"]
+    assert fit["significant"] and "level-dependent" in codes(evaluation)
+    proportional = over.relative_terms[0]
+    assert proportional.mean_square.value == pytest.approx(fit["proportional"] ** 2)
+    assert proportional.mean_square.value**0.5 == pytest.approx(0.03, rel=0.25)
+    assert 10 < proportional.mean_square.degrees_of_freedom < 50
+    assert {t.mean_square.code for t in over.terms} <= {"rep/repeatability_constant"}
+    component = Component.from_estimate("scatter", "moisture", None, over, "A")
+    assert component.level == "reading"
+    assert evaluation.estimate("repeatability").degrees_of_freedom == 50
+
+
+def test_a_purely_proportional_scatter_has_no_constant_part():
+    groups = {f"P{x}": [x - 0.001 * x**2, x + 0.001 * x**2, x] for x in range(1, 11)}
+    over = evaluated(groups).estimate("repeatability_over_level")
+    assert over.terms == () and over.usable
+
+
+def test_a_constant_scatter_is_one_figure():
+    evaluation = evaluated(levels_with_scatter(0.05, 0.0))
+    assert [e.name for e in evaluation.estimates] == ["repeatability"]
+    assert not evaluation.diagnostics["level_dependence"]["significant"]
+    assert evaluated({"P0": [3.1, 3.2]}).diagnostics["level_dependence"] is None
+
+
+def test_the_same_replicate_twice_is_one_reading_copied():
+    rows = (("P1", 1, 3.1), ("P1", 2, 3.2), ("P1", 1, 3.1), ("P2", 1, 3.0), ("P1", 2.0, 3.3))
+    data = StudyData(("sample", "replicate", "reading"), rows)
+    with pytest.raises(EvidenceError, match="2 faults") as caught:
+        evaluate_study("repeatability", data, study="rep")
+    assert [fault.where for fault in caught.value.each()] == [("rows", 2), ("rows", 4)]
+    assert "replicate 1 of sample P1 stands in row 0 already" in caught.value.each()[0].message
+    fine = StudyData(("sample", "replicate", "reading"), (*rows[:2], *rows[3:4]))
+    assert evaluate_study("repeatability", fine, study="rep").used == 2
