@@ -11,7 +11,6 @@ from dataclasses import dataclass
 from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decimal
 
 from budgets.decision_rules import DecisionRule
-from budgets.derived_release import DerivedJudgement, DerivedReleaseRule
 from budgets.errors import ModelError
 from budgets.release import Judgement, ReleaseRule
 
@@ -234,7 +233,13 @@ def _percent(fraction: float) -> str:
 
 
 def statement(
-    *, characteristic: str, unit: str, estimate: float, rule: ReleaseRule, judgement: Judgement
+    *,
+    characteristic: str,
+    unit: str,
+    estimate: float,
+    rule: ReleaseRule,
+    judgement: Judgement,
+    at_this_reading: bool = False,
 ) -> str:
     """Return the sentences that state a result, its uncertainty, the limits and the rule.
 
@@ -244,6 +249,8 @@ def statement(
     estimate : float, unit of the characteristic
     rule : ReleaseRule
     judgement : Judgement
+    at_this_reading : bool
+        The acceptance limits are said to be those at this reading: a derived characteristic has no others.
 
     Returns
     -------
@@ -271,46 +278,7 @@ def statement(
         (
             _result_text(characteristic, unit, shown, rule.coverage_factor, rule.coverage_probability),
             f"Tolerance limits: {_pair_text(rule.lower_tolerance_limit, rule.upper_tolerance_limit, unit)}; "
-            f"acceptance limits: {accepted}.",
-            _verdict_text(judgement, rule.decision_rule),
-        )
-    )
-
-
-def statement_at_reading(
-    *, characteristic: str, unit: str, rule: DerivedReleaseRule, judgement: DerivedJudgement
-) -> str:
-    """Return the sentences that state the result of a derived characteristic.
-
-    Parameters
-    ----------
-    characteristic, unit : str
-    rule : DerivedReleaseRule
-    judgement : DerivedJudgement
-
-    Returns
-    -------
-    str
-        As `statement`; the acceptance limits are said to be those at this reading.
-
-    Raises
-    ------
-    ModelError
-        If a figure cannot be printed.
-
-    Notes
-    -----
-    Source: ISO/IEC 17025:2017, 7.8.6.2 (from memory).
-    """
-    shown = rounded(judgement.estimate, judgement.expanded_uncertainty)
-    accepted = _acceptance_text(
-        judgement.lower_acceptance_limit, judgement.upper_acceptance_limit, shown.decimals + 1, unit
-    )
-    tolerance = _pair_text(rule.tolerance.lower, rule.tolerance.upper, unit)
-    return " ".join(
-        (
-            _result_text(characteristic, unit, shown, judgement.coverage_factor, rule.coverage_probability),
-            f"Tolerance limits: {tolerance}; acceptance limits at this reading: {accepted or 'none'}.",
+            f"acceptance limits{' at this reading' if at_this_reading else ''}: {accepted}.",
             _verdict_text(judgement, rule.decision_rule),
         )
     )
@@ -325,7 +293,7 @@ def _result_text(
     )
 
 
-def _verdict_text(judgement: Judgement | DerivedJudgement, rule: DecisionRule) -> str:
+def _verdict_text(judgement: Judgement, rule: DecisionRule) -> str:
     return (
         f"Outcome: {judgement.outcome}; conformance probability "
         f"{probability_text(judgement.conformance_probability)}. Decision rule: {rule_text(rule)}."

@@ -111,21 +111,6 @@ def _parsed(text: str) -> _Unit:
     return _Unit(scale, unit)
 
 
-def is_known(unit: str) -> bool:
-    """Say whether a unit can be read.
-
-    Examples
-    --------
-    >>> is_known("g/100 g"), is_known("g per cup")
-    (True, False)
-    """
-    try:
-        _parsed(unit)
-    except UnitsError:
-        return False
-    return True
-
-
 @dataclass(frozen=True)
 class Dimension:
     """What a unit measures.

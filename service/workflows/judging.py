@@ -112,7 +112,7 @@ def _rule_on(
     judgement = shown = None
     if rule is not None and measured.estimate is not None:
         judgement = None if holds else rule.judge(measured.estimate)
-        shown = display(rule, measured.estimate, judgement, characteristic)
+        shown = display(rule, measured.estimate, judgement, characteristic, limits)
     outcome = "hold" if judgement is None else judgement.outcome
     verdict = {
         "characteristic": requirement.characteristic,

@@ -21,7 +21,11 @@ _MOST_DECIMALS: Final = 17
 
 
 def display(
-    rule: ReleaseRule, estimate: float, judgement: Judgement | None, characteristic: Characteristic
+    rule: ReleaseRule,
+    estimate: float,
+    judgement: Judgement | None,
+    characteristic: Characteristic,
+    limits: str | None,
 ) -> dict[str, Any]:
     """Give the figures of a verdict rounded for print; a statement only where a judgement was made."""
     shown = rounded(estimate, rule.expanded_uncertainty)
@@ -47,6 +51,7 @@ def display(
             estimate=estimate,
             rule=rule,
             judgement=judgement,
+            at_this_reading=limits == "at_this_reading",
         ),
     }
 

@@ -24,7 +24,6 @@ from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix
 from budgets.measurement_models import MeasurementModel, Quantity
 from budgets.propagation import Counts
 from budgets.release import ReleaseRule
-from budgets.reporting import statement_at_reading
 
 RISK = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
 AT_LEAST = Tolerance(34.0, None)
@@ -216,17 +215,3 @@ def test_derivatives_that_disagree_stop_an_approval(monkeypatch):
     monkeypatch.setattr(MeasurementModel, "sensitivity_coefficients", bent)
     with pytest.raises(ConvergenceError, match="two ways"):
         compiled_rule()
-
-
-def test_the_statement_gives_the_limits_at_this_reading():
-    rule = compiled_rule()
-    at = {"protein": 24.4, "moisture": 3.5, "fat": 26.0}
-    text = statement_at_reading(
-        characteristic="protein in snf", unit="%", rule=rule, judgement=rule.judge(at)
-    )
-    assert text.startswith("protein in snf: (34.56 ± 0.")
-    assert "acceptance limits at this reading: lower 34." in text
-    assert "Outcome: release" in text and "specific risk of at most 5 %" in text
-    empty = replace(rule.judge(at), lower_acceptance_limit=None)
-    text = statement_at_reading(characteristic="protein in snf", unit="%", rule=rule, judgement=empty)
-    assert "at this reading: none." in text

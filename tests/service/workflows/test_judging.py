@@ -481,6 +481,7 @@ def test_a_derived_characteristic_is_judged_at_its_readings() -> None:
     estimate = 100 * 27.0 / 96
     u = math.hypot(100 / 96 * 0.2, 100 * 27.0 / 96**2 * 0.1)
     assert verdict["acceptance_limits"] == "at_this_reading"
+    assert "acceptance limits at this reading: lower 27." in verdict["display"]["statement"]
     assert verdict["estimate"] == pytest.approx(estimate, rel=1e-14)
     assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
     assert verdict["lower_acceptance_limit"] == pytest.approx(27.0 + Z * u, rel=1e-12)
