@@ -19,7 +19,13 @@ DEFAULT_PLANT: Final = Plant(
     time_zone="UTC",
     lapse_hour=time(11),
     working_days=WEEKDAYS[:5],
-    serving_days={"repeatability": 365, "duplicates": 365, "agreement": 365, "covariance": 365},
+    serving_days={
+        "repeatability": 365,
+        "duplicates": 365,
+        "agreement": 365,
+        "covariance": 365,
+        "fleet": 365,
+    },
     reason="default, until the plant approves a document of its own",
 )
 
