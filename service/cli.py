@@ -138,6 +138,43 @@ def published() -> None:
     sys.exit(0 if passed(rows) else 1)
 
 
+@main.command("import")
+@click.argument(
+    "files", nargs=-1, required=True, type=click.Path(exists=True, dir_okay=False, path_type=Path)
+)
+@click.option(
+    "--about",
+    type=click.Path(exists=True, dir_okay=False, path_type=Path),
+    help="YAML or JSON file with the members of the study; default: one of the same name beside FILE.",
+)
+@click.option(
+    "--set",
+    "said",
+    multiple=True,
+    metavar="MEMBER=VALUE",
+    help="A member, as text or JSON.",
+)
+@click.option("--sheet", help="The sheet of a spreadsheet that has several.")
+@click.option("--check", is_flag=True, help="Read everything, record nothing.")
+def import_(
+    files: tuple[Path, ...], about: Path | None, said: tuple[str, ...], sheet: str | None, check: bool
+) -> None:
+    """Record studies from CSV files, spreadsheets (.xlsx) and JSON documents; nothing, if one cannot be read.
+
+    What a CSV file or a spreadsheet is about stands in a file beside it: replicates.csv is described by
+    replicates.yaml, with members such as code, design, product, characteristic, unit, calibrations and
+    done_on. A member that is --set counts before that file.
+    """
+    from service.import_progress import import_files
+    from service.workflows.study_files import members_of
+
+    pairs = dict(item.partition("=")[::2] for item in said)
+    if len(pairs) != len(said) or not all("=" in item for item in said):
+        raise click.BadParameter("each member once, as unit=%", param_hint="--set")
+    members = members_of(pairs)
+    import_files(_settings(), files, about=about, said=members, sheet=sheet, check=check)
+
+
 @main.command()
 def openapi() -> None:
     """Print the description of the HTTP API."""

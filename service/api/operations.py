@@ -5,8 +5,8 @@ Nothing here runs when a request is served: views read and answer by themselves.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
 from typing import Any, TypeVar
 
 from flask_smorest import Blueprint
@@ -100,6 +100,7 @@ class Operation:
     status: Sequence[int] = (200,)
     body: type[Any] | None = None
     query: Sequence[Form] = ()
+    other_bodies: Mapping[str, str] = field(default_factory=dict)  # media type -> example, as text
     key: str | None = None  # "required" or "optional"
     if_match: bool = False
     may_match: bool = False  # If-Match is honoured, and never asked for
@@ -121,7 +122,7 @@ class Operation:
             parameters.append({**_IF_MATCH, "name": "If-None-Match", "description": "An ETag read before."})
         described: Form = {"responses": self._responses(path_has_parameters), "parameters": parameters}
         if self.body is not None:
-            described["requestBody"] = _body(self.body)
+            described["requestBody"] = _body(self.body, self.other_bodies)
         return described
 
     def _responses(self, path_has_parameters: bool) -> Form:
@@ -159,10 +160,11 @@ class Operation:
         return statuses
 
 
-def _body(kind: type[Any]) -> Form:
+def _body(kind: type[Any], other_bodies: Mapping[str, str]) -> Form:
     name = type(SCHEMAS[kind]).__name__.removesuffix("Schema")
     shown = {"schema": ref(name), "example": EXAMPLES[kind]}
-    return {"required": True, "content": {"application/json": shown}}
+    others = {media: {"schema": {"type": "string"}, "example": text} for media, text in other_bodies.items()}
+    return {"required": True, "content": {"application/json": shown, **others}}
 
 
 def describe(blueprint: Blueprint, rule: str, method: str, operation: Operation) -> Callable[[View], View]:

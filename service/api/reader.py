@@ -50,14 +50,18 @@ def request_document() -> dict[str, Any]:
     charset = request.mimetype_params.get("charset", "utf-8")
     if charset.lower() != "utf-8":  # read as UTF-8 it could be other text than was meant (RFC 8259, 8.1)
         raise UnsupportedMediaType(f"Got the charset {charset[:40]}; the body has to be UTF-8.")
+    return read(request_bytes())
+
+
+def request_bytes() -> bytes:
+    """Give the bytes of the body of the request at hand. Raises TooLarge."""
     if request.content_length is not None and request.content_length > LARGEST_BODY:
         raise TooLarge(f"The body has {request.content_length} bytes; at most {LARGEST_BODY} are taken.")
     request.max_content_length = LARGEST_BODY
     try:
-        body = request.get_data(cache=False)
+        return request.get_data(cache=False)
     except RequestEntityTooLarge:  # a body without a stated length
         raise TooLarge(f"The body is too large; at most {LARGEST_BODY} bytes are taken.") from None
-    return read(body)
 
 
 def read(body: bytes) -> dict[str, Any]:

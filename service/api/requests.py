@@ -130,9 +130,9 @@ def creation_only() -> Iterator[None]:
         raise StaleVersion("If-None-Match: * asks for creation, but the document exists.") from None
 
 
-def query(*names: str) -> dict[str, str]:
+def query(*names: str, longest: int = LONGEST_PARAMETER) -> dict[str, str]:
     """Give the query's parameters, each of which has to be one of ``names`` and there once."""
-    faults = _query_faults(names)
+    faults = _query_faults(names, longest)
     if faults:
         raise _bad_query(faults)
     return request.args.to_dict()
@@ -173,7 +173,7 @@ def same_identity(document: Any, **expected: str) -> None:
         raise InvalidRequest(f"{counted(len(faults))}; nothing was recorded.", faults=tuple(faults))
 
 
-def _query_faults(names: tuple[str, ...]) -> list[Fault]:
+def _query_faults(names: tuple[str, ...], longest: int = LONGEST_PARAMETER) -> list[Fault]:
     faults = []
     for name, values in request.args.lists():
         if name not in names:
@@ -181,9 +181,9 @@ def _query_faults(names: tuple[str, ...]) -> list[Fault]:
             faults.append(Fault("unknown parameter", only, parameter=name))
         elif len(values) > 1:
             faults.append(Fault(f"got it {len(values)} times", "one value", parameter=name))
-        elif not values[0].isprintable() or len(values[0]) > LONGEST_PARAMETER:
+        elif not values[0].isprintable() or len(values[0]) > longest:
             # Nothing has such a name, and a database need not be able to look for it (NUL).
-            faults.append(_wrong_parameter(name, values[0], f"printable text up to {LONGEST_PARAMETER}"))
+            faults.append(_wrong_parameter(name, values[0], f"printable text up to {longest}"))
     return faults
 
 

@@ -8,6 +8,7 @@ from flask_smorest import Blueprint
 from service.api import requests
 from service.api.answers import answer, listed, recorded
 from service.api.operations import PAGING, Operation, describe, parameter
+from service.api.study_bodies import CSV, CSV_EXAMPLE, CSV_QUERY, faults_where_they_were_said, study
 from service.documents import Study
 from service.workflows import studies
 
@@ -18,20 +19,34 @@ blueprint = Blueprint("studies", __name__, description="Test data in, evaluation
     blueprint,
     "/v1/studies",
     "POST",
-    Operation("StudyAnswer", (201,), Study, key="required", problems=(409,)),
+    Operation(
+        "StudyAnswer",
+        (201,),
+        Study,
+        query=CSV_QUERY,
+        other_bodies={CSV: CSV_EXAMPLE},
+        key="required",
+        problems=(409,),
+    ),
 )
 def record_study() -> Response:
-    """Evaluate a study and record it."""
-    study = requests.body(Study)
-    request = requests.recording()
-    return recorded(studies.record_study(requests.services(), requests.actor(), study, request))
+    """Evaluate a study and record it; as CSV with its other members in the query, or as JSON."""
+    with faults_where_they_were_said():
+        given = study()
+        request = requests.recording()
+        return recorded(studies.record_study(requests.services(), requests.actor(), given, request))
 
 
-@describe(blueprint, "/v1/studies/preview", "POST", Operation("StudyAnswer", body=Study))
+@describe(
+    blueprint,
+    "/v1/studies/preview",
+    "POST",
+    Operation("StudyAnswer", body=Study, query=CSV_QUERY, other_bodies={CSV: CSV_EXAMPLE}),
+)
 def preview_study() -> Response:
-    """Evaluate a study; nothing is recorded."""
-    study = requests.body(Study)
-    return answer(studies.preview(requests.services(), requests.actor(), study))
+    """Evaluate a study, given as for recording; nothing is recorded."""
+    with faults_where_they_were_said():
+        return answer(studies.preview(requests.services(), requests.actor(), study()))
 
 
 @describe(

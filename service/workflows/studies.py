@@ -29,6 +29,7 @@ from service.workflows.services import Services
 
 LONGEST_SERVICE: Final = 3650
 """Days that a study may serve at most, whoever says how long: as much as a plant may say for a design."""
+_CELL: Final = re.compile(r"#/rows/([0-9]+)/[0-9]+")
 _SHA256: Final = re.compile(r"[0-9A-Fa-f]{64}")
 
 
@@ -159,7 +160,11 @@ def _options(study: Study) -> dict[str, Any]:
 def _in_document(fault: Fault) -> Fault:
     """Point to the member of the document; one option of a design is a member of its own there."""
     pointer = (fault.pointer or "#").replace("#/options/independent", "#/independent", 1)
-    return dataclasses.replace(fault, pointer=pointer)
+    detail = fault.detail
+    # The computation counts rows from 0, and so do pointers; people count them from 1.
+    if found := _CELL.fullmatch(pointer):
+        detail = f"row {int(found[1]) + 1}, column {detail}"
+    return dataclasses.replace(fault, pointer=pointer, detail=detail)
 
 
 def _readings_decimals(unit_of_work: UnitOfWork, study: Study) -> int | None:

@@ -61,6 +61,12 @@ THERE: dict[str, dict[str, Any]] = {
 }
 
 
+@schemathesis.serializer("text/csv")
+def as_csv(context: Any, value: Any) -> Any:
+    """Send generated text as the bytes of a CSV body."""
+    return str(value).encode(errors="replace")
+
+
 @pytest.fixture(scope="module")
 def fuzzed(
     house_template: Path,

@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import hashlib
+import json
+from collections.abc import Callable
 from typing import Any
 
 import pytest
+from werkzeug.test import TestResponse
 
 from tests.service.api import house
 from tests.service.api.conftest import Callers
@@ -56,3 +60,106 @@ def test_independence_is_a_member_of_its_own(callers: Callers) -> None:
     document = with_options({}, independent=None)
     found = problem(callers["engineer"].send("POST", PREVIEW, document), 422, "invalid-request")
     assert [fault["pointer"] for fault in found["errors"]] == ["#/independent"]
+
+
+# --- CSV -----------------------------------------------------------------------------------------------
+
+
+def csv_call(
+    caller: house.Caller,
+    body: bytes,
+    *,
+    path: str = PREVIEW,
+    key: str | None = None,
+    content_type: str = "text/csv",
+    **said: str,
+) -> TestResponse:
+    headers = {"Authorization": f"Bearer {caller.token}", "Idempotency-Key": key or house.fresh_key()}
+    return caller.client.post(path, query_string=said, data=body, content_type=content_type, headers=headers)
+
+
+def said_of(document: dict[str, Any]) -> dict[str, str]:
+    """Say the members of a study in the query, as texts or JSON."""
+    left_out = ("columns", "rows", "source")
+    return {
+        name: value if isinstance(value, str) else json.dumps(value)
+        for name, value in document.items()
+        if name not in left_out and value is not None
+    }
+
+
+def written(document: dict[str, Any], separator: str, decimal: str) -> bytes:
+    lines = [document["columns"], *document["rows"]]
+    texts = [separator.join(str(cell).replace(".", decimal) for cell in line) for line in lines]
+    return ("\N{BYTE ORDER MARK}" + "\r\n".join(texts)).encode()
+
+
+@pytest.mark.parametrize("make", [house.repeatability_study, house.duplicates_study, house.agreement_study])
+@pytest.mark.parametrize(("separator", "decimal"), [(",", "."), (";", ","), ("\t", ".")])
+def test_csv_and_json_give_the_same_evaluation(
+    callers: Callers, make: Callable[[], dict[str, Any]], separator: str, decimal: str
+) -> None:
+    document = {**make(), "code": "new-study"}
+    as_json = done(callers["engineer"].send("POST", PREVIEW, document), 200)
+    body = written(document, separator, decimal)
+    as_csv = done(csv_call(callers["engineer"], body, **said_of(document)), 200)
+    assert as_csv["evaluation"] == as_json["evaluation"]
+    source = {"name": "CSV body", "sha256": hashlib.sha256(body).hexdigest()}
+    assert as_csv["study"]["source"] == source
+
+
+def test_a_csv_is_recorded_once_under_its_key(callers: Callers) -> None:
+    document = house.repeatability_study(code="new-study")
+    body, said = written(document, ",", "."), said_of(document)
+    key = house.fresh_key()
+    first = csv_call(callers["engineer"], body, path="/v1/studies", key=key, **said)
+    assert done(first)["recorded"] is True
+    again = csv_call(callers["engineer"], body, path="/v1/studies", key=key, **said)
+    assert (done(again), again.headers["Recorded-Earlier"]) == (first.get_json(), "true")
+    other = csv_call(callers["engineer"], body, path="/v1/studies", key=key, **{**said, "unit": "g/kg"})
+    problem(other, 422, "idempotency-key-reused")
+    kept = done(callers["engineer"].get("/v1/studies/new-study"), 200)
+    assert kept["study"] == first.get_json()["study"]
+
+
+def test_faults_of_csv_are_named_where_they_were_said(callers: Callers) -> None:
+    said = said_of(house.repeatability_study(code="new-study"))
+    body = b"sample,replicate,reading\nP01,1,3.1\nP01,2,x\n"
+    found = problem(csv_call(callers["engineer"], body, **said), 422, "invalid-request")
+    (fault,) = found["errors"]
+    assert fault["pointer"] == "#/rows/1/2"
+    assert fault["detail"] == 'row 2 (line 3), column reading: got the text "x"'
+    wrong = {**said, "done_on": "3 March", "calibrations": '{"nir-1": "no-such"}', "colour": "red"}
+    body = b"sample,replicate,reading\nP01,1,3.1\nP01,2,3.2\n"
+    found = problem(csv_call(callers["engineer"], body, **wrong), 422, "invalid-request")
+    assert [fault["parameter"] for fault in found["errors"]] == ["colour"]
+    del wrong["colour"]
+    found = problem(csv_call(callers["engineer"], body, **wrong), 422, "invalid-request")
+    assert [fault["parameter"] for fault in found["errors"]] == ["done_on"]
+    found = problem(
+        csv_call(callers["engineer"], body, **{**wrong, "done_on": house.DONE_ON}), 422, "invalid-request"
+    )
+    assert [(fault["parameter"], "at nir-1: " in fault["detail"]) for fault in found["errors"]] == [
+        ("calibrations", True)
+    ]
+
+
+def test_the_place_in_a_json_study_is_said_in_words_too(callers: Callers) -> None:
+    document = house.repeatability_study(code="new-study")
+    document["rows"][3][2] = "3,1"
+    found = problem(callers["engineer"].send("POST", PREVIEW, document), 422, "invalid-request")
+    (fault,) = found["errors"]
+    assert fault["pointer"] == "#/rows/3/2"
+    assert fault["detail"].startswith("row 4, column reading: got the text '3,1'")
+
+
+def test_other_bodies_are_refused(callers: Callers) -> None:
+    said = said_of(house.repeatability_study(code="new-study"))
+    call = csv_call(callers["engineer"], b"sample,reading\nP,1\n", content_type="text/plain", **said)
+    assert (call.status_code, "text/csv" in call.get_json()["detail"]) == (415, True)
+    problem(csv_call(callers["engineer"], b"", **said), 400, "unreadable")
+    problem(csv_call(callers["engineer"], b"\x00\x01" * 50, **said), 400, "unreadable")
+    large = b"sample,replicate,reading\n" + b"P01,1,3.11\n" * 1_000_000
+    problem(csv_call(callers["engineer"], large, **said), 413, "too-large")
+    mixed = callers["engineer"].send("POST", f"{PREVIEW}?unit=%25", house.repeatability_study())
+    problem(mixed, 422, "invalid-request")
