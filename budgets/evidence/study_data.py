@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
-from budgets.evidence import agreement, covariance, duplicates, fleet, repeatability
+from budgets.evidence import agreement, check_samples, covariance, duplicates, fleet, repeatability
 from budgets.evidence.evaluation import Evaluation, SetAside
 from budgets.evidence.study_tables import Cell, Layout, NamedSource, Study, StudyData, read_columns
 
@@ -33,6 +33,7 @@ DESIGNS: dict[str, StudyDesign] = {
         StudyDesign(
             "agreement", agreement.LAYOUT, agreement.evaluate, options=agreement.OPTIONS, takes_sources=True
         ),
+        StudyDesign("check_samples", check_samples.LAYOUT, check_samples.evaluate),
         StudyDesign("fleet", fleet.LAYOUT, fleet.evaluate),
     )
 }
@@ -46,7 +47,6 @@ _LATER_DESIGNS = (
     "nested_precision",
     "sampling",
     "process_stream",
-    "check_samples",
     "production",
 )
 

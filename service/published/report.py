@@ -17,6 +17,7 @@ RUNNERS: Mapping[str, Mapping[str, Runner]] = {
     "jcgm_106": run_decisions.JCGM_106,
     "ilac_g8": run_decisions.ILAC_G8,
     "iso_5725_2": run_precision.ISO_5725_2,
+    "iso_7870_2": run_precision.ISO_7870_2,
     "nist_tn_1297": run_examples.NIST_TN_1297,
     "nist_tn_1900": run_examples.NIST_TN_1900,
     "nist_handbook": run_precision.NIST_HANDBOOK,

@@ -6,6 +6,7 @@ import math
 from collections.abc import Mapping
 from typing import Any
 
+from budgets.control_charts import chart_factors
 from budgets.evidence.screening import cochran_critical_value, grubbs_critical_value
 from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.evidence.sums import standard_deviation_factors
@@ -35,6 +36,17 @@ def _cochran(i: Inputs) -> dict[str, Any]:
             [cochran_critical_value(i["alpha"], p, n - 1, (p - 1) * (n - 1)) for n in i["n"]] for p in i["p"]
         ]
     }
+
+
+def _chart_factors(i: Inputs) -> dict[str, Any]:
+    factors = [chart_factors(n) for n in i["n"]]
+    members = {"A2": "a2", "D3": "range_lower", "D4": "range_upper"}
+    members |= {"B3": "deviation_lower", "B4": "deviation_upper", "d2": "d2", "d3": "d3", "c4": "c4"}
+    return {name: [getattr(factor, member) for factor in factors] for name, member in members.items()}
+
+
+def _mean_factors(i: Inputs) -> dict[str, Any]:
+    return {"A3": [chart_factors(n).a3 for n in i["n"]]}
 
 
 def _confidence_factors(i: Inputs) -> dict[str, Any]:
@@ -97,6 +109,7 @@ ISO_5725_2: dict[str, Runner] = {
     "iso5725-2-grubbs": _grubbs,
     "cochran-95": _cochran,
 }
+ISO_7870_2: dict[str, Runner] = {"chart-constants": _chart_factors, "chart-A3": _mean_factors}
 NIST_HANDBOOK: dict[str, Runner] = {"nist-gear": _gear}
 NBS_HANDBOOK_91: dict[str, Runner] = {"chi2-factors": _confidence_factors}
 NIST_STRD: dict[str, Runner] = dict.fromkeys(

@@ -25,6 +25,7 @@ DEFAULT_PLANT: Final = Plant(
         "agreement": 365,
         "covariance": 365,
         "fleet": 365,
+        "check_samples": 365,
     },
     reason="default, until the plant approves a document of its own",
 )
