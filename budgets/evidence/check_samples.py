@@ -60,8 +60,7 @@ def evaluate(study: Study) -> Evaluation:
     ``s_I^2 = V + (1 - h) s_r^2``, V the variance of the session means, h the mean of 1/(results of a
     session): the intermediate precision of one result. The uncertainty of the assigned value is no part of
     u(bias); it stands in the budget at the level ``reference``. Source: ISO 5725-3:1994, clause 8 (from
-    memory); control
-    limits as in `control_chart`.
+    memory); control limits as in `control_chart`.
     """
     results = study.full("result")
     _check_sample(study)
