@@ -7,7 +7,16 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
-from budgets.evidence import agreement, check_samples, covariance, duplicates, fleet, repeatability
+from budgets.evidence import (
+    agreement,
+    check_samples,
+    covariance,
+    duplicates,
+    fleet,
+    nested_precision,
+    repeatability,
+    sampling,
+)
 from budgets.evidence.evaluation import Evaluation, SetAside
 from budgets.evidence.study_tables import Cell, Layout, NamedSource, Study, StudyData, read_columns
 
@@ -31,6 +40,13 @@ DESIGNS: dict[str, StudyDesign] = {
         StudyDesign("repeatability", repeatability.LAYOUT, repeatability.evaluate),
         StudyDesign("duplicates", duplicates.LAYOUT, duplicates.evaluate),
         StudyDesign(
+            "nested_precision",
+            nested_precision.LAYOUT,
+            nested_precision.evaluate,
+            options=nested_precision.OPTIONS,
+        ),
+        StudyDesign("sampling", sampling.LAYOUT, sampling.evaluate),
+        StudyDesign(
             "agreement", agreement.LAYOUT, agreement.evaluate, options=agreement.OPTIONS, takes_sources=True
         ),
         StudyDesign("check_samples", check_samples.LAYOUT, check_samples.evaluate),
@@ -44,8 +60,6 @@ VECTOR_DESIGNS: dict[str, StudyDesign] = {
     )
 }
 _LATER_DESIGNS = (
-    "nested_precision",
-    "sampling",
     "process_stream",
     "production",
 )

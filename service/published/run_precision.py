@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -16,14 +15,16 @@ Inputs = Mapping[str, Any]
 
 
 def _sulfur(i: Inputs) -> dict[str, Any]:
-    """Repeatability and the number of laboratories; the mean and reproducibility need another design."""
-    deviations, laboratories = [], []
+    found: dict[str, list[Any]] = {"m": [], "sr": [], "sR": [], "p": []}
     for level in i["levels"]:
         rows = tuple((lab, x) for lab, values in level["cells"].items() for x in values)
-        evaluation = evaluate_study("repeatability", StudyData(("sample", "reading"), rows), study="coal")
-        deviations.append(evaluation.estimate().standard_uncertainty)
-        laboratories.append(evaluation.diagnostics["samples"])
-    return {"sr": deviations, "p": laboratories}
+        data = StudyData(("laboratory", "reading"), rows)
+        evaluation = evaluate_study("nested_precision", data, study="coal")
+        found["m"].append(evaluation.diagnostics["mean"])
+        found["sr"].append(evaluation.estimate("repeatability").standard_uncertainty)
+        found["sR"].append(evaluation.estimate("reproducibility").standard_uncertainty)
+        found["p"].append(evaluation.diagnostics["analysis_of_variance"][0]["degrees_of_freedom"] + 1)
+    return found
 
 
 def _grubbs(i: Inputs) -> dict[str, Any]:
@@ -68,40 +69,37 @@ def _gear(i: Inputs) -> dict[str, Any]:
 
 
 def _one_way(i: Inputs) -> dict[str, Any]:
-    """Within groups by the repeatability design, between them as an agreement study sees its clusters."""
-    groups = list(enumerate(i["groups"]))
-    rows = tuple((str(k), x) for k, group in groups for x in group)
-    evaluation = evaluate_study("repeatability", StudyData(("sample", "reading"), rows), study="strd")
-    estimate = evaluation.estimate()
-    square, nu = estimate.variance, estimate.degrees_of_freedom
-    pairs = tuple((f"{k}.{j}", x, 0.0, str(k)) for k, group in groups for j, x in enumerate(group))
-    data = StudyData(("pair", "reading", "reference", "group"), pairs)
-    bias = evaluate_study("agreement", data, study="strd", options={"independent": True}).estimate("bias")
-    between = next(term.mean_square for term in bias.terms if term.mean_square.code == "strd/between_groups")
-    sums = between.value * between.degrees_of_freedom, square * nu
+    rows = tuple((k, x) for k, group in enumerate(i["groups"]) for x in group)
+    evaluation = evaluate_study("nested_precision", StudyData(("instrument", "reading"), rows), study="strd")
+    between, within = evaluation.diagnostics["analysis_of_variance"]
+    sums = between["sum_of_squares"], within["sum_of_squares"]
     return {
-        "df_b": between.degrees_of_freedom,
-        "df_w": nu,
+        "df_b": between["degrees_of_freedom"],
+        "df_w": within["degrees_of_freedom"],
         "SSB": sums[0],
         "SSW": sums[1],
-        "MSB": between.value,
-        "MSW": square,
-        "F": between.value / square,
+        "MSB": between["mean_square"],
+        "MSW": within["mean_square"],
+        "F": between["f_statistic"],
         "R2": sums[0] / sum(sums),
-        "s": math.sqrt(square),
+        "s": evaluation.estimate("repeatability").standard_uncertainty,
     }
 
 
 def _lettuce(i: Inputs) -> dict[str, Any]:
-    """Duplicate analyses of every sample; the sampling itself needs another design."""
     rows = tuple(
-        (f"{target}-{sample}", value)
-        for target, values in enumerate(i["data"])
-        for sample in (0, 1)
-        for value in values[2 * sample : 2 * sample + 2]
+        (target, k // 2, k % 2, x) for target, values in enumerate(i["data"]) for k, x in enumerate(values)
     )
-    evaluation = evaluate_study("repeatability", StudyData(("sample", "reading"), rows), study="lettuce")
-    return {"s_anal": evaluation.estimate().standard_uncertainty}
+    data = StudyData(("target", "sample", "analysis", "result"), rows)
+    evaluation = evaluate_study("sampling", data, study="lettuce")
+    return {
+        "mean": evaluation.diagnostics["mean"],
+        "s_target": evaluation.estimate("between_targets").standard_uncertainty,
+        "s_samp": evaluation.estimate("sampling").standard_uncertainty,
+        "s_anal": evaluation.estimate("repeatability").standard_uncertainty,
+        "s_meas": evaluation.estimate("measurement").standard_uncertainty,
+        "s_total": evaluation.diagnostics["total_standard_deviation"],
+    }
 
 
 ISO_5725_2: dict[str, Runner] = {

@@ -22,6 +22,8 @@ DEFAULT_PLANT: Final = Plant(
     serving_days={
         "repeatability": 365,
         "duplicates": 365,
+        "nested_precision": 365,
+        "sampling": 365,
         "agreement": 365,
         "covariance": 365,
         "fleet": 365,

@@ -135,7 +135,7 @@ def test_forms_that_are_not_built_yet_are_refused_as_such(app: Flask, callers: C
     document["requires"][0]["decision_rule"]["rejection"] = "guarded"
     problem(callers["engineer"].post("/v1/specifications", document), 422, "not-supported")
     for member, value, place in (
-        ("design", "nested_precision", "#/design"),
+        ("design", "production", "#/design"),
         ("rows", [["P01", 1, 3.1], ["P01", 2, {"below": 0.1}]], "#/rows/1/2"),
     ):
         document = study(**{member: value})
