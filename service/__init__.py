@@ -10,18 +10,24 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from flask import Flask
 
+    from service.helpers import Helper
     from service.settings import Settings
     from service.workflows.services import Services
 
 
-def create_services(settings: Settings) -> Services:
-    """Open the database and its one writer; the schema must be current."""
+def create_services(settings: Settings, helper: Helper | None = None) -> Services:
+    """Open the database and its one writer; the schema must be current.
+
+    Evaluations may hold half of the threads that answer requests, the lines find the other half.
+    """
+    from service.helpers import Helper
     from service.store.unit_of_work import Database
     from service.store.writer import Writer
     from service.workflows.services import Services
 
     database = Database(settings.database_url)
-    return Services(settings, database, Writer(database))
+    evaluating = helper or Helper(most=max(1, settings.threads // 2))
+    return Services(settings, database, Writer(database), helper=evaluating)
 
 
 def create_app(services: Services) -> Flask:

@@ -41,7 +41,7 @@ def record_study() -> Response:
     blueprint,
     "/v1/studies/preview",
     "POST",
-    Operation("StudyAnswer", body=Study, query=CSV_QUERY, other_bodies={CSV: CSV_EXAMPLE}),
+    Operation("StudyAnswer", body=Study, query=CSV_QUERY, other_bodies={CSV: CSV_EXAMPLE}, problems=(503,)),
 )
 def preview_study() -> Response:
     """Evaluate a study, given as for recording; nothing is recorded."""

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
+from service.helpers import Helper
 from service.settings import Settings
 from service.store.unit_of_work import Database
 from service.store.writer import Writer
@@ -12,14 +13,16 @@ from service.workflows.register import RegisterCache
 
 @dataclass(frozen=True)
 class Services:
-    """The database, its one writer, and the register of what is in force."""
+    """The database, its one writer, the register of what is in force, and the process that evaluates."""
 
     settings: Settings
     database: Database
     writer: Writer
     registers: RegisterCache = field(default_factory=RegisterCache)
+    helper: Helper = field(default_factory=Helper)
 
     def close(self) -> None:
-        """Let the writer finish what it took, then let go of the database."""
+        """End the helper, let the writer finish what it took, then let go of the database."""
+        self.helper.close()
         self.writer.close()
         self.database.close()

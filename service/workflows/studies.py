@@ -37,7 +37,8 @@ def preview(services: Services, actor: Actor, study: Study) -> dict[str, Any]:
     """Evaluate a study and store nothing. Raises InvalidRequest with all that is wrong with it."""
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        complete, evaluation = _evaluate(unit_of_work, study)
+        task = _task(unit_of_work, study)
+    complete, evaluation = _evaluate(services, study, task)
     return {"recorded": False, "study": dump(complete), "evaluation": evaluation.to_document()}
 
 
@@ -57,7 +58,8 @@ def record_study(
     # Evaluated here, so that the writer, which the production lines wait for, only writes it down.
     with services.database.reading() as unit_of_work:
         taken = unit_of_work.studies.get(study.code)
-        complete, evaluation = (study, None) if taken else _evaluate(unit_of_work, study)
+        task = None if taken else _task(unit_of_work, study)
+    complete, evaluation = (study, None) if task is None else _evaluate(services, study, task)
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         if evaluation is None or unit_of_work.studies.get(study.code) is not None:
@@ -118,7 +120,16 @@ def _summary(stored: StoredStudy) -> dict[str, Any]:
 # --- evaluation ----------------------------------------------------------------------------------------
 
 
-def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation]:
+@dataclasses.dataclass(frozen=True)
+class _Task:
+    """What the record says beside a study, so that it can be evaluated without the database."""
+
+    plant: Plant
+    named_sources: tuple[NamedSource, ...]
+    readings_decimals: int | None
+
+
+def _task(unit_of_work: UnitOfWork, study: Study) -> _Task:
     plant_document = plant.in_force(unit_of_work)
     collector = FaultCollector()
     _check_references(unit_of_work, study, collector)
@@ -129,8 +140,19 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
         for index in range(len(study.named_sources))
     ]
     collector.finish("The study refers to what does not exist or does not fit.")
+    return _Task(
+        plant_document,
+        tuple(source for source in sources if source is not None),
+        _readings_decimals(unit_of_work, study),
+    )
+
+
+def _evaluate(services: Services, study: Study, task: _Task) -> tuple[Study, Evaluation]:
+    """Evaluate in the helper process, outside of any transaction."""
+    collector = FaultCollector()
     evaluation = collector.attempt(
         "#",
+        services.helper.run,
         evaluate_study,
         study.design,
         StudyData(columns=study.columns, rows=study.rows),
@@ -138,13 +160,13 @@ def _evaluate(unit_of_work: UnitOfWork, study: Study) -> tuple[Study, Evaluation
         # Documents count rows from 1, as people do; the computation from 0.
         set_aside=tuple(SetAside(aside.row - 1, aside.reason) for aside in study.set_aside),
         options=_options(study),
-        named_sources=tuple(source for source in sources if source is not None),
-        readings_decimals=_readings_decimals(unit_of_work, study),
+        named_sources=task.named_sources,
+        readings_decimals=task.readings_decimals,
     )
     collector.faults = [_in_document(fault) for fault in collector.faults]
     collector.finish("The study cannot be evaluated.")
     assert evaluation is not None
-    serves_until = study.serves_until or serving_end(study.design, study.done_on, plant_document)
+    serves_until = study.serves_until or serving_end(study.design, study.done_on, task.plant)
     counted_from_1 = tuple(SetAside(aside.row + 1, aside.reason) for aside in evaluation.set_aside)
     return (
         dataclasses.replace(study, serves_until=serves_until),

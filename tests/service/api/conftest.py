@@ -10,6 +10,7 @@ import pytest
 from flask import Flask
 
 from service import create_app, create_services
+from service.helpers import Helper
 from service.settings import Settings, load_settings
 from service.store.schema import migrate
 from service.workflows import accounts
@@ -29,8 +30,24 @@ def settings_for(folder: Path) -> Settings:
     return load_settings({"SHOALMARK_DATA_FOLDER": str(folder)})
 
 
+class SharedHelper(Helper):
+    """One helper process for the applications of all tests: to start it takes longer than most of them."""
+
+    def close(self) -> None:
+        """Stay, for the next test."""
+
+
+HELPER = SharedHelper()
+
+
+@pytest.fixture(scope="session", autouse=True)
+def _no_process_is_left() -> Iterator[None]:
+    yield
+    Helper.close(HELPER)
+
+
 def open_app(folder: Path) -> Flask:
-    app = create_app(create_services(settings_for(folder)))
+    app = create_app(create_services(settings_for(folder), HELPER))
     app.testing = True
     return app
 

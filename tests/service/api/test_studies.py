@@ -4,14 +4,20 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Callable
+import threading
+import time
+from collections.abc import Callable, Iterator
+from pathlib import Path
 from typing import Any
 
 import pytest
+from flask import Flask
 from werkzeug.test import TestResponse
 
+from service import create_app, create_services
+from service.helpers import Helper
 from tests.service.api import house
-from tests.service.api.conftest import Callers
+from tests.service.api.conftest import Callers, callers_of, copied, settings_for
 from tests.service.api.house import done
 from tests.service.api.test_bad_input import problem
 
@@ -163,3 +169,50 @@ def test_other_bodies_are_refused(callers: Callers) -> None:
     problem(csv_call(callers["engineer"], large, **said), 413, "too-large")
     mixed = callers["engineer"].send("POST", f"{PREVIEW}?unit=%25", house.repeatability_study())
     problem(mixed, 422, "invalid-request")
+
+
+# --- the helper process --------------------------------------------------------------------------------
+
+
+@pytest.fixture
+def with_helper(
+    house_template: Path, empty_template: tuple[Path, dict[str, str]], tmp_path: Path
+) -> Iterator[Callable[[Helper], Callers]]:
+    """Give callers of a house that evaluates in a helper of one's own."""
+    opened: list[Flask] = []
+
+    def open_with(helper: Helper) -> Callers:
+        folder = copied(house_template, tmp_path / "own")
+        opened.append(create_app(create_services(settings_for(folder), helper)))
+        return callers_of(opened[-1], empty_template[1])
+
+    yield open_with
+    for app in opened:
+        app.extensions["shoalmark"].close()
+
+
+def test_the_line_is_answered_while_studies_have_to_wait(
+    with_helper: Callable[[Helper], Callers],
+) -> None:
+    helper = Helper(most=1)
+    callers = with_helper(helper)
+    document = house.repeatability_study(code="new-study")
+    done(callers["engineer"].send("POST", PREVIEW, document), 200)
+    busy = threading.Thread(target=helper.run, args=(time.sleep, 2))
+    busy.start()
+    time.sleep(0.1)
+    refused = callers["engineer"].post("/v1/studies", document)
+    problem(refused, 503, "unavailable")
+    assert int(refused.headers["Retry-After"]) > 0
+    assert done(callers["mes"].post("/v1/decisions", house.decision()))["outcome"] == "release"
+    assert busy.is_alive()
+    busy.join()
+    done(callers["engineer"].post("/v1/studies", document))
+
+
+def test_a_study_that_takes_too_long_is_too_large(with_helper: Callable[[Helper], Callers]) -> None:
+    # Not even the process starts in this time.
+    callers = with_helper(Helper(seconds=0.001))
+    document = house.repeatability_study(code="new-study")
+    problem(callers["engineer"].post("/v1/studies", document), 413, "too-large")
+    assert callers["engineer"].get("/v1/studies/new-study").status_code == 404
