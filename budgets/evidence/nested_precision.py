@@ -74,8 +74,11 @@ def evaluate(study: Study) -> Evaluation:
     A component that comes out negative is told in the diagnostics as it is and counts as zero in the sum
     (ISO 5725-2:1994, 7.4.5.2). Balanced: ``s_I^2 = MS_B / n + (1 - 1/n) MS_W``. Unbalanced: type I sums of
     squares and their expectations; mean squares are then neither exactly chi-square nor independent, so
-    degrees of freedom and intervals are approximate. Source: ISO 5725-3:1994, clauses 8 and 9 and annexes B
-    and C (from memory).
+    degrees of freedom and intervals are approximate. Over 1,000 or 2,000 simulated studies each, 95 %
+    intervals of 8 days x 3 presentations x 2 readings and of 6 x 5 x 2 crossed held 94 to 97.5 % of the
+    truths; of 8 days with 1 to 4 presentations of 1 to 3 readings 94 to 97 %; of crossed cells of 0 to 2
+    readings 95 to 99 % (too wide for a factor much smaller than the other).
+    Source: ISO 5725-3:1994, clauses 8 and 9 and annexes B and C (from memory).
     """
     factors, crossed = _checked_arrangement(study)
     _, values = without_offset(study.full("reading"))

@@ -20,6 +20,8 @@ from budgets.evidence.evaluation import MeanSquare, Term, effective_degrees_of_f
 
 # A coefficient below this part of the largest one is the rounding of a zero.
 _ROUNDING = 1e-11
+# Ratio of two mean squares below which it makes no difference.
+_SMALLEST = 1e-60
 
 
 @dataclass(frozen=True)
@@ -94,7 +96,10 @@ def with_effective_freedom(
     approximately chi-square with (tr PV)^2 / tr (PV)^2 degrees of freedom. Source: Satterthwaite, Biometrics
     Bulletin 2 (1946); Searle, Casella and McCulloch, Variance Components (1992), S.5 (from memory).
     """
-    components = [max(0.0, float(row @ _mean_squares(lines))) for row in _solution(lines)]
+    squares = np.array([line.mean_square for line in lines])
+    # Only ratios count; within bounds, so that no fourth power of a very small number is lost.
+    ratios = np.maximum(squares / squares.max(), _SMALLEST)
+    components = np.maximum(0.0, _solution(lines) @ ratios).tolist()
     found = []
     for line, spread in zip(lines[:-1], spreads(components), strict=True):
         trace = line.degrees_of_freedom * math.fsum(
@@ -171,10 +176,6 @@ def _test(line: Line, denominator: Sequence[Term]) -> FTest:
     nu = effective_degrees_of_freedom(denominator)
     statistic = line.mean_square / below
     return FTest(statistic, nu, float(fdtrc(line.degrees_of_freedom, nu, statistic)))
-
-
-def _mean_squares(lines: Sequence[Line]) -> np.ndarray[Any, np.dtype[np.float64]]:
-    return np.array([line.mean_square for line in lines])
 
 
 def _solution(lines: Sequence[Line]) -> np.ndarray[Any, np.dtype[np.float64]]:

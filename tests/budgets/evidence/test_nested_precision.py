@@ -1,5 +1,6 @@
 """Nested and crossed factors, against exact arithmetic, statsmodels, and simulation."""
 
+import json
 import math
 from fractions import Fraction
 from itertools import pairwise
@@ -357,6 +358,33 @@ def test_the_order_of_the_rows_does_not_matter(values, random):
         return
     random.shuffle(rows)
     same(before, evaluated(rows))
+
+
+awkward = st.one_of(
+    st.sampled_from([0.0, 1.0, 1e-300, 5e-324, -9.99e14, 1e14 + 0.25]),
+    st.floats(-1e14, 1e14, allow_nan=False),
+    st.floats(-1e-140, 1e-140),
+)
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    st.lists(st.tuples(st.integers(0, 2), st.integers(0, 2), awkward), min_size=1, max_size=14),
+    st.sampled_from(["nested", "crossed"]),
+)
+def test_any_numbers_give_finite_figures_or_an_error_of_the_tree(rows, arrangement):
+    try:
+        evaluation = evaluated(rows, arrangement=arrangement)
+    except EvidenceError:
+        return
+    json.dumps(evaluation.to_document(), allow_nan=False)
+
+
+def test_scales_far_apart():
+    """The smallest mean square has no weight, and divides nothing by zero."""
+    tiny = [(0, k, j * 1e-150) for k in range(2) for j in range(2)]
+    evaluation = evaluated([*tiny, (1, 0, 0.0), (1, 1, 1e14), (1, 1, 1e14), (2, 0, -1e14)])
+    assert line(evaluation, "between_days")["effective_degrees_of_freedom"] > 0
 
 
 # --- coverage --------------------------------------------------------------------------------------------
