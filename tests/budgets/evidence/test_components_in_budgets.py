@@ -35,7 +35,7 @@ def budget(evaluation, *names):
 
 
 def test_components_of_one_study_share_their_mean_squares(evaluation):
-    """n readings of one session: (MS_B - MS_W)/4 + MS_W/n; for n = 4 the within mean square cancels."""
+    """Several readings (n) of one session: (MS_B - MS_W)/4 + MS_W/n, MS_W gone at n = 4."""
     split = budget(evaluation, "between_days", "repeatability")
     between, within = evaluation.diagnostics["analysis_of_variance"]
     for readings in (1, 2, 4):
