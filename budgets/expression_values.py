@@ -49,7 +49,7 @@ def sine_and_cosine(angle: Decimal) -> tuple[Decimal, Decimal]:
     ModelError
         If the angle is larger.
     """
-    if abs(angle) > _LARGEST_ANGLE:
+    if angle.copy_abs() > _LARGEST_ANGLE:
         raise ModelError(f"an angle of {float(angle):.3g} rad has no meaningful sine", where=("estimates",))
     # Reduce to at most pi/4 in size, then the power series.
     quarter_turns = int(_WIDE.divide(angle, _PI / 2).to_integral_value(context=_WIDE))
@@ -64,7 +64,8 @@ def sine_and_cosine(angle: Decimal) -> tuple[Decimal, Decimal]:
             cosine += other
             term *= -square / ((2 * k) * (2 * k + 1))
             sine += term
-    turned = ((sine, cosine), (cosine, -sine), (-sine, -cosine), (-cosine, sine))
+    minus_sine, minus_cosine = sine.copy_negate(), cosine.copy_negate()
+    turned = ((sine, cosine), (cosine, minus_sine), (minus_sine, minus_cosine), (minus_cosine, sine))
     return turned[quarter_turns % 4]
 
 
@@ -79,7 +80,8 @@ _EXACT: dict[str, Callable[..., Decimal]] = {
     "*": CONTEXT.multiply,
     "/": CONTEXT.divide,
     "**": CONTEXT.power,
-    "negative": lambda a: -a,
+    # The operators of Decimal would round to the digits of the thread's own context.
+    "negative": Decimal.copy_negate,
     "sqrt": CONTEXT.sqrt,
     "exp": CONTEXT.exp,
     "ln": CONTEXT.ln,
@@ -87,7 +89,7 @@ _EXACT: dict[str, Callable[..., Decimal]] = {
     "sin": lambda a: sine_and_cosine(a)[0],
     "cos": lambda a: sine_and_cosine(a)[1],
     "tan": _tangent,
-    "abs": abs,
+    "abs": Decimal.copy_abs,
     "min": min,
     "max": max,
 }
@@ -160,7 +162,10 @@ def chosen_slopes(operation: str, a: Decimal, b: Decimal) -> tuple[Decimal, Deci
 
 
 def _power_slopes(a: Decimal, b: Decimal, value: Decimal, constant: bool) -> tuple[Decimal, Decimal]:
-    by_base = _ZERO if b == 0 else CONTEXT.multiply(b, CONTEXT.power(a, b - 1))
+    if b in (_ZERO, _ONE):  # 0**0 is no number, but x and a constant have their slopes at 0
+        by_base = b
+    else:
+        by_base = CONTEXT.multiply(b, CONTEXT.power(a, CONTEXT.subtract(b, _ONE)))
     if constant:
         return by_base, _ZERO
     if a <= 0:
@@ -184,7 +189,7 @@ def _exact_slopes(
         case "*":
             return operands[1], a
         case "/":
-            return CONTEXT.divide(_ONE, operands[1]), -CONTEXT.divide(value, operands[1])
+            return CONTEXT.divide(_ONE, operands[1]), CONTEXT.divide(value, operands[1]).copy_negate()
         case "**":
             return _power_slopes(a, operands[1], value, constant)
         case "negative":
@@ -200,7 +205,7 @@ def _exact_slopes(
         case "sin":
             return (sine_and_cosine(a)[1],)
         case "cos":
-            return (-sine_and_cosine(a)[0],)
+            return (sine_and_cosine(a)[0].copy_negate(),)
         case "tan":
             return (CONTEXT.add(_ONE, CONTEXT.multiply(value, value)),)
         case "abs":

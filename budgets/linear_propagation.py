@@ -23,6 +23,9 @@ from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of, pro
 from budgets.measurement_models import MeasurementModel
 
 
+_NOTHING_LEFT = 1e-14
+
+
 @dataclass(frozen=True)
 class Line:
     """A component ready to be combined.
@@ -64,11 +67,12 @@ class Line:
         if self.matrix_terms:
             c = [coefficients[name] for name in self.inputs]
             return [projected(term, c) for term in self.matrix_terms]
-        square = coefficients[self.inputs[0]] ** 2
+        # A product, which becomes infinite where a power would raise; `combination` refuses it.
+        square = coefficients[self.inputs[0]] * coefficients[self.inputs[0]]
         found = [Term(square * term.coefficient, term.mean_square) for term in self.terms]
         if self.relative_terms:
             # u^2 = s0^2 + (s1 x)^2
-            square *= estimates[self.relative_to] ** 2
+            square *= estimates[self.relative_to] * estimates[self.relative_to]
             found += [Term(square * term.coefficient, term.mean_square) for term in self.relative_terms]
         return found
 
@@ -162,7 +166,7 @@ class CompiledPropagation:
         Raises
         ------
         ComponentError
-            If the combined variance is not above zero.
+            If the combined variance is not above zero, or not finite.
 
         Notes
         -----
@@ -191,8 +195,13 @@ class CompiledPropagation:
                 factor = float(whole / own) if own else 0.0
                 each[i] = [Term(factor * t.coefficient, t.mean_square) for t in each[i]]
                 parts[i] = float(own * whole)
+        if not all(map(math.isfinite, parts)):
+            raise ComponentError(
+                "at these estimates the combined variance is too large to be computed", where=("components",)
+            )
         total = math.fsum(parts)
-        if not total > 0:
+        # What is left of correlated parts that cancel to the last digits is their rounding.
+        if not total > _NOTHING_LEFT * math.fsum(map(abs, parts)):
             raise ComponentError(
                 f"the combined variance is {total:.3g}: at these estimates no component moves the measurand, "
                 "or their correlations cancel; terms of second order may be what is left",
@@ -296,8 +305,8 @@ class CompiledPropagation:
         parts: list[Any] = [sum(part for part, _, _ in terms) for terms in each]
         self._correlate_many(each, parts, slopes)
         total = np.broadcast_to(sum(parts), shape)
-        if not (total > 0).all():
-            raise ComponentError("a combined variance is not above zero", where=("components",))
+        if not ((total > 0) & np.isfinite(total)).all():
+            raise ComponentError("a combined variance is not above zero, or not finite", where=("components",))
         gathered: dict[str, tuple[Any, float]] = {}
         for terms in each:
             for part, code, nu in terms:

@@ -160,13 +160,13 @@ class ReadingPattern:
         Returns
         -------
         dict of str to float
-            For every level ``sum over groups of (sum of weights in the group)^2``, times
-            ``1 - n/N`` where n groups were drawn without replacement from N.
+            For every level ``sum over groups of (sum of weights in the group)^2``, less ``1/N`` where the
+            groups were drawn without replacement from N.
 
         Notes
         -----
         Source: JCGM 100:2008, 5.1.2, eq. (10) (from memory), applied to errors shared by groups of readings;
-        the factor of a finite population is common practice, no source.
+        the part of a finite population is that of simple random sampling, own derivation for unequal weights.
 
         Examples
         --------
@@ -185,7 +185,8 @@ class ReadingPattern:
                     shares[part] = shares.get(part, 0.0) + weight / len(parts)
             found[level] = math.fsum(share**2 for share in shares.values())
             if level in self.populations:
-                found[level] *= 1 - len(shares) / self.populations[level]
+                # Of n groups that weigh the same this is 1/n (1 - n/N).
+                found[level] = max(0.0, found[level] - 1 / self.populations[level])
         return found
 
 

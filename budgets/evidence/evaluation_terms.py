@@ -113,17 +113,22 @@ def effective_degrees_of_freedom(terms: Iterable[Term]) -> float:
     31.2
     """
     single = merged(terms)
-    # JCGM 100 G.2b: nu_eff = u^4 / sum (a_k MS_k)^2 / nu_k
-    total = variance(single)
-    spread = math.fsum(
-        (term.coefficient * term.mean_square.value) ** 2 / term.mean_square.degrees_of_freedom
-        for term in single
-    )
-    if spread == 0:
-        return math.inf
     counted = [term for term in single if term.coefficient * term.mean_square.value != 0]
-    # A single mean square keeps its own number to the last digit.
-    return counted[0].mean_square.degrees_of_freedom if len(counted) == 1 else total * total / spread
+    if not counted:
+        return math.inf
+    if len(counted) == 1:
+        # A single mean square keeps its own number to the last digit.
+        return counted[0].mean_square.degrees_of_freedom
+    parts = [term.coefficient * term.mean_square.value for term in counted]
+    # Scaled by a power of two, which is exact: squares of variances leave the range of a double soon.
+    exponent = max(math.frexp(part)[1] for part in parts)
+    scaled = [math.ldexp(part, -exponent) for part in parts]
+    # JCGM 100 G.2b: nu_eff = u^4 / sum (a_k MS_k)^2 / nu_k
+    total = math.fsum(scaled)
+    spread = math.fsum(
+        part * part / term.mean_square.degrees_of_freedom for part, term in zip(scaled, counted, strict=True)
+    )
+    return math.inf if spread == 0 else total * total / spread
 
 
 def finite_or_none(value: float) -> float | None:

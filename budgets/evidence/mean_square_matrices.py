@@ -99,6 +99,11 @@ def projected(term: MatrixTerm, coefficients: Sequence[float]) -> Term:
         coefficient of a mean square of 1, so that the same matrix met with other coefficients counts as the
         same mean square; this is exact where they are proportional and cautious elsewhere.
 
+    Raises
+    ------
+    EvidenceError
+        If the variance is larger than a double can be.
+
     Notes
     -----
     Source: JCGM 100:2008, 5.2.2, eq. (13) and G.4.1 note on jointly evaluated inputs (from memory).
@@ -110,10 +115,14 @@ def projected(term: MatrixTerm, coefficients: Sequence[float]) -> Term:
         # One quantity alone: the same mean square may also stand in a component of that quantity.
         i = int(filled[0]) // len(coefficients)
         single = MeanSquare(square.code, float(array[i, i]), square.degrees_of_freedom)
-        return Term(term.coefficient * coefficients[i] ** 2, single)
+        return Term(term.coefficient * coefficients[i] * coefficients[i], single)
     c = np.asarray(coefficients)
+    with np.errstate(over="ignore", invalid="ignore"):
+        value = float(c @ array @ c)
+    if not math.isfinite(value):
+        raise EvidenceError(f"the matrix {square.code} gives a variance that is too large to be computed")
     # A rounding error may leave a tiny negative number where the exact one is zero.
-    value = max(0.0, float(c @ array @ c))
+    value = max(0.0, value)
     return Term(term.coefficient * value, MeanSquare(square.code, 1.0, square.degrees_of_freedom))
 
 

@@ -408,3 +408,36 @@ def test_a_component_of_several_quantities_is_checked(changes, where):
 def test_a_covariance_matrix_that_cannot_be_is_no_component(matrix):
     with pytest.raises(ComponentError, match="not positive semi-definite, or zero"):
         joint("s", ("x", "y"), matrix, 9)
+
+
+@pytest.mark.parametrize("x", [1e80, 1e160, 1e300])
+@pytest.mark.parametrize("together", [False, True])
+def test_readings_out_of_all_proportion_are_refused_or_computed(x, together):
+    """The degrees of freedom do not depend on the scale; a variance that no double can hold is refused."""
+    matrix = ((0.01, 0.002), (0.002, 0.04))
+    components = (
+        (joint("ab", ("x", "y"), matrix, 9), line("c", "x", 0.1, 5))
+        if together
+        else (line("a", "x", 0.1, 5), line("b", "y", 0.2, 12))
+    )
+    law = compiled(a_budget("x * y", components), Counts((1,)))
+    if x > 1e150:
+        with pytest.raises(BudgetsError, match="too large"):
+            law.at({"x": x, "y": -x})
+        return
+    expected = law.at({"x": 1.0, "y": -1.0})
+    found = law.at({"x": x, "y": -x})
+    assert found.standard_uncertainty == pytest.approx(x * expected.standard_uncertainty, rel=1e-12)
+    assert found.effective_degrees_of_freedom == pytest.approx(
+        expected.effective_degrees_of_freedom, rel=1e-12
+    )
+
+
+def test_rounding_is_no_uncertainty_where_correlated_errors_cancel():
+    """0.3 - 0.1 - 0.2 is 0 by arithmetic and 3e-17 in a computer."""
+    components = (line("a", "x", 0.3, 5), line("b", "y", 0.1, 5), line("c", "z", 0.2, 5))
+    pairs = {("a", "b"): -1.0, ("a", "c"): -1.0, ("b", "c"): 1.0}
+    correlations = [Correlation(pair, "lot", r) for pair, r in pairs.items()]
+    law = compiled(a_budget("x + y + z", components, correlations=correlations), Counts((1,)))
+    with pytest.raises(ComponentError, match="cancel"):
+        law.at({"x": 1.0, "y": 1.0, "z": 1.0})

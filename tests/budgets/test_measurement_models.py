@@ -317,3 +317,16 @@ def test_every_element_of_an_array_must_be_finite():
     with pytest.raises(ModelError) as caught:
         a_model("x", "x").values({"x": [1.0, math.inf]})
     assert caught.value.where == ("estimates", "x")
+
+
+@pytest.mark.parametrize("expression", ["c - a*b", "-(a*b) + c", "c - abs(-(a*b))", "c + c/(-c)*(a*b)"])
+def test_a_sign_costs_no_digits(expression):
+    """(1 + e)(1 - e) = 1 - e^2: a sign that rounded to fewer digits than the product would leave nothing."""
+    e = 2.0**-50
+    model = MeasurementModel(expression, tuple(map(Quantity, "abc")))
+    assert model.value({"a": 1 + e, "b": 1 - e, "c": 1.0}) == pytest.approx(e * e, rel=1e-8)
+
+
+@pytest.mark.parametrize(("expression", "slope"), [("x**1 + x", 2.0), ("(x + 2)**0 + x", 1.0)])
+def test_powers_of_zero_and_one_have_their_slopes(expression, slope):
+    assert MeasurementModel(expression, (Quantity("x"),)).linearised({"x": 0.0})[1]["x"] == slope

@@ -1,3 +1,5 @@
+import itertools
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -102,3 +104,16 @@ def test_a_pattern_is_checked_against_the_procedure():
     check_counts(pattern, Procedure(Count(1, 1, 2), Count(1, 2, 3)))
     with pytest.raises(ProcedureError, match="3 readings of a sample"):
         check_counts(pattern, Procedure(Count(1, 1, 2), Count(1, 2, 2)))
+
+
+def test_unequal_weights_without_replacement_agree_with_all_orders_of_drawing():
+    """Simple random sampling, enumerated: S^2 has the divisor N - 1, as the variance of a component has."""
+    lot = [1.0, 2.5, -0.5, 4.0, 0.25]
+    weights = (0.5, 0.2, 0.2, 0.1)  # two readings of the first sample
+    of_samples = (0.7, 0.2, 0.1)
+    errors = [
+        sum(w * x for w, x in zip(of_samples, drawn, strict=True)) - sum(lot) / 5
+        for drawn in itertools.permutations(lot, 3)
+    ]
+    found = ReadingPattern({"sample": ("a", "a", "b", "c")}, weights, {"sample": 5}).averaging_weights()
+    assert found["sample"] * np.var(lot, ddof=1) == pytest.approx(np.mean(np.square(errors)), rel=1e-12)
