@@ -5,13 +5,15 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
+from typing import TypedDict
 
-from budgets.acceptance import acceptance_interval
+from budgets.acceptance import AcceptanceInterval, acceptance_interval
 from budgets.budget import Budget
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.errors import BudgetsError, ComponentError
 from budgets.evidence.evaluation import EvaluationWarning, effective_degrees_of_freedom
+from budgets.level_dependence import level_dependent_acceptance
 from budgets.levels import LEVELS
 from budgets.linear_propagation import CompiledPropagation, Line
 from budgets.propagation import (
@@ -25,9 +27,16 @@ from budgets.propagation import (
 )
 from budgets.reading_patterns import ReadingPattern
 from budgets.second_order import second_order_terms, second_order_warnings
+from budgets.uncertainty_at_limits import uncertainty_of_law_at_limits
 
 FEW_DEGREES_OF_FREEDOM = 5.0
 _HALF = 0.25  # of the variance
+
+
+class _Options(TypedDict):
+    bias: float
+    domain: tuple[float | None, float | None]
+    validated_range: tuple[float | None, float | None]
 
 
 @dataclass(frozen=True)
@@ -96,13 +105,14 @@ class Subtotal:
 
 @dataclass(frozen=True)
 class Judged:
-    """By what rule acceptance limits are found."""
+    """By what rule acceptance limits are found; ``fixed``: for every estimate, not for the one at hand."""
 
     tolerance: Tolerance
     rule: DecisionRule
     bias: float
     domain: tuple[float | None, float | None]
     validated_range: tuple[float, float]
+    fixed: bool
 
 
 @dataclass(frozen=True)
@@ -133,7 +143,7 @@ class Basis:
             return Alternative(None, None, None, None)
         u, nu = math.sqrt(variance), effective_degrees_of_freedom(terms)
         expanded = expanded_uncertainty(u, self.coverage_probability, nu)
-        return Alternative(u, nu, expanded, _limits(self.judged, u, nu))
+        return Alternative(u, nu, expanded, _limits(self.judged, law, u, nu))
 
 
 @dataclass(frozen=True)
@@ -180,7 +190,8 @@ def explain(
     estimates : mapping of str to float or None
         As in `budgets.propagation.combined`.
     tolerance : Tolerance or None
-        With ``rule``: acceptance limits are given too, for the uncertainty at these estimates.
+        With ``rule``: acceptance limits are given too, with a model for the uncertainty at these estimates,
+        else those of the release rule.
     rule : DecisionRule or None
     domain : tuple of float or None
         Natural domain of the characteristic.
@@ -207,7 +218,7 @@ def explain(
     judged = None
     if tolerance is not None and rule is not None:
         shift = 0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias
-        judged = Judged(tolerance, rule, shift, domain, budget.validated_range)
+        judged = Judged(tolerance, rule, shift, domain, budget.validated_range, budget.model is None)
     p = budget.coverage_probability
     basis = Basis(law, coefficients, full, p, judged)
     whole = expanded_uncertainty(result.standard_uncertainty, p, result.effective_degrees_of_freedom)
@@ -221,7 +232,7 @@ def explain(
         whole,
         tuple(components),
         _subtotals(result),
-        _limits(judged, result.standard_uncertainty, result.effective_degrees_of_freedom),
+        _limits(judged, law, result.standard_uncertainty, result.effective_degrees_of_freedom),
         (*_curvature(law, budget, full, result), *_warnings(result)),
         basis,
     )
@@ -248,23 +259,30 @@ def _with_factor(law: CompiledPropagation, index: int, factor: float) -> Compile
     return replace(law, lines=tuple(lines))
 
 
-def _limits(judged: Judged | None, u: float, nu: float) -> Limits | None:
+def _limits(judged: Judged | None, law: CompiledPropagation, u: float, nu: float) -> Limits | None:
     if judged is None:
         return None
     try:
-        accepted = acceptance_interval(
-            judged.rule,
-            judged.tolerance,
-            u,
-            nu,
-            bias=judged.bias,
-            domain=judged.domain,
-            validated_range=judged.validated_range,
-        )
+        accepted = _accepted(judged, law, u, nu)
     except BudgetsError:
         # With this uncertainty the rule accepts nothing, or cannot be used.
         return Limits(None, None)
     return Limits(accepted.lower, accepted.upper)
+
+
+def _accepted(judged: Judged, law: CompiledPropagation, u: float, nu: float) -> AcceptanceInterval:
+    """Return what is accepted: as the release rule has it where limits are fixed, else at this estimate."""
+    options: _Options = {
+        "bias": judged.bias,
+        "domain": judged.domain,
+        "validated_range": judged.validated_range,
+    }
+    if judged.fixed:
+        there = uncertainty_of_law_at_limits(law, judged.tolerance)
+        u, nu = there.standard_uncertainty, there.degrees_of_freedom
+        if there.dependence is not None:
+            return level_dependent_acceptance(judged.rule, judged.tolerance, there.dependence, nu, **options)
+    return acceptance_interval(judged.rule, judged.tolerance, u, nu, **options)
 
 
 def _remark(

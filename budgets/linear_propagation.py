@@ -22,7 +22,6 @@ from budgets.evidence.evaluation import Term, effective_degrees_of_freedom, vari
 from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of, projected
 from budgets.measurement_models import MeasurementModel
 
-
 _NOTHING_LEFT = 1e-14
 
 
@@ -306,7 +305,7 @@ class CompiledPropagation:
         self._correlate_many(each, parts, slopes)
         total = np.broadcast_to(sum(parts), shape)
         if not ((total > 0) & np.isfinite(total)).all():
-            raise ComponentError("a combined variance is not above zero, or not finite", where=("components",))
+            raise ComponentError("a combined variance is not above zero, or infinite", where=("components",))
         gathered: dict[str, tuple[Any, float]] = {}
         for terms in each:
             for part, code, nu in terms:

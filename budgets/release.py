@@ -266,7 +266,7 @@ class ReleaseRule:
         Raises
         ------
         ModelError
-            If the estimate is not a finite number.
+            If the estimate is not a finite number, or would have no uncertainty.
 
         Notes
         -----
@@ -278,6 +278,11 @@ class ReleaseRule:
             raise ModelError(f"the estimate must be a finite number, not {estimate}", where=("estimate",))
         tolerance = self._tolerance
         u, nu = self.standard_uncertainty_at(estimate), self.effective_degrees_of_freedom
+        if u == 0:
+            raise ModelError(
+                "all uncertainty is proportional to the value: an estimate of 0 would be known exactly",
+                where=("estimate",),
+            )
         below, above = tails(estimate, u, nu, tolerance, bias=self.bias_shift)
         probability = conformance_probability(estimate, u, nu, tolerance, bias=self.bias_shift)
         return Judgement(
@@ -335,6 +340,8 @@ class ReleaseRule:
             u = np.hypot(
                 self.constant_standard_uncertainty, self.proportional_standard_uncertainty * estimates
             )
+            if not u.all():
+                raise ModelError("an estimate of 0 would be known exactly", where=("estimates",))
         lower, upper = shifted(self._tolerance, self.bias_shift)
         if lower is None or upper is None:
             if upper is not None:

@@ -10,7 +10,8 @@ from budgets.conformity import Tolerance
 from budgets.errors import NotSupportedError
 from budgets.evidence.evaluation import variance
 from budgets.level_dependence import LevelDependence
-from budgets.propagation import Counts, combined, compiled
+from budgets.linear_propagation import CompiledPropagation
+from budgets.propagation import ESTIMATE, Counts, compiled
 from budgets.reading_patterns import ReadingPattern
 
 
@@ -57,22 +58,40 @@ def uncertainty_at_limits(
     NotSupportedError
         For correlations beside parts proportional to the value.
     """
-    if not any(component.relative_terms for component in budget.components):
-        result = combined(budget, counts)
+    return uncertainty_of_law_at_limits(compiled(budget, counts), tolerance)
+
+
+def uncertainty_of_law_at_limits(law: CompiledPropagation, tolerance: Tolerance) -> UncertaintyAtLimits:
+    """Return the uncertainty at the tolerance limits by the law that `compiled` gives without a model.
+
+    Parameters
+    ----------
+    law : CompiledPropagation
+        Of the one quantity ``estimate`` and the error of its bias.
+    tolerance : Tolerance
+
+    Returns
+    -------
+    UncertaintyAtLimits
+
+    Raises
+    ------
+    NotSupportedError
+        For correlations beside parts proportional to the value.
+    """
+    if not any(line.relative_terms for line in law.lines):
+        result = law.at({ESTIMATE: 0.0})
         return UncertaintyAtLimits(result.standard_uncertainty, result.effective_degrees_of_freedom, None)
-    if budget.correlations:
+    if law.correlations:
         raise NotSupportedError(
             "correlations beside parts proportional to the value", where=("correlations",)
         )
-    lines = compiled(budget, counts).lines
     dependence = LevelDependence(
-        math.sqrt(math.fsum(line.weight * variance(line.terms) for line in lines)),
-        math.sqrt(math.fsum(line.weight * variance(line.relative_terms) for line in lines)),
+        math.sqrt(math.fsum(line.weight * variance(line.terms) for line in law.lines)),
+        math.sqrt(math.fsum(line.weight * variance(line.relative_terms) for line in law.lines)),
     )
     at_limits = [
-        combined(budget, counts, estimates={budget.characteristic: limit})
-        for limit in (tolerance.lower, tolerance.upper)
-        if limit is not None
+        law.at({ESTIMATE: limit}) for limit in (tolerance.lower, tolerance.upper) if limit is not None
     ]
     return UncertaintyAtLimits(
         max(result.standard_uncertainty for result in at_limits),

@@ -156,3 +156,19 @@ def test_a_model_that_curves_is_warned_of(expression, codes):
     budget = Budget(components, once, 0.95, None, "corrected", (-9.0, 9.0), model)
     explained = explain(budget, Counts((1,)), estimates={"x": 0.5})
     assert [warning.code for warning in explained.warnings] == codes
+
+
+@pytest.mark.parametrize("at", [2.0, 5.5])
+def test_limits_of_a_proportional_uncertainty_are_those_of_the_release_rule(a_budget, a_component, at):
+    """Wherever the budget is explained: y + k u(y) = T holds at the limit, not at the middle of a range."""
+    square = MeanSquare("sampling/relative", 0.02**2, 25)
+    sampling = a_component("sampling", terms=(), relative_terms=(Term(1.0, square),), level="sample")
+    budget = a_budget(components=(*a_budget().components, sampling))
+    counts, tolerance = Counts((2,)), Tolerance(None, 5.0)
+    explained = explain(budget, counts, estimates={"moisture": at}, tolerance=tolerance, rule=RULE)
+    rule = ReleaseRule.compile(budget, counts, tolerance, RULE)
+    assert explained.acceptance_limits == Limits(None, rule.upper_acceptance_limit)
+    plain = ReleaseRule.compile(a_budget(), counts, tolerance, RULE)
+    assert explained.components[-1].without.acceptance_limits.upper == pytest.approx(
+        plain.upper_acceptance_limit
+    )

@@ -177,3 +177,19 @@ def test_what_a_fixed_rule_cannot_do_is_refused():
     derived = a_budget(components=(first,), bias=None, model=model)
     with pytest.raises(ModelError, match="no fixed acceptance limits"):
         ReleaseRule.compile(derived, Counts((2,)), Tolerance(None, 4.0), RISK)
+
+
+def test_an_estimate_of_zero_is_not_known_exactly(a_budget, a_component):
+    square = MeanSquare("relative", 0.02**2, 25)
+    wholly = a_component("wholly", terms=(), relative_terms=(Term(1.0, square),))
+    budget = a_budget(components=(wholly,), bias=None, validated_range=(0.0, 10.0))
+    rule = ReleaseRule.compile(
+        budget,
+        Counts((2,)),
+        Tolerance(None, 5.0),
+        DecisionRule("guarded_by_specific_risk", largest_risk=0.05),
+    )
+    with pytest.raises(ModelError, match="exactly"):
+        rule.judge(0.0)
+    with pytest.raises(ModelError, match="exactly"):
+        rule.judge_many([1.0, 0.0])
