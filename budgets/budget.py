@@ -264,7 +264,10 @@ def _missing_sources(components: tuple[Component, ...]) -> list[BudgetsError]:
         ]
         for source in component.taken_out:
             level = _LEVEL_OF_SOURCE[source]
-            if any(source in other.contains or other.level == level for other in others):
+            # A figure that says what it is, as the resolution of a display, is not all that varies there.
+            if any(
+                source in other.contains or (other.level == level and not other.contains) for other in others
+            ):
                 continue
             faults.append(
                 ComponentError(

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 from budgets.correlations import is_possible
 from budgets.distributions import check_shape
-from budgets.errors import ComponentError, EvidenceError
+from budgets.errors import ComponentError, EvidenceError, raise_collected
 from budgets.evidence.evaluation import Estimate, Term, effective_degrees_of_freedom, merged, variance
 from budgets.evidence.mean_square_matrices import MatrixTerm, covariance_of
 from budgets.levels import LEVELS
@@ -201,7 +201,7 @@ class Component:
         Raises
         ------
         ComponentError
-            If the estimate is not usable or may not feed this level.
+            If the estimate is not usable, may not feed this level, or has not what is said of it.
         """
         if not estimate.usable:
             raise ComponentError(
@@ -215,6 +215,11 @@ class Component:
                 f"component {code}: the estimate {estimate.name!r} may feed the level "
                 f"{' or '.join(estimate.may_feed)}, not {chosen!r}",
                 where=("level",),
+            )
+        if relative_to and not estimate.relative_terms:
+            raise ComponentError(
+                f"component {code}: the estimate {estimate.name!r} is not relative to anything",
+                where=("relative_to",),
             )
         return cls(
             code=code,
@@ -230,14 +235,24 @@ class Component:
             reading_weight=estimate.reading_weight,
             relative_terms=estimate.relative_terms,
             relative_to=relative_to,
-            quantities=_named(estimate, quantities or {}),
+            quantities=_named(code, estimate, quantities or {}),
             matrix_terms=estimate.matrix_terms,
             top_to_base_ratio=estimate.top_to_base_ratio if distribution is None else None,
         )
 
 
-def _named(estimate: Estimate, quantities: Mapping[str, str]) -> tuple[str, ...]:
+def _named(code: str, estimate: Estimate, quantities: Mapping[str, str]) -> tuple[str, ...]:
     if not estimate.matrix_terms:
         return ()
     columns = estimate.matrix_terms[0].mean_square.quantities
+    raise_collected(
+        [
+            ComponentError(
+                f"component {code}: {column!r} is no column of its study; there are {', '.join(columns)}",
+                where=("quantities", column),
+            )
+            for column in quantities
+            if column not in columns
+        ]
+    )
     return tuple(quantities.get(name, name) for name in columns)

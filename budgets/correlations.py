@@ -121,7 +121,9 @@ def check_correlations(correlations: Sequence[Correlation], levels: Mapping[str,
         where = ("correlations", index)
         unknown = [code for code in item.between if code not in levels]
         faults += [
-            CorrelationError(f"there is no component {code!r} to correlate", where=(*where, "between"))
+            CorrelationError(
+                f"there is no component {code!r} of a single quantity to correlate", where=(*where, "between")
+            )
             for code in unknown
         ]
         if not unknown and any(levels[code] != item.level for code in item.between):

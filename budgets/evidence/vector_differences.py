@@ -66,7 +66,7 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
             f"a quantity and its reference values go together: {', '.join(missing + alone)} stands alone",
             where=("columns",),
         )
-    values, readings, references = _pair_means(study, quantities)
+    values, readings, references, levels = _pair_means(study, quantities)
     n = len(values)
     scatter = centred(values)
     matrix = scatter_matrix(f"{study.code}/prediction_covariance", quantities, scatter.T @ scatter, n - 1)
@@ -86,6 +86,8 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
         used=len(study.labels["pair"]),
         diagnostics={
             "pairs": n,
+            "reference_lowest": {name: min(found) for name, found in levels.items()},
+            "reference_highest": {name: max(found) for name, found in levels.items()},
             "biases": (values[0] + (values - values[0]).mean(axis=0)).tolist(),
             **matrix_figures("prediction", matrix),
             **figures,
@@ -94,13 +96,16 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
     )
 
 
-def _pair_means(study: Study, quantities: tuple[str, ...]) -> tuple[Array, Array, dict[str, float]]:
-    """Return differences of means, 1/readings of every pair, and the mean of 1/references by quantity."""
+def _pair_means(
+    study: Study, quantities: tuple[str, ...]
+) -> tuple[Array, Array, dict[str, float], dict[str, list[float]]]:
+    """Return differences of means and 1/readings by pair; mean 1/references and references by quantity."""
     labels = study.labels["pair"]
     faults: list[BudgetsError] = []
     differences: list[list[float]] = []
     readings: list[float] = []
     reciprocals: dict[str, list[float]] = {name: [] for name in quantities}
+    levels: dict[str, list[float]] = {name: [] for name in quantities}
     for label, rows in grouped(labels, range(len(labels))).items():
         where = ("rows", study.rows[int(rows[0])])
         row: list[float] = []
@@ -113,14 +118,15 @@ def _pair_means(study: Study, quantities: tuple[str, ...]) -> tuple[Array, Array
                 continue
             counts.add(len(own))
             reciprocals[name].append(1 / len(reference))
-            row.append(math.fsum(own) / len(own) - math.fsum(reference) / len(reference))
+            levels[name].append(math.fsum(reference) / len(reference))
+            row.append(math.fsum(own) / len(own) - levels[name][-1])
         if len(counts) > 1:
             faults.append(EvidenceError(f"pair {label}: a scan gives every quantity", where=where))
         differences.append(row)
         readings.append(1 / max(counts, default=1))
     raise_collected(faults)
     means = {name: math.fsum(values) / len(values) for name, values in reciprocals.items()}
-    return np.array(differences), np.array(readings), means
+    return np.array(differences), np.array(readings), means, levels
 
 
 def _given(study: Study, column: str, rows: Sequence[float]) -> list[float]:

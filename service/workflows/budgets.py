@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import replace
 from datetime import date
 from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.errors import NotSupportedError
-from budgets.units import convert
 from service.documents import (
     BudgetComponent,
     BudgetDocument,
@@ -20,9 +20,11 @@ from service.documents import (
 from service.errors import Conflict, Fault
 from service.ledger import format_instant
 from service.schemas import load
+from service.schemas.base import pointer_step
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
+from service.workflows.budget_evidence import check_quantities, check_ranges, check_values_are_covered
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import Behind, FaultCollector, resolve
 from service.workflows.rules import RuleKey, compile_pair
@@ -37,6 +39,7 @@ from service.workflows.versioned_kind import Approval, VersionedKind
 
 # The designs that compare the analyzer with a reference method.
 VALIDATIONS: Final = ("agreement", "covariance")
+_NUMBERED_QUANTITY: Final = re.compile(r"#/quantities/(\d+)(/name)?")
 
 
 def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> ResolvedBudget:
@@ -53,17 +56,18 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
         collector.attempt(f"#/components/{index}/evidence", _behind, unit_of_work, document, line, index)
         for index, line in enumerate(document.components)
     ]
-    estimates = {
+    valued = {
         name: collector.attempt(
             f"#/model/quantities/{name}/evidence", _value, unit_of_work, document, name, quantity.evidence
         )
         for name, quantity in document.model.quantities.items()
         if quantity.evidence is not None
     }
-    _check_values_are_covered(document, collector)
+    check_values_are_covered(document, valued, collector)
     collector.finish("The evidence of the budget does not fit.")
     behind = tuple(item for item in found if item is not None)
-    _check_ranges(document, behind, collector)
+    values = {name: item for name, item in valued.items() if item is not None}
+    check_ranges(document, (*behind, *values.values()), collector)
     _check_trueness(document, behind, collector)
     collector.finish("The budget claims more than its evidence shows.")
     components = [
@@ -72,18 +76,24 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
     ]
     collector.finish("The components of the budget do not fit.")
     ready = [component for component in components if component is not None]
-    values = {name: value for name, value in estimates.items() if value is not None}
-    budget = collector.attempt("#", assemble_budget, document, ready, values)
-    collector.faults = [_in_document(fault) for fault in collector.faults]
+    estimates = {
+        name: item.estimate.value for name, item in values.items() if item.estimate.value is not None
+    }
+    budget = collector.attempt("#", assemble_budget, document, ready, estimates)
+    collector.faults = [_in_document(document, fault) for fault in collector.faults]
     collector.finish("The budget does not hold together.")
     assert budget is not None
-    return ResolvedBudget(budget, behind, values, _serves_until(behind))
+    return ResolvedBudget(budget, behind, estimates, _serves_until(behind))
 
 
-def _in_document(fault: Fault) -> Fault:
+def _in_document(document: BudgetDocument, fault: Fault) -> Fault:
     """Point to the member of the document, where the computation calls it otherwise."""
     pointer = (fault.pointer or "#").replace("#/validated_box", "#/validated_ranges", 1)
     pointer = pointer.replace("#/expression", "#/model/expression", 1)
+    if numbered := _NUMBERED_QUANTITY.match(pointer):
+        # The document has them by their names.
+        name = list(document.model.quantities)[int(numbered[1])]
+        pointer = f"#/model/quantities{pointer_step(name)}"
     pointer = pointer.replace("#/quantities", "#/model/quantities", 1)
     return replace(fault, pointer=pointer)
 
@@ -101,11 +111,12 @@ def _behind(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComp
     behind = resolve(unit_of_work, line.evidence, code=code, unit=units.pop(), pointer=pointer)
     if behind.study is not None:
         _check_study_fits(unit_of_work, behind.study, document, pointer)
+    check_quantities(document, line, behind, index)
     return behind
 
 
-def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, evidence: Evidence) -> float | None:
-    """Give the value of a quantity that evidence stands behind, as a bias."""
+def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, evidence: Evidence) -> Behind:
+    """Give what stands behind the value of a quantity, as a bias."""
     pointer = f"#/model/quantities/{name}/evidence"
     unit = document.model.quantities[name].unit
     behind = resolve(unit_of_work, evidence, code=f"{document.code}/{name}", unit=unit, pointer=pointer)
@@ -119,49 +130,7 @@ def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, eviden
             "an estimate that has a value, such as 'bias'",
         )
         collector.finish("A quantity has no value.")
-    return behind.estimate.value
-
-
-def _check_values_are_covered(document: BudgetDocument, collector: FaultCollector) -> None:
-    """Refuse a value whose own uncertainty is in no component: that of another study says nothing of it.
-
-    A line of several quantities holds theirs together, with their covariance.
-    """
-    for name, quantity in document.model.quantities.items():
-        if quantity.evidence is None:
-            continue
-        own = any(
-            line.quantity == name and line.evidence == quantity.evidence for line in document.components
-        )
-        if not own and not any(name in line.quantities.values() for line in document.components):
-            collector.add(
-                "#/components",
-                f"no component holds the uncertainty of this very {name}",
-                f"a component of the quantity {name!r} with the evidence of #/model/quantities/{name}",
-            )
-
-
-def _check_ranges(document: BudgetDocument, behind: tuple[Behind, ...], collector: FaultCollector) -> None:
-    """Refuse a validated range beyond all reference values of the validation (ISO 12099, from memory)."""
-    for item in behind:
-        if item.study is None or item.study.design != "agreement":
-            continue
-        name = item.study.characteristic
-        own = name == document.characteristic
-        bounds = document.validated_range if own else document.validated_ranges.get(name)
-        lowest, highest = (
-            convert(item.diagnostics[f"reference_{end}"], item.study.unit, document.unit)
-            for end in ("lowest", "highest")
-        )
-        if bounds is None or bounds.lower is None or bounds.upper is None:
-            continue
-        if bounds.lower < lowest or bounds.upper > highest:
-            collector.add_once(
-                "#/validated_range" if own else f"#/validated_ranges/{name}",
-                f"got {bounds.lower:g} to {bounds.upper:g}; the reference values of {item.study.code} run "
-                f"from {lowest:g} to {highest:g}",
-                "a range within them, best the bulk of them",
-            )
+    return behind
 
 
 def _check_trueness(document: BudgetDocument, behind: tuple[Behind, ...], collector: FaultCollector) -> None:
@@ -264,7 +233,16 @@ def _check_what_is_read(
 ) -> None:
     """A quantity that is read is the characteristic itself, or one that it is derived from, in its unit."""
     channels = _derived_from(unit_of_work, document) or (document.characteristic,)
-    if not is_default_model(document):
+    for name in channels:
+        if name not in document.model.quantities or document.model.quantities[name].source != "reading":
+            collector.add(
+                "#/model/quantities", f"{name!r} is not read", f"{' and '.join(channels)}, all read"
+            )
+    if is_default_model(document):
+        for name in document.validated_ranges:
+            pointer = f"#/validated_ranges/{name}"
+            collector.add(pointer, "the model is the reading less its bias", "validated_range alone")
+    else:
         for name, quantity in document.model.quantities.items():
             if quantity.source == "reading" and name not in document.validated_ranges:
                 pointer = f"#/validated_ranges/{name}"

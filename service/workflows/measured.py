@@ -19,6 +19,7 @@ from service.workflows.evidence import FaultCollector
 from service.workflows.register import BudgetInForce, Register
 
 _ASK_THE_LABORATORY: Final = "Have the laboratory analyse a sample of this lot."
+_WEIGHTS: Final = "one weight above 0 for all readings of one presentation"
 _A_PERSON: Final = "A person decides on this lot."
 _SCAN_AGAIN: Final = (
     "Prepare samples as the calibration asks and scan within its conditions. A person decides on this lot."
@@ -126,10 +127,23 @@ def _done(scans: list[Reading]) -> Counts | ReadingPattern:
     if not grouped and len(analyzers) == 1 and weighted == {False}:
         return Counts(tuple(Counter(reading.sample for reading in scans).values()))
     collector = FaultCollector()
+    weighed: dict[tuple[str, str | None, str | None], set[float | None]] = {}
+    for reading in scans:
+        key = (reading.sample, reading.increment, reading.presentation)
+        weighed.setdefault(key, set()).add(reading.weight)
+    for (sample, *_), weights in weighed.items():
+        # One that weighs less, or nothing, would be set aside without a reason and without an approver.
+        if len(weights) > 1 or 0 in weights:
+            collector.add("#/readings", f"sample {sample}: weights {_shown(weights)}", _WEIGHTS)
+    collector.finish("The readings cannot be weighed as they say.")
     pattern = collector.attempt("#/readings", _pattern, scans)
     collector.finish("The readings cannot be grouped as they say.")
     assert pattern is not None
     return pattern
+
+
+def _shown(weights: set[float | None]) -> str:
+    return " and ".join(f"{weight:g}" for weight in sorted(weight or 0.0 for weight in weights))
 
 
 def _pattern(scans: list[Reading]) -> ReadingPattern:

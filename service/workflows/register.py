@@ -25,7 +25,7 @@ from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.calendar import DEFAULT_PLANT
-from service.workflows.rules import AnyRule, RuleKey, compile_rule, counts_text, stored_rule
+from service.workflows.rules import AnyRule, RuleKey, compile_rule, counts_text, pattern_text, stored_rule
 from service.workflows.stored_budgets import budget_from_evaluation
 
 # Unbalanced numbers of readings are many; beyond this bound they are compiled anew each time.
@@ -77,15 +77,13 @@ class Register:
     ) -> AnyRule:
         """Give the stored rule for what was done; compile it from the stored budget where none was stored."""
         characteristic = self.characteristics[budget.document.product, requirement.characteristic]
-        if isinstance(done, ReadingPattern):
-            return compile_rule(budget.budget, done, requirement, characteristic)
         key = RuleKey(
             specification=specification.document.code,
             specification_version=specification.version,
             characteristic=requirement.characteristic,
             budget=budget.document.code,
             budget_version=budget.version,
-            counts=counts_text(done),
+            counts=counts_text(done) if isinstance(done, Counts) else pattern_text(done),
         )
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:

@@ -61,6 +61,12 @@ def counts_text(counts: Counts) -> str:
     return ",".join(str(number) for number in sorted(counts.readings_per_sample, reverse=True))
 
 
+def pattern_text(pattern: ReadingPattern) -> str:
+    """Write all of a pattern that its rule depends on: the numbers of readings and the averaging weights."""
+    numbers = counts_text(Counts(pattern.readings_per_sample))
+    return f"{numbers} {sorted(pattern.averaging_weights().items())}"
+
+
 def counts_from_text(text: str) -> Counts:
     """Read what counts_text wrote."""
     return Counts(tuple(int(part) for part in text.split(",")))

@@ -39,7 +39,7 @@ class ResolvedBudget:
 
 def is_default_model(document: BudgetDocument) -> bool:
     """Say whether the model is the reading less its bias, which needs no expression."""
-    return document.model.expression.split() == [document.characteristic, "-", BIAS]
+    return "".join(document.model.expression.split()) == f"{document.characteristic}-{BIAS}"
 
 
 def component_of(line: BudgetComponent, estimate: Estimate, evaluation_type: str) -> Component:
@@ -90,11 +90,15 @@ def assemble_budget(
 
 
 def _model(document: BudgetDocument, estimates: Mapping[str, float]) -> MeasurementModel:
+    expression, names = document.model.expression, {name: name for name in document.model.quantities}
+    if is_default_model(document):
+        # The code of a characteristic may hold hyphens, which in an expression are minus signs.
+        expression, names[document.characteristic] = f"reading - {BIAS}", "reading"
     return MeasurementModel(
-        document.model.expression,
+        expression,
         tuple(
             Quantity(
-                name,
+                names[name],
                 quantity.unit,
                 "reading" if quantity.source == "reading" else "given",
                 None if quantity.source == "reading" else estimates[name],

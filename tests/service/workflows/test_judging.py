@@ -368,11 +368,33 @@ def test_readings_of_one_filling_share_its_error_and_those_of_two_do_not() -> No
 
 
 def test_weights_make_estimate_and_uncertainty_together() -> None:
-    readings = (a_reading(2.8, 1, weight=0.25), a_reading(3.0, 2, weight=0.75))
+    readings = (
+        a_reading(2.8, 1, weight=0.25, presentation="a"),
+        a_reading(3.0, 2, weight=0.75, presentation="b"),
+    )
     verdict = judged(a_request(*readings), grouped_budget())["verdicts"][0]
     assert verdict["estimate"] == pytest.approx(0.25 * 2.8 + 0.75 * 3.0 - BIAS, rel=1e-14)
-    u = math.sqrt(0.04**2 * (0.25**2 + 0.75**2) + 0.05**2 + 0.03**2 + 0.08**2)
+    u = math.sqrt((0.04**2 + 0.05**2) * (0.25**2 + 0.75**2) + 0.03**2 + 0.08**2)
     assert verdict["combined_standard_uncertainty"] == pytest.approx(u, rel=1e-12)
+
+
+@pytest.mark.parametrize("weights", [(1.0, 0.0), (0.9, 0.1)])
+def test_a_reading_is_not_weighed_away(weights: tuple[float, float]) -> None:
+    """Setting a reading aside needs a reason and an approver."""
+    readings = (a_reading(2.9, number, weight=weight) for number, weight in enumerate(weights))
+    with pytest.raises(InvalidRequest, match="weighed"):
+        judged(a_request(*readings))
+
+
+def test_a_pattern_of_readings_is_compiled_once() -> None:
+    register = grouped_budget()
+    for lot in ("one", "another"):
+        readings = (a_reading(2.9, 1, presentation="a"), a_reading(2.8, 2, presentation="b"))
+        judged(a_request(*readings, lot=lot), register)
+    (key,) = register.compiled
+    judged(a_request(a_reading(2.9, 1, session="a"), a_reading(2.8, 2, session="b")), register)
+    assert len(register.compiled) == 2
+    assert key.counts.startswith("2 ")
 
 
 @pytest.mark.parametrize("weights", [(0.5, None), (0.5, 0.6)])

@@ -1,0 +1,114 @@
+"""Whether the evidence of a budget is about the quantities, and the ranges, that it is used for."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+
+from budgets.units import convert
+from service.documents import BudgetComponent, BudgetDocument, Study, StudyEvidence
+from service.schemas.base import pointer_step
+from service.workflows.evidence import Behind, FaultCollector
+
+
+def check_quantities(document: BudgetDocument, line: BudgetComponent, behind: Behind, index: int) -> None:
+    """Refuse evidence about one channel for a line about another.
+
+    Only what is read bears the name of a channel; a bias may be called as one likes.
+
+    Raises
+    ------
+    InvalidRequest
+        The line belongs to another quantity than its study, or a relative figure to one of another unit.
+    """
+    collector = FaultCollector()
+    study, quantities = behind.study, document.model.quantities
+    if study is not None and line.quantity is not None and quantities[line.quantity].source == "reading":
+        about = _about(study, line)
+        if about != line.quantity:
+            pointer = f"#/components/{index}/evidence"
+            collector.add(pointer, f"it is about {about!r}", f"evidence about {line.quantity!r}")
+    for column, name in line.quantities.items():
+        if quantities[name].source == "reading" and name != column:
+            pointer = f"#/components/{index}/quantities{pointer_step(column)}"
+            collector.add(pointer, f"got {name!r}", f"{column!r}, which is read, or a quantity that is not")
+    if line.relative_to is not None and line.quantity is not None:
+        units = quantities[line.quantity].unit, quantities[line.relative_to].unit
+        if units[0] != units[1]:
+            pointer = f"#/components/{index}/relative_to"
+            collector.add(pointer, f"got a quantity in {units[1]!r}", f"one in {units[0]!r}")
+    collector.finish("The evidence is about something else.")
+
+
+def _about(study: Study, line: BudgetComponent) -> str:
+    """Name the channel that an estimate of a study is about; of several channels its name ends with it."""
+    if not study.characteristics or not isinstance(line.evidence, StudyEvidence):
+        return study.characteristic
+    for name in study.characteristics:
+        if line.evidence.estimate.endswith(f"_{name}"):
+            return name
+    return study.characteristic
+
+
+def check_values_are_covered(
+    document: BudgetDocument, valued: Mapping[str, Behind | None], collector: FaultCollector
+) -> None:
+    """Refuse a value whose own uncertainty is in no component: that of another study says nothing of it.
+
+    A line of several quantities holds theirs together, with their covariance, and has to be about the same
+    channel as the value.
+    """
+    for name, quantity in document.model.quantities.items():
+        if quantity.evidence is None:
+            continue
+        if any(line.quantity == name and line.evidence == quantity.evidence for line in document.components):
+            continue
+        columns = [
+            column
+            for line in document.components
+            for column, own in line.quantities.items()
+            if own == name and line.level == "calibration"
+        ]
+        behind = valued.get(name)
+        study = None if behind is None else behind.study
+        if not columns:
+            collector.add(
+                "#/components",
+                f"no component holds the uncertainty of this very {name}",
+                f"a component of the quantity {name!r} with the evidence of #/model/quantities/{name}",
+            )
+        elif study is not None and study.characteristic not in columns:
+            detail = f"the value is of {study.characteristic!r}, its uncertainty that of {columns[0]!r}"
+            collector.add(f"#/model/quantities/{name}/evidence/study", detail, "both of one channel")
+
+
+def check_ranges(document: BudgetDocument, behind: Sequence[Behind], collector: FaultCollector) -> None:
+    """Refuse a validated range beyond all reference values of the validation (ISO 12099, from memory)."""
+    for item in behind:
+        if item.study is None:
+            continue
+        for name, lowest, highest in _references(item):
+            own = name == document.characteristic
+            bounds = document.validated_range if own else document.validated_ranges.get(name)
+            if bounds is None or bounds.lower is None or bounds.upper is None:
+                continue
+            quantity = document.model.quantities.get(name)
+            unit = document.unit if own or quantity is None else quantity.unit
+            ends = [convert(end, item.study.unit, unit) for end in (lowest, highest)]
+            if bounds.lower < ends[0] or bounds.upper > ends[1]:
+                collector.add_once(
+                    "#/validated_range" if own else f"#/validated_ranges/{name}",
+                    f"got {bounds.lower:g} to {bounds.upper:g}; the reference values of {item.study.code} "
+                    f"run from {ends[0]:g} to {ends[1]:g}",
+                    "a range within them, best the bulk of them",
+                )
+
+
+def _references(item: Behind) -> Iterator[tuple[str, float, float]]:
+    """Give the lowest and the highest reference value of each channel that a validation is about."""
+    lowest, highest = (item.diagnostics.get(f"reference_{end}") for end in ("lowest", "highest"))
+    if item.study is None or lowest is None or highest is None:
+        return
+    if isinstance(lowest, Mapping):
+        yield from ((name, lowest[name], highest[name]) for name in lowest)
+    else:
+        yield item.study.characteristic, lowest, highest
