@@ -397,6 +397,14 @@ class Study:
     options: Mapping[str, Any] = field(default_factory=dict)
 
 
+@dataclass(frozen=True)
+class StudyPlanRequest:
+    """What a study is wanted for: to know a standard deviation, to find a bias; a wish by its members."""
+
+    precision: Mapping[str, Any] | None = None
+    bias: Mapping[str, Any] | None = None
+
+
 # --- decisions ----------------------------------------------------------------------------------------
 
 

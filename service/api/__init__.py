@@ -20,6 +20,7 @@ from service.api import (
     requests,
     specifications,
     studies,
+    study_plans,
 )
 from service.api.description import describe_api, public_operations
 from service.api.reader import LARGEST_BODY
@@ -32,6 +33,7 @@ BLUEPRINTS = (
     lots.blueprint,
     acceptance_limits.blueprint,
     studies.blueprint,
+    study_plans.blueprint,
     budgets.blueprint,
     specifications.blueprint,
     *master_data.BLUEPRINTS,

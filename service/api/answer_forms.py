@@ -334,6 +334,33 @@ _VERIFICATION = _object(
     },
 )
 
+_PRECISION_PLAN = _object(
+    "A study that knows a standard deviation well enough.",
+    {
+        "design": _TEXT,
+        "samples": {**_WHOLE, "description": "Pairs, in the design agreement."},
+        "values_per_sample": _WHOLE,
+        "values": _WHOLE,
+        "degrees_of_freedom": _WHOLE,
+        "relative_standard_uncertainty": _NUMBER,
+        "interval_lower": {**_NUMBER, "description": "How far that end lies, as a fraction."},
+        "interval_upper": _NUMBER,
+        "coverage_probability": _NUMBER,
+        "statement": {**_TEXT, "description": "In words."},
+    },
+)
+_BIAS_PLAN = _object(
+    "A study that finds a bias.",
+    {
+        "pairs": _WHOLE,
+        "groups": _WHOLE,
+        "degrees_of_freedom": _WHOLE,
+        "power": _NUMBER,
+        "standard_uncertainty": {**_NUMBER, "description": "Of the bias that the study will show."},
+        "statement": {**_TEXT, "description": "In words."},
+    },
+)
+
 _STUDY_SUMMARY = _object(
     "A study without its data.",
     {
@@ -373,6 +400,10 @@ ANSWERS: dict[str, Form] = {
         entry=ref("Entry"),
     ),
     "StudyPage": page_of(_STUDY_SUMMARY),
+    "StudyPlan": _object(
+        "The smallest study for each wish; null where there was none.",
+        {"precision": _or_null(_PRECISION_PLAN), "bias": _or_null(_BIAS_PLAN)},
+    ),
     "BudgetFigures": _BUDGET_FIGURES,
     "BudgetComparison": _BUDGET_COMPARISON,
     "AcceptanceLimits": _ACCEPTANCE_LIMITS,

@@ -27,6 +27,7 @@ from service.schemas.master import (
 )
 from service.schemas.specifications import SpecificationSchema
 from service.schemas.studies import StudySchema
+from service.schemas.study_plans import StudyPlanRequestSchema
 
 __all__ = ["SCHEMAS", "dump", "load", "trimmed_text"]
 
@@ -43,6 +44,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.Specification: SpecificationSchema(),
     documents.BudgetDocument: BudgetDocumentSchema(),
     documents.Study: StudySchema(),
+    documents.StudyPlanRequest: StudyPlanRequestSchema(),
     documents.DecisionRequest: DecisionRequestSchema(),
     documents.SignedAct: SignedActSchema(),
 }

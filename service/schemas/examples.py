@@ -185,6 +185,10 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
         "set_aside": [{"row": 5, "reason": "cup not filled"}],
         "source": {"name": "replicates.csv", "sha256": None},
     },
+    documents.StudyPlanRequest: {
+        "precision": {"relative_uncertainty": 0.25, "design": "repeatability", "values_per_sample": 2},
+        "bias": {"bias": 0.05, "standard_deviation": 0.1, "power": 0.9, "pairs_per_group": 2},
+    },
     documents.DecisionRequest: {
         "lot": "W26-04711",
         "product": "whole-milk-powder",

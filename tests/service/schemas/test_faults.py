@@ -118,7 +118,9 @@ def test_every_required_member_is_missed_and_every_strange_one_refused(kind: typ
     required = {
         f"#/{field.data_key or name}" for name, field in SCHEMAS[kind].load_fields.items() if field.required
     }
-    assert required and required <= found.keys()
+    # Of a plan either wish will do.
+    assert required or kind is documents.StudyPlanRequest
+    assert required <= found.keys()
     assert found["#/strange"].detail == "unknown member"
 
 
