@@ -94,6 +94,10 @@ def evaluate(study: Study) -> Evaluation:
     groups = [(" / ".join(key), own) for key, own in grouped(labels, study.full("reading")).items()]
     findings = cochran_findings(groups)
     findings += [found for label, own in groups for found in grubbs_findings(label, own)]
+    if _SAMPLE not in factors:
+        # Across samples of different level an outlying mean would mean nothing.
+        outer = grouped(study.labels[factors[0]], study.full("reading"))
+        findings += grubbs_findings(f"means of each {factors[0]}", [mean(own) for own in outer.values()])
     return Evaluation(
         design="nested_precision",
         estimates=_estimates(components, factors),

@@ -20,6 +20,7 @@ from budgets.evidence.sums import f_quantile, mean, sum_of_squares
 STRAGGLER, OUTLIER = 0.05, 0.01
 _SIMULATIONS = 100_000
 _SEED = 5725
+_MOST_FOR_PAIRS = 100
 
 
 @dataclass(frozen=True)
@@ -172,7 +173,8 @@ def grubbs_findings(label: str, values: Sequence[float]) -> list[Finding]:
     label : str
     values : sequence of float
         Fewer than 3 values cannot be tested, nor values of which all others are equal: there the display
-        has hidden the scatter, not one value stood out.
+        has hidden the scatter, not one value stood out. The test for two is made of up to 100 values: the
+        published table ends at 40, and the simulation of larger ones would keep the user waiting.
 
     Returns
     -------
@@ -192,7 +194,7 @@ def grubbs_findings(label: str, values: Sequence[float]) -> list[Finding]:
         grade, limit = ("outlier", limits[1]) if statistic > limits[1] else ("straggler", limits[0])
         return [Finding("Grubbs, one value", label, (extreme,), statistic, limit, grade)]
     # ISO 5725-2, 7.3.4: the test for two comes when the test for one is silent.
-    return _pair_findings(label, sorted(values), squares) if number > 3 else []
+    return _pair_findings(label, sorted(values), squares) if 3 < number <= _MOST_FOR_PAIRS else []
 
 
 def _pair_findings(label: str, ordered: Sequence[float], squares: float) -> list[Finding]:

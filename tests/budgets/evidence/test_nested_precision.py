@@ -243,6 +243,19 @@ def test_laboratories_give_the_reproducibility():
     assert "between_laboratories" in evaluation.estimate("between_laboratories").contains
 
 
+def test_an_outlying_mean_is_told_unless_the_samples_differ():
+    """ISO 5725-2:1994, 7.3.4: Grubbs' test of laboratory means (from memory); here against scipy's t."""
+    means = [3.0, 3.01, 2.99, 3.02, 2.98, 3.0, 3.5]
+    rows = [(lab, m + d) for lab, m in enumerate(means) for d in (-0.01, 0.01)]
+    (found,) = evaluated(rows, ("laboratory",)).diagnostics["findings"]
+    assert (found["group"], found["grade"]) == ("means of each laboratory", "outlier")
+    n, t = len(means), stats.t.isf(0.01 / (2 * len(means)), len(means) - 2)
+    assert found["critical_value"] == pytest.approx((n - 1) / math.sqrt(n) * math.sqrt(t**2 / (n - 2 + t**2)))
+    assert found["statistic"] == pytest.approx((3.5 - np.mean(means)) / np.std(means, ddof=1))
+    rows = [(lab, day, y + 0.001 * day) for lab, y in rows for day in (0, 1)]
+    assert not evaluated(rows, ("sample", "day")).diagnostics["findings"]
+
+
 def test_three_factors_within_samples():
     rows = simulated(np.random.default_rng(9), (2, 3, 2, 2, 2), (1.0, 0.1, 0.1, 0.1, 0.05))
     evaluation = evaluated(rows, ("sample", "day", "operator", "presentation"))
