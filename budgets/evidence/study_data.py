@@ -14,6 +14,7 @@ from budgets.evidence import (
     duplicates,
     fleet,
     nested_precision,
+    process_stream,
     repeatability,
     sampling,
 )
@@ -51,6 +52,13 @@ DESIGNS: dict[str, StudyDesign] = {
         ),
         StudyDesign("check_samples", check_samples.LAYOUT, check_samples.evaluate),
         StudyDesign("fleet", fleet.LAYOUT, fleet.evaluate),
+        StudyDesign(
+            "process_stream",
+            process_stream.LAYOUT,
+            process_stream.evaluate,
+            options=process_stream.OPTIONS,
+            takes_sources=True,
+        ),
     )
 }
 # Designs whose table holds several characteristics at once.
@@ -59,10 +67,7 @@ VECTOR_DESIGNS: dict[str, StudyDesign] = {
         "covariance", covariance.LAYOUT, covariance.evaluate, options=covariance.OPTIONS, takes_sources=True
     )
 }
-_LATER_DESIGNS = (
-    "process_stream",
-    "production",
-)
+_LATER_DESIGNS = ("production",)
 
 
 def evaluate_study(

@@ -28,6 +28,7 @@ DEFAULT_PLANT: Final = Plant(
         "covariance": 365,
         "fleet": 365,
         "check_samples": 365,
+        "process_stream": 365,
     },
     reason="default, until the plant approves a document of its own",
 )
