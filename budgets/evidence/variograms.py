@@ -36,7 +36,7 @@ def variogram(values: Array, lags: int) -> Array:
 
     Examples
     --------
-    >>> variogram(np.array([1.0, 2.0, 4.0]), 2).tolist()
+    >>> variogram(np.array([1.0, 2.0, 4.0]), 2).round(6).tolist()
     [0.0, 1.25, 4.5]
     """
     n = len(values)
