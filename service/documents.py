@@ -398,6 +398,14 @@ class Study:
 
 
 @dataclass(frozen=True)
+class Replacement:
+    """The study that takes the place of another one behind every budget, and why."""
+
+    study: str
+    reason: str
+
+
+@dataclass(frozen=True)
 class StudyPlanRequest:
     """What a study is wanted for: to know a standard deviation, to find a bias; a wish by its members."""
 

@@ -46,6 +46,7 @@ _NUMBER: Form = {"type": "number"}
 _LIMIT: Form = {"type": ["number", "null"], "description": "null: no such limit"}
 _NUMBER_OR_NULL: Form = {"type": ["number", "null"]}
 _TEXT_OR_NULL: Form = {"type": ["string", "null"]}
+_OBJECT_OR_NULL: Form = {"type": ["object", "null"]}
 _INSTANT: Form = {"type": "string", "format": "date-time"}
 _CURSOR: Form = {
     "type": ["string", "null"],
@@ -400,6 +401,28 @@ ANSWERS: dict[str, Form] = {
         entry=ref("Entry"),
     ),
     "StudyPage": page_of(_STUDY_SUMMARY),
+    "Renewal": _object(
+        "What an act on a renewal left of each budget.",
+        {"study": _CODE, "replacement": _CODE, "budgets": _list(ref("BudgetVersion")), "entry": ref("Entry")},
+    ),
+    "RenewalComparison": _object(
+        "What a renewal changes.",
+        {
+            "study": _CODE,
+            "replacement": _CODE,
+            "estimates": _list(
+                _object(
+                    "An estimate of either study; null where one does not give it.",
+                    {
+                        "name": _TEXT,
+                        "was": {"type": ["object", "null"]},
+                        "becomes": {"type": ["object", "null"]},
+                    },
+                )
+            ),
+            "budgets": _list(ref("BudgetComparison"), "Each against the version in force."),
+        },
+    ),
     "StudyPlan": _object(
         "The smallest study for each wish; null where there was none.",
         {"precision": _or_null(_PRECISION_PLAN), "bias": _or_null(_BIAS_PLAN)},

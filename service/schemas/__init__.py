@@ -26,7 +26,7 @@ from service.schemas.master import (
     ProductSchema,
 )
 from service.schemas.specifications import SpecificationSchema
-from service.schemas.studies import StudySchema
+from service.schemas.studies import ReplacementSchema, StudySchema
 from service.schemas.study_plans import StudyPlanRequestSchema
 
 __all__ = ["SCHEMAS", "dump", "load", "trimmed_text"]
@@ -44,6 +44,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.Specification: SpecificationSchema(),
     documents.BudgetDocument: BudgetDocumentSchema(),
     documents.Study: StudySchema(),
+    documents.Replacement: ReplacementSchema(),
     documents.StudyPlanRequest: StudyPlanRequestSchema(),
     documents.DecisionRequest: DecisionRequestSchema(),
     documents.SignedAct: SignedActSchema(),

@@ -185,6 +185,7 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
         "set_aside": [{"row": 5, "reason": "cup not filled"}],
         "source": {"name": "replicates.csv", "sha256": None},
     },
+    documents.Replacement: {"study": "wmp-rep-2027-01", "reason": "yearly study of repeatability"},
     documents.StudyPlanRequest: {
         "precision": {"relative_uncertainty": 0.25, "design": "repeatability", "values_per_sample": 2},
         "bias": {"bias": 0.05, "standard_deviation": 0.1, "power": 0.9, "pairs_per_group": 2},

@@ -8,7 +8,7 @@ from typing import Any
 
 from marshmallow import ValidationError, fields, validates_schema
 
-from service.documents import DataSource, NamedSource, SetAsideRow, Study
+from service.documents import DataSource, NamedSource, Replacement, SetAsideRow, Study
 from service.schemas.base import StrictSchema, Wrong, got, not_yet
 from service.schemas.evidence import EvidenceField
 from service.schemas.fields import ByKey, Choice, Code, Count, Day, Flag, Name, Part, Parts, Text, _Stating
@@ -156,6 +156,14 @@ class DataSourceSchema(StrictSchema):
     loads_to = DataSource
     name = Text(255, required=True)
     sha256 = Text(64, allow_none=True, load_default=None)
+
+
+class ReplacementSchema(StrictSchema):
+    """The recorded study that takes the place of another one behind every budget in force."""
+
+    loads_to = Replacement
+    study = Code(required=True)
+    reason = Text(2000, lines=True, required=True, about="The reason of the new versions.")
 
 
 class StudySchema(StrictSchema):

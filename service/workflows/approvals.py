@@ -6,7 +6,9 @@ plant.py.
 
 from __future__ import annotations
 
-from typing import Any
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any, Final
 
 from service.access import require, require_another, require_person
 from service.documents import Actor, SignedAct
@@ -29,6 +31,9 @@ from service.workflows.version_steps import (
     wrong_state,
 )
 from service.workflows.versioned_kind import Approval
+
+RENEWED: Final = "renewal-submitted"
+"""The kind of an entry that drafts and submits versions of several budgets."""
 
 
 def submit(
@@ -56,7 +61,7 @@ def submit(
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = in_state(unit_of_work, kind, code, version, "draft", act="submitted", if_match=if_match)
-        _approval(unit_of_work, stored)
+        approval_of(unit_of_work, stored)
         return _move(unit_of_work, actor, stored, "submitted", "submitted", submitted_by=actor.principal)
 
     return recorded(services, actor, request, perform)
@@ -91,29 +96,18 @@ def approve(
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = in_state(unit_of_work, kind, code, version, "submitted", act="approved", if_match=if_match)
-        require_another(actor, _authors(unit_of_work, actor, stored))
-        approval = _approval(unit_of_work, stored)
-        before = unit_of_work.versions.in_force(kind, code)
-        changes = {
-            "approved_by": actor.principal,
-            "in_force_from": unit_of_work.now(PLANT_CHAIN),
-            "evaluation": approval.evaluation,
-            "lapses_at": approval.lapses_at,
-        }
+        require_another(actor, authors_of(unit_of_work, actor, stored))
+        step = approving(unit_of_work, actor, stored)
         entry = append_version(
             unit_of_work,
             actor,
-            changed_version(stored, state="in_force", **changes),
+            step.approved,
             "approved",
             reason=signed.reason,
-            supersedes=None if before is None else before.version,
-            release_rules=approval.rules_document(),
+            supersedes=None if step.before is None else step.before.version,
+            release_rules=step.approval.rules_document(),
         )
-        if before is not None:
-            unit_of_work.versions.set_state(before, "superseded", entry)
-        unit_of_work.versions.set_state(stored, "in_force", entry, **changes)
-        for key, numbers in approval.rules:
-            unit_of_work.rules.add(key.stored(numbers))
+        step.store(unit_of_work, entry)
         unit_of_work.bump_revision()
         return entry
 
@@ -191,19 +185,59 @@ def _move(
     return entry
 
 
-def _approval(unit_of_work: UnitOfWork, stored: StoredVersion) -> Approval:
+@dataclass(frozen=True)
+class Approving:
+    """A version on its way into force: what is computed for it, and what it supersedes."""
+
+    stored: StoredVersion
+    before: StoredVersion | None
+    approval: Approval
+    changes: Mapping[str, Any]
+
+    @property
+    def approved(self) -> StoredVersion:
+        """The version as it will stand."""
+        return changed_version(self.stored, state="in_force", **self.changes)
+
+    def store(self, unit_of_work: UnitOfWork, entry: Entry) -> None:
+        """Bring the tables to what the entry says."""
+        if self.before is not None:
+            unit_of_work.versions.set_state(self.before, "superseded", entry)
+        unit_of_work.versions.set_state(self.stored, "in_force", entry, **self.changes)
+        for key, numbers in self.approval.rules:
+            unit_of_work.rules.add(key.stored(numbers))
+
+
+def approving(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> Approving:
+    """Compute what is stored when a version comes into force. Raises Conflict or InvalidRequest."""
+    approval = approval_of(unit_of_work, stored)
+    changes = {
+        "approved_by": actor.principal,
+        "in_force_from": unit_of_work.now(PLANT_CHAIN),
+        "evaluation": approval.evaluation,
+        "lapses_at": approval.lapses_at,
+    }
+    before = unit_of_work.versions.in_force(stored.kind, stored.code)
+    return Approving(stored, before, approval, changes)
+
+
+def approval_of(unit_of_work: UnitOfWork, stored: StoredVersion) -> Approval:
+    """Compute what an approval would store. Raises Conflict or InvalidRequest."""
     kind = KINDS[stored.kind]
     document = load(kind.document_class, stored.document)
     kind.check(unit_of_work, document)
     return kind.approval(unit_of_work, stored, document)
 
 
-def _authors(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> frozenset[str]:
+def authors_of(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> frozenset[str]:
     """Say who worked on a version; ``actor`` too, if only earlier than those whom the version names."""
     named = {stored.drafted_by, stored.submitted_by or stored.drafted_by}
-    acts = tuple(f"{stored.kind}-{what}" for what in ("drafted", "redrafted", "submitted"))
+    acts = [f"{stored.kind}-{what}" for what in ("drafted", "redrafted", "submitted")]
+    if stored.kind == "budget":
+        acts.append(RENEWED)
     for entry in unit_of_work.ledger.of_actor(PLANT_CHAIN, actor.principal, acts):
-        version = entry.content["version"]
-        if (version["code"], version["version"]) == (stored.code, stored.version):
-            named.add(actor.principal)
+        for part in entry.content.get("versions", (entry.content,)):
+            version = part["version"]
+            if (version["code"], version["version"]) == (stored.code, stored.version):
+                named.add(actor.principal)
     return frozenset(named)

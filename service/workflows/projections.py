@@ -43,6 +43,9 @@ class Expected:
             self.rows["study", code] = ((content["study"], content["evaluation"]), where)
         elif entry.kind in ("person-added", "token-added", "token-revoked"):
             self._add_account(entry, where)
+        elif subject == "renewal":
+            for part in content["versions"]:
+                self._add_version("budget", part, where)
         elif act in VERSION_ACTS:
             self._add_version(subject, content, where)
 
