@@ -14,6 +14,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from budgets.errors import BudgetsError, ModelError, UnitsError, raise_collected
 from budgets.expression_arrays import array_slopes, array_values
+from budgets.expression_gaps import refuse_gaps
 from budgets.expression_values import exact_slopes, exact_values
 from budgets.expressions import Expression, is_name, parse
 from budgets.model_dimensions import check_dimensions
@@ -350,6 +351,22 @@ class MeasurementModel:
             return value, {}
         found = array_slopes(self._parsed.steps, steps)
         return value, {name: np.broadcast_to(found[name], shape) for name in self.names}
+
+    def refuse_gaps(self, ranges: Mapping[str, tuple[float, float]]) -> None:
+        """Refuse the model where it may have no value somewhere in a box; see `expression_gaps`.
+
+        Parameters
+        ----------
+        ranges : mapping of str to tuple of float
+            Of every quantity that is read.
+
+        Raises
+        ------
+        ModelError
+            If it has a pole or a gap in the box, or cannot be shown to have none.
+        """
+        if ranges:
+            refuse_gaps(self._parsed.steps, ranges, self.given)
 
     def second_order(
         self,

@@ -1,8 +1,9 @@
 """Whether the law of propagation may be used for a model, over the box in which it was validated.
 
-At every point of a grid the model is computed at points one and more standard deviations away, along the
-directions of its inputs' covariance. Where value and variance found there differ from those of the law of
-propagation, the model curves within its uncertainty, and the law may not be used.
+Bounds over cells show that the model has a value everywhere. At every point of a grid it is computed at
+points one and more standard deviations away, along the directions of its inputs' covariance. Where value and
+variance found there differ from those of the law of propagation, the model curves within its uncertainty, and
+the law may not be used.
 """
 
 from __future__ import annotations
@@ -88,7 +89,8 @@ def validate_over_box(law: CompiledPropagation, ranges: Mapping[str, tuple[float
     Raises
     ------
     ModelError
-        If a range is missing, the model fails somewhere in the box, or it curves too much there.
+        If a range is missing, the model fails or may have a pole somewhere in the box, or it curves too much
+        there.
     ComponentError
         If the combined variance is not above zero somewhere.
     NotSupportedError
@@ -107,6 +109,7 @@ def validate_over_box(law: CompiledPropagation, ranges: Mapping[str, tuple[float
         raise ModelError(f"the validated range of {', '.join(missing)} is missing", where=("validated_box",))
     if len(law.model.read) > MOST_READ:
         raise NotSupportedError(f"more than {MOST_READ} quantities that are read in one characteristic")
+    law.model.refuse_gaps({name: ranges[name] for name in law.model.read})
     _compare_derivatives(law, {name: (low + high) / 2 for name, (low, high) in ranges.items()})
     largest, results = 0.0, []
     for point in _grid(law.model.read, ranges):

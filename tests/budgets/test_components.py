@@ -58,3 +58,9 @@ def test_the_levels_run_from_the_inside_out():
     assert LEVELS[0] == "reading"
     assert LEVELS[-1] == "reference"
     assert len(LEVELS) == 9
+
+
+def test_what_is_relative_to_another_quantity_is_a_relative_figure(an_estimate):
+    with pytest.raises(ComponentError, match="not relative") as caught:
+        Component.from_estimate("r", "moisture", None, an_estimate(), "A", relative_to="fat")
+    assert caught.value.where == ("relative_to",)
