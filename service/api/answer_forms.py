@@ -262,7 +262,15 @@ _BUDGET_FIGURES = _object(
         "warnings": _list({"type": "object"}),
     },
 )
-_COMPARED = {**_UNCERTAINTY, "version": _WHOLE, "state": _STATE, "acceptance_limits": _or_null(_TWO_LIMITS)}
+_COMPARED = {
+    **_UNCERTAINTY,
+    "version": _WHOLE,
+    "state": _STATE,
+    "estimates": {"type": "object", "description": "Values of biases and the like."},
+    "bias_treatment": _TEXT,
+    "at": {"type": "object", "description": "The readings at which it is shown, and their estimate."},
+    "acceptance_limits": _or_null(_TWO_LIMITS),
+}
 _BUDGET_COMPARISON = _object(
     "Two versions of a budget, line by line.",
     {

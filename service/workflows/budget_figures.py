@@ -62,7 +62,7 @@ def evaluation(
     with services.database.reading() as unit_of_work:
         subject = _subject(unit_of_work, code, version)
         by = _requirement(unit_of_work, subject, specification)
-        explained = _explained(unit_of_work, subject, None if by is None else by[1])
+        explained = _explained(unit_of_work, subject, None if by is None else by[1], subject.centre)
     return {
         "code": code,
         "version": version,
@@ -116,13 +116,16 @@ def comparison(
         before = _subject(unit_of_work, code, against)
         by = _requirement(unit_of_work, after, specification)
         requirement = None if by is None else by[1]
+        # Both at one place, or the place would be taken for what the versions differ by.
+        place = after.centre if after.centre.keys() == before.centre.keys() else before.centre
         compared = compare(
-            _explained(unit_of_work, before, requirement), _explained(unit_of_work, after, requirement)
+            _explained(unit_of_work, before, requirement, place),
+            _explained(unit_of_work, after, requirement, after.centre),
         )
     return {
         "code": code,
-        "was": {"version": against, **_version(before, compared.before)},
-        "becomes": {"version": version, **_version(after, compared.after)},
+        "was": {"version": against, **_version(before, compared.before, place)},
+        "becomes": {"version": version, **_version(after, compared.after, after.centre)},
         "unit": after.document.unit,
         "specification": None if by is None else by[0],
         "components": [_change(change) for change in compared.changes],
@@ -164,9 +167,11 @@ def _requirement(
     raise InvalidRequest("1 fault in the query.", faults=(fault,))
 
 
-def _explained(unit_of_work: UnitOfWork, subject: Subject, requirement: Requirement | None) -> Explanation:
+def _explained(
+    unit_of_work: UnitOfWork, subject: Subject, requirement: Requirement | None, place: Mapping[str, float]
+) -> Explanation:
     if requirement is None:
-        return explain(subject.budget, subject.counts, estimates=subject.centre)
+        return explain(subject.budget, subject.counts, estimates=place)
     key = f"{subject.document.product}/{subject.document.characteristic}"
     stored = unit_of_work.master.get("characteristic", key)
     assert stored is not None  # checked with the draft
@@ -175,7 +180,7 @@ def _explained(unit_of_work: UnitOfWork, subject: Subject, requirement: Requirem
     return explain(
         subject.budget,
         subject.counts,
-        estimates=subject.centre,
+        estimates=place,
         tolerance=tolerance(requirement, characteristic),
         rule=decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
@@ -194,9 +199,12 @@ def _total(budget: Budget, explained: Explanation) -> Answer:
     }
 
 
-def _version(subject: Subject, explained: Explanation) -> Answer:
+def _version(subject: Subject, explained: Explanation, place: Mapping[str, float]) -> Answer:
     return {
         "state": subject.stored.state,
+        "estimates": subject.evaluation["estimates"],
+        "bias_treatment": subject.budget.bias_treatment,
+        "at": {"readings": place, "estimate": explained.result.estimate},
         **_total(subject.budget, explained),
         "acceptance_limits": _limits(explained.acceptance_limits),
     }

@@ -9,7 +9,7 @@ import pytest
 
 from service import documents
 from tests.service.api.conftest import Callers
-from tests.service.api.house import done, example
+from tests.service.api.house import done, example, signed
 
 VERSIONS = "/v1/budgets/wmp-moisture-nir/versions"
 
@@ -139,3 +139,25 @@ def test_correlations_that_cannot_hold_together_are_refused(callers: Callers) ->
     faults = faults_of(callers, document)
     assert "no component 'nobody'" in str(faults)
     assert any(place.startswith("#/correlations/0") for place in faults)
+
+
+def test_versions_are_compared_at_one_place_and_with_their_biases(callers: Callers) -> None:
+    """A part proportional to the value: what a narrower range alone changes is not the uncertainty."""
+    document = example(documents.BudgetDocument, reason="a proportional part")
+    figure = {"meaning": "relative", "figure": "standard_deviation", "value": 2, "unit": "%", "document": "x"}
+    document["components"].append(
+        {"code": "sampling", "quantity": "moisture", "level": "sample", "evidence": {"declaration": figure}}
+    )
+    draft(callers, document)
+    one = f"{VERSIONS}/2"
+    done(callers["engineer"].post(f"{one}/submit"), 200)
+    done(callers["max"].post(f"{one}/approve", signed()), 200)
+    document |= {"validated_range": {"lower": 3.5, "upper": 5.5}, "reason": "a narrower range"}
+    draft(callers, document)
+    compared = done(callers["engineer"].get(f"{VERSIONS}/3/comparison?specification=legal"), 200)
+    was, becomes = compared["was"], compared["becomes"]
+    assert was["at"] == becomes["at"] == {"readings": {"moisture": 4.5}, "estimate": 4.5}
+    assert was["combined_standard_uncertainty"] == becomes["combined_standard_uncertainty"]
+    assert was["acceptance_limits"] == becomes["acceptance_limits"]
+    assert was["estimates"] == figures(callers)["estimates"]
+    assert was["bias_treatment"] == "corrected"
