@@ -39,7 +39,8 @@ _SEPARATOR_LINE: Final = re.compile(r"sep=([,;\t|])", re.IGNORECASE)
 def read_csv(body: bytes, charset: str | None = None) -> Table:
     """Read the bytes of a CSV file; ``charset`` is what its sender says that it is in.
 
-    The separator is that of the headings: a tab, else a semicolon, else a comma.
+    The separator is that of the headings: a tab, else a semicolon, else a comma; in a single column commas
+    are decimal ones.
 
     Raises
     ------
@@ -69,7 +70,7 @@ def read_csv(body: bytes, charset: str | None = None) -> Table:
         if len(found) > MOST_ROWS:
             raise _too_many(f"more than {MOST_ROWS} rows", f"at most {MOST_ROWS} rows", "#/rows")
     named = tuple(cell.strip() for cell in headings.cells)
-    return Table(named, tuple(found), comma_may_group=separator != ";")
+    return Table(named, tuple(found), comma_may_group=separator not in lines[first] or separator != ";")
 
 
 def _too_many(what: str, expected: str, pointer: str) -> InvalidRequest:
@@ -106,7 +107,7 @@ def _in_found_charset(body: bytes) -> str:
 
 def _separator(line: str) -> str:
     outside = re.sub(r'"[^"]*"', "", line)
-    return next((sign for sign in "\t;" if sign in outside), ",")
+    return next((sign for sign in "\t;," if sign in outside), ";")
 
 
 def _rows(text: str, separator: str) -> Iterator[Row]:

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import hashlib
+import itertools
 import json
+import random
 import threading
 import time
 from collections.abc import Callable, Iterator
@@ -14,6 +16,7 @@ import pytest
 from flask import Flask
 from werkzeug.test import TestResponse
 
+from budgets.evidence.study_data import DESIGNS, StudyData, evaluate_study
 from service import create_app, create_services
 from service.helpers import Helper
 from tests.service.api import house
@@ -216,3 +219,51 @@ def test_a_study_that_takes_too_long_is_too_large(with_helper: Callable[[Helper]
     document = house.repeatability_study(code="new-study")
     problem(callers["engineer"].post("/v1/studies", document), 413, "too-large")
     assert callers["engineer"].get("/v1/studies/new-study").status_code == 404
+
+
+# --- the designs ---------------------------------------------------------------------------------------
+
+
+def _rows(*counts: int, deviation: float = 0.05) -> list[list[Any]]:
+    """Make rows of labels, one for each count, and a figure with its own effect at every label."""
+    draw = random.Random(31)
+    effects: dict[tuple[int, ...], float] = {}
+    rows: list[list[Any]] = []
+    for labels in itertools.product(*map(range, counts)):
+        for depth in range(1, len(labels)):
+            effects.setdefault(labels[:depth], draw.gauss(0, deviation))
+        effect = sum(effects[labels[:depth]] for depth in range(1, len(labels)))
+        figure = 3 + effect + draw.gauss(0, deviation)
+        rows.append([*(f"L{label}" for label in labels), round(figure, 3)])
+    return rows
+
+
+TABLES: dict[str, tuple[list[str], list[list[Any]], dict[str, Any]]] = {
+    "nested_precision": (
+        ["Day", "Run", "Reading [%]"],
+        [[row[0], row[0] + row[1], row[3]] for row in _rows(12, 2, 2)],
+        {},
+    ),
+    "sampling": (["Target", "Sample", "Analysis", "Result [%]"], _rows(12, 2, 2), {}),
+    "check_samples": (["Session", "Result [%]"], [[row[0], row[2]] for row in _rows(25, 2)], {}),
+    "fleet": (["Sample", "Instrument", "Replicate", "Reading [%]"], _rows(8, 6, 2), {}),
+    "process_stream": (
+        ["Reading [%]"],
+        [row[1:] for row in _rows(120)],
+        {"held_sample": False, "lot_length": 40, "increments": 4, "scheme": "systematic"},
+    ),
+}
+
+
+@pytest.mark.parametrize("design", [name for name in TABLES if name in DESIGNS])
+def test_every_design_comes_in_as_csv(callers: Callers, design: str) -> None:
+    headings, rows, options = TABLES[design]
+    document = house.a_study(code="new-study", design=design, columns=headings, rows=rows, options=options)
+    answer = done(csv_call(callers["engineer"], written(document, ";", ","), **said_of(document)), 200)
+    expected = {name.casefold().removesuffix(" [%]") for name in headings}
+    assert set(answer["study"]["columns"]) == expected
+    # The helper process gives what the computation gives here.
+    data = StudyData(tuple(answer["study"]["columns"]), tuple(map(tuple, answer["study"]["rows"])))
+    here = evaluate_study(design, data, study="new-study", options=options, readings_decimals=2)
+    assert answer["evaluation"]["estimates"] == here.to_document()["estimates"]
+    assert answer["study"]["serves_until"] is not None

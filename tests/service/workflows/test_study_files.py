@@ -55,6 +55,12 @@ def test_what_programs_write_is_read_alike(text: str, charset: str) -> None:
     assert of_csv(text, charset) == {"columns": COLUMNS, "rows": ROWS}
 
 
+@pytest.mark.parametrize("text", ["reading\n3,11\n3,2\n", "Reading [%]\n3.11\n3.2\n"])
+def test_a_single_column_needs_no_separator(text: str) -> None:
+    read = of_csv(text, design="process_stream")
+    assert read == {"columns": ["reading"], "rows": [[3.11], [3.2]]}
+
+
 def test_quotes_are_those_of_rfc_4180() -> None:
     """RFC 4180, section 2, rules 5 to 7: separators, line breaks and doubled quotes inside of quotes."""
     text = 'sample,replicate,reading\r\n"a ""b"", c",1,3.11\r\n'
@@ -104,6 +110,7 @@ def test_a_bad_cell_is_named_by_row_and_column(cell: str) -> None:
         ("sample,replicate,reading\nP,1,3,12\nQ,2,3,12\n", ["#/rows/0", "#/rows/1"], "another sign"),
         ("sample;replicate;reading\nP;1;3,12\nQ;2;3.12\n", ["#/rows", "#/rows/1/2"], "one decimal sign"),
         ('sample,replicate,reading\nP,1,"3,120"\nQ,2,"4,500"\n', ["#/rows"], "thousands"),
+        ("reading\n1,234\n5,678\n", ["#/columns"], "no heading sample"),
         ("sample,replicate,reading\nP,1,1.234.567\n", ["#/rows/0/2"], "1.234.567"),
         ("sample,,reading\nP,1,3\n", ["#/columns/1"], "names no column"),
     ],
@@ -112,6 +119,11 @@ def test_tables_that_could_be_misread_are_refused(text: str, pointers: list[str]
     found = faults(text)
     assert [fault.pointer for fault in found] == pointers
     assert words in " ".join(f"{fault.detail} {fault.expected}" for fault in found)
+
+
+def test_a_single_column_of_what_may_be_thousands_is_refused() -> None:
+    (fault,) = faults("reading\n1,234\n5,678\n", design="process_stream")
+    assert fault.pointer == "#/rows"
 
 
 def test_an_unknown_heading_is_answered_with_those_expected() -> None:
