@@ -3,14 +3,36 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
-from budgets.errors import BudgetsError, EvidenceError, raise_collected
+from budgets.errors import EvidenceError
+from budgets.evidence.agreement_lines import agreement_lines
+from budgets.evidence.agreement_options import (
+    OPTIONS,
+    AgreementOptions,
+    agreement_options,
+)
+from budgets.evidence.agreement_warnings import (
+    warnings_of_averages,
+    warnings_of_calibration,
+    warnings_of_extremes,
+    warnings_of_number,
+    warnings_of_remainder,
+    warnings_of_runs,
+)
 from budgets.evidence.bias import BiasTest, bias_estimate, bias_warnings
+from budgets.evidence.deviating_pairs import deviating_pairs, deviation_warnings
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
+from budgets.evidence.extreme_differences import Deviate, extremes
+from budgets.evidence.local_agreement import (
+    agreement_near_limits,
+    differences_over_level,
+    warnings_near_limits,
+)
 from budgets.evidence.remainder import (
     NEEDED,
     Remainder,
@@ -22,21 +44,16 @@ from budgets.evidence.repeatability import finding_warnings
 from budgets.evidence.screening import grubbs_findings
 from budgets.evidence.study_tables import Layout, NamedSource, Study
 from budgets.evidence.sums import mean, standard_deviation_interval, sum_of_squares
-from budgets.evidence.validation_pairs import Pair, validation_pairs
+from budgets.evidence.validation_pairs import UNCERTAINTIES, Pair, validation_pairs
 
 __all__ = ["LAYOUT", "OPTIONS", "NamedSource", "evaluate"]
 
 LAYOUT = Layout(
     required=("pair", "reading", "reference"),
-    optional=("group", "run"),
-    numbers=("reading", "reference"),
-    nullable=("reading", "reference"),
+    optional=("group", "run", *UNCERTAINTIES),
+    numbers=("reading", "reference", *UNCERTAINTIES),
+    nullable=("reading", "reference", *UNCERTAINTIES),
 )
-OPTIONS = ("independent", "presentations_per_pair", "tolerance_limits")
-
-# ISO 12099:2017 (from memory): at least 20 samples for a validation.
-_FEW_PAIRS = 20
-_PAIRS_NEAR_A_LIMIT = 10
 _BULK = (5, 95)
 
 
@@ -46,8 +63,8 @@ def evaluate(study: Study) -> Evaluation:
     Parameters
     ----------
     study : Study
-        Columns of `LAYOUT`, several rows of one pair being replicates. Options: ``independent`` must be true;
-        ``presentations_per_pair`` (1); ``tolerance_limits``, numbers near which pairs are counted.
+        Columns of `LAYOUT`, several rows of one pair being replicates; standard uncertainties are of the
+        means. Options: see `budgets.evidence.agreement_options`; ``independent`` must be true.
 
     Returns
     -------
@@ -64,9 +81,10 @@ def evaluate(study: Study) -> Evaluation:
     -----
     ``SEP^2 = sum (d - mean d)^2 / (n - 1)``, ``RMSEP^2 = sum d^2 / n``, d = reading - reference. The RMSEP
     holds the bias, so it stands in the diagnostics only: no component can be made of it, and it cannot be
-    counted beside a bias. Source: ISO 12099:2017, validation (from memory).
+    counted beside a bias. Lines, the agreement near limits and the side that deviates are diagnostics: they
+    say where the two figures do not tell all. Source: ISO 12099:2017, validation (from memory).
     """
-    presentations, limits = _checked_options(study)
+    options = agreement_options(study.options)
     pairs = validation_pairs(study)
     differences = [pair.difference for pair in pairs]
     n = len(pairs)
@@ -82,8 +100,8 @@ def evaluate(study: Study) -> Evaluation:
     )
     left = None
     if all(name in sources for name in NEEDED):
-        left = remainder(square, subtracted_terms(sources, pairs, presentations), sources)
-    findings = grubbs_findings("differences", differences)
+        left = remainder(square, subtracted_terms(sources, pairs, options.presentations), sources)
+    looks = _looks(pairs, square, sources, options)
     return Evaluation(
         design="agreement",
         estimates=_estimates(test, square, left, sources.get("analyzer_repeatability"), pairs),
@@ -91,43 +109,81 @@ def evaluate(study: Study) -> Evaluation:
         diagnostics={
             **_diagnostics(pairs, square, test),
             **({} if left is None else left.diagnostics),
-            "findings": [found.to_document() for found in findings],
+            **looks.diagnostics,
         },
         warnings=(
-            *_warnings_of_number(n),
+            *warnings_of_number(n),
             *bias_warnings(test, pairs),
-            *_warnings_of_runs(one_run, "reference_run" in sources),
-            *_warnings_of_remainder(left, sources),
-            *_warnings_of_averages(pairs),
-            *_warnings_near_limits(pairs, math.sqrt(square.value), limits),
+            *warnings_of_runs(one_run, "reference_run" in sources),
+            *warnings_of_remainder(left, sources),
+            *warnings_of_averages(pairs),
+            *looks.warnings,
+        ),
+    )
+
+
+@dataclass(frozen=True)
+class _Looks:
+    """Diagnostics that no estimate is made of, and their warnings."""
+
+    diagnostics: Mapping[str, Any]
+    warnings: tuple[EvaluationWarning, ...]
+
+
+def _looks(
+    pairs: Sequence[Pair],
+    square: MeanSquare,
+    sources: Mapping[str, tuple[Term, ...]],
+    options: AgreementOptions,
+) -> _Looks:
+    differences = [pair.difference for pair in pairs]
+    deviation, freedom = math.sqrt(square.value), len(pairs) - 1
+    lines = agreement_lines(pairs, square, sources, options)
+    fit = differences_over_level(pairs)
+    near = agreement_near_limits(pairs, deviation, options.tolerance_limits, fit)
+    deviating = deviating_pairs(pairs, deviation)
+    standing_out = extremes(differences)
+    without = _without(differences, standing_out)
+    findings = grubbs_findings("differences", differences)
+    return _Looks(
+        {
+            **lines.to_document(),
+            "calibration_error": None
+            if options.calibration is None
+            else options.calibration.to_document(deviation, freedom),
+            "near_limits": list(near),
+            "level_dependence": None if fit is None else fit.to_document(),
+            "deviating_pairs": [item.to_document() for item in deviating],
+            "extreme_differences": [_extreme_document(item, pairs) for item in standing_out],
+            "standard_error_of_prediction_without_extremes": without,
+            "findings": [found.to_document() for found in findings],
+        },
+        (
+            *lines.warnings(),
+            *warnings_of_calibration(options.calibration, deviation, freedom),
+            *warnings_near_limits(near, fit),
+            *warnings_of_extremes(standing_out, pairs, without),
+            *deviation_warnings(deviating),
             *finding_warnings(findings),
         ),
     )
 
 
-def _checked_options(study: Study) -> tuple[int, Sequence[float]]:
-    options = study.options
-    faults: list[BudgetsError] = []
-    if options.get("independent") is not True:
-        faults.append(
-            EvidenceError(
-                "an agreement study must say that its samples are independent of the calibration "
-                "(independent: true); errors of calibration or cross-validation samples are too small",
-                where=("options", "independent"),
-            )
-        )
-    presentations = options.get("presentations_per_pair", 1)
-    if isinstance(presentations, bool) or not isinstance(presentations, int) or presentations < 1:
-        faults.append(
-            EvidenceError("a whole number from 1 up is expected", where=("options", "presentations_per_pair"))
-        )
-    limits = options.get("tolerance_limits", ())
-    if not isinstance(limits, (list, tuple)) or not all(
-        isinstance(limit, (int, float)) and math.isfinite(limit) for limit in limits
-    ):
-        faults.append(EvidenceError("finite numbers are expected", where=("options", "tolerance_limits")))
-    raise_collected(faults)
-    return presentations, limits
+def _without(differences: Sequence[float], standing_out: Sequence[Deviate]) -> float | None:
+    if not standing_out:
+        return None
+    left_out = {item.index for item in standing_out}
+    kept = [d for i, d in enumerate(differences) if i not in left_out]
+    return math.sqrt(sum_of_squares(kept) / (len(kept) - 1))
+
+
+def _extreme_document(item: Deviate, pairs: Sequence[Pair]) -> dict[str, Any]:
+    return {
+        "pair": pairs[item.index].label,
+        "difference": item.value,
+        "statistic": item.statistic,
+        "critical_value": item.critical_value,
+    }
 
 
 def _estimates(
@@ -194,70 +250,3 @@ def _diagnostics(pairs: Sequence[Pair], square: MeanSquare, test: BiasTest) -> d
         "reference_lowest": min(references),
         "reference_highest": max(references),
     }
-
-
-def _warnings_of_number(n: int) -> tuple[EvaluationWarning, ...]:
-    if n >= _FEW_PAIRS:
-        return ()
-    detail = (
-        f"{n} pairs are few: neither the bias nor the standard error of prediction is well known from them"
-    )
-    return (EvaluationWarning("few-pairs", detail),)
-
-
-def _warnings_of_runs(one_run: bool, known: bool) -> tuple[EvaluationWarning, ...]:
-    if not one_run:
-        return ()
-    if known:
-        detail = (
-            "all reference values are of one run: its error is in the bias, its variance was added in full"
-        )
-        return (EvaluationWarning("one-run", detail),)
-    detail = (
-        "all reference values are of one run: its error is in the bias but not in its uncertainty; name "
-        "the run-to-run standard deviation of the reference method (reference_run)"
-    )
-    return (EvaluationWarning("one-run-unknown", detail),)
-
-
-def _warnings_of_remainder(left: Remainder | None, sources: dict[str, Any]) -> tuple[EvaluationWarning, ...]:
-    if left is None:
-        missing = " and ".join(name for name in NEEDED if name not in sources)
-        detail = (
-            f"no remainder is offered without {missing}; the standard error of prediction is used whole, and "
-            "more readings do not make it smaller"
-        )
-        return (EvaluationWarning("remainder-not-offered", detail),)
-    if left.estimate.usable:
-        return ()
-    detail = (
-        "the remainder is not significantly above zero: it is shown with its interval but cannot be used; "
-        "the standard error of prediction is used whole, with the repeatability beyond the study beside it"
-    )
-    return (EvaluationWarning("remainder-not-significant", detail),)
-
-
-def _warnings_of_averages(pairs: Sequence[Pair]) -> tuple[EvaluationWarning, ...]:
-    if all(len(pair.readings) == 1 for pair in pairs):
-        return ()
-    detail = (
-        "pairs have averaged readings, so the standard error of prediction holds only a part of the "
-        "analyzer's repeatability: where it stands whole in a budget, repeatability_beyond_study belongs "
-        "beside it"
-    )
-    return (EvaluationWarning("readings-averaged", detail),)
-
-
-def _warnings_near_limits(
-    pairs: Sequence[Pair], deviation: float, limits: Sequence[float]
-) -> tuple[EvaluationWarning, ...]:
-    warnings = []
-    for limit in limits:
-        near = sum(abs(mean(pair.references) - limit) <= 2 * deviation for pair in pairs)
-        if near < _PAIRS_NEAR_A_LIMIT:
-            detail = (
-                f"only {near} pairs lie within two standard errors of prediction of the limit {limit:g}; "
-                "what matters is how well the analyzer agrees there"
-            )
-            warnings.append(EvaluationWarning("few-pairs-near-limit", detail))
-    return tuple(warnings)

@@ -11,6 +11,8 @@ from budgets.evidence.evaluation import MeanSquare
 from budgets.evidence.study_tables import Study
 from budgets.evidence.sums import grouped, mean, sum_of_squares
 
+UNCERTAINTIES = ("reading_standard_uncertainty", "reference_standard_uncertainty")
+
 
 @dataclass(frozen=True)
 class Pair:
@@ -23,6 +25,8 @@ class Pair:
         Replicates of either side.
     group, run : str or None
         Day or lot that the pair belongs to; run of the reference method.
+    reading_standard_uncertainty, reference_standard_uncertainty : float or None
+        Of the means of either side, where the study states them pair by pair.
     """
 
     label: str
@@ -30,11 +34,23 @@ class Pair:
     references: tuple[float, ...]
     group: str | None
     run: str | None
+    reading_standard_uncertainty: float | None = None
+    reference_standard_uncertainty: float | None = None
+
+    @property
+    def reading(self) -> float:
+        """Mean reading."""
+        return mean(self.readings)
+
+    @property
+    def reference(self) -> float:
+        """Mean reference value."""
+        return mean(self.references)
 
     @property
     def difference(self) -> float:
         """Mean reading less mean reference value."""
-        return mean(self.readings) - mean(self.references)
+        return self.reading - self.reference
 
 
 def validation_pairs(study: Study) -> tuple[Pair, ...]:
@@ -43,7 +59,8 @@ def validation_pairs(study: Study) -> tuple[Pair, ...]:
     Parameters
     ----------
     study : Study
-        Columns pair, reading, reference and optionally group and run.
+        Columns pair, reading, reference and optionally group, run and the standard uncertainties of either
+        side.
 
     Returns
     -------
@@ -52,10 +69,16 @@ def validation_pairs(study: Study) -> tuple[Pair, ...]:
     Raises
     ------
     EvidenceError
-        If a pair lacks a side or stands in two groups, or there are fewer than two pairs; all faults at once.
+        If a pair lacks a side, stands in two groups or has an impossible uncertainty, or there are fewer than
+        two pairs; all faults at once.
     NotSupportedError
         If the determinations of one pair come from several runs.
     """
+    if len([column for column in UNCERTAINTIES if column in study.numbers]) == 1:
+        raise EvidenceError(
+            f"{' and '.join(UNCERTAINTIES)} are of use together only; one of them is missing",
+            where=("columns",),
+        )
     labels = study.labels["pair"]
     pairs: list[Pair] = []
     faults: list[BudgetsError] = []
@@ -73,10 +96,11 @@ def validation_pairs(study: Study) -> tuple[Pair, ...]:
         ]
         try:
             group, run = (_common(study, column, label, indices) for column in ("group", "run"))
+            stated = [_stated(study, column, label, indices) for column in UNCERTAINTIES]
         except BudgetsError as error:
             faults.append(error.under(*where))
             continue
-        pairs.append(Pair(label, sides["reading"], sides["reference"], group, run))
+        pairs.append(Pair(label, sides["reading"], sides["reference"], group, run, *stated))
     raise_collected(faults)
     if len(pairs) < 2:
         raise EvidenceError(
@@ -95,6 +119,22 @@ def _common(study: Study, column: str, label: str, rows: Sequence[int]) -> str |
     if column == "run":
         raise NotSupportedError(f"{text}: reference determinations of one pair from several runs")
     raise EvidenceError(text)
+
+
+def _stated(study: Study, column: str, label: str, rows: Sequence[int]) -> float | None:
+    """Return the standard uncertainty that the study states for one side of a pair, if it does.
+
+    Raises
+    ------
+    EvidenceError
+        If the rows of the pair state several, or none above zero.
+    """
+    if column not in study.numbers:
+        return None
+    values = {value for row in rows if (value := study.numbers[column][row]) is not None}
+    if len(values) != 1 or not min(values) > 0:
+        raise EvidenceError(f"pair {label} needs one {column} above zero, of the mean of its values")
+    return values.pop()
 
 
 def within_pairs(groups: Sequence[Sequence[float]], code: str) -> MeanSquare | None:

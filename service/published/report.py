@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from importlib import metadata
 
-from service.published import run_decisions, run_examples, run_jcgm_100, run_precision
+from service.published import run_decisions, run_examples, run_jcgm_100, run_lines, run_precision
 from service.published.cases import AGREES, DIFFERS, LATER, Case, Outcome, Runner, document, outcomes
 
 RUNNERS: Mapping[str, Mapping[str, Runner]] = {
@@ -27,6 +27,8 @@ RUNNERS: Mapping[str, Mapping[str, Runner]] = {
     "eurachem_quam": run_examples.EURACHEM_QUAM,
     "eurachem_sampling": run_precision.EURACHEM_SAMPLING,
     "nordtest_tr_537": run_examples.NORDTEST,
+    "iso_ts_28037": run_lines.ISO_TS_28037,
+    "york": run_lines.YORK,
 }
 _LIBRARIES = ("numpy", "scipy", "uncertainties", "pint")
 

@@ -10,6 +10,7 @@ from budgets.evidence.screening import cochran_critical_value, grubbs_critical_v
 from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.evidence.sums import standard_deviation_factors
 from service.published.cases import Runner
+from service.published.run_lines import outlying_values
 
 Inputs = Mapping[str, Any]
 
@@ -108,7 +109,7 @@ ISO_5725_2: dict[str, Runner] = {
     "cochran-95": _cochran,
 }
 ISO_7870_2: dict[str, Runner] = {"chart-constants": _chart_factors, "chart-A3": _mean_factors}
-NIST_HANDBOOK: dict[str, Runner] = {"nist-gear": _gear}
+NIST_HANDBOOK: dict[str, Runner] = {"nist-gear": _gear, "rosner-esd": outlying_values}
 NBS_HANDBOOK_91: dict[str, Runner] = {"chi2-factors": _confidence_factors}
 NIST_STRD: dict[str, Runner] = dict.fromkeys(
     ("strd-SiRstv", "strd-SmLs01", "strd-SmLs04", "strd-SmLs07"), _one_way
