@@ -81,7 +81,7 @@ def line_with_uncertainties(
     --------
     >>> line = line_with_uncertainties([1, 2, 3], [2.1, 3.9, 6.0], [0.1] * 3, [0.1] * 3)
     >>> round(line.slope, 3)
-    1.951
+    1.953
     """
     _check(x, y, u_x, u_y)
     # From the first point on, so that a large common offset costs no digits.
