@@ -23,6 +23,11 @@ from budgets.evidence.vectors import (
 )
 
 REFERENCE = "_reference"
+_INDEPENDENT = EvaluationWarning(
+    "pairs-taken-as-independent",
+    "pairs count as independent here; if they come in clusters (days, lots), the biases are less well known "
+    "than bias_covariance says: compare it with the bias of an agreement study with a column 'group'",
+)
 _WHOLE = (
     "repeatability",
     "presentation",
@@ -92,7 +97,7 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
             **matrix_figures("prediction", matrix),
             **figures,
         },
-        warnings=(*warnings_of_freedom(n - 1, len(quantities)), *_warnings_of_remainder(left)),
+        warnings=(*warnings_of_freedom(n - 1, len(quantities)), _INDEPENDENT, *_warnings_of_remainder(left)),
     )
 
 

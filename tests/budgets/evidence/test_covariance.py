@@ -116,7 +116,7 @@ def test_differences_give_the_whole_the_bias_and_what_is_left():
     assert left.usable
     assert left.taken_out == ("repeatability",)
     assert covariance_of(left.matrix_terms) == pytest.approx(OWN, abs=0.02)
-    assert [w.code for w in evaluation.warnings] == []
+    assert [w.code for w in evaluation.warnings] == ["pairs-taken-as-independent"]
 
 
 def test_the_chain_from_scans_to_a_derived_characteristic():
@@ -181,14 +181,17 @@ def test_what_is_not_significant_is_shown_and_not_usable():
         pairs(30, own=OWN * 1e-6), options={"independent": True}, named_sources=known_sources()
     )
     assert not evaluation.estimate("remainder_covariance").usable
-    assert [w.code for w in evaluation.warnings] == ["remainder-not-significant"]
+    assert [w.code for w in evaluation.warnings] == [
+        "pairs-taken-as-independent",
+        "remainder-not-significant",
+    ]
     assert "remainder_matrix" in evaluation.diagnostics
 
 
 def test_without_sources_the_whole_is_all_there_is():
     evaluation = evaluated(pairs(30), options={"independent": True})
     assert [e.name for e in evaluation.estimates] == ["prediction_covariance", "bias_covariance"]
-    assert [w.code for w in evaluation.warnings] == ["remainder-not-offered"]
+    assert [w.code for w in evaluation.warnings] == ["pairs-taken-as-independent", "remainder-not-offered"]
 
 
 KNOWN = {"analyzer_repeatability": 0.1, "reference_repeatability": 0.03, "presentation": 0.02}
