@@ -203,6 +203,12 @@ class Component:
         ComponentError
             If the estimate is not usable, may not feed this level, or has not what is said of it.
         """
+        if not estimate.may_feed:
+            raise ComponentError(
+                f"component {code}: the estimate {estimate.name!r} describes the process and is no error of "
+                "a measurement",
+                where=("evidence", "estimate"),
+            )
         if not estimate.usable:
             raise ComponentError(
                 f"component {code}: the estimate {estimate.name!r} is shown but not usable, because it is "

@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
-from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
+from budgets.errors import BudgetsError, EvidenceError, raise_collected
 from budgets.evidence import (
     agreement,
     check_samples,
@@ -15,6 +15,7 @@ from budgets.evidence import (
     fleet,
     nested_precision,
     process_stream,
+    production,
     repeatability,
     sampling,
 )
@@ -59,6 +60,7 @@ DESIGNS: dict[str, StudyDesign] = {
             options=process_stream.OPTIONS,
             takes_sources=True,
         ),
+        StudyDesign("production", production.LAYOUT, production.evaluate, options=production.OPTIONS),
     )
 }
 # Designs whose table holds several characteristics at once.
@@ -67,7 +69,6 @@ VECTOR_DESIGNS: dict[str, StudyDesign] = {
         "covariance", covariance.LAYOUT, covariance.evaluate, options=covariance.OPTIONS, takes_sources=True
     )
 }
-_LATER_DESIGNS = ("production",)
 
 
 def evaluate_study(
@@ -108,10 +109,8 @@ def evaluate_study(
     EvidenceError
         With all faults found in ``faults``, their paths such as ``("rows", 3, 1)`` or ``("columns", 0)``.
     NotSupportedError
-        For a design, or a kind of cell, that this version does not evaluate.
+        For a kind of cell that this version does not evaluate.
     """
-    if design in _LATER_DESIGNS:
-        raise NotSupportedError(f"the study design {design}", where=("design",))
     known = {**DESIGNS, **VECTOR_DESIGNS}
     if design not in known:
         raise EvidenceError(f"{design!r} is no study design; there are {', '.join(known)}", where=("design",))

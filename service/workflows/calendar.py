@@ -29,6 +29,7 @@ DEFAULT_PLANT: Final = Plant(
         "fleet": 365,
         "check_samples": 365,
         "process_stream": 365,
+        "production": 365,
     },
     reason="default, until the plant approves a document of its own",
 )
