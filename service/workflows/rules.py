@@ -12,7 +12,7 @@ from budgets.budget import Budget, Procedure
 from budgets.conformity import Tolerance, measurement_capability_index, tails
 from budgets.decision_rules import DecisionRule
 from budgets.derived_release import DerivedReleaseRule, release_rule_kind
-from budgets.errors import LimitsError
+from budgets.errors import LimitsError, ModelError
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
@@ -214,7 +214,8 @@ def compile_pair(
     for counts in dict.fromkeys((planned, *islice(balanced_counts(budget.procedure), MOST_STORED))):
         try:
             rule = compile_rule(budget, counts, requirement, characteristic)
-        except LimitsError:
+        except (LimitsError, ModelError):
+            # Also where fewer readings leave so much uncertainty that the model curves within it.
             continue
         rules[counts_text(counts)] = rule.to_document()
     return rules
