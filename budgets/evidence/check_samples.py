@@ -21,7 +21,7 @@ from budgets.evidence.repeatability import (
 )
 from budgets.evidence.screening import cochran_findings
 from budgets.evidence.study_tables import Layout, Study
-from budgets.evidence.sums import CONFIDENCE, grouped, mean
+from budgets.evidence.sums import CONFIDENCE, grouped, mean, sum_of_squares
 from budgets.levels import levels_from
 from budgets.propagation import coverage_factor
 
@@ -71,7 +71,7 @@ def evaluate(study: Study) -> Evaluation:
             where=("rows",),
         )
     means = [mean(values) for values in sessions.values()]
-    if len(set(means)) == 1:
+    if sum_of_squares(means) == 0:
         raise EvidenceError("the sessions do not differ: they show no long-term precision", where=("rows",))
     components = nested_components(
         study.code, ("sessions", "repeatability"), [study.labels["session"]], results

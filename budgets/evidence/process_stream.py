@@ -19,6 +19,7 @@ from budgets.evidence.repeatability import precision_warnings, resolution_warnin
 from budgets.evidence.stream_options import named_chi_square, not_taken, whole_number
 from budgets.evidence.stream_sampling import sampling_of_process
 from budgets.evidence.study_tables import Layout, Study
+from budgets.evidence.sums import sum_of_squares
 from budgets.evidence.variograms import Array
 from budgets.levels import levels_from
 
@@ -70,7 +71,7 @@ def evaluate(study: Study) -> Evaluation:
             where=("options", "held_sample"),
         )
     readings = study.full("reading")
-    if len(set(readings)) == 1:
+    if sum_of_squares(readings) == 0:
         raise EvidenceError("all readings are equal: they show no variation", where=("rows",))
     if not LEAST_READINGS <= len(readings) <= MOST_READINGS:
         raise EvidenceError(

@@ -178,6 +178,7 @@ X = np.random.default_rng(12).normal(3, 0.1, 60)
         (X, {}, ("options", "held_sample"), "held in place"),
         (X, {"held_sample": "yes"}, ("options", "held_sample"), "held in place"),
         ([3.0] * 60, HELD, ("rows",), "all readings are equal"),
+        (X * 1e-200, {**PROCESS, "lot_length": 30}, ("rows",), "all readings are equal"),
         (X[:29], HELD, ("rows",), "29 readings"),
         (X, {**HELD, "readings_averaged": 7}, ("options", "readings_averaged"), "1 to 6"),
         (X, {**HELD, "scheme": "random"}, ("options", "scheme"), "does not belong"),

@@ -147,6 +147,7 @@ def test_shift_and_scale_do_not_matter(seed, shift, scale):
     [
         (rows_of(simulated(1, 4)), ("lot", "reading"), FREE, "4 lots"),
         ([(f"L{i}", 3.0) for i in range(6)], ("lot", "reading"), FREE, "do not differ"),
+        ([(f"L{i}", i * 1e-200) for i in range(6)], ("lot", "reading"), FREE, "do not differ"),
         (rows_of(simulated(1)), ("lot", "reading"), {"steered_by_this_analyzer": "no"}, "true or false"),
         (
             [(f"L{i % 6}", f"w{i % 5}", 3 + i / 10) for i in range(12)],
