@@ -109,6 +109,7 @@ def test_groups_count_as_one_where_they_differ():
 
 def test_a_huge_bias_needs_two_pairs_only_when_it_is_huge():
     assert bias_plan(1e3, 1.0).pairs == 2
+    assert bias_plan(1e300, 1e-300).power == 1
     assert bias_plan(1.0, 1.0).pairs == 13
 
 
