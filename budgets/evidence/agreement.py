@@ -24,6 +24,7 @@ from budgets.evidence.agreement_warnings import (
     warnings_of_remainder,
     warnings_of_runs,
 )
+from budgets.evidence.agreement_with_limits import evaluate_with_limits, has_limits
 from budgets.evidence.bias import BiasTest, bias_estimate, bias_warnings
 from budgets.evidence.deviating_pairs import deviating_pairs, deviation_warnings
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, MeanSquare, Term
@@ -53,6 +54,7 @@ LAYOUT = Layout(
     optional=("group", "run", *UNCERTAINTIES),
     numbers=("reading", "reference", *UNCERTAINTIES),
     nullable=("reading", "reference", *UNCERTAINTIES),
+    censorable=("reading", "reference"),
 )
 _BULK = (5, 95)
 
@@ -82,10 +84,13 @@ def evaluate(study: Study) -> Evaluation:
     ``SEP^2 = sum (d - mean d)^2 / (n - 1)``, ``RMSEP^2 = sum d^2 / n``, d = reading - reference. The RMSEP
     holds the bias, so it stands in the diagnostics only: no component can be made of it, and it cannot be
     counted beside a bias. Lines, the agreement near limits and the side that deviates are diagnostics: they
-    say where the two figures do not tell all. Source: ISO 12099:2017, validation (from memory).
+    say where the two figures do not tell all. Values below a reporting limit: see
+    `budgets.evidence.agreement_with_limits`. Source: ISO 12099:2017, validation (from memory).
     """
     options = agreement_options(study.options)
     pairs = validation_pairs(study)
+    if any(has_limits(pair) for pair in pairs):
+        return evaluate_with_limits(study, pairs)
     differences = [pair.difference for pair in pairs]
     n = len(pairs)
     square = MeanSquare(

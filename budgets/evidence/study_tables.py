@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise_collected
@@ -12,6 +12,10 @@ from budgets.evidence.evaluation import Estimate
 Cell = float | int | str | Mapping[str, float] | None
 
 LARGEST_MAGNITUDE = 1e15
+
+
+class BelowLimit(float):
+    """A value known only to lie below this number, a reporting limit: never the number, nor half of it."""
 
 
 @dataclass(frozen=True)
@@ -40,6 +44,8 @@ class Layout:
         Columns of numbers; the others are labels.
     nullable : tuple of str
         Columns of numbers in which a cell may be empty.
+    censorable : tuple of str
+        Columns of numbers in which a cell may say that the value lies below a reporting limit.
     others_are_numbers : bool
         Whether any other column is one of numbers, named by the user, in which a cell may be empty.
     """
@@ -49,6 +55,7 @@ class Layout:
     numbers: tuple[str, ...]
     nullable: tuple[str, ...] = ()
     others_are_numbers: bool = False
+    censorable: tuple[str, ...] = ()
 
     def is_number(self, column: str) -> bool:
         """Say whether a column holds numbers."""
@@ -201,6 +208,10 @@ def _number(cell: object, name: str, layout: Layout) -> float | None:
         if name in layout.nullable or layout.others_are_numbers:
             return None
         raise EvidenceError(f"{name}: the cell is empty; expected a number")
+    if isinstance(cell, Mapping) and name in layout.censorable:
+        # Anything but a limit comes out as None, and is refused as an empty cell would be.
+        limit = _number(cell.get("below"), name, replace(layout, nullable=()))
+        return None if limit is None else BelowLimit(limit)
     if isinstance(cell, Mapping):
         raise NotSupportedError(f"{name}: values below a reporting limit")
     if isinstance(cell, bool) or not isinstance(cell, (int, float)):
