@@ -15,11 +15,13 @@ from budgets.evidence.bias import BiasTest, bias_warnings
 from budgets.evidence.censored_normal import CensoredNormal, censored_normal
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, Interval, MeanSquare, Term
 from budgets.evidence.study_tables import BelowLimit, Study
-from budgets.evidence.sums import CONFIDENCE, standard_deviation_interval
+from budgets.evidence.sums import CONFIDENCE, standard_deviation_interval, sum_of_squares
 from budgets.evidence.validation_pairs import Pair
 from budgets.propagation import coverage_factor
 
 _LEAST_KNOWN = 10
+# Less scatter than that has no digits left when it is squared.
+_LEAST_SQUARES = 1e-100
 _BULK = (5, 95)
 _TAKEN = ("independent",)
 _COLUMNS = {"pair", "reading", "reference"}
@@ -70,7 +72,7 @@ def evaluate_with_limits(study: Study, pairs: Sequence[Pair]) -> Evaluation:
             f"{_LEAST_KNOWN} and half of them must be known",
             where=("rows",),
         )
-    if len(set(differences)) == 1:
+    if sum_of_squares(differences) < _LEAST_SQUARES:
         raise EvidenceError("all pairs differ by the same amount: they show no scatter", where=("rows",))
     fit = censored_normal(differences, below, above)
     square = MeanSquare(f"{study.code}/standard_error_of_prediction", fit.variance, fit.degrees_of_freedom)

@@ -208,7 +208,7 @@ def line_with_known_ratio(x: Sequence[float], y: Sequence[float], ratio: float) 
     x_mean, y_mean = mean(x), mean(scaled)
     sxy = math.fsum((a - x_mean) * (b - y_mean) for a, b in zip(x, scaled, strict=True))
     length = math.hypot(sxx - syy, 2 * sxy)
-    if n < 3 or length == 0 or sxy == 0:
+    if n < 3 or length**2 == 0 or sxy == 0:
         return None
     angle = math.atan2(2 * sxy, sxx - syy) / 2
     along, across = _principal_squares(x, scaled, angle)

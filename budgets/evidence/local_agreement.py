@@ -39,11 +39,12 @@ def differences_over_level(pairs: Sequence[Pair]) -> VarianceOverLevel | None:
     """
     n = len(pairs)
     levels = [pair.reference for pair in pairs]
-    if n < _LEAST_PAIRS_FOR_A_FIT or not enough_levels(levels, [1.0] * n):
-        return None
     differences = [pair.difference for pair in pairs]
     centre = mean(differences)
-    return variance_over_level(levels, [(d - centre) ** 2 * n / (n - 1) for d in differences], [1.0] * n)
+    variances = [(d - centre) ** 2 * n / (n - 1) for d in differences]
+    if n < _LEAST_PAIRS_FOR_A_FIT or not enough_levels(levels, variances, [1.0] * n):
+        return None
+    return variance_over_level(levels, variances, [1.0] * n)
 
 
 def agreement_near_limits(

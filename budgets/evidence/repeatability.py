@@ -119,9 +119,9 @@ def _over_level(groups: Mapping[str, Sequence[float]]) -> VarianceOverLevel | No
     """Fit the scatter over the level, where the study has levels enough to tell."""
     levels = [mean(values) for values in groups.values()]
     freedom = [len(values) - 1 for values in groups.values()]
-    if not enough_levels(levels, freedom):
-        return None
     variances = [sum_of_squares(values) / (len(values) - 1) for values in groups.values()]
+    if not enough_levels(levels, variances, freedom):
+        return None
     return variance_over_level(levels, variances, freedom)
 
 

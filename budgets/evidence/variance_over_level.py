@@ -24,6 +24,8 @@ LEAST_LEVELS = 5
 LEAST_DEGREES_OF_FREEDOM = 10
 # With the highest level nearer to the lowest than this, the two parts cannot be told apart.
 LEAST_RATIO_OF_LEVELS = 1.5
+# Below it the squares of variances, which the information is made of, have no digits left.
+_LEAST_VARIANCE = 1e-100
 # s1 = 0 lies on the edge of what is possible: half of the probability is at zero, so 5 % is the 10 % point.
 CRITICAL_VALUE = float(chdtri(1, 0.10))
 
@@ -107,11 +109,14 @@ class VarianceOverLevel:
         }
 
 
-def enough_levels(levels: Sequence[float], degrees_of_freedom: Sequence[float]) -> bool:
-    """Say whether there are enough levels, far enough apart, for a fit to be worth it."""
+def enough_levels(
+    levels: Sequence[float], variances: Sequence[float], degrees_of_freedom: Sequence[float]
+) -> bool:
+    """Say whether there are enough levels, far enough apart, and scatter, for a fit to be worth it."""
     sizes = [abs(level) for level in levels]
     return (
         len(set(levels)) >= LEAST_LEVELS
+        and max(variances) > _LEAST_VARIANCE
         and math.fsum(degrees_of_freedom) >= LEAST_DEGREES_OF_FREEDOM
         and max(sizes) >= LEAST_RATIO_OF_LEVELS * min(sizes)
     )
@@ -150,7 +155,7 @@ def variance_over_level(
     Source: the model is a case of ISO 5725-2:1994, 7.5 (from memory); its fit by maximum likelihood is common
     practice, no source.
     """
-    if not enough_levels(levels, degrees_of_freedom) or not any(variances):
+    if not enough_levels(levels, variances, degrees_of_freedom):
         raise EvidenceError(
             f"the dependence on the level needs {LEAST_LEVELS} levels with {LEAST_DEGREES_OF_FREEDOM} "
             f"degrees of freedom, the highest {LEAST_RATIO_OF_LEVELS:g} times the lowest, and some scatter"

@@ -91,6 +91,7 @@ def test_an_open_slope_has_no_interval():
     steep = line_with_known_ratio([1.0, 1.01, 0.99, 1.02], [1.0, 2.0, 3.0, 4.1], 1.0)
     assert (steep.lower, steep.upper) == (None, None)
     assert line_with_known_ratio([1.0, 2.0], [1.0, 2.0], 1.0) is None
+    assert line_with_known_ratio([1e-90, 2e-90, 3e-90], [1e-90, 2.1e-90, 3e-90], 1.0) is None
     assert line_with_known_ratio([1.0, 2.0, 1.0, 2.0], [1.0, 1.0, 2.0, 2.0], 1.0) is None
 
 

@@ -97,6 +97,7 @@ def test_the_document_tells_three_levels_with_their_intervals():
         (LEVELS[:6], np.full(6, 0.1), [1] * 6),
         (1000 + LEVELS, np.full(12, 0.1), [3] * 12),
         (LEVELS, np.zeros(12), [3] * 12),
+        (LEVELS, np.full(12, 1e-180), [3] * 12),
     ],
 )
 def test_too_little_to_tell_is_refused(levels, variances, nu):
