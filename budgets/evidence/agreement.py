@@ -96,7 +96,8 @@ def evaluate(study: Study) -> Evaluation:
     square = MeanSquare(
         f"{study.code}/standard_error_of_prediction", sum_of_squares(differences) / (n - 1), n - 1
     )
-    if square.value == 0:
+    # A scatter so small that its square over n vanishes is none.
+    if square.value / n**2 == 0:
         raise EvidenceError("all pairs differ by the same amount: they show no scatter", where=("rows",))
     sources = checked_sources(study.named_sources, pairs, study.code)
     one_run = len({pair.run for pair in pairs}) == 1 and pairs[0].run is not None

@@ -299,6 +299,8 @@ def test_pairs_that_cannot_be_formed_are_named():
         evaluated([("V0", 3.1, 3.0), ("V0", 3.2, 3.1)])
     with pytest.raises(EvidenceError, match="all pairs differ by the same amount"):
         evaluated([("V0", 3.5, 3.0), ("V1", 4.5, 4.0)])
+    with pytest.raises(EvidenceError, match="all pairs differ by the same amount"):
+        evaluated([("V0", 3e-162, 0.0), ("V1", 0.0, 0.0)])
 
 
 def test_a_pair_stands_in_one_group_and_one_run():
