@@ -27,7 +27,11 @@ from budgets.evidence.vectors import (
 )
 
 LAYOUT = Layout(
-    required=(), optional=("sample", "pair", "scan"), numbers=(), nullable=(), others_are_numbers=True
+    required=(),
+    optional=("sample", "pair", "scan", "group"),
+    numbers=(),
+    nullable=(),
+    others_are_numbers=True,
 )
 OPTIONS = ("independent",)
 

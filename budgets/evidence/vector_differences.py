@@ -7,9 +7,10 @@ from collections.abc import Sequence
 
 import numpy as np
 
+from budgets.correlations import is_possible
 from budgets.errors import BudgetsError, EvidenceError, raise_collected
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning
-from budgets.evidence.mean_square_matrices import MatrixTerm
+from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix, covariance_of
 from budgets.evidence.study_tables import Study
 from budgets.evidence.sums import grouped
 from budgets.evidence.vector_remainder import remainder
@@ -25,8 +26,8 @@ from budgets.evidence.vectors import (
 REFERENCE = "_reference"
 _INDEPENDENT = EvaluationWarning(
     "pairs-taken-as-independent",
-    "pairs count as independent here; if they come in clusters (days, lots), the biases are less well known "
-    "than bias_covariance says: compare it with the bias of an agreement study with a column 'group'",
+    "pairs count as independent without a column 'group'; if they come in clusters (days, lots), the biases "
+    "are less well known than bias_covariance says",
 )
 _WHOLE = (
     "repeatability",
@@ -82,8 +83,9 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
         contains=_WHOLE,
         reading_weight=float(readings.mean()),
     )
+    clustered = _between_groups(study, quantities, values, matrix)
     # JCGM 100, 5.2.3, eq. (17): the covariance of means
-    bias = joint_estimate("bias_covariance", [MatrixTerm(1 / n, matrix)], "calibration")
+    bias = joint_estimate("bias_covariance", clustered or [MatrixTerm(1 / n, matrix)], "calibration")
     left, figures = remainder(study, matrix, float(readings.mean()), references)
     return Evaluation(
         design="covariance",
@@ -97,8 +99,61 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
             **matrix_figures("prediction", matrix),
             **figures,
         },
-        warnings=(*warnings_of_freedom(n - 1, len(quantities)), _INDEPENDENT, *_warnings_of_remainder(left)),
+        warnings=(
+            *warnings_of_freedom(n - 1, len(quantities)),
+            *(() if "group" in study.labels else (_INDEPENDENT,)),
+            *_warnings_of_remainder(left),
+        ),
     )
+
+
+def _between_groups(
+    study: Study, quantities: tuple[str, ...], values: Array, matrix: MeanSquareMatrix
+) -> list[MatrixTerm]:
+    """Return the covariance of the mean difference by groups of pairs; nothing where it is not the larger.
+
+    With n_g pairs of n in k groups and n0 = (n - sum n_g^2/n)/(k - 1) the mean difference has the covariance
+    ``a MB + (1/n - a) MW``, a = sum n_g^2 / (n^2 n0): for equal groups MB/n. As in the design agreement,
+    groups count only where some quantity is less well known with them.
+    """
+    labels = _groups_of_pairs(study)
+    n, members = len(values), list(grouped(labels, range(len(labels))).values())
+    if len(members) < 2:
+        return []
+    scatter = centred(values)
+    rows = [scatter[[int(row) for row in group]] for group in members]
+    means = np.array([group.mean(axis=0) for group in rows])
+    sizes = np.array([len(group) for group in rows], dtype=float)
+    n0 = (n - (sizes**2).sum() / n) / (len(rows) - 1)
+    share = (sizes**2).sum() / (n * n * n0)
+    between = (means * sizes[:, None]).T @ means
+    code = f"{study.code}/between_groups_covariance"
+    terms = [MatrixTerm(share, scatter_matrix(code, quantities, between, len(rows) - 1))]
+    if abs(1 / n - share) > 1e-12 / n and n > len(rows):
+        within = scatter.T @ scatter - between
+        code = f"{study.code}/within_groups_covariance"
+        terms.append(MatrixTerm(1 / n - share, scatter_matrix(code, quantities, within, n - len(rows))))
+    found = covariance_of(terms)
+    larger = (np.diag(found) > np.diag(np.asarray(matrix.value)) / n).any()
+    return terms if larger and is_possible(found) else []
+
+
+def _groups_of_pairs(study: Study) -> list[str]:
+    """Return the group of every pair, in the order of the pairs; none without the column.
+
+    Raises
+    ------
+    EvidenceError
+        If one pair lies in two groups.
+    """
+    if "group" not in study.labels:
+        return []
+    groups: dict[str, str] = {}
+    for place, (pair, group) in enumerate(zip(study.labels["pair"], study.labels["group"], strict=True)):
+        if groups.setdefault(pair, group) != group:
+            where = ("rows", study.rows[place])
+            raise EvidenceError(f"pair {pair} lies in two groups", where=where)
+    return list(groups.values())
 
 
 def _pair_means(

@@ -122,8 +122,8 @@ def main() -> None:
     _write("three-channel-scans", ("sample", "scan", *CHANNELS), ((*where, *texts(v)) for where, v in scans))
     _write(
         "three-channel-pairs",
-        ("pair", *CHANNELS, *(f"{channel}_reference" for channel in CHANNELS)),
-        ((where[0], *texts(scan), *texts(found)) for where, scan, found in pairs),
+        ("pair", "group", *CHANNELS, *(f"{channel}_reference" for channel in CHANNELS)),
+        ((*where, *texts(scan), *texts(found)) for where, scan, found in pairs),
     )
     for place, channel in enumerate(CHANNELS):
         _write(

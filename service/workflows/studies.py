@@ -276,7 +276,7 @@ def _check_characteristics(unit_of_work: UnitOfWork, study: Study, collector: Fa
         )
     for index, column in enumerate(study.columns):
         base = column.removesuffix("_reference")
-        if base not in (*study.characteristics, "sample", "pair", "scan"):
+        if base not in (*study.characteristics, "sample", "pair", "scan", "group"):
             expected = ", ".join(study.characteristics)
             collector.add(f"#/columns/{index}", f"{column!r} is no characteristic of the study", expected)
 

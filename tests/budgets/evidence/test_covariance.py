@@ -262,3 +262,58 @@ def test_a_covariance_of_other_quantities_is_not_taken_out():
         evaluated(
             pairs(30), options={"independent": True}, named_sources=[NamedSource("presentation", estimate)]
         )
+
+
+# --- pairs in groups -----------------------------------------------------------------------------------
+
+
+def grouped_pairs(sizes, between, seed=5):
+    """Draw pairs read once, in groups of these sizes that share an error of the analyzer."""
+    generator = np.random.default_rng(seed)
+    columns = ("pair", "group", *CHANNELS, *(f"{name}_reference" for name in CHANNELS))
+    rows = []
+    for group, size in enumerate(sizes):
+        shared = generator.normal(0, between, 3)
+        for pair in range(size):
+            true = generator.normal([25, 4, 26], [1, 0.5, 1])
+            scan = true + shared + generator.multivariate_normal([0, 0, 0], OWN)
+            wet = generator.normal(true, REFERENCES)
+            rows.append((f"V{group}-{pair}", f"day-{group}", *map(float, (*scan, *wet))))
+    return StudyData(columns, tuple(rows))
+
+
+def single(data, channel):
+    """Evaluate the same pairs as an agreement study of one channel."""
+    place = CHANNELS.index(channel)
+    rows = tuple((row[0], row[1], row[2 + place], row[5 + place]) for row in data.rows)
+    table = StudyData(("pair", "group", "reading", "reference"), rows)
+    return evaluate_study("agreement", table, study="one", options={"independent": True})
+
+
+@pytest.mark.parametrize("sizes", [[5] * 12, [3, 9, 4, 8, 2, 7, 6, 5]])
+def test_biases_of_pairs_in_groups_are_as_well_known_as_each_by_itself(sizes):
+    data = grouped_pairs(sizes, between=0.5)
+    evaluation = evaluated(data, options={"independent": True})
+    bias = evaluation.estimate("bias_covariance")
+    matrix = covariance_of(bias.matrix_terms)
+    assert bias.matrix_terms[0].mean_square.degrees_of_freedom == len(sizes) - 1
+    for place, channel in enumerate(CHANNELS):
+        alone = single(data, channel).estimate("bias").variance
+        assert matrix[place, place] == pytest.approx(alone, rel=1e-9)
+    assert "pairs-taken-as-independent" not in [warning.code for warning in evaluation.warnings]
+
+
+@pytest.mark.parametrize("sizes", [[60], [1] * 60])
+def test_groups_that_say_nothing_leave_the_covariance_of_the_mean(sizes):
+    data = grouped_pairs(sizes, between=0.0)
+    bias = evaluated(data, options={"independent": True}).estimate("bias_covariance")
+    (term,) = bias.matrix_terms
+    assert term.coefficient == pytest.approx(1 / 60)
+    assert term.mean_square.degrees_of_freedom == 59
+
+
+def test_one_pair_in_two_groups_is_refused():
+    data = grouped_pairs([4, 4], between=0.1)
+    twice = StudyData(data.columns, (*data.rows, (data.rows[0][0], "another", *data.rows[0][2:])))
+    with pytest.raises(EvidenceError, match="two groups"):
+        evaluated(twice, options={"independent": True})
