@@ -7,6 +7,7 @@ import json
 import uuid
 from dataclasses import dataclass
 from typing import Any
+from urllib.parse import urlencode
 
 
 @dataclass(frozen=True)
@@ -43,12 +44,19 @@ class Client:
         sent = {"Idempotency-Key": key or str(uuid.uuid4())}
         return self.call("POST", path, token, document, headers=sent, expect=(200, 201)).document
 
+    def post_csv(self, token: str, path: str, about: dict[str, Any], content: bytes) -> Any:
+        """Record a study whose data are a CSV file; what it is about stands in the query."""
+        said = {name: value if isinstance(value, str) else json.dumps(value) for name, value in about.items()}
+        sent = {"Idempotency-Key": str(uuid.uuid4()), "Content-Type": "text/csv"}
+        path = f"{path}?{urlencode(said)}"
+        return self.call("POST", path, token, content, headers=sent, expect=(200, 201)).document
+
     def call(
         self,
         method: str,
         path: str,
         token: str | None,
-        document: dict[str, Any] | None = None,
+        document: dict[str, Any] | bytes | None = None,
         *,
         headers: dict[str, str] | None = None,
         expect: tuple[int, ...] | None = None,
@@ -57,8 +65,8 @@ class Client:
         sent = dict(headers or {})
         if token is not None:
             sent["Authorization"] = f"Bearer {token}"
-        body = None
-        if document is not None:
+        body = document if isinstance(document, bytes) else None
+        if isinstance(document, dict):
             body = json.dumps(document).encode()
             sent["Content-Type"] = "application/json"
         self._connection.request(method, path, body=body, headers=sent)

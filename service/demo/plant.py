@@ -147,6 +147,30 @@ def studies() -> Iterator[Document]:
     yield from _covariance_studies()
 
 
+def design_studies() -> Iterator[tuple[Document, bytes]]:
+    """Give the studies of the further designs as they come as CSV: what they are about, and the file."""
+    for what, design, options in (
+        ("days-and-runs", "nested_precision", {}),
+        ("sampling", "sampling", {}),
+        ("held-sample", "process_stream", {"held_sample": True}),
+        ("check-samples", "check_samples", {}),
+        ("fleet", "fleet", {}),
+        ("production", "production", {"steered_by_this_analyzer": True}),
+    ):
+        about = {
+            "code": f"moisture-{what}",
+            "design": design,
+            "product": PRODUCT,
+            "characteristic": "moisture",
+            "unit": "%",
+            "calibrations": {ANALYZER: CALIBRATION},
+            "done_on": _days_ago(20),
+            "done_by": "laboratory",
+            "options": options,
+        }
+        yield about, data_folder().joinpath(f"moisture-{what}.csv").read_bytes()
+
+
 def _covariance_studies() -> Iterator[Document]:
     """Give the studies of the three channels together: errors of one scan go together."""
     several = {"characteristics": [channel.code for channel in CHANNELS]}

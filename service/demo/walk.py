@@ -105,20 +105,12 @@ class Walk:
         table = self._table("Studies, evaluated from raw data", *columns)
         for study in plant.studies():
             answer = self._client.post(self._access.engineer, "/v1/studies", study)
-            evaluation = answer["evaluation"]
-            for position, estimate in enumerate(evaluation["estimates"]):
-                name = estimate["name"].replace("_", " ")
-                if not estimate["usable"]:
-                    name = f"{name} (not usable)"
-                if estimate["value"] is not None:
-                    name = f"{name} = {estimate['value']:.4f} %"
-                table.add_row(
-                    study["code"] if position == 0 else "",
-                    str(evaluation["used"]) if position == 0 else "",
-                    name,
-                    *_known_to(estimate),
-                    _interval(estimate["interval"]),
-                )
+            _add_estimates(table, study["code"], answer["evaluation"])
+        self._console.print(table)
+        table = self._table("Studies of further designs, their files uploaded as CSV", *columns)
+        for about, content in plant.design_studies():
+            answer = self._client.post_csv(self._access.engineer, "/v1/studies", about, content)
+            _add_estimates(table, about["code"], answer["evaluation"])
         self._console.print(table)
 
     def _bring_into_force(self, kind: str, document: dict[str, Any]) -> None:
@@ -227,6 +219,22 @@ class Walk:
             first = position == 0
             table.add_column(column, justify="left" if first else "right", no_wrap=first, overflow="fold")
         return table
+
+
+def _add_estimates(table: Table, code: str, evaluation: dict[str, Any]) -> None:
+    for position, estimate in enumerate(evaluation["estimates"]):
+        name = estimate["name"].replace("_", " ")
+        if not estimate["usable"]:
+            name = f"{name} (not usable)"
+        if estimate["value"] is not None:
+            name = f"{name} = {estimate['value']:.4f} %"
+        table.add_row(
+            code if position == 0 else "",
+            str(evaluation["used"]) if position == 0 else "",
+            name,
+            *_known_to(estimate),
+            _interval(estimate["interval"]),
+        )
 
 
 def _stated(limit: float | None) -> str | None:

@@ -60,6 +60,14 @@ class Caller:
         answer = self._client.open(path, method=method, json=document, headers=headers)
         return answer.get_json(force=True)
 
+    def upload(self, path: str, who: str, query: dict[str, str], content: bytes) -> Any:
+        headers = {
+            "Authorization": f"Bearer {getattr(self._access, who)}",
+            "Content-Type": "text/csv",
+        }
+        answer = self._client.post(path, query_string=query, data=content, headers=headers)
+        return answer.get_json(force=True)
+
     def signed(self) -> dict[str, Any]:
         return {"reason": "checked", "signature": {"password": self._access.approver_password}}
 

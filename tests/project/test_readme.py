@@ -51,6 +51,17 @@ def test_the_study_of_the_readme_is_evaluated(caller: Caller) -> None:
     assert answer["evaluation"]["estimates"][0]["name"] == "repeatability"
 
 
+def test_the_file_of_the_demo_in_the_readme_is_evaluated(caller: Caller) -> None:
+    found = re.search(r"--data-binary @(service/demo/data/\S+) \\\n(.*?)\n```", README, re.S)
+    assert found is not None
+    said = dict(re.findall(r"--url-query '?(\w+)=((?:(?<==)\{[^']*\})|[^\s']+)", found[2]))
+    assert set(said) >= {"code", "design", "product", "characteristic", "unit", "calibrations", "done_on"}
+    content = (Path(__file__).parents[2] / found[1]).read_bytes()
+    answer = caller.upload("/v1/studies/preview", "engineer", said, content)
+    names = [estimate["name"] for estimate in answer["evaluation"]["estimates"]]
+    assert names == ["repeatability", "between_days", "between_runs", "intermediate_precision"]
+
+
 def test_every_path_of_the_readme_is_in_the_description_of_the_api() -> None:
     described = (Path(__file__).parents[2] / "openapi.yaml").read_text("utf-8")
     templates = re.findall(r"^  (/\S+):$", described, re.M)
