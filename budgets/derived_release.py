@@ -7,19 +7,21 @@ be used is settled at approval, over a grid of the validated box; a decision onl
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass
 from typing import Any, ClassVar
 
-from budgets.acceptance import acceptance_interval
+from budgets.acceptance import AcceptanceInterval, acceptance_interval
 from budgets.budget import Budget
-from budgets.conformity import Tolerance, conformance_probability, tails
+from budgets.conformity import Tolerance, conformance_probability, measurement_capability_index, tails
 from budgets.decision_rules import DecisionRule
 from budgets.errors import LimitsError, ModelError
 from budgets.linear_propagation import CompiledPropagation
 from budgets.model_validation import ValidatedBox, validate_over_box
 from budgets.propagation import Counts, check_counts, compiled, coverage_factor
 from budgets.reading_patterns import ReadingPattern
+from budgets.release import ReleaseRule
 from budgets.stored_propagation import propagation_document, propagation_from_document
 
 
@@ -173,14 +175,7 @@ class DerivedReleaseRule:
         lower = upper = None
         detail = ""
         try:
-            accepted = acceptance_interval(
-                self.decision_rule,
-                self.tolerance,
-                u,
-                nu,
-                domain=self.domain,
-                validated_range=self.validated_range,
-            )
+            accepted = self._accepted(u, nu)
         except LimitsError as error:
             detail, inside = error.message, False
         else:
@@ -201,6 +196,68 @@ class DerivedReleaseRule:
             lower_acceptance_limit=lower,
             upper_acceptance_limit=upper,
             detail=detail,
+        )
+
+    def at(self, estimates: Mapping[str, float]) -> ReleaseRule:
+        """Return the rule with fixed limits that holds at one set of readings, as plain numbers.
+
+        Parameters
+        ----------
+        estimates : mapping of str to float
+            Means over the readings, of the quantities that are read.
+
+        Returns
+        -------
+        ReleaseRule
+            Judges the value of the model at these readings as `judge` does.
+
+        Raises
+        ------
+        ModelError
+            If an estimate is missing or not finite, or the model has no value there.
+        LimitsError
+            If the decision rule cannot be used with the uncertainty at these readings, or accepts nothing.
+
+        Notes
+        -----
+        Source: JCGM 106:2012, 7.2 to 7.4 and 8.3 (from memory).
+        """
+        found = self.law.at(estimates)
+        u, nu, limits = found.standard_uncertainty, found.effective_degrees_of_freedom, self.tolerance
+        accepted = self._accepted(u, nu)
+        factor = coverage_factor(self.coverage_probability, nu)
+        return ReleaseRule(
+            lower_tolerance_limit=limits.lower,
+            upper_tolerance_limit=limits.upper,
+            lower_inclusive=limits.lower_inclusive,
+            upper_inclusive=limits.upper_inclusive,
+            lower_acceptance_limit=accepted.lower,
+            upper_acceptance_limit=accepted.upper,
+            guard_band_lower=accepted.guard_band_lower,
+            guard_band_upper=accepted.guard_band_upper,
+            combined_standard_uncertainty=u,
+            effective_degrees_of_freedom=nu,
+            coverage_probability=self.coverage_probability,
+            coverage_factor=factor,
+            expanded_uncertainty=factor * u,
+            bias_shift=0.0,
+            decision_rule=self.decision_rule,
+            measurement_capability_index=measurement_capability_index(limits, u),
+            largest_specific_risk=max(
+                math.fsum(tails(limit, u, nu, limits))
+                for limit in (accepted.lower, accepted.upper)
+                if limit is not None
+            ),
+        )
+
+    def _accepted(self, standard_uncertainty: float, degrees_of_freedom: float) -> AcceptanceInterval:
+        return acceptance_interval(
+            self.decision_rule,
+            self.tolerance,
+            standard_uncertainty,
+            degrees_of_freedom,
+            domain=self.domain,
+            validated_range=self.validated_range,
         )
 
     def to_document(self) -> dict[str, Any]:

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass, fields
+from dataclasses import asdict, dataclass, fields, replace
 from functools import cached_property
 from typing import Any, TypedDict
 
@@ -223,6 +223,25 @@ class ReleaseRule:
         if constant is None:
             return self.combined_standard_uncertainty
         return math.hypot(constant, self.proportional_standard_uncertainty * estimate)
+
+    def at(self, estimate: float) -> ReleaseRule:
+        """Return the rule with the uncertainty that holds at an estimate.
+
+        Parameters
+        ----------
+        estimate : float, unit of the characteristic
+
+        Returns
+        -------
+        ReleaseRule
+            The rule itself where its uncertainty is the same for every estimate; the acceptance limits stay.
+        """
+        if self.constant_standard_uncertainty is None:
+            return self
+        here = self.standard_uncertainty_at(estimate)
+        return replace(
+            self, combined_standard_uncertainty=here, expanded_uncertainty=self.coverage_factor * here
+        )
 
     def to_document(self) -> dict[str, Any]:
         """Return the rule as JSON-able members; null stands for infinite degrees of freedom."""

@@ -3,13 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import asdict, dataclass, replace
+from dataclasses import asdict, dataclass
 from itertools import islice
-from math import fsum
 from typing import Any, Final
 
 from budgets.budget import Budget, Procedure
-from budgets.conformity import Tolerance, measurement_capability_index, tails
+from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.derived_release import DerivedReleaseRule, release_rule_kind
 from budgets.errors import LimitsError, ModelError
@@ -150,39 +149,7 @@ def rule_here(rule: AnyRule, means: Mapping[str, float], estimate: float) -> Rel
     LimitsError
         The decision rule cannot be used at these readings, or accepts nothing there.
     """
-    if isinstance(rule, ReleaseRule):
-        if rule.constant_standard_uncertainty is None:
-            return rule
-        here = rule.standard_uncertainty_at(estimate)
-        return replace(
-            rule, combined_standard_uncertainty=here, expanded_uncertainty=rule.coverage_factor * here
-        )
-    judged, limits = rule.judge(means), rule.tolerance
-    if judged.detail:
-        raise LimitsError(judged.detail)
-    u, nu = judged.combined_standard_uncertainty, judged.effective_degrees_of_freedom
-    lower, upper = judged.lower_acceptance_limit, judged.upper_acceptance_limit
-    return ReleaseRule(
-        lower_tolerance_limit=limits.lower,
-        upper_tolerance_limit=limits.upper,
-        lower_inclusive=limits.lower_inclusive,
-        upper_inclusive=limits.upper_inclusive,
-        lower_acceptance_limit=lower,
-        upper_acceptance_limit=upper,
-        guard_band_lower=None if lower is None or limits.lower is None else lower - limits.lower,
-        guard_band_upper=None if upper is None or limits.upper is None else limits.upper - upper,
-        combined_standard_uncertainty=u,
-        effective_degrees_of_freedom=nu,
-        coverage_probability=rule.coverage_probability,
-        coverage_factor=judged.coverage_factor,
-        expanded_uncertainty=judged.expanded_uncertainty,
-        bias_shift=0.0,
-        decision_rule=rule.decision_rule,
-        measurement_capability_index=measurement_capability_index(limits, u),
-        largest_specific_risk=max(
-            fsum(tails(limit, u, nu, limits)) for limit in (lower, upper) if limit is not None
-        ),
-    )
+    return rule.at(estimate) if isinstance(rule, ReleaseRule) else rule.at(means)
 
 
 def compile_pair(

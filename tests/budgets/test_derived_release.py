@@ -215,3 +215,24 @@ def test_derivatives_that_disagree_stop_an_approval(monkeypatch):
     monkeypatch.setattr(MeasurementModel, "sensitivity_coefficients", bent)
     with pytest.raises(ConvergenceError, match="two ways"):
         compiled_rule()
+
+
+def test_the_rule_at_a_reading_judges_as_the_derived_rule_does():
+    rule = compiled_rule()
+    at = {"protein": 24.4, "moisture": 3.5, "fat": 26.0}
+    derived, fixed = rule.judge(at), rule.at(at)
+    judged = fixed.judge(derived.estimate)
+    assert judged.outcome == derived.outcome
+    assert judged.conformance_probability == derived.conformance_probability
+    assert fixed.combined_standard_uncertainty == derived.combined_standard_uncertainty
+    assert fixed.lower_acceptance_limit == derived.lower_acceptance_limit
+    assert fixed.expanded_uncertainty == derived.expanded_uncertainty
+    assert fixed.guard_band_lower == pytest.approx(fixed.lower_acceptance_limit - rule.tolerance.lower)
+    assert fixed.largest_specific_risk == pytest.approx(rule.decision_rule.largest_risk)
+
+
+def test_a_rule_that_cannot_be_used_at_a_reading_says_so():
+    rule = compiled_rule()
+    impossible = replace(rule, decision_rule=DecisionRule("simple", largest_standard_uncertainty=1e-9))
+    with pytest.raises(LimitsError):
+        impossible.at({"protein": 24.4, "moisture": 3.5, "fat": 26.0})

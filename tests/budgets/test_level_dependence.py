@@ -1,5 +1,6 @@
 import json
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -193,3 +194,15 @@ def test_an_estimate_of_zero_is_not_known_exactly(a_budget, a_component):
         rule.judge(0.0)
     with pytest.raises(ModelError, match="exactly"):
         rule.judge_many([1.0, 0.0])
+
+
+def test_the_rule_at_an_estimate_has_the_uncertainty_there():
+    tolerance = Tolerance(None, 4.0)
+    rule = ReleaseRule.compile(a_budget(), Counts((2,)), tolerance, RISK)
+    here = rule.at(3.0)
+    assert here.combined_standard_uncertainty == rule.standard_uncertainty_at(3.0)
+    assert here.expanded_uncertainty == rule.coverage_factor * rule.standard_uncertainty_at(3.0)
+    assert here.upper_acceptance_limit == rule.upper_acceptance_limit
+    assert here.judge(3.0) == rule.judge(3.0)
+    constant = replace(rule, constant_standard_uncertainty=None, proportional_standard_uncertainty=0.0)
+    assert constant.at(3.0) is constant
