@@ -88,6 +88,8 @@ def _lot_finding(session: Session) -> Finding | None:
     same_decision = and_(decisions.c.chain == lots.c.chain, decisions.c.sequence == lots.c.sequence)
     differs = or_(
         decisions.c.chain.is_(None),
+        # A decision is an entry of the line that acted.
+        lots.c.line != lots.c.chain,
         decisions.c.product != lots.c.product,
         decisions.c.lot != lots.c.lot,
         decisions.c.outcome != lots.c.outcome,

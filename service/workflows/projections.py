@@ -68,7 +68,13 @@ class Expected:
         version = content["version"]
         code = version["code"]
         self.rows["version", kind, code, version["version"]] = (
-            (version["state"], version["document"], content["evaluation"], version["lapses_at"]),
+            (
+                version["state"],
+                version["document"],
+                content["evaluation"],
+                version["lapses_at"],
+                *_filed_under(version["document"]),
+            ),
             where,
         )
         if content.get("supersedes") is not None:
@@ -136,7 +142,14 @@ def _rows(unit_of_work: UnitOfWork) -> Iterator[tuple[Key, Any]]:
         for version in unit_of_work.versions.all(kind):
             yield (
                 ("version", kind, version.code, version.version),
-                (version.state, version.document, version.evaluation, version.lapses_at),
+                (
+                    version.state,
+                    version.document,
+                    version.evaluation,
+                    version.lapses_at,
+                    version.product,
+                    version.characteristic,
+                ),
             )
     for rule in unit_of_work.rules.all():
         yield ("rule", *RuleKey.of(rule).to_document().values()), rule.numbers
@@ -145,6 +158,11 @@ def _rows(unit_of_work: UnitOfWork) -> Iterator[tuple[Key, Any]]:
     for token in unit_of_work.tokens.list():
         row = (token.principal, token.person, token.roles, token.created_at, token.revoked_at)
         yield ("token", token.code), row
+
+
+def _filed_under(document: dict[str, Any]) -> tuple[str | None, str | None]:
+    """Say by which product and characteristic a version is looked up."""
+    return document.get("product"), document.get("characteristic")
 
 
 def _name(key: Key) -> str:

@@ -84,6 +84,14 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
             "the version specification/customer-b/1 stands in the tables other than",
         ),
         (
+            "UPDATE versions SET product = 'butter' WHERE code = 'customer-b'",
+            "the version specification/customer-b/1 stands in the tables other than",
+        ),
+        (
+            "UPDATE lots SET line = 'tower-2' WHERE lot = 'W26-hold'",
+            "does not stand as its last decision says",
+        ),
+        (
             "UPDATE versions SET lapses_at = NULL WHERE code = 'wmp-moisture-nir'",
             "the version budget/wmp-moisture-nir/1 stands in the tables other than",
         ),
