@@ -29,6 +29,10 @@ BIAS_AFTER: Final = 0.100
 SESSIONS: Final = 24  # of each calibration
 # Readings of one held sample hang together: each takes over this part of the deviation before it.
 CARRIED_OVER: Final = 0.4
+# The running process wanders: so much moisture, and so many minutes until 1/e of a deviation is left.
+WANDERING: Final = 0.100
+MINUTES_REMEMBERED: Final = 20.0
+STREAM_MINUTES: Final = 1200
 # The operator takes back this part of what the analyzer shows off the set point, lot by lot.
 STEERED: Final = 0.5
 SET_POINT: Final = 2.85
@@ -50,6 +54,7 @@ def tables(seed: int) -> dict[str, Table]:
         ),
         "moisture-fleet": (("sample", "instrument", "replicate", "reading"), list(_fleet(draw))),
         "moisture-production": (("period", "lot", "sample", "reading"), list(_production(draw))),
+        "moisture-stream": (("position", "reading"), list(_stream(draw))),
     }
 
 
@@ -116,6 +121,15 @@ def _production(draw: np.random.Generator) -> Rows:
                 seen.append(draw.normal(of_sample, READING))
                 yield f"week-{lot // 5 + 1}", f"R{lot + 1:02d}", f"S{sample + 1}", _text(seen[-1])
         process -= STEERED * (float(np.mean(seen)) - SET_POINT)
+
+
+def _stream(draw: np.random.Generator) -> Rows:
+    """Read the running process once a minute for twenty hours; each reading has its own error."""
+    kept = np.exp(-1 / MINUTES_REMEMBERED)
+    deviation = draw.normal(0, WANDERING)
+    for minute in range(STREAM_MINUTES):
+        yield minute, _text(SET_POINT + deviation + draw.normal(0, READING))
+        deviation = kept * deviation + draw.normal(0, WANDERING * np.sqrt(1 - kept**2))
 
 
 def _text(value: float) -> str:

@@ -55,6 +55,14 @@ def budget_code(characteristic: str) -> str:
 
 BUDGET: Final = budget_code("moisture")
 
+# How a lot is sampled from the stream: a lot takes two hours, an increment is taken every half hour.
+INCREMENTS: Final[Document] = {
+    "held_sample": False,
+    "lot_length": 120,
+    "increments": 4,
+    "scheme": "systematic",
+}
+
 
 def data_folder() -> Traversable:
     """Give the folder of the raw data files."""
@@ -153,11 +161,12 @@ def design_studies() -> Iterator[tuple[Document, bytes]]:
         ("days-and-runs", "nested_precision", {}),
         ("sampling", "sampling", {}),
         ("held-sample", "process_stream", {"held_sample": True}),
+        ("stream", "process_stream", INCREMENTS),
         ("check-samples", "check_samples", {}),
         ("fleet", "fleet", {}),
         ("production", "production", {"steered_by_this_analyzer": True}),
     ):
-        about = {
+        about: Document = {
             "code": f"moisture-{what}",
             "design": design,
             "product": PRODUCT,
@@ -167,7 +176,12 @@ def design_studies() -> Iterator[tuple[Document, bytes]]:
             "done_on": _days_ago(20),
             "done_by": "laboratory",
             "options": options,
+            "named_sources": [],
         }
+        if what == "stream":
+            # The variogram holds the analyzer's own error; only what is left is that of the increments.
+            evidence = {"study": "moisture-scans", "estimate": "repeatability"}
+            about["named_sources"] = [{"source": "analyzer_repeatability", "evidence": evidence}]
         yield about, data_folder().joinpath(f"moisture-{what}.csv").read_bytes()
 
 

@@ -23,7 +23,15 @@ def test_the_check_walks_the_job_and_ends_well(tmp_path: Path) -> None:
         timeout=120,
     )
     assert result.returncode == 0, result.stdout + result.stderr
-    for what in ("days-and-runs", "sampling", "held-sample", "check-samples", "fleet", "production"):
+    for what in (
+        "days-and-runs",
+        "sampling",
+        "held-sample",
+        "stream",
+        "check-samples",
+        "fleet",
+        "production",
+    ):
         assert f"│ moisture-{what} " in result.stdout
     assert "Lot W26-04711: RELEASE" in result.stdout
     outcomes = dict(re.findall(r"│ (release|hold|reject) +│ +(\d+) │", result.stdout))

@@ -170,4 +170,4 @@ def test_the_seeded_script_makes_the_files_that_are_kept(
     make_data.main()
     made = {path.name: path.read_bytes() for path in tmp_path.iterdir()}
     assert made == {path.name: path.read_bytes() for path in kept.iterdir()}
-    assert len(made) == 18
+    assert len(made) == 19
