@@ -73,9 +73,9 @@ def evaluate(study: Study) -> Evaluation:
     readings = study.full("reading")
     if sum_of_squares(readings) == 0:
         raise EvidenceError("all readings are equal: they show no variation", where=("rows",))
-    if not LEAST_READINGS <= len(readings) <= MOST_READINGS:
+    if len(readings) < LEAST_READINGS:
         raise EvidenceError(
-            f"{len(readings)} readings; {LEAST_READINGS} to {MOST_READINGS} in equal steps are evaluated",
+            f"{len(readings)} readings; a series in equal steps is evaluated from {LEAST_READINGS} on",
             where=("rows",),
         )
     step = _step(study)

@@ -22,18 +22,28 @@ from budgets.evidence import (
 from budgets.evidence.evaluation import Evaluation, SetAside
 from budgets.evidence.study_tables import Cell, Layout, NamedSource, Study, StudyData, read_columns
 
-__all__ = ["DESIGNS", "VECTOR_DESIGNS", "Cell", "NamedSource", "StudyData", "StudyDesign", "evaluate_study"]
+__all__ = [
+    "DESIGNS",
+    "MOST_ROWS",
+    "VECTOR_DESIGNS",
+    "Cell",
+    "NamedSource",
+    "StudyData",
+    "StudyDesign",
+    "evaluate_study",
+]
 
 
 @dataclass(frozen=True)
 class StudyDesign:
-    """A design: the columns it knows, what else it takes, and how it is evaluated."""
+    """A design: the columns and rows it takes, what else it takes, and how it is evaluated."""
 
     name: str
     layout: Layout
     evaluate: Callable[[Study], Evaluation]
     options: tuple[str, ...] = ()
     takes_sources: bool = False
+    most_rows: int = 5_000
 
 
 DESIGNS: dict[str, StudyDesign] = {
@@ -59,6 +69,7 @@ DESIGNS: dict[str, StudyDesign] = {
             process_stream.evaluate,
             options=process_stream.OPTIONS,
             takes_sources=True,
+            most_rows=process_stream.MOST_READINGS,
         ),
         StudyDesign("production", production.LAYOUT, production.evaluate, options=production.OPTIONS),
     )
@@ -69,6 +80,8 @@ VECTOR_DESIGNS: dict[str, StudyDesign] = {
         "covariance", covariance.LAYOUT, covariance.evaluate, options=covariance.OPTIONS, takes_sources=True
     )
 }
+# No design takes more rows.
+MOST_ROWS = max(design.most_rows for design in (*DESIGNS.values(), *VECTOR_DESIGNS.values()))
 
 
 def evaluate_study(
@@ -116,7 +129,9 @@ def evaluate_study(
         raise EvidenceError(f"{design!r} is no study design; there are {', '.join(known)}", where=("design",))
     chosen = known[design]
     given = dict(options or {})
-    raise_collected([*_faults_of_requests(chosen, given, named_sources), *_faults_of_rows(set_aside, data)])
+    raise_collected(
+        [*_faults_of_requests(chosen, given, named_sources), *_faults_of_rows(chosen, set_aside, data)]
+    )
 
     def evaluated(rows: Sequence[int]) -> Evaluation:
         labels, numbers = read_columns(data, chosen.layout, rows)
@@ -159,8 +174,13 @@ def _faults_of_requests(
     return faults
 
 
-def _faults_of_rows(set_aside: Sequence[SetAside], data: StudyData) -> list[BudgetsError]:
+def _faults_of_rows(
+    design: StudyDesign, set_aside: Sequence[SetAside], data: StudyData
+) -> list[BudgetsError]:
     faults: list[BudgetsError] = []
+    if len(data.rows) > design.most_rows:
+        text = f"{len(data.rows)} rows; the design {design.name} takes at most {design.most_rows}"
+        faults.append(EvidenceError(text, where=("rows",)))
     seen: set[int] = set()
     for index, item in enumerate(set_aside):
         where = ("set_aside", index)

@@ -8,12 +8,12 @@ from typing import Any
 
 from marshmallow import ValidationError, fields, validates_schema
 
+from budgets.evidence.study_data import MOST_ROWS
 from service.documents import DataSource, NamedSource, Replacement, SetAsideRow, Study
 from service.schemas.base import StrictSchema, Wrong, got, not_yet
 from service.schemas.evidence import EvidenceField
 from service.schemas.fields import ByKey, Choice, Code, Count, Day, Flag, Name, Part, Parts, Text, _Stating
 
-MOST_ROWS = 5000
 MOST_COLUMNS = 50
 LONGEST_TEXT = 64
 DEEPEST_OPTION = 2

@@ -15,8 +15,9 @@ from typing import Final
 
 from charset_normalizer import from_bytes
 
+from budgets.evidence.study_data import MOST_ROWS
 from service.errors import Fault, InvalidRequest, Unreadable
-from service.schemas.studies import MOST_COLUMNS, MOST_ROWS
+from service.schemas.studies import MOST_COLUMNS
 from service.workflows.study_tables import Row, Table
 
 # The longer marks first: that of UTF-16 is the beginning of that of UTF-32.

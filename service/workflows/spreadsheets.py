@@ -10,8 +10,8 @@ from typing import Any, Final
 from openpyxl import load_workbook
 from openpyxl.utils.exceptions import InvalidFileException
 
+from budgets.evidence.study_data import MOST_ROWS
 from service.errors import InvalidRequest, Unreadable
-from service.schemas.studies import MOST_ROWS
 from service.workflows.study_tables import RefusedCell, Row, Table
 
 SUFFIXES: Final = (".xlsx", ".xlsm")

@@ -12,11 +12,10 @@ from dataclasses import dataclass
 from datetime import date, datetime
 from typing import Any, Final
 
-from budgets.evidence.study_data import DESIGNS, VECTOR_DESIGNS
+from budgets.evidence.study_data import DESIGNS, VECTOR_DESIGNS, StudyDesign
 from budgets.evidence.study_tables import Layout
 from service.errors import Fault, InvalidRequest
 from service.schemas.base import MOST_FAULTS, counted, got
-from service.schemas.studies import MOST_ROWS
 
 _NUMBER: Final = re.compile(r"[+-]?([0-9]+([.,][0-9]*)?|[.,][0-9]+)([eE][+-]?[0-9]{1,3})?")
 _BELOW: Final = re.compile(r"<\s*(?P<limit>.+)")
@@ -68,10 +67,11 @@ def table_members(
     InvalidRequest
         With every heading or every cell that cannot be read.
     """
-    layout = _layout(design)
-    if len(table.rows) > MOST_ROWS:
-        raise _refused([Fault(f"got {len(table.rows)} rows", f"at most {MOST_ROWS} rows", "#/rows")])
-    columns = _columns(table, layout, str(design), unit, characteristics)
+    known = _design(design)
+    if len(table.rows) > known.most_rows:
+        expected = f"at most {known.most_rows} rows in the design {known.name}"
+        raise _refused([Fault(f"got {len(table.rows)} rows", expected, "#/rows")])
+    columns = _columns(table, known, unit, characteristics)
     faults: list[Fault] = []
     decimal_sign = _decimal_sign(table, columns, faults)
     rows = [
@@ -92,19 +92,20 @@ def _refused(faults: Sequence[Fault]) -> InvalidRequest:
 # --- headings ------------------------------------------------------------------------------------------
 
 
-def _layout(design: object) -> Layout:
+def _design(design: object) -> StudyDesign:
     known = {**DESIGNS, **VECTOR_DESIGNS}
     if not isinstance(design, str) or design not in known:
         detail = "missing" if design is None else got(design)
         raise _refused([Fault(detail, "one of " + ", ".join(known), "#/design")])
-    return known[design].layout
+    return known[design]
 
 
 def _columns(
-    table: Table, layout: Layout, design: str, unit: object, characteristics: Sequence[str]
+    table: Table, design: StudyDesign, unit: object, characteristics: Sequence[str]
 ) -> list[_Column]:
+    layout = design.layout
     names = [*layout.required, *layout.optional]
-    if design in VECTOR_DESIGNS:
+    if design.name in VECTOR_DESIGNS:
         names += [name + suffix for suffix in ("", "_reference") for name in characteristics]
     recognised = {_plain(name): name for name in names}
     expected = "the headings " + ", ".join(layout.required)

@@ -4,7 +4,14 @@ import pytest
 
 from budgets.errors import BudgetsError, EvidenceError, NotSupportedError
 from budgets.evidence.evaluation import SetAside
-from budgets.evidence.study_data import DESIGNS, NamedSource, StudyData, evaluate_study
+from budgets.evidence.study_data import (
+    DESIGNS,
+    MOST_ROWS,
+    VECTOR_DESIGNS,
+    NamedSource,
+    StudyData,
+    evaluate_study,
+)
 
 COLUMNS = ("sample", "replicate", "reading")
 ROWS = tuple((f"P{i}", k, 3.0 + i / 10 + d) for i in range(4) for k, d in ((1, 0.02), (2, -0.01), (3, 0.0)))
@@ -64,6 +71,15 @@ def test_all_faults_are_told_at_once_but_not_more_than_twenty():
 
 def test_an_empty_study_is_refused():
     fault_of(("rows",), "no data", rows=())
+
+
+@pytest.mark.parametrize("name", [*DESIGNS, *VECTOR_DESIGNS])
+def test_every_design_says_how_many_rows_it_takes(name):
+    """Before a single cell is looked at."""
+    most = {**DESIGNS, **VECTOR_DESIGNS}[name].most_rows
+    assert most == (20_000 if name == "process_stream" else 5_000) <= MOST_ROWS
+    rows = ((None,),) * (most + 1)
+    fault_of(("rows",), f"{most + 1} rows; the design {name} takes at most {most}", rows=rows, design=name)
 
 
 def test_labels_written_as_numbers_are_the_same_whatever_wrote_them():

@@ -6,6 +6,7 @@ import hashlib
 import itertools
 import json
 import random
+import statistics
 import threading
 import time
 from collections.abc import Callable, Iterator
@@ -238,6 +239,13 @@ def _rows(*counts: int, deviation: float = 0.05) -> list[list[Any]]:
     return rows
 
 
+def _lots(*, periods: bool) -> list[list[Any]]:
+    """Make two samples of each of eight lots a week, read twice; or only a reading of each lot after lot."""
+    if not periods:
+        return [[row[0], row[2]] for row in _rows(12, 3)]
+    return [[row[0], f"{row[0]}-{row[1]}", row[2], row[4]] for row in _rows(6, 8, 2, 2)]
+
+
 TABLES: dict[str, tuple[list[str], list[list[Any]], dict[str, Any]]] = {
     "nested_precision": (
         ["Day", "Run", "Reading [%]"],
@@ -252,12 +260,25 @@ TABLES: dict[str, tuple[list[str], list[list[Any]], dict[str, Any]]] = {
         [row[1:] for row in _rows(120)],
         {"held_sample": False, "lot_length": 40, "increments": 4, "scheme": "systematic"},
     ),
+    "production": (
+        ["Period", "Lot", "Sample", "Reading [%]"],
+        _lots(periods=True),
+        {"steered_by_this_analyzer": False},
+    ),
+    # Also with the least that it takes.
+    "production of lots alone": (["Lot", "Reading"], _lots(periods=False), {}),
 }
 
 
-@pytest.mark.parametrize("design", [name for name in TABLES if name in DESIGNS])
-def test_every_design_comes_in_as_csv(callers: Callers, design: str) -> None:
-    headings, rows, options = TABLES[design]
+def test_no_design_is_left_out_here() -> None:
+    before = {"repeatability", "duplicates", "agreement"}
+    assert {name.partition(" ")[0] for name in TABLES} | before == set(DESIGNS)
+
+
+@pytest.mark.parametrize("what", TABLES)
+def test_every_design_comes_in_as_csv(callers: Callers, what: str) -> None:
+    headings, rows, options = TABLES[what]
+    design = what.partition(" ")[0]
     document = house.a_study(code="new-study", design=design, columns=headings, rows=rows, options=options)
     answer = done(csv_call(callers["engineer"], written(document, ";", ","), **said_of(document)), 200)
     expected = {name.casefold().removesuffix(" [%]") for name in headings}
@@ -267,3 +288,66 @@ def test_every_design_comes_in_as_csv(callers: Callers, design: str) -> None:
     here = evaluate_study(design, data, study="new-study", options=options, readings_decimals=2)
     assert answer["evaluation"]["estimates"] == here.to_document()["estimates"]
     assert answer["study"]["serves_until"] is not None
+
+
+def test_a_production_as_csv_gives_what_its_lots_give(callers: Callers) -> None:
+    """One reading after the other of each lot: the one-way analysis of variance, here by its own sums."""
+    headings, rows, options = TABLES["production of lots alone"]
+    document = house.a_study(
+        code="new-study", design="production", columns=headings, rows=rows, options=options
+    )
+    answer = done(csv_call(callers["engineer"], written(document, ";", ","), **said_of(document)), 200)
+    found = {each["name"]: each for each in answer["evaluation"]["estimates"]}
+    lots = [[row[1] for row in rows if row[0] == lot] for lot in dict.fromkeys(row[0] for row in rows)]
+    within = statistics.fmean(statistics.variance(lot) for lot in lots)
+    between = statistics.variance([statistics.fmean(lot) for lot in lots]) - within / 3
+    assert found["within_lot"]["variance"] == pytest.approx(within)
+    assert found["lot_to_lot"]["variance"] == pytest.approx(between)
+    # What describes the process is no component, and nobody said whether it is steered.
+    assert found["lot_to_lot"]["usable"] is False
+    assert "steering-unknown" in {warning["code"] for warning in answer["evaluation"]["warnings"]}
+
+
+# --- how many rows -------------------------------------------------------------------------------------
+
+
+def _stream(number: int, **changes: Any) -> dict[str, Any]:
+    draw = random.Random(5)
+    rows = [[round(draw.gauss(3, 0.05), 3)] for _ in range(number)]
+    return house.a_study(
+        **{"code": "new-study", "design": "process_stream", "columns": ["reading"], "rows": rows}
+        | {"options": {"held_sample": True}}
+        | changes
+    )
+
+
+@pytest.mark.parametrize("as_csv", [True, False])
+def test_a_series_is_taken_as_long_as_its_design_takes_it(callers: Callers, as_csv: bool) -> None:
+    most = DESIGNS["process_stream"].most_rows
+    for number in (most, most + 1):
+        document = _stream(number)
+        if as_csv:
+            body = written(document, ";", ".")
+            answer = csv_call(callers["engineer"], body, path="/v1/studies", **said_of(document))
+        else:
+            answer = callers["engineer"].post("/v1/studies", document)
+        if number == most:
+            assert done(answer)["evaluation"]["used"] == len(answer.get_json()["study"]["rows"]) == 20_000
+        else:
+            (fault,) = problem(answer, 422, "invalid-request" if as_csv else "not-supported")["errors"]
+            assert (fault["pointer"], str(most) in fault["expected"]) == ("#/rows", True)
+
+
+@pytest.mark.parametrize("as_csv", [True, False])
+def test_another_design_takes_fewer_rows(callers: Callers, as_csv: bool) -> None:
+    document = _stream(5001, design="production", options={}, columns=["lot", "reading"])
+    document["rows"] = [[f"L{index // 2}", *row] for index, row in enumerate(document["rows"])]
+    if as_csv:
+        answer = csv_call(callers["engineer"], written(document, ";", "."), **said_of(document))
+    else:
+        answer = callers["engineer"].send("POST", PREVIEW, document)
+    (fault,) = problem(answer, 422, "invalid-request")["errors"]
+    assert fault["pointer"] == "#/rows"
+    assert "5001 rows" in fault["detail"]
+    assert "at most 5000" in fault["detail"] + str(fault.get("expected"))
+    assert "production" in fault["detail"] + str(fault.get("expected"))
