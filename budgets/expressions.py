@@ -29,14 +29,16 @@ _OPERATORS: dict[type[ast.operator], str] = {
     ast.Div: "/",
     ast.Pow: "**",
 }
-_ALLOWED = f"names, numbers, + - * / **, and {', '.join(FUNCTIONS + CHOICES)}"
+_ALLOWED = (
+    f"names (in quotes where they hold a hyphen), numbers, + - * / **, and {', '.join(FUNCTIONS + CHOICES)}"
+)
 _WHERE: Path = ("expression",)
 # No letter may follow a number: 0x10, 1j, 1_000 and 1if are nothing that a form should hold.
 _TOKENS = re.compile(
-    r"(?:\d+\.?\d*(?:[eE][+-]?\d+)?(?![\w.])|\.\d+(?:[eE][+-]?\d+)?(?![\w.])|[A-Za-z_]\w*|[-+*/(),.\s])*",
+    r"(?:'[\w-]+'|\d+\.?\d*(?:[eE][+-]?\d+)?(?![\w.])|\.\d+(?:[eE][+-]?\d+)?(?![\w.])|[A-Za-z_]\w*|[-+*/(),.\s])*",
     re.ASCII,
 )
-_NAME = re.compile(r"[A-Za-z_]\w{0,62}", re.ASCII)
+_NAME = re.compile(r"\w[\w-]{0,62}", re.ASCII)
 
 
 @dataclass(frozen=True)
@@ -91,10 +93,12 @@ class _Reader:
     def read(self, node: ast.expr, depth: int) -> int:
         if depth > GREATEST_DEPTH:
             raise ModelError(f"the expression is nested deeper than {GREATEST_DEPTH} levels", where=_WHERE)
+        if isinstance(node, ast.Constant) and isinstance(node.value, str):
+            return self._name(node.value)
         if isinstance(node, ast.Constant):
             return self.step(Step("number", number=_number(node), constant=True))
         if isinstance(node, ast.Name):
-            return self._name(node)
+            return self._name(node.id)
         if isinstance(node, ast.UnaryOp) and isinstance(node.op, (ast.UAdd, ast.USub)):
             operand = self.read(node.operand, depth + 1)
             return operand if isinstance(node.op, ast.UAdd) else self.add("negative", operand)
@@ -105,14 +109,14 @@ class _Reader:
             return self._call(node, depth)
         raise ModelError(f"{_shown(node)} is not arithmetic; an expression may hold {_ALLOWED}", where=_WHERE)
 
-    def _name(self, node: ast.Name) -> int:
-        if node.id not in self.known:
+    def _name(self, name: str) -> int:
+        if name not in self.known:
             raise ModelError(
-                f"the expression names {node.id[:40]!r}, which is no quantity of the model; "
+                f"the expression names {name[:40]!r}, which is no quantity of the model; "
                 f"there are {', '.join(self.known)}",
                 where=_WHERE,
             )
-        return self.step(Step("name", name=node.id))
+        return self.step(Step("name", name=name))
 
     def _call(self, node: ast.Call, depth: int) -> int:
         name = node.func.id if isinstance(node.func, ast.Name) else None
@@ -157,12 +161,12 @@ def _shown(node: ast.expr) -> str:
 
 
 def is_name(text: str) -> bool:
-    """Say whether a text can name a quantity in an expression.
+    """Say whether a text can name a quantity in an expression; one with a hyphen stands there in quotes.
 
     Examples
     --------
-    >>> is_name("moisture"), is_name("solids-not-fat"), is_name("exp")
-    (True, False, False)
+    >>> is_name("moisture"), is_name("solids-not-fat"), is_name("exp"), is_name("solids not fat")
+    (True, True, False, False)
     """
     return bool(_NAME.fullmatch(text)) and text not in FUNCTIONS + CHOICES and not keyword.iskeyword(text)
 
@@ -174,7 +178,8 @@ def parse(text: str, known: Sequence[str]) -> Expression:
     ----------
     text : str
         Names, numbers, ``+ - * / **`` and the functions of `FUNCTIONS` and `CHOICES`; at most
-        2,000 characters, 100 levels of nesting and 400 operations.
+        2,000 characters, 100 levels of nesting and 400 operations. Single quotes around a name that holds
+        a hyphen tell it from a difference.
     known : sequence of str
         Names of the quantities of the model.
 
@@ -191,6 +196,8 @@ def parse(text: str, known: Sequence[str]) -> Expression:
     --------
     >>> parse("protein / (1 - moisture/100)", ("protein", "moisture")).names
     ('protein', 'moisture')
+    >>> parse("protein / ('total-solids'/100)", ("protein", "total-solids")).names
+    ('protein', 'total-solids')
     """
     if not text.strip():
         raise ModelError("the expression is empty", where=_WHERE)

@@ -53,8 +53,8 @@ class Quantity:
     def __post_init__(self) -> None:
         if not is_name(self.name):
             raise ModelError(
-                f"{self.name[:40]!r} cannot name a quantity: letters, digits and _ are allowed, and no "
-                "name of a function",
+                f"{self.name[:40]!r} cannot name a quantity: letters, digits, _ and - are allowed, and "
+                "no name of a function",
                 where=("name",),
             )
         if self.source not in SOURCES:

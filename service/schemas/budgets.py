@@ -43,7 +43,9 @@ class ModelSchema(StrictSchema):
     """The measurement model: an expression over named quantities."""
 
     loads_to = Model
-    expression = Text(500, required=True)
+    expression = Text(
+        500, required=True, about="A name that holds a hyphen stands in single quotes: 'total-solids'."
+    )
     quantities = ByKey(Name(), QuantitySchema, least=1, most=50, required=True)
 
 

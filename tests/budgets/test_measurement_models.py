@@ -216,7 +216,7 @@ def test_estimates_that_do_not_fit_the_model_are_named(estimates, where):
 @pytest.mark.parametrize(
     ("members", "where"),
     [
-        ({"name": "solids-not-fat"}, ("name",)),
+        ({"name": "solids not fat"}, ("name",)),
         ({"name": "sin"}, ("name",)),
         ({"name": "x", "source": "elsewhere"}, ("source",)),
         ({"name": "x", "source": "given"}, ("estimate",)),

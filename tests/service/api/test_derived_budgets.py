@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+import math
 from collections.abc import Callable, Iterator
 from dataclasses import replace
 from pathlib import Path
@@ -12,8 +13,9 @@ import pytest
 
 from budgets.components import Component
 from budgets.evidence.evaluation import MeanSquare, Term
+from budgets.propagation import Counts, combined
 from service.demo import plant
-from service.documents import BudgetDocument
+from service.documents import Bounds, BudgetDocument, Model
 from service.schemas import load
 from service.workflows.stored_budgets import assemble_budget, is_default_model
 from tests.service.api.conftest import callers_of, copied, open_app
@@ -158,3 +160,21 @@ def test_the_code_of_a_characteristic_may_hold_hyphens(expression: str) -> None:
     ]
     budget = assemble_budget(document, components, {"bias": 0.1})
     assert (budget.model, budget.bias, budget.characteristic) == (None, 0.1, "free-fat")
+
+
+def test_an_expression_names_a_channel_with_a_hyphen_in_quotes() -> None:
+    document = load(BudgetDocument, example(BudgetDocument))
+    reading = document.model.quantities["moisture"]
+    model = Model("100 * protein / 'total-solids'", {"protein": reading, "total-solids": reading})
+    ranges = {"protein": Bounds(20, 30), "total-solids": Bounds(90, 99)}
+    document = replace(document, characteristic="dry-protein", model=model, validated_ranges=ranges)
+    components = [
+        Component(name, name, "reading", (Term(1.0, MeanSquare(name, 0.01, 9)),), "A")
+        for name in ("protein", "total-solids")
+    ]
+    budget = assemble_budget(document, components, {})
+    assert budget.model is not None
+    assert budget.model.value({"protein": 24.0, "total-solids": 96.0}) == pytest.approx(25.0, rel=1e-15)
+    law = combined(budget, Counts((1,)), estimates={"protein": 24.0, "total-solids": 96.0})
+    expected = 0.1 * math.hypot(100 / 96, 100 * 24 / 96**2)
+    assert law.standard_uncertainty == pytest.approx(expected, rel=1e-12)
