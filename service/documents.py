@@ -374,6 +374,8 @@ class Study:
     """A body of test data with a design; ``characteristics`` names all of them where it is about several.
 
     ``options`` are what the design takes beside its data; the design refuses those that it does not know.
+    ``reference_methods`` says by which method the laboratory measured each of them; it is filled in when the
+    study is recorded, so that a laboratory may change its method without changing what an old study says.
     """
 
     code: str
@@ -386,6 +388,7 @@ class Study:
     rows: tuple[tuple[Cell, ...], ...]
     calibrations: Mapping[str, str] = field(default_factory=dict)
     laboratory: str | None = None
+    reference_methods: Mapping[str, str] = field(default_factory=dict)
     serves_until: date | None = None
     done_by: str | None = None
     procedure: str | None = None

@@ -40,6 +40,7 @@ class Channel:
 
 
 DERIVED: Final = "protein-in-snf"
+COMPUTED: Final = "computed from nitrogen, oven and gravimetric method"
 
 CHANNELS: Final = (
     Channel("moisture", "oven method", 0.05, 0.03, (2.2, 4.5), 6, 0.08),
@@ -141,8 +142,11 @@ def master_data() -> Iterator[tuple[str, Document]]:
             "code": LABORATORY,
             "kind": "laboratory",
             "methods": {
-                channel.code: {"method": channel.method, "trueness": {"declaration": _trueness(channel)}}
-                for channel in CHANNELS
+                **{
+                    channel.code: {"method": channel.method, "trueness": {"declaration": _trueness(channel)}}
+                    for channel in CHANNELS
+                },
+                DERIVED: {"method": COMPUTED},
             },
         },
     )
@@ -379,7 +383,7 @@ def _requirement(
     methods = {channel.code: channel.method for channel in CHANNELS}
     return {
         "characteristic": characteristic,
-        "method": methods.get(characteristic, "computed from one scan"),
+        "method": methods.get(characteristic, COMPUTED),
         "judged": "lot_mean",
         "lower_tolerance_limit": lower,
         "upper_tolerance_limit": upper,

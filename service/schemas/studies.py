@@ -177,6 +177,13 @@ class StudySchema(StrictSchema):
     unit = Text(32, required=True)
     calibrations = ByKey(Code(), Code(), most=20, load_default=dict)
     laboratory = Code(allow_none=True, load_default=None)
+    reference_methods = ByKey(
+        Code(),
+        Text(200),
+        most=20,
+        load_default=dict,
+        about="Characteristic to the method by which the laboratory measured it; filled in when recorded.",
+    )
     done_on = Day(required=True)
     serves_until = Day(allow_none=True, load_default=None)
     done_by = Text(100, allow_none=True, load_default=None)

@@ -27,6 +27,7 @@ from service.workflows import plant
 from service.workflows.budget_evidence import check_quantities, check_ranges, check_values_are_covered
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import Behind, FaultCollector, resolve
+from service.workflows.reference_methods import check_requirement
 from service.workflows.rules import RuleKey, compile_pair
 from service.workflows.stored_budgets import (
     ResolvedBudget,
@@ -347,7 +348,8 @@ def rules_of_pair(
     Raises
     ------
     InvalidRequest
-        No reading, taken as planned, could prove the requirement.
+        No reading, taken as planned, could prove the requirement, or the evidence belongs to another
+        reference method than it names.
     """
     stored = unit_of_work.master.get("characteristic", f"{document.product}/{document.characteristic}")
     assert stored is not None  # checked with the draft
@@ -359,6 +361,7 @@ def rules_of_pair(
         label = (
             f"{specification.code} (version {specification_version}, requires/{index}) with {document.code}"
         )
+        check_requirement(unit_of_work, requirement, document, label)
         compiled = compile_pair(budget, requirement, characteristic, label=label)
         for counts, numbers in compiled.items():
             key = RuleKey(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import re
+from collections.abc import Mapping
 from datetime import UTC, datetime
 from typing import Any, Final
 from zoneinfo import ZoneInfo
@@ -25,6 +26,7 @@ from service.workflows.calendar import serving_end
 from service.workflows.evidence import FaultCollector, resolve
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record
+from service.workflows.reference_methods import check_stated_methods, is_same_method, methods_of_study
 from service.workflows.services import Services
 
 LONGEST_SERVICE: Final = 3650
@@ -127,6 +129,7 @@ class _Task:
     plant: Plant
     named_sources: tuple[NamedSource, ...]
     readings_decimals: int | None
+    reference_methods: Mapping[str, str]
 
 
 def _task(unit_of_work: UnitOfWork, study: Study) -> _Task:
@@ -135,6 +138,7 @@ def _task(unit_of_work: UnitOfWork, study: Study) -> _Task:
     _check_references(unit_of_work, study, collector)
     _check_dates(study, plant_document, collector)
     _check_source(study, collector)
+    check_stated_methods(unit_of_work, study, collector)
     sources = [
         collector.attempt(f"#/named_sources/{index}/evidence", _source, unit_of_work, study, index)
         for index in range(len(study.named_sources))
@@ -144,6 +148,7 @@ def _task(unit_of_work: UnitOfWork, study: Study) -> _Task:
         plant_document,
         tuple(source for source in sources if source is not None),
         _readings_decimals(unit_of_work, study),
+        methods_of_study(unit_of_work, study),
     )
 
 
@@ -167,9 +172,10 @@ def _evaluate(services: Services, study: Study, task: _Task) -> tuple[Study, Eva
     collector.finish("The study cannot be evaluated.")
     assert evaluation is not None
     serves_until = study.serves_until or serving_end(study.design, study.done_on, task.plant)
+    methods = {**task.reference_methods, **study.reference_methods}
     counted_from_1 = tuple(SetAside(aside.row + 1, aside.reason) for aside in evaluation.set_aside)
     return (
-        dataclasses.replace(study, serves_until=serves_until),
+        dataclasses.replace(study, serves_until=serves_until, reference_methods=methods),
         dataclasses.replace(evaluation, set_aside=counted_from_1),
     )
 
@@ -199,6 +205,7 @@ def _readings_decimals(unit_of_work: UnitOfWork, study: Study) -> int | None:
 
 def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
     named = study.named_sources[index]
+    methods = methods_of_study(unit_of_work, study)
     behind = resolve(
         unit_of_work,
         named.evidence,
@@ -207,7 +214,8 @@ def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
         pointer=f"#/named_sources/{index}/evidence",
     )
     if behind.study is not None:
-        _check_source_fits(behind.study, study, named, f"#/named_sources/{index}/evidence/study")
+        ours = dataclasses.replace(study, reference_methods=methods)
+        _check_source_fits(behind.study, ours, named, f"#/named_sources/{index}/evidence/study")
     return NamedSource(source=named.source, estimate=behind.estimate, quantity=named.quantity or "")
 
 
@@ -232,6 +240,15 @@ def _check_source_fits(theirs: Study, ours: Study, named: DocumentedSource, poin
             collector.add(
                 pointer, detail, f"a study made on {', '.join(ours.calibrations.values()) or 'none'}"
             )
+    if named.source.startswith("reference"):
+        if None not in (theirs.laboratory, ours.laboratory) and theirs.laboratory != ours.laboratory:
+            detail = f"{theirs.code} was made in the laboratory {theirs.laboratory!r}"
+            collector.add(pointer, detail, f"one made in {ours.laboratory!r}, as the reference values")
+        for code in sorted(wanted & theirs.reference_methods.keys() & ours.reference_methods.keys()):
+            method, needed = theirs.reference_methods[code], ours.reference_methods[code]
+            if not is_same_method(method, needed):
+                detail = f"{theirs.code} was made by the method {method!r}"
+                collector.add(pointer, detail, f"one made by {needed!r}, as the reference values")
     collector.finish("A named source belongs to something else.")
 
 

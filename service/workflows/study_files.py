@@ -17,7 +17,8 @@ TEXTS: Final = (
     *("done_on", "serves_until", "done_by", "procedure"),
 )
 STRUCTURES: Final = (
-    *("calibrations", "independent", "characteristics", "named_sources", "set_aside", "options", "source"),
+    *("calibrations", "reference_methods", "independent", "characteristics", "named_sources", "set_aside"),
+    *("options", "source"),
 )
 _DEEPEST: Final = 200
 
