@@ -41,10 +41,11 @@ class _Options(TypedDict):
 
 @dataclass(frozen=True)
 class Limits:
-    """Acceptance limits, None where there is none or nothing could be accepted."""
+    """Acceptance limits, None where there is none; where nothing could be accepted, ``detail`` says why."""
 
     lower: float | None
     upper: float | None
+    detail: str = ""
 
 
 @dataclass(frozen=True)
@@ -264,9 +265,8 @@ def _limits(judged: Judged | None, law: CompiledPropagation, u: float, nu: float
         return None
     try:
         accepted = _accepted(judged, law, u, nu)
-    except BudgetsError:
-        # With this uncertainty the rule accepts nothing, or cannot be used.
-        return Limits(None, None)
+    except BudgetsError as error:
+        return Limits(None, None, error.message)
     return Limits(accepted.lower, accepted.upper)
 
 

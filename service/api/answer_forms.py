@@ -202,7 +202,10 @@ _EVALUATION = _object(
     },
 )
 
-_TWO_LIMITS = _object("Acceptance limits.", {"lower": _LIMIT, "upper": _LIMIT})
+_TWO_LIMITS = _object(
+    "Acceptance limits; where nothing could be accepted, detail says why.",
+    {"lower": _LIMIT, "upper": _LIMIT, "detail": _TEXT},
+)
 _ALTERNATIVE = _object(
     "The budget with this component changed; null where nothing is left without it.",
     {

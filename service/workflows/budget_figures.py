@@ -267,7 +267,7 @@ def _alternative(alternative: Alternative) -> Answer:
 
 
 def _limits(limits: Limits | None) -> Answer | None:
-    return None if limits is None else {"lower": limits.lower, "upper": limits.upper}
+    return None if limits is None else asdict(limits)
 
 
 def _evidence(document: BudgetDocument) -> list[Answer]:

@@ -79,7 +79,10 @@ def test_without_the_only_component_nothing_is_left(a_budget, a_component):
 def test_a_rule_that_accepts_nothing_has_no_limits(a_budget, a_component):
     budget = a_budget(components=(a_component(), a_component("rest", 2.0, level="lot")), bias=None)
     explained = explain(budget, Counts((1,)), tolerance=TOLERANCE, rule=RULE)
-    assert explained.acceptance_limits == Limits(None, None)
+    limits = explained.acceptance_limits
+    assert (limits.lower, limits.upper) == (None, None)
+    assert "the guard bands" in limits.detail
+    assert explained.components[1].without.acceptance_limits.detail == ""
     assert explained.components[1].without.acceptance_limits.upper < 4.0
 
 
