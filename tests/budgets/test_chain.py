@@ -111,3 +111,34 @@ def test_the_standard_error_of_prediction_whole_does_not_fall_with_more_readings
             bias,
             bias=0.04,
         )
+
+
+def test_a_whole_standard_error_and_the_bias_of_the_same_pairs_are_one_term(evidence):
+    """SEP^2 (1 + 1/n) is one mean square with n - 1 degrees of freedom, not two of 59."""
+    val = evidence["val"]
+    budget = a_budget(
+        Component.from_estimate("sep", "moisture", None, val.estimate("standard_error_of_prediction"), "A"),
+        Component.from_estimate("beyond", "moisture", None, val.estimate("repeatability_beyond_study"), "A"),
+        Component.from_estimate("bias", "bias", None, val.estimate("bias"), "A"),
+        bias=0.04,
+    )
+    result = combined(budget, Counts((2,)))
+    sep = val.estimate("standard_error_of_prediction").variance
+    assert result.variance == pytest.approx(sep * (1 + 1 / 60), rel=1e-12)
+    assert result.effective_degrees_of_freedom == pytest.approx(59, rel=1e-12)
+
+
+def test_the_trueness_of_the_laboratory_is_added_and_never_shrinks(evidence):
+    """All reference values of a study share it: no number of pairs, samples or readings makes it smaller."""
+    val = evidence["val"]
+    parts = (
+        Component.from_estimate("r", "moisture", None, evidence["rep"].estimate(), "A"),
+        Component.from_estimate("rest", "moisture", None, val.estimate("remainder"), "A"),
+        Component.from_estimate("bias", "bias", None, val.estimate("bias"), "A"),
+    )
+    ring = Component.from_estimate("trueness", "bias", None, evidence["ring"].estimate(), "B")
+    assert ring.level == "reference"
+    for counts in (Counts((1,)), Counts((4,)), Counts((4, 4, 4))):
+        without = combined(a_budget(*parts, bias=0.04), counts).variance
+        beside = combined(a_budget(*parts, ring, bias=0.04), counts).variance
+        assert beside - without == pytest.approx(0.03**2)

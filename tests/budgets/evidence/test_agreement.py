@@ -6,8 +6,10 @@ from scipy import stats
 
 from budgets.declarations import Declaration, evaluate
 from budgets.errors import EvidenceError, NotSupportedError
-from budgets.evidence.evaluation import MeanSquare, Term
+from budgets.evidence.evaluation import MeanSquare, SetAside, Term
+from budgets.evidence.remainder import run_share
 from budgets.evidence.study_data import NamedSource, StudyData, evaluate_study
+from budgets.evidence.validation_pairs import Pair
 
 INDEPENDENT = {"independent": True}
 
@@ -192,6 +194,27 @@ def test_a_source_named_twice_is_refused(an_estimate):
         evaluated(simulated(), sources=twice)
 
 
+def test_the_root_mean_square_error_is_no_estimate():
+    """It holds the bias: a component made of it beside a bias would count that twice."""
+    evaluation = evaluated(simulated())
+    with pytest.raises(EvidenceError, match="there is no estimate 'root_mean_square_error_of_prediction'"):
+        evaluation.estimate("root_mean_square_error_of_prediction")
+
+
+def test_a_pair_set_aside_leaves_the_standard_error_with_it_too():
+    rows = simulated(readings=1, references=1)
+    rows[7] = (rows[7][0], rows[7][1] + 1, rows[7][2])
+    data = StudyData(("pair", "reading", "reference"), tuple(rows))
+    aside = [SetAside(7, "cup not filled")]
+    evaluation = evaluate_study("agreement", data, study="val", options=INDEPENDENT, set_aside=aside)
+    kept = differences(rows[:7] + rows[8:])
+    without = evaluation.estimate("standard_error_of_prediction").standard_uncertainty
+    assert without == pytest.approx(kept.std(ddof=1))
+    estimates = evaluation.diagnostics["with_set_aside"]["estimates"]
+    (whole,) = [each for each in estimates if each["name"] == "standard_error_of_prediction"]
+    assert whole["standard_uncertainty"] == pytest.approx(differences(rows).std(ddof=1))
+
+
 def with_column(rows, name, label):
     return [(*row, label(int(row[0][1:]))) for row in rows], ("pair", "reading", "reference", name)
 
@@ -209,6 +232,20 @@ def test_a_bias_of_clustered_pairs_comes_from_the_mean_square_between_clusters()
     assert bias.degrees_of_freedom == pytest.approx(11)
     assert evaluation.diagnostics["bias_uncertainty_from"] == "group"
     assert "no-group-column" not in codes(evaluation)
+
+
+def test_a_bias_of_runs_comes_from_the_mean_square_between_runs():
+    """Runs of the reference method are clusters as days are, and of the two the worse counts."""
+    generator = np.random.default_rng(14)
+    shifts = generator.normal(0, 0.1, 12)
+    rows = [
+        (f"V{i}", 3 + shifts[i // 5] + generator.normal(0, 0.03), 3.0, f"run {i // 5}", f"d{i % 6}")
+        for i in range(60)
+    ]
+    evaluation = evaluated(rows, ("pair", "reading", "reference", "run", "group"))
+    means = np.array([row[1] for row in rows]).reshape(12, 5).mean(axis=1)
+    assert evaluation.estimate("bias").variance == pytest.approx(means.var(ddof=1) / 12)
+    assert evaluation.diagnostics["bias_uncertainty_from"] == "run"
 
 
 def test_clusters_that_do_not_differ_leave_the_pairs():
@@ -245,6 +282,15 @@ def test_the_standard_error_of_prediction_holds_a_part_of_the_run(an_estimate, l
     terms = evaluated(rows, columns, sources=source).estimate("remainder").terms
     coefficients = {t.mean_square.code: t.coefficient for t in terms}
     assert coefficients["elsewhere/session"] == pytest.approx(-share)
+
+
+def test_a_simulation_finds_the_part_of_the_run_in_the_standard_error_of_prediction():
+    """Two runs of 30 pairs that differ by the runs alone: .51 of their variance."""
+    runs = np.random.default_rng(15).normal(0, 1, (4000, 2)).repeat(30, axis=1)
+    pairs = [Pair(str(i), (0.0,), (0.0,), None, str(i // 30)) for i in range(60)]
+    assert run_share(pairs) == pytest.approx(0.51, abs=0.005)
+    # The standard error of the simulated mean is 1.2 %.
+    assert runs.var(axis=1, ddof=1).mean() == pytest.approx(run_share(pairs), rel=0.05)
 
 
 @pytest.mark.parametrize(

@@ -79,6 +79,20 @@ def test_bias_and_standard_error_come_from_all_that_is_known():
     assert found.used == 40
 
 
+def test_a_value_below_its_limit_is_neither_zero_nor_half_of_it():
+    """Over 60 studies with a third of the references below 1: what either substitution makes of the bias."""
+    found, halves, zeros = [], [], []
+    for seed in range(60):
+        rows = simulated(n=60, seed=seed, limit=1.0)
+        found.append(evaluated(rows).estimate("bias").value)
+        for into, share in ((halves, 0.5), (zeros, 0.0)):
+            into.append(np.mean([x - (share if isinstance(y, dict) else y) for _, x, y in rows]))
+    # The standard error of the mean over the studies is 0.002.
+    assert np.mean(found) == pytest.approx(0.05, abs=0.01)
+    assert abs(np.mean(halves) - 0.05) > 0.01
+    assert abs(np.mean(zeros) - 0.05) > 0.1
+
+
 def test_a_reading_below_bounds_the_difference_from_above_and_two_say_nothing():
     rows = [*simulated(limit=0.0), ("R", {"below": 0.2}, 0.3), ("B", {"below": 0.2}, {"below": 0.2})]
     found = evaluated(rows)

@@ -59,8 +59,16 @@ def test_bad_cells_are_named_by_row_and_column(row, where, match):
     fault_of(where, match, rows=(*ROWS, row))
 
 
-def test_values_below_a_reporting_limit_are_not_supported_yet():
-    fault_of(("rows", 12, 2), kind=NotSupportedError, rows=(*ROWS, ("P0", 1, {"below": 0.1})))
+@pytest.mark.parametrize("name", DESIGNS)
+def test_a_value_below_its_reporting_limit_is_refused_where_no_likelihood_is_there_for_it(name):
+    """Never taken as zero or half of the limit; the design agreement has a likelihood for it."""
+    layout = DESIGNS[name].layout
+    measured = next(column for column in layout.required if layout.is_number(column))
+    assert (measured in layout.censorable) == (name == "agreement")
+    if name != "agreement":
+        row = tuple({"below": 0.1} if column == measured else "a" for column in layout.required)
+        where = ("rows", 0, layout.required.index(measured))
+        fault_of(where, kind=NotSupportedError, rows=[row], columns=layout.required, design=name)
 
 
 def test_all_faults_are_told_at_once_but_not_more_than_twenty():
