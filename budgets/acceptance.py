@@ -3,17 +3,37 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import NoReturn
+from typing import TypedDict, Unpack
 
-from scipy.optimize import brentq
-
-from budgets.conformity import Tolerance, measurement_capability_index, shifted, upper_tail
+from budgets.conformity import Tolerance, shifted
 from budgets.decision_rules import DecisionRule
-from budgets.errors import EmptyAcceptanceError
-from budgets.propagation import coverage_factor, upper_quantile
+from budgets.empty_acceptance import nothing_left, opened
+from budgets.error_distributions import ErrorDistribution, StudentT
+from budgets.guard_bands import Guard, guard_by_risk, guard_of
+from budgets.limit_search import least_between, limit_between
+from budgets.natural_bounds import check_truncation, truncated_limits
 
-_FULL_PRECISION = 4 * 2.220446049250313e-16
+Ends = tuple[float | None, float | None]
+
+
+class AcceptanceOptions(TypedDict, total=False):
+    """What beside the uncertainty bears on acceptance.
+
+    ``bias``: uncorrected bias (analyzer - reference), 0 when corrected. ``domain``, ``validated_range``:
+    where the characteristic can lie at all, and where the evidence speaks; they do not become acceptance
+    limits, but the acceptance interval must leave something inside both. ``truncated``: probabilities are
+    those within the domain (`budgets.natural_bounds`). ``risk_per_look``, ``guard_band``: as in
+    `budgets.guard_bands.guard_of`.
+    """
+
+    bias: float
+    domain: Ends
+    validated_range: Ends
+    truncated: bool
+    risk_per_look: float | None
+    guard_band: float | None
 
 
 @dataclass(frozen=True)
@@ -33,16 +53,23 @@ class AcceptanceInterval:
     guard_band_lower: float | None
     guard_band_upper: float | None
 
+    @classmethod
+    def between(cls, tolerance: Tolerance, lower: float | None, upper: float | None) -> AcceptanceInterval:
+        """Return the interval between two limits, with the guard bands that they leave."""
+        return cls(
+            lower,
+            upper,
+            None if lower is None or tolerance.lower is None else lower - tolerance.lower,
+            None if upper is None or tolerance.upper is None else tolerance.upper - upper,
+        )
+
 
 def acceptance_interval(
     rule: DecisionRule,
     tolerance: Tolerance,
     standard_uncertainty: float,
-    degrees_of_freedom: float,
-    *,
-    bias: float = 0.0,
-    domain: tuple[float | None, float | None] = (None, None),
-    validated_range: tuple[float | None, float | None] = (None, None),
+    distribution: ErrorDistribution,
+    **options: Unpack[AcceptanceOptions],
 ) -> AcceptanceInterval:
     """Return the estimates that a decision rule accepts.
 
@@ -51,12 +78,10 @@ def acceptance_interval(
     rule : DecisionRule
     tolerance : Tolerance
     standard_uncertainty : float, unit of the characteristic
-    degrees_of_freedom : float
-    bias : float, unit of the characteristic
-        Uncorrected bias (analyzer - reference); 0 when corrected.
-    domain, validated_range : tuple of float or None, unit of the characteristic
-        Where the characteristic can lie at all, and where the evidence speaks. They do not become
-        acceptance limits, but the acceptance interval must leave something inside both.
+    distribution : ErrorDistribution
+        Of (true value - estimate)/u.
+    **options
+        See `AcceptanceOptions`.
 
     Returns
     -------
@@ -68,6 +93,8 @@ def acceptance_interval(
         If the condition of simple acceptance is not met.
     EmptyAcceptanceError
         If no estimate could be accepted, with what would open the interval.
+    NotSupportedError
+        For probabilities within the domain beside what they are not built for.
 
     Notes
     -----
@@ -75,105 +102,98 @@ def acceptance_interval(
     ``w(u) + max(0, -b)`` at the upper and ``w(u) + max(0, b)`` at the lower limit.
     """
     rule.check_condition(tolerance, standard_uncertainty)
-    lower, upper = shifted(tolerance, bias)
-    width = math.inf if lower is None or upper is None else upper - lower
-    factor, largest = _guard(rule, width, standard_uncertainty, degrees_of_freedom)
-    if factor is None:
-        _refuse(tolerance, standard_uncertainty, width, largest)
-    accepted = _limits(tolerance, lower, upper, factor * standard_uncertainty)
-    check_reach(accepted, tolerance, standard_uncertainty, domain, validated_range)
-    return accepted
+    guards = guards_of(rule, distribution, options)
+    truncated = options.get("truncated", False) and guards[0].risk is not None
+    domain, bias = options.get("domain", (None, None)), options.get("bias", 0.0)
+    if options.get("truncated", False):
+        check_truncation(rule, domain, bias)
+    moved = shifted(tolerance, bias)
+
+    def limits(factor: float) -> AcceptanceInterval:
+        u = factor * standard_uncertainty
+        found = [
+            truncated_limits(guard.risk, tolerance, u, distribution, domain)
+            if truncated and guard.risk is not None
+            else _inside(guard, moved, u, distribution)
+            for guard in guards
+        ]
+        return reached(tolerance, found, options)
+
+    return opened(limits, tolerance, standard_uncertainty)
 
 
-def _limits(
-    tolerance: Tolerance, lower: float | None, upper: float | None, guard_band: float
-) -> AcceptanceInterval:
-    accepted_lower = None if lower is None else lower + guard_band
-    accepted_upper = None if upper is None else upper - guard_band
-    if accepted_lower is not None and accepted_upper is not None and accepted_lower > accepted_upper:
-        # Only rounding can cross them here: the interval is the single point in the middle.
-        accepted_lower = accepted_upper = (accepted_lower + accepted_upper) / 2
-    return AcceptanceInterval(
-        accepted_lower,
-        accepted_upper,
-        None if accepted_lower is None or tolerance.lower is None else accepted_lower - tolerance.lower,
-        None if accepted_upper is None or tolerance.upper is None else tolerance.upper - accepted_upper,
-    )
-
-
-def _guard(rule: DecisionRule, width: float, u: float, nu: float) -> tuple[float | None, float]:
-    """Return the guard band in units of u (None: nothing is left) and the largest u that leaves something."""
-    if rule.largest_risk is not None:
-        return _guard_by_risk(rule.largest_risk, width, u, nu)
-    factor = 0.0
-    if rule.multiple is not None and rule.coverage_probability is not None and rule.sides is not None:
-        factor = rule.multiple * coverage_factor(rule.coverage_probability, nu, sides=rule.sides)
-    largest = math.inf if factor == 0 else max(width, 0.0) / (2 * factor)
-    return (factor if 2 * factor * u <= width else None), largest
-
-
-def _guard_by_risk(risk: float, width: float, u: float, nu: float) -> tuple[float | None, float]:
-    """Solve both tails at once; a single limit has the quantile itself.
-
-    The conformance probability is largest in the middle, so that is where it is seen whether anything is
-    accepted; from there to the one-sided quantile the risk grows steadily, which brackets the root.
-    """
-    one_sided = upper_quantile(risk, nu)
-    if math.isinf(width):
-        return one_sided, math.inf
-    in_the_middle = upper_quantile(risk / 2, nu)
-    largest = max(width, 0.0) / (2 * in_the_middle)
-    half = width / (2 * u)
-    if half < in_the_middle:
-        return None, largest
-
-    def excess(z: float) -> float:
-        # JCGM 106, 8.3.3: the risks beyond both limits at distance z (in u) inside the nearer one.
-        return float(upper_tail(z, nu) + upper_tail(2 * half - z, nu)) - risk
-
-    if excess(one_sided) <= 0:
-        return one_sided, largest
-    if excess(half) >= 0:
-        return half, largest
-    return float(brentq(excess, one_sided, half, xtol=_FULL_PRECISION, rtol=_FULL_PRECISION)), largest
-
-
-def check_reach(
-    accepted: AcceptanceInterval,
-    tolerance: Tolerance,
-    standard_uncertainty: float,
-    domain: tuple[float | None, float | None],
-    validated_range: tuple[float | None, float | None],
-) -> None:
-    """Check that something of an acceptance interval lies where the evidence speaks.
+def guards_of(
+    rule: DecisionRule, distribution: ErrorDistribution, options: AcceptanceOptions
+) -> tuple[Guard, ...]:
+    """Return the guards of a rule, all of which must be kept.
 
     Parameters
     ----------
-    accepted : AcceptanceInterval
+    rule : DecisionRule
+    distribution : ErrorDistribution
+    options : AcceptanceOptions
+
+    Returns
+    -------
+    tuple of Guard
+        The guard of its kind, and its cap on the specific risk.
+
+    Raises
+    ------
+    LimitsError
+        As in `budgets.guard_bands.guard_of`.
+    """
+    guard = guard_of(
+        rule, distribution, risk_per_look=options.get("risk_per_look"), guard_band=options.get("guard_band")
+    )
+    if rule.specific_risk_cap is None:
+        return (guard,)
+    return guard, guard_by_risk(rule.specific_risk_cap, distribution)
+
+
+def reached(tolerance: Tolerance, found: Sequence[Ends], options: AcceptanceOptions) -> AcceptanceInterval:
+    """Return what several guards accept together, checked that the evidence speaks of some of it.
+
+    Parameters
+    ----------
     tolerance : Tolerance
-    standard_uncertainty : float, unit of the characteristic
-    domain, validated_range : tuple of float or None, unit of the characteristic
+    found : sequence of tuple of float or None, unit of the characteristic
+        Acceptance limits, without one on the same sides.
+    options : AcceptanceOptions
+
+    Returns
+    -------
+    AcceptanceInterval
 
     Raises
     ------
     EmptyAcceptanceError
-        If nothing does.
+        If nothing is left, or nothing that lies in the natural domain and in the validated range.
     """
-    lowest = -math.inf if accepted.lower is None else accepted.lower
-    highest = math.inf if accepted.upper is None else accepted.upper
+    lower = max((low for low, _ in found if low is not None), default=None)
+    upper = min((high for _, high in found if high is not None), default=None)
+    lowest = -math.inf if lower is None else lower
+    highest = math.inf if upper is None else upper
+    if lowest > highest:
+        nothing_left("the cap on the specific risk leaves nothing")
+    accepted = AcceptanceInterval.between(tolerance, lower, upper)
     for name, (start, end), remedy in (
-        ("natural domain of the characteristic", domain, "Check the limits and their unit."),
-        ("validated range", validated_range, "Validate the method over the range that is to be accepted."),
+        (
+            "natural domain of the characteristic",
+            options.get("domain", (None, None)),
+            "Check the limits and their unit.",
+        ),
+        (
+            "validated range",
+            options.get("validated_range", (None, None)),
+            "Validate the method over the range that is to be accepted.",
+        ),
     ):
         lowest = max(lowest, -math.inf if start is None else start)
         highest = min(highest, math.inf if end is None else end)
         if lowest > highest:
-            raise EmptyAcceptanceError(
-                f"no estimate can be accepted: the acceptance interval ({_words(accepted)}) lies outside of "
-                f"the {name}",
-                capability_index=measurement_capability_index(tolerance, standard_uncertainty),
-                remedy=remedy,
-            )
+            nothing_left(f"the acceptance interval ({_words(accepted)}) lies outside of the {name}", remedy)
+    return accepted
 
 
 def _words(accepted: AcceptanceInterval) -> str:
@@ -185,17 +205,56 @@ def _words(accepted: AcceptanceInterval) -> str:
     return " ".join(parts)
 
 
-def _refuse(tolerance: Tolerance, standard_uncertainty: float, width: float, largest: float) -> NoReturn:
-    index = measurement_capability_index(tolerance, standard_uncertainty)
+def _inside(guard: Guard, moved: Ends, u: float, distribution: ErrorDistribution) -> Ends:
+    """Return the limits that a guard leaves inside of tolerance limits that a bias has moved."""
+    lower, upper = moved
+    if lower is None or upper is None:
+        return (
+            None if lower is None else lower + guard.lower_factor * u + guard.width,
+            None if upper is None else upper - guard.upper_factor * u - guard.width,
+        )
+    width = upper - lower
     if width <= 0:
-        reason = "the uncorrected bias alone uses up the tolerance interval"
-        remedy = "Correct the bias instead of leaving it to the guard band."
-    else:
-        reason = f"the guard bands of a standard uncertainty of {standard_uncertainty:.4g} overlap"
-        remedy = f"The standard uncertainty would have to be at most {largest:.4g}."
-    raise EmptyAcceptanceError(
-        f"no estimate can be accepted: {reason}; this measurement (capability index "
-        f"{0.0 if index is None else index:.3g}) cannot prove this specification. {remedy}",
-        capability_index=index,
-        remedy=remedy,
+        nothing_left(
+            "the uncorrected bias alone uses up the tolerance interval",
+            "Correct the bias instead of leaving it to the guard band.",
+        )
+    factors = guard.lower_factor, guard.upper_factor
+    if guard.risk is not None:
+        factors = _guards_by_risk(guard, guard.risk, width / u, distribution)
+    elif sum(factors) * u > width - 2 * guard.width:
+        nothing_left("the guard bands overlap")
+    lower, upper = lower + factors[0] * u + guard.width, upper - factors[1] * u - guard.width
+    if lower > upper:
+        # Only rounding can cross them here: the interval is the single point in the middle.
+        lower = upper = (lower + upper) / 2
+    return lower, upper
+
+
+def _guards_by_risk(
+    guard: Guard, risk: float, width: float, distribution: ErrorDistribution
+) -> tuple[float, float]:
+    """Return the guard bands, in units of u, that hold the risk of both tails at once.
+
+    z is the distance inside of the upper limit. The point of the smallest risk is found first, so that it is
+    seen whether anything is accepted; from there to the one-sided quantiles the risk grows steadily, which
+    brackets the roots.
+    """
+
+    def excess(z: float) -> float:
+        # JCGM 106, 8.3.3: the risks beyond both limits.
+        return float(distribution.upper_tail(z) + distribution.lower_tail(z - width)) - risk
+
+    if isinstance(distribution, StudentT):
+        # Symmetric: the smallest risk is that of the middle.
+        if width < 2 * distribution.upper_quantile(risk / 2):
+            nothing_left("the guard bands overlap")
+        factor = limit_between(excess, width / 2, guard.upper_factor)
+        return factor, factor
+    best = least_between(excess, guard.upper_factor, width - guard.lower_factor)
+    if excess(best) > 0:
+        nothing_left("the guard bands overlap")
+    return (
+        width - limit_between(excess, best, width - guard.lower_factor),
+        limit_between(excess, best, guard.upper_factor),
     )

@@ -1,7 +1,8 @@
-"""Conformity: conformance probability, decision rules and the acceptance interval they give.
+"""Conformity: tolerance limits and the conformance probability of an estimate.
 
-Every probability is the tail of Student's t (of the normal distribution for infinite degrees of freedom)
-on the scale of the combined standard uncertainty. Tails are computed as tails, never as one minus the rest.
+Every probability is a tail of the distribution of the standardised error (see `budgets.error_distributions`):
+Student's t on the scale of the combined standard uncertainty, or Monte Carlo quantiles. Tails are computed as
+tails, never as one minus the rest.
 
 An uncorrected bias b (mean of analyzer minus reference) counts in its harmful direction only: the upper
 tail is taken at ``estimate + max(0, -b)``, the lower one at ``estimate - max(0, b)``.
@@ -11,15 +12,33 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Any, TypeVar, cast
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtr, stdtr
 
+from budgets.error_distributions import ErrorDistribution, Real, probability_between
 from budgets.errors import LimitsError
 
-Real = TypeVar("Real", float, NDArray[np.float64])
+
+@dataclass(frozen=True)
+class StatedLimits:
+    """The limits that a specification states, where estimates are rounded before they are compared.
+
+    Parameters
+    ----------
+    lower, upper : float or None, unit of the characteristic
+    lower_inclusive, upper_inclusive : bool
+        Whether a rounded estimate exactly at the limit is inside.
+    decimals : int
+        Decimal places that estimates are rounded to.
+    """
+
+    lower: float | None
+    upper: float | None
+    lower_inclusive: bool
+    upper_inclusive: bool
+    decimals: int
 
 
 @dataclass(frozen=True)
@@ -32,6 +51,9 @@ class Tolerance:
         None: no such limit.
     lower_inclusive, upper_inclusive : bool
         Whether an estimate exactly at the limit is inside.
+    stated : StatedLimits or None
+        Where estimates are rounded before they are compared: what was stated. The limits above are then the
+        effective ones, for estimates that are not rounded (see `budgets.rounded_comparison`).
 
     Raises
     ------
@@ -47,6 +69,7 @@ class Tolerance:
     upper: float | None
     lower_inclusive: bool = True
     upper_inclusive: bool = True
+    stated: StatedLimits | None = None
 
     def __post_init__(self) -> None:
         if self.lower is None and self.upper is None:
@@ -94,36 +117,36 @@ def shifted(tolerance: Tolerance, bias: float) -> tuple[float | None, float | No
     return lower, upper
 
 
-def upper_tail(z: Real, degrees_of_freedom: float) -> Real:
-    """Return the probability that a standardised error exceeds z.
+def standardised_limits(
+    estimate: Real,
+    standard_uncertainty: float | NDArray[np.float64],
+    tolerance: Tolerance,
+    *,
+    bias: float = 0.0,
+) -> tuple[Real | None, Real | None]:
+    """Return the errors, in standard uncertainties, beyond which the true value is out of tolerance.
 
     Parameters
     ----------
-    z : float or ndarray
-        In units of the standard uncertainty.
-    degrees_of_freedom : float
-        ``math.inf`` for the normal distribution.
+    estimate, standard_uncertainty, tolerance, bias
+        As in `tails`.
 
     Returns
     -------
-    float or ndarray
-        Relative error below 1e-12 for z from -37 to 37.
+    tuple
+        ``(T_L - y)/u`` and ``(T_U - y)/u``, with the limits moved by an uncorrected bias; None where there is
+        no limit.
     """
-    probability: Any
-    if math.isinf(degrees_of_freedom):
-        probability = ndtr(-z)
-    elif degrees_of_freedom == 1:
-        # The Cauchy distribution; the general routine loses digits next to z = 0 here.
-        probability = np.arctan2(1.0, z) / np.pi
-    else:
-        probability = stdtr(degrees_of_freedom, -z)
-    return cast("Real", probability)
+    lower, upper = shifted(tolerance, bias)
+    below: Any = None if lower is None else (lower - estimate) / standard_uncertainty
+    above: Any = None if upper is None else (upper - estimate) / standard_uncertainty
+    return below, above
 
 
 def tails(
     estimate: Real,
-    standard_uncertainty: float,
-    degrees_of_freedom: float,
+    standard_uncertainty: float | NDArray[np.float64],
+    distribution: ErrorDistribution,
     tolerance: Tolerance,
     *,
     bias: float = 0.0,
@@ -133,8 +156,9 @@ def tails(
     Parameters
     ----------
     estimate : float or ndarray, unit of the characteristic
-    standard_uncertainty : float, unit of the characteristic
-    degrees_of_freedom : float
+    standard_uncertainty : float or ndarray, unit of the characteristic
+    distribution : ErrorDistribution
+        Of (true value - estimate)/u.
     tolerance : Tolerance
     bias : float, unit of the characteristic
         Uncorrected bias; 0 when it was corrected.
@@ -148,25 +172,18 @@ def tails(
     -----
     Source: JCGM 106:2012, 7.2 to 7.4 (from memory), with t of the effective degrees of freedom.
     """
-    lower, upper = shifted(tolerance, bias)
+    lower, upper = standardised_limits(estimate, standard_uncertainty, tolerance, bias=bias)
     nothing = estimate * 0.0
-    below = (
-        nothing
-        if lower is None
-        else upper_tail((estimate - lower) / standard_uncertainty, degrees_of_freedom)
+    return (
+        nothing if lower is None else distribution.lower_tail(lower),
+        nothing if upper is None else distribution.upper_tail(upper),
     )
-    above = (
-        nothing
-        if upper is None
-        else upper_tail((upper - estimate) / standard_uncertainty, degrees_of_freedom)
-    )
-    return below, above
 
 
 def conformance_probability(
     estimate: Real,
-    standard_uncertainty: float,
-    degrees_of_freedom: float,
+    standard_uncertainty: float | NDArray[np.float64],
+    distribution: ErrorDistribution,
     tolerance: Tolerance,
     *,
     bias: float = 0.0,
@@ -175,7 +192,7 @@ def conformance_probability(
 
     Parameters
     ----------
-    estimate, standard_uncertainty, degrees_of_freedom, tolerance, bias
+    estimate, standard_uncertainty, distribution, tolerance, bias
         As in `tails`.
 
     Returns
@@ -186,27 +203,22 @@ def conformance_probability(
 
     Notes
     -----
-    Source: JCGM 106:2012, 7.4, eq. (10) (from memory). For two limits it is taken from the side on which
-    the estimate lies, ``Q((d - h)/u) - Q((d + h)/u)`` with d the distance from the middle and h half the
-    width, so that nothing cancels far outside.
+    Source: JCGM 106:2012, 7.4, eq. (10) (from memory).
 
     Examples
     --------
-    >>> pc = conformance_probability(13.6, 1.8, math.inf, Tolerance(12.5, 16.3))
+    >>> from budgets.error_distributions import StudentT
+    >>> pc = conformance_probability(13.6, 1.8, StudentT(math.inf), Tolerance(12.5, 16.3))
     >>> round(float(pc), 2)
     0.66
     """
-    lower, upper = shifted(tolerance, bias)
-    if lower is None or upper is None:
-        if upper is not None:
-            return upper_tail((estimate - upper) / standard_uncertainty, degrees_of_freedom)
-        assert lower is not None  # a tolerance has at least one limit
-        return upper_tail((lower - estimate) / standard_uncertainty, degrees_of_freedom)
-    distance = abs(estimate - (lower + upper) / 2)
-    half_width = (upper - lower) / 2
-    near = upper_tail((distance - half_width) / standard_uncertainty, degrees_of_freedom)
-    far = upper_tail((distance + half_width) / standard_uncertainty, degrees_of_freedom)
-    return cast("Real", np.maximum(near - far, 0.0))
+    lower, upper = standardised_limits(estimate, standard_uncertainty, tolerance, bias=bias)
+    if lower is not None and upper is not None:
+        return probability_between(distribution, lower, upper)
+    if upper is not None:
+        return distribution.lower_tail(upper)
+    assert lower is not None  # a tolerance has at least one limit
+    return distribution.upper_tail(lower)
 
 
 def measurement_capability_index(tolerance: Tolerance, standard_uncertainty: float) -> float | None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 
 from budgets.conformity import Tolerance, measurement_capability_index
 from budgets.errors import BudgetsError, LimitsError, NotSupportedError, raise_collected
@@ -12,8 +12,14 @@ _MEMBERS: dict[str, tuple[str, ...]] = {
     "simple": ("largest_standard_uncertainty", "least_capability_index"),
     "guarded_by_factor": ("multiple", "coverage_probability", "sides"),
     "guarded_by_specific_risk": ("largest_risk",),
+    "guarded_by_global_risk": ("largest_risk", "specific_risk_cap"),
 }
+# Understood, but without what gives them their meaning.
 _LATER_KINDS = ("guarded_by_global_risk",)
+_LATER = ("replicate_level", "largest_lot_risk")
+_OWN_MEMBERS = tuple(dict.fromkeys(name for members in _MEMBERS.values() for name in members))
+REJECTIONS = ("at_tolerance_limit", "guarded")
+LARGEST_ROUNDS = 10
 
 
 @dataclass(frozen=True)
@@ -22,7 +28,7 @@ class DecisionRule:
 
     Parameters
     ----------
-    kind : {"simple", "guarded_by_factor", "guarded_by_specific_risk"}
+    kind : {"simple", "guarded_by_factor", "guarded_by_specific_risk", "guarded_by_global_risk"}
     largest_standard_uncertainty : float, unit of the characteristic
         ``simple``: the measurement must not be worse than this.
     least_capability_index : float
@@ -35,6 +41,17 @@ class DecisionRule:
         ``guarded_by_factor``: of the coverage interval of that U.
     largest_risk : float
         ``guarded_by_specific_risk``: largest probability that an accepted lot does not conform.
+        ``guarded_by_global_risk``: largest global consumer's risk.
+    specific_risk_cap : float
+        ``guarded_by_global_risk``: largest specific risk of any lot.
+    rejection : {"at_tolerance_limit", "guarded"}
+        What is rejected: all that is outside of tolerance, or only what is proved to be.
+    rounds : int
+        How often a lot that is held may be judged, with all its readings joined.
+    replicate_level : float
+        Level at which replicates disagree.
+    largest_lot_risk : float
+        Largest probability that a released lot misses any of what is required.
 
     Raises
     ------
@@ -56,6 +73,11 @@ class DecisionRule:
     coverage_probability: float | None = None
     sides: int | None = None
     largest_risk: float | None = None
+    specific_risk_cap: float | None = None
+    rejection: str = "at_tolerance_limit"
+    rounds: int = 1
+    replicate_level: float | None = None
+    largest_lot_risk: float | None = None
 
     def __post_init__(self) -> None:
         if self.kind in _LATER_KINDS:
@@ -65,11 +87,11 @@ class DecisionRule:
                 f"{self.kind!r} is no decision rule; there are {', '.join(_MEMBERS)}", where=("kind",)
             )
         faults = self._faults_of_presence()
-        raise_collected(faults or self._faults_of_values())
+        raise_collected(faults or [*self._faults_of_values(), *self._faults_of_common_members()])
 
     def _faults_of_presence(self) -> list[BudgetsError]:
         own = _MEMBERS[self.kind]
-        given = [item.name for item in fields(self)[1:] if getattr(self, item.name) is not None]
+        given = [name for name in _OWN_MEMBERS if getattr(self, name) is not None]
         faults: list[BudgetsError] = [
             LimitsError(
                 f"{name} does not belong to the rule {self.kind}, which has {', '.join(own)}", where=(name,)
@@ -110,8 +132,35 @@ class DecisionRule:
                     f"coverage_probability must lie between {least:g} and 1", where=("coverage_probability",)
                 )
             )
-        if self.largest_risk is not None and not 0 < self.largest_risk < 0.5:
-            faults.append(LimitsError("largest_risk must lie between 0 and 0.5", where=("largest_risk",)))
+        for name in ("largest_risk", "specific_risk_cap"):
+            risk = getattr(self, name)
+            if risk is not None and not 0 < risk < 0.5:
+                faults.append(LimitsError(f"{name} must lie between 0 and 0.5", where=(name,)))
+        return faults
+
+    def _faults_of_common_members(self) -> list[BudgetsError]:
+        faults: list[BudgetsError] = [
+            NotSupportedError(f"{name} of a decision rule", where=(name,))
+            for name in _LATER
+            if getattr(self, name) is not None
+        ]
+        if self.rejection not in REJECTIONS:
+            faults.append(LimitsError(f"rejection is {' or '.join(REJECTIONS)}", where=("rejection",)))
+        if not 1 <= self.rounds <= LARGEST_ROUNDS:
+            faults.append(LimitsError(f"rounds must lie between 1 and {LARGEST_ROUNDS}", where=("rounds",)))
+        if self.kind == "simple":
+            # Without a guard band nothing is held about the value: there is nothing to mirror or to repeat.
+            if self.rejection == "guarded":
+                faults.append(
+                    LimitsError("simple acceptance has no guard band to mirror", where=("rejection",))
+                )
+            if self.rounds > 1:
+                faults.append(
+                    LimitsError(
+                        "simple acceptance holds nothing about the value, so there is no further round",
+                        where=("rounds",),
+                    )
+                )
         return faults
 
     def check_condition(self, tolerance: Tolerance, standard_uncertainty: float) -> None:

@@ -5,12 +5,12 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
-from typing import TypedDict
 
-from budgets.acceptance import AcceptanceInterval, acceptance_interval
+from budgets.acceptance import AcceptanceInterval, AcceptanceOptions, Ends, acceptance_interval
 from budgets.budget import Budget
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import StudentT
 from budgets.errors import BudgetsError, ComponentError
 from budgets.evidence.evaluation import EvaluationWarning, effective_degrees_of_freedom
 from budgets.level_dependence import level_dependent_acceptance
@@ -31,12 +31,6 @@ from budgets.uncertainty_at_limits import uncertainty_of_law_at_limits
 
 FEW_DEGREES_OF_FREEDOM = 5.0
 _HALF = 0.25  # of the variance
-
-
-class _Options(TypedDict):
-    bias: float
-    domain: tuple[float | None, float | None]
-    validated_range: tuple[float | None, float | None]
 
 
 @dataclass(frozen=True)
@@ -110,9 +104,7 @@ class Judged:
 
     tolerance: Tolerance
     rule: DecisionRule
-    bias: float
-    domain: tuple[float | None, float | None]
-    validated_range: tuple[float, float]
+    options: AcceptanceOptions
     fixed: bool
 
 
@@ -180,7 +172,8 @@ def explain(
     estimates: Mapping[str, float] | None = None,
     tolerance: Tolerance | None = None,
     rule: DecisionRule | None = None,
-    domain: tuple[float | None, float | None] = (None, None),
+    domain: Ends = (None, None),
+    truncated: bool = False,
 ) -> Explanation:
     """Explain the combined uncertainty of a budget.
 
@@ -196,6 +189,8 @@ def explain(
     rule : DecisionRule or None
     domain : tuple of float or None
         Natural domain of the characteristic.
+    truncated : bool
+        Probabilities are those within the domain.
 
     Returns
     -------
@@ -219,7 +214,13 @@ def explain(
     judged = None
     if tolerance is not None and rule is not None:
         shift = 0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias
-        judged = Judged(tolerance, rule, shift, domain, budget.validated_range, budget.model is None)
+        options: AcceptanceOptions = {
+            "bias": shift,
+            "domain": domain,
+            "validated_range": budget.validated_range,
+            "truncated": truncated,
+        }
+        judged = Judged(tolerance, rule, options, budget.model is None)
     p = budget.coverage_probability
     basis = Basis(law, coefficients, full, p, judged)
     whole = expanded_uncertainty(result.standard_uncertainty, p, result.effective_degrees_of_freedom)
@@ -272,17 +273,14 @@ def _limits(judged: Judged | None, law: CompiledPropagation, u: float, nu: float
 
 def _accepted(judged: Judged, law: CompiledPropagation, u: float, nu: float) -> AcceptanceInterval:
     """Return what is accepted: as the release rule has it where limits are fixed, else at this estimate."""
-    options: _Options = {
-        "bias": judged.bias,
-        "domain": judged.domain,
-        "validated_range": judged.validated_range,
-    }
     if judged.fixed:
         there = uncertainty_of_law_at_limits(law, judged.tolerance)
         u, nu = there.standard_uncertainty, there.degrees_of_freedom
         if there.dependence is not None:
-            return level_dependent_acceptance(judged.rule, judged.tolerance, there.dependence, nu, **options)
-    return acceptance_interval(judged.rule, judged.tolerance, u, nu, **options)
+            return level_dependent_acceptance(
+                judged.rule, judged.tolerance, there.dependence, StudentT(nu), **judged.options
+            )
+    return acceptance_interval(judged.rule, judged.tolerance, u, StudentT(nu), **judged.options)
 
 
 def _remark(

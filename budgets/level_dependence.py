@@ -4,17 +4,16 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import NoReturn
+from typing import Unpack
 
-from scipy.optimize import brentq, minimize_scalar
-
-from budgets.acceptance import AcceptanceInterval, check_reach
-from budgets.conformity import Tolerance, measurement_capability_index, shifted, tails
+from budgets.acceptance import AcceptanceInterval, AcceptanceOptions, Ends, guards_of, reached
+from budgets.conformity import Tolerance, shifted, tails
 from budgets.decision_rules import DecisionRule
-from budgets.errors import EmptyAcceptanceError, NotSupportedError
-from budgets.propagation import coverage_factor, upper_quantile
-
-_FULL_PRECISION = 4 * 2.220446049250313e-16
+from budgets.empty_acceptance import nothing_left, opened
+from budgets.error_distributions import ErrorDistribution
+from budgets.errors import NotSupportedError
+from budgets.guard_bands import Guard
+from budgets.limit_search import least_between, limit_between
 
 
 @dataclass(frozen=True)
@@ -35,6 +34,10 @@ class LevelDependence:
     def at(self, estimate: float) -> float:
         """Return the standard uncertainty at an estimate."""
         return math.hypot(self.constant, self.proportional * estimate)
+
+    def times(self, factor: float) -> LevelDependence:
+        """Return both parts multiplied by a factor."""
+        return LevelDependence(factor * self.constant, factor * self.proportional)
 
 
 def upper_acceptance_limit(limit: float, factor: float, dependence: LevelDependence) -> float:
@@ -101,11 +104,8 @@ def level_dependent_acceptance(
     rule: DecisionRule,
     tolerance: Tolerance,
     dependence: LevelDependence,
-    degrees_of_freedom: float,
-    *,
-    bias: float = 0.0,
-    domain: tuple[float | None, float | None] = (None, None),
-    validated_range: tuple[float | None, float | None] = (None, None),
+    distribution: ErrorDistribution,
+    **options: Unpack[AcceptanceOptions],
 ) -> AcceptanceInterval:
     """Return the estimates that a decision rule accepts when u depends on the estimate.
 
@@ -115,10 +115,10 @@ def level_dependent_acceptance(
     tolerance : Tolerance
         Its limits must not be below zero.
     dependence : LevelDependence
-    degrees_of_freedom : float
-        One for all estimates: those at the limits.
-    bias, domain, validated_range
-        As in `budgets.acceptance.acceptance_interval`.
+    distribution : ErrorDistribution
+        One for all estimates: that at the limits.
+    **options
+        See `budgets.acceptance.AcceptanceOptions`.
 
     Returns
     -------
@@ -127,82 +127,71 @@ def level_dependent_acceptance(
     Raises
     ------
     NotSupportedError
-        For a tolerance limit below zero.
+        For a tolerance limit below zero, or probabilities within the domain.
     LimitsError
         If the condition of simple acceptance is not met at a limit.
     EmptyAcceptanceError
-        If no estimate could be accepted.
+        If no estimate could be accepted, with what would open the interval.
 
     Notes
     -----
     Source: JCGM 106:2012, 8.3 (from memory), solved for u(y). With two limits and a specific risk both tails
-    count at once: the largest conformance probability is found first, and the limits on either side of it.
+    count at once: the smallest risk is found first, and the limits on either side of it.
     """
     if any(limit is not None and limit < 0 for limit in (tolerance.lower, tolerance.upper)):
         raise NotSupportedError("an uncertainty proportional to a value that may be below zero")
+    if options.get("truncated", False):
+        raise NotSupportedError(
+            "probabilities within the natural domain beside parts proportional to the value"
+        )
     largest = max(dependence.at(limit) for limit in (tolerance.lower, tolerance.upper) if limit is not None)
     rule.check_condition(tolerance, largest)
-    lower, upper = shifted(tolerance, bias)
-    factor = _factor(rule, degrees_of_freedom)
-    accepted_upper = None if upper is None else upper_acceptance_limit(max(upper, 0.0), factor, dependence)
-    accepted_lower = None if lower is None else lower_acceptance_limit(lower, factor, dependence)
-    hopeless = lower is not None and accepted_lower is None
-    if hopeless or (accepted_upper is not None and accepted_upper < max(0.0, accepted_lower or 0.0)):
-        _refuse(tolerance, largest)
-    if rule.largest_risk is not None and accepted_lower is not None and accepted_upper is not None:
-        moved = Tolerance(lower, upper)
-        outer = (accepted_lower, accepted_upper)
-        accepted_lower, accepted_upper = _both_tails(
-            rule.largest_risk, moved, outer, dependence, degrees_of_freedom
-        )
-    accepted = AcceptanceInterval(
-        accepted_lower,
-        accepted_upper,
-        None if accepted_lower is None or tolerance.lower is None else accepted_lower - tolerance.lower,
-        None if accepted_upper is None or tolerance.upper is None else tolerance.upper - accepted_upper,
+    guards = guards_of(rule, distribution, options)
+    moved = shifted(tolerance, options.get("bias", 0.0))
+
+    def limits(factor: float) -> AcceptanceInterval:
+        scaled = dependence.times(factor)
+        return reached(tolerance, [_inside(guard, moved, scaled, distribution) for guard in guards], options)
+
+    return opened(limits, tolerance, largest)
+
+
+def _inside(guard: Guard, moved: Ends, dependence: LevelDependence, distribution: ErrorDistribution) -> Ends:
+    lower, upper = moved
+    accepted_upper = (
+        None
+        if upper is None
+        else upper_acceptance_limit(max(upper - guard.width, 0.0), guard.upper_factor, dependence)
     )
-    check_reach(accepted, tolerance, largest, domain, validated_range)
-    return accepted
-
-
-def _factor(rule: DecisionRule, degrees_of_freedom: float) -> float:
-    if rule.largest_risk is not None:
-        return upper_quantile(rule.largest_risk, degrees_of_freedom)
-    if rule.multiple is not None and rule.coverage_probability is not None and rule.sides is not None:
-        return rule.multiple * coverage_factor(
-            rule.coverage_probability, degrees_of_freedom, sides=rule.sides
+    accepted_lower = (
+        None if lower is None else lower_acceptance_limit(lower + guard.width, guard.lower_factor, dependence)
+    )
+    if lower is not None and accepted_lower is None:
+        nothing_left(
+            "the uncertainty grows as fast as the value, so that no value proves the lower limit",
+            "Make the proportional part of the uncertainty smaller.",
         )
-    return 0.0
+    if accepted_upper is not None and accepted_upper < max(0.0, accepted_lower or 0.0):
+        nothing_left("the guard bands overlap, or the upper one leaves nothing above zero")
+    if guard.risk is None or lower is None or accepted_lower is None or accepted_upper is None:
+        return accepted_lower, accepted_upper
+    one_sided = accepted_lower, accepted_upper
+    return _both_tails(guard.risk, Tolerance(*moved), one_sided, dependence, distribution)
 
 
 def _both_tails(
-    risk: float, tolerance: Tolerance, one_sided: tuple[float, float], dependence: LevelDependence, nu: float
+    risk: float,
+    tolerance: Tolerance,
+    one_sided: tuple[float, float],
+    dependence: LevelDependence,
+    distribution: ErrorDistribution,
 ) -> tuple[float, float]:
     """Solve both tails at once, from the estimate of the smallest risk outwards to the one-sided limits."""
 
     def excess(estimate: float) -> float:
-        return float(math.fsum(tails(estimate, dependence.at(estimate), nu, tolerance))) - risk
+        return float(math.fsum(tails(estimate, dependence.at(estimate), distribution, tolerance))) - risk
 
-    lowest, highest = one_sided
-    best = lowest
-    if lowest < highest:
-        found = minimize_scalar(excess, bounds=one_sided, method="bounded")
-        best = min((float(found.x), lowest, highest), key=excess)
+    best = least_between(excess, *one_sided)
     if excess(best) > 0:
-        _refuse(tolerance, dependence.at(tolerance.upper or 0.0))
-
-    def limit(end: float) -> float:
-        if excess(end) <= 0:
-            return end
-        return float(brentq(excess, best, end, xtol=_FULL_PRECISION, rtol=_FULL_PRECISION))
-
-    return limit(lowest), limit(highest)
-
-
-def _refuse(tolerance: Tolerance, standard_uncertainty: float) -> NoReturn:
-    raise EmptyAcceptanceError(
-        f"no estimate can be accepted with a standard uncertainty of {standard_uncertainty:.4g} at a limit; "
-        "this measurement cannot prove this specification",
-        capability_index=measurement_capability_index(tolerance, standard_uncertainty),
-        remedy="Make the uncertainty at the limit smaller, above all its proportional part.",
-    )
+        nothing_left("the guard bands overlap")
+    return limit_between(excess, best, one_sided[0]), limit_between(excess, best, one_sided[1])

@@ -11,67 +11,34 @@ import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, fields, replace
 from functools import cached_property
-from typing import Any, TypedDict
+from typing import Any, Unpack
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.special import ndtr
 
-from budgets.acceptance import acceptance_interval
+from budgets.acceptance import AcceptanceOptions, Ends, acceptance_interval, guards_of
 from budgets.budget import Budget
 from budgets.conformity import (
+    StatedLimits,
     Tolerance,
     conformance_probability,
     measurement_capability_index,
-    shifted,
     tails,
 )
 from budgets.decision_rules import DecisionRule
 from budgets.distribution_tables import DistributionTable
+from budgets.error_distributions import ErrorDistribution, StudentT, Tabulated
 from budgets.errors import ModelError
-from budgets.level_dependence import level_dependent_acceptance
-from budgets.propagation import Counts, check_counts, coverage_factor
+from budgets.judgements import OUTCOMES, Judgement, Judgements, Zones, fill_conformance
+from budgets.level_dependence import LevelDependence, level_dependent_acceptance
+from budgets.natural_bounds import truncated_probabilities
+from budgets.propagation import Counts, check_counts
 from budgets.reading_patterns import ReadingPattern
-from budgets.uncertainty_at_limits import uncertainty_at_limits
-
-RELEASE, HOLD, REJECT = 0, 1, 2
-OUTCOMES: tuple[str, ...] = ("release", "hold", "reject")
+from budgets.rejection import RejectionLimits, rejection_limits
+from budgets.uncertainty_at_limits import UncertaintyAtLimits, uncertainty_at_limits
 
 # Small enough for the working arrays to stay in the processor's cache.
 _BLOCK = 8192
-
-
-@dataclass(frozen=True)
-class Judgement:
-    """The verdict on one estimate, with the exact probabilities that are recorded."""
-
-    outcome: str
-    conformance_probability: float
-    risk_below: float
-    risk_above: float
-    specific_consumers_risk: float
-    combined_standard_uncertainty: float | None = None
-
-
-@dataclass(frozen=True)
-class Judgements:
-    """Verdicts on many estimates.
-
-    Parameters
-    ----------
-    outcomes : ndarray of int8, shape (n,)
-        0 release, 1 hold, 2 reject.
-    conformance_probability : ndarray of float64, shape (n,)
-    """
-
-    outcomes: NDArray[np.int8]
-    conformance_probability: NDArray[np.float64]
-
-
-class _Options(TypedDict):
-    bias: float
-    domain: tuple[float | None, float | None]
-    validated_range: tuple[float | None, float | None]
 
 
 @dataclass(frozen=True)
@@ -81,6 +48,7 @@ class ReleaseRule:
     Parameters
     ----------
     lower_tolerance_limit, upper_tolerance_limit : float or None, unit of the characteristic
+        The effective ones, that unrounded estimates are compared with.
     lower_inclusive, upper_inclusive : bool
         Whether an estimate exactly at the tolerance limit is within tolerance.
     lower_acceptance_limit, upper_acceptance_limit : float or None, unit of the characteristic
@@ -102,6 +70,16 @@ class ReleaseRule:
         largest one at a tolerance limit.
     proportional_standard_uncertainty : float
         The part proportional to the estimate, as a fraction.
+    stated_limits : StatedLimits or None
+        What the specification states, where estimates are rounded before they are compared.
+    lower_rejection_limit, upper_rejection_limit : float or None, unit of the characteristic
+        Under guarded rejection: only what lies beyond is rejected; None: nothing on that side.
+    distribution : Tabulated or None
+        Monte Carlo quantiles, where they take the place of Student's t.
+    truncated_to : tuple of float or None, or None
+        The natural domain, where probabilities are those within it.
+    risk_per_look : float or None
+        Of a rule with several rounds.
     """
 
     lower_tolerance_limit: float | None
@@ -123,6 +101,12 @@ class ReleaseRule:
     largest_specific_risk: float
     constant_standard_uncertainty: float | None = None
     proportional_standard_uncertainty: float = 0.0
+    stated_limits: StatedLimits | None = None
+    lower_rejection_limit: float | None = None
+    upper_rejection_limit: float | None = None
+    distribution: Tabulated | None = None
+    truncated_to: Ends | None = None
+    risk_per_look: float | None = None
 
     @classmethod
     def compile(
@@ -132,7 +116,11 @@ class ReleaseRule:
         tolerance: Tolerance,
         rule: DecisionRule,
         *,
-        domain: tuple[float | None, float | None] = (None, None),
+        domain: Ends = (None, None),
+        truncated: bool = False,
+        distribution: Tabulated | None = None,
+        risk_per_look: float | None = None,
+        guard_band: float | None = None,
     ) -> ReleaseRule:
         """Compile the rule for what was done.
 
@@ -146,6 +134,12 @@ class ReleaseRule:
         rule : DecisionRule
         domain : tuple of float or None
             Natural domain of the characteristic.
+        truncated : bool
+            Probabilities are those within the domain.
+        distribution : Tabulated or None
+            Takes the place of Student's t.
+        risk_per_look, guard_band : float or None
+            As in `budgets.guard_bands.guard_of`.
 
         Returns
         -------
@@ -175,22 +169,72 @@ class ReleaseRule:
             )
         check_counts(counts, budget.procedure)
         shift = 0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias
-        uncertain = uncertainty_at_limits(budget, counts, tolerance)
-        u, nu = uncertain.standard_uncertainty, uncertain.degrees_of_freedom
-        dependence = uncertain.dependence
-        options: _Options = {"bias": shift, "domain": domain, "validated_range": budget.validated_range}
-        accepted = (
-            acceptance_interval(rule, tolerance, u, nu, **options)
-            if dependence is None
-            else level_dependent_acceptance(rule, tolerance, dependence, nu, **options)
+        return cls.of_uncertainty(
+            uncertainty_at_limits(budget, counts, tolerance),
+            tolerance,
+            rule,
+            budget.coverage_probability,
+            distribution,
+            bias=shift,
+            domain=domain,
+            validated_range=budget.validated_range,
+            truncated=truncated,
+            risk_per_look=risk_per_look,
+            guard_band=guard_band,
         )
-        factor = coverage_factor(budget.coverage_probability, nu)
-        at_limits = [
-            float(math.fsum(tails(limit, uncertain.at(limit), nu, tolerance, bias=shift)))
-            for limit in (accepted.lower, accepted.upper)
-            if limit is not None
-        ]
-        return cls(
+
+    @classmethod
+    def of_uncertainty(
+        cls,
+        uncertain: UncertaintyAtLimits,
+        tolerance: Tolerance,
+        rule: DecisionRule,
+        coverage_probability: float,
+        tabulated: Tabulated | None = None,
+        **options: Unpack[AcceptanceOptions],
+    ) -> ReleaseRule:
+        """Return the rule for an uncertainty that is known already.
+
+        Parameters
+        ----------
+        uncertain : UncertaintyAtLimits
+        tolerance : Tolerance
+        rule : DecisionRule
+        coverage_probability : float
+        tabulated : Tabulated or None
+            Takes the place of Student's t.
+        **options
+            See `budgets.acceptance.AcceptanceOptions`.
+
+        Returns
+        -------
+        ReleaseRule
+
+        Raises
+        ------
+        LimitsError, NotSupportedError
+            As in `compile`.
+        """
+        u, nu, dependence = (
+            uncertain.standard_uncertainty,
+            uncertain.degrees_of_freedom,
+            uncertain.dependence,
+        )
+        distribution: ErrorDistribution = tabulated or StudentT(nu)
+        accepted = (
+            acceptance_interval(rule, tolerance, u, distribution, **options)
+            if dependence is None
+            else level_dependent_acceptance(rule, tolerance, dependence, distribution, **options)
+        )
+        bias = options.get("bias", 0.0)
+        rejected = RejectionLimits(None, None)
+        if rule.rejection == "guarded":
+            guard = guards_of(rule, distribution, options)[0]
+            rejected = rejection_limits(
+                guard, tolerance, dependence or LevelDependence(u, 0.0), distribution, bias=bias
+            )
+        factor = _coverage_factor(coverage_probability, distribution)
+        made = cls(
             lower_tolerance_limit=tolerance.lower,
             upper_tolerance_limit=tolerance.upper,
             lower_inclusive=tolerance.lower_inclusive,
@@ -201,16 +245,23 @@ class ReleaseRule:
             guard_band_upper=accepted.guard_band_upper,
             combined_standard_uncertainty=u,
             effective_degrees_of_freedom=nu,
-            coverage_probability=budget.coverage_probability,
+            coverage_probability=coverage_probability,
             coverage_factor=factor,
             expanded_uncertainty=factor * u,
-            bias_shift=shift,
+            bias_shift=bias,
             decision_rule=rule,
             measurement_capability_index=measurement_capability_index(tolerance, u),
-            largest_specific_risk=max(at_limits),
+            largest_specific_risk=math.nan,
             constant_standard_uncertainty=None if dependence is None else dependence.constant,
             proportional_standard_uncertainty=0.0 if dependence is None else dependence.proportional,
+            stated_limits=tolerance.stated,
+            lower_rejection_limit=rejected.lower,
+            upper_rejection_limit=rejected.upper,
+            distribution=tabulated,
+            truncated_to=options.get("domain") if options.get("truncated") else None,
+            risk_per_look=options.get("risk_per_look"),
         )
+        return replace(made, largest_specific_risk=made._risk_at_limits())
 
     @property
     def acceptance_limits(self) -> str:
@@ -253,22 +304,67 @@ class ReleaseRule:
     @classmethod
     def from_document(cls, document: Mapping[str, Any]) -> ReleaseRule:
         """Return the rule that `to_document` wrote, to the last bit."""
-        # Members that the first version of this program did not write have their defaults.
+        # Members that earlier versions of this program did not write have their defaults.
         members = {item.name: document[item.name] for item in fields(cls) if item.name in document}
         members["decision_rule"] = DecisionRule(**document["decision_rule"])
         if members["effective_degrees_of_freedom"] is None:
             members["effective_degrees_of_freedom"] = math.inf
+        if members.get("stated_limits") is not None:
+            members["stated_limits"] = StatedLimits(**members["stated_limits"])
+        if members.get("distribution") is not None:
+            members["distribution"] = Tabulated.from_document(members["distribution"])
+        if members.get("truncated_to") is not None:
+            members["truncated_to"] = tuple(members["truncated_to"])
         return cls(**members)
 
     @cached_property
-    def _tolerance(self) -> Tolerance:
+    def tolerance(self) -> Tolerance:
+        """The effective tolerance, with what was stated."""
         return Tolerance(
-            self.lower_tolerance_limit, self.upper_tolerance_limit, self.lower_inclusive, self.upper_inclusive
+            self.lower_tolerance_limit,
+            self.upper_tolerance_limit,
+            self.lower_inclusive,
+            self.upper_inclusive,
+            self.stated_limits,
         )
 
     @cached_property
-    def _table(self) -> DistributionTable:
-        return DistributionTable(self.effective_degrees_of_freedom)
+    def error_distribution(self) -> ErrorDistribution:
+        """The distribution of (true value - estimate)/u."""
+        return self.distribution or StudentT(self.effective_degrees_of_freedom)
+
+    @cached_property
+    def _zones(self) -> Zones:
+        guarded = self.decision_rule.rejection == "guarded"
+        return Zones(
+            self.tolerance,
+            (self.lower_acceptance_limit, self.upper_acceptance_limit),
+            (self.lower_rejection_limit, self.upper_rejection_limit) if guarded else None,
+        )
+
+    @cached_property
+    def _table(self) -> DistributionTable | None:
+        nu = self.effective_degrees_of_freedom
+        return None if self.distribution is not None or math.isinf(nu) else DistributionTable(nu)
+
+    def _risk_at_limits(self) -> float:
+        """Return the largest specific risk of an estimate exactly at an acceptance limit."""
+        risks = []
+        for limit in (self.lower_acceptance_limit, self.upper_acceptance_limit):
+            if limit is not None:
+                below, _, above = self._probabilities(limit, self.standard_uncertainty_at(limit))
+                risks.append(below + above)
+        return max(risks)
+
+    def _probabilities(self, estimate: float, u: float) -> tuple[float, float, float]:
+        """Return the probabilities that the true value lies below, within and above tolerance."""
+        distribution, tolerance, bias = self.error_distribution, self.tolerance, self.bias_shift
+        if self.truncated_to is not None:
+            found = truncated_probabilities(estimate, u, distribution, tolerance, self.truncated_to)
+            return float(found[0]), float(found[1]), float(found[2])
+        below, above = tails(estimate, u, distribution, tolerance, bias=bias)
+        within = conformance_probability(estimate, u, distribution, tolerance, bias=bias)
+        return float(below), float(within), float(above)
 
     def judge(self, estimate: float) -> Judgement:
         """Judge one estimate with the exact distribution function.
@@ -289,37 +385,26 @@ class ReleaseRule:
 
         Notes
         -----
-        Outside tolerance: reject. Within acceptance: release. Between: hold. An estimate exactly at a
-        tolerance limit is within it when that limit is inclusive; one exactly at an acceptance limit is
-        accepted. Source: JCGM 106:2012, 7.2 to 7.4 and 8.3 (from memory).
+        Within acceptance: release. Outside tolerance, or under guarded rejection beyond a rejection limit:
+        reject. Else: hold. See `budgets.judgements.Zones`.
         """
         if not math.isfinite(estimate):
             raise ModelError(f"the estimate must be a finite number, not {estimate}", where=("estimate",))
-        tolerance = self._tolerance
-        u, nu = self.standard_uncertainty_at(estimate), self.effective_degrees_of_freedom
+        u = self.standard_uncertainty_at(estimate)
         if u == 0:
             raise ModelError(
                 "all uncertainty is proportional to the value: an estimate of 0 would be known exactly",
                 where=("estimate",),
             )
-        below, above = tails(estimate, u, nu, tolerance, bias=self.bias_shift)
-        probability = conformance_probability(estimate, u, nu, tolerance, bias=self.bias_shift)
+        below, within, above = self._probabilities(estimate, u)
         return Judgement(
-            outcome=OUTCOMES[self._outcome(estimate)],
-            conformance_probability=float(probability),
-            risk_below=float(below),
-            risk_above=float(above),
-            specific_consumers_risk=min(1.0, float(below + above)),
+            outcome=OUTCOMES[self._zones.of(estimate)],
+            conformance_probability=within,
+            risk_below=below,
+            risk_above=above,
+            specific_consumers_risk=min(1.0, below + above),
             combined_standard_uncertainty=u,
         )
-
-    def _outcome(self, estimate: float) -> int:
-        if not self._tolerance.holds(estimate):
-            return REJECT
-        lower, upper = self.lower_acceptance_limit, self.upper_acceptance_limit
-        if (upper is None or estimate <= upper) and (lower is None or estimate >= lower):
-            return RELEASE
-        return HOLD
 
     def judge_many(self, estimates: ArrayLike) -> Judgements:
         """Judge an array of estimates at memory speed.
@@ -353,7 +438,16 @@ class ReleaseRule:
     ) -> None:
         if not np.isfinite(estimates).all():
             raise ModelError("every estimate must be a finite number", where=("estimates",))
-        self._fill_outcomes(estimates, outcomes)
+        self._zones.fill(estimates, outcomes)
+        if self.truncated_to is not None:
+            probabilities[...] = truncated_probabilities(
+                estimates,
+                self.combined_standard_uncertainty,
+                self.error_distribution,
+                self.tolerance,
+                self.truncated_to,
+            )[1]
+            return
         u: float | NDArray[np.float64] = self.combined_standard_uncertainty
         if self.constant_standard_uncertainty is not None:
             u = np.hypot(
@@ -361,46 +455,12 @@ class ReleaseRule:
             )
             if not u.all():
                 raise ModelError("an estimate of 0 would be known exactly", where=("estimates",))
-        lower, upper = shifted(self._tolerance, self.bias_shift)
-        if lower is None or upper is None:
-            if upper is not None:
-                np.subtract(upper, estimates, out=probabilities)
-            else:
-                np.subtract(estimates, lower or 0.0, out=probabilities)
-            probabilities *= 1 / u
-            self._distribute(probabilities)
-            return
-        # As in conformity.conformance_probability, from the side on which the estimate lies.
-        np.subtract(estimates, (lower + upper) / 2, out=probabilities)
-        np.abs(probabilities, out=probabilities)
-        probabilities *= -1 / u
-        half_width = (upper - lower) / (2 * u)
-        far = probabilities - half_width
-        probabilities += half_width
-        self._distribute(probabilities)
-        self._distribute(far)
-        probabilities -= far
-        if upper < lower:
-            np.maximum(probabilities, 0.0, out=probabilities)
+        fill_conformance(
+            estimates, u, self.error_distribution, self.tolerance, self.bias_shift, probabilities, self._table
+        )
 
-    def _distribute(self, z: NDArray[np.float64]) -> None:
-        """Replace z by the distribution function at z."""
-        if math.isinf(self.effective_degrees_of_freedom):
-            ndtr(z, out=z)
-        else:
-            self._table.fill(z)
 
-    def _fill_outcomes(self, estimates: NDArray[np.float64], outcomes: NDArray[np.int8]) -> None:
-        outside = np.zeros(estimates.shape, dtype=bool)
-        held = np.zeros(estimates.shape, dtype=bool)
-        if self.upper_tolerance_limit is not None and self.upper_acceptance_limit is not None:
-            beyond = np.greater if self.upper_inclusive else np.greater_equal
-            outside |= beyond(estimates, self.upper_tolerance_limit)
-            held |= estimates > self.upper_acceptance_limit
-        if self.lower_tolerance_limit is not None and self.lower_acceptance_limit is not None:
-            short = np.less if self.lower_inclusive else np.less_equal
-            outside |= short(estimates, self.lower_tolerance_limit)
-            held |= estimates < self.lower_acceptance_limit
-        # hold counts 1; outside is always 2, whether the acceptance limits were met or not.
-        np.add(held, outside, out=outcomes, dtype=np.int8, casting="unsafe")
-        np.maximum(outcomes, outside.view(np.int8) * REJECT, out=outcomes)
+def _coverage_factor(coverage_probability: float, distribution: ErrorDistribution) -> float:
+    """Return k; of an asymmetric distribution that of the longer side of the interval of equal tails."""
+    tail = (1 - coverage_probability) / 2
+    return max(distribution.upper_quantile(tail), -distribution.lower_quantile(tail))

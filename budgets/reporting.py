@@ -12,7 +12,8 @@ from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decima
 
 from budgets.decision_rules import DecisionRule
 from budgets.errors import ModelError
-from budgets.release import Judgement, ReleaseRule
+from budgets.judgements import Judgement
+from budgets.release import ReleaseRule
 
 _SMALLEST_PROBABILITY = Decimal("0.0001")
 # Wide enough for every double at every decimal place of another.

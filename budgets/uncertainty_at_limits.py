@@ -33,10 +33,6 @@ class UncertaintyAtLimits:
     degrees_of_freedom: float
     dependence: LevelDependence | None
 
-    def at(self, estimate: float) -> float:
-        """Return the standard uncertainty of an estimate."""
-        return self.standard_uncertainty if self.dependence is None else self.dependence.at(estimate)
-
 
 def uncertainty_at_limits(
     budget: Budget, counts: Counts | ReadingPattern, tolerance: Tolerance

@@ -8,9 +8,12 @@ from typing import Any
 
 from budgets.conformity import Tolerance, conformance_probability, tails
 from budgets.declarations import Declaration
+from budgets.error_distributions import StudentT
 from budgets.propagation import CombinedUncertainty, expanded_uncertainty
 from service.published.cases import Runner
 from service.published.small_budgets import propagated, stated
+
+NORMAL = StudentT(math.inf)
 
 Inputs = Mapping[str, Any]
 
@@ -61,13 +64,13 @@ def _comparison_loss(i: Inputs) -> dict[str, Any]:
 
 def _conformance(i: Inputs) -> dict[str, Any]:
     tolerance = Tolerance(i.get("TL"), i["TU"])
-    return {"pc": conformance_probability(i["y"], i["u"], math.inf, tolerance)}
+    return {"pc": conformance_probability(i["y"], i["u"], NORMAL, tolerance)}
 
 
 def _false_acceptance(i: Inputs) -> dict[str, Any]:
     """One limit, the estimate at the acceptance limit, U = 2 u."""
     tolerance = Tolerance(None, 10.0)
-    return {"pfa": [tails(10.0 - ratio * 2.0, 1.0, math.inf, tolerance)[1] for ratio in i["w_over_U"]]}
+    return {"pfa": [tails(10.0 - ratio * 2.0, 1.0, NORMAL, tolerance)[1] for ratio in i["w_over_U"]]}
 
 
 JCGM_101: dict[str, Runner] = {

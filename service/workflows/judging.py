@@ -7,7 +7,8 @@ from datetime import datetime
 from typing import Any, Final
 
 from budgets.errors import BudgetsError
-from budgets.release import Judgement, ReleaseRule
+from budgets.judgements import Judgement
+from budgets.release import ReleaseRule
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.workflows.calendar import NOTICE

@@ -11,6 +11,7 @@ from budgets.budget import Budget, Procedure
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.derived_release import DerivedReleaseRule, release_rule_kind
+from budgets.error_distributions import Tabulated
 from budgets.errors import LimitsError, ModelError
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
@@ -121,8 +122,15 @@ def compile_rule(
     done: Counts | ReadingPattern,
     requirement: Requirement,
     characteristic: Characteristic,
+    *,
+    distribution: Tabulated | None = None,
+    risk_per_look: float | None = None,
+    guard_band: float | None = None,
 ) -> AnyRule:
-    """Compile one release rule. Raises the errors of budgets, an empty acceptance interval among them."""
+    """Compile one release rule; the options are those of the rule.
+
+    Raises the errors of budgets, an empty acceptance interval among them.
+    """
     domain = characteristic.natural_domain
     kind = ReleaseRule if budget.model is None else DerivedReleaseRule
     return kind.compile(
@@ -131,6 +139,9 @@ def compile_rule(
         tolerance(requirement, characteristic),
         decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
+        distribution=distribution,
+        risk_per_look=risk_per_look,
+        guard_band=guard_band,
     )
 
 

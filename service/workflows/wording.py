@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from typing import Any, Final
 
-from budgets.release import Judgement, ReleaseRule
+from budgets.judgements import Judgement
+from budgets.release import ReleaseRule
 from budgets.reporting import (
     acceptance_limit_text,
     decimal_text,

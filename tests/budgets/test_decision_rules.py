@@ -26,6 +26,12 @@ FACTOR = {"multiple": 1.0, "coverage_probability": 0.95, "sides": 2}
         ("guarded_by_specific_risk", {}, "largest_risk"),
         ("guarded_by_specific_risk", {"largest_risk": 0.5}, "largest_risk"),
         ("guarded_by_specific_risk", {"largest_risk": 0.0}, "largest_risk"),
+        ("guarded_by_specific_risk", {"largest_risk": 0.05, "specific_risk_cap": 0.1}, "specific_risk_cap"),
+        ("guarded_by_specific_risk", {"largest_risk": 0.05, "rejection": "never"}, "rejection"),
+        ("guarded_by_specific_risk", {"largest_risk": 0.05, "rounds": 0}, "rounds"),
+        ("guarded_by_specific_risk", {"largest_risk": 0.05, "rounds": 11}, "rounds"),
+        ("simple", {"largest_standard_uncertainty": 0.1, "rejection": "guarded"}, "rejection"),
+        ("simple", {"largest_standard_uncertainty": 0.1, "rounds": 2}, "rounds"),
     ],
 )
 def test_members_that_are_missing_misplaced_or_out_of_range_are_named(kind, members, where):
@@ -40,9 +46,13 @@ def test_several_faults_of_a_rule_are_told_at_once():
     assert [fault.where for fault in caught.value.each()] == [("multiple",), ("coverage_probability",)]
 
 
-def test_global_risk_is_not_supported_yet():
+def test_what_has_no_meaning_yet_is_not_supported():
     with pytest.raises(NotSupportedError):
-        DecisionRule("guarded_by_global_risk", largest_risk=0.01)
+        DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1)
+    for member in ("replicate_level", "largest_lot_risk"):
+        with pytest.raises(NotSupportedError) as caught:
+            DecisionRule("guarded_by_specific_risk", largest_risk=0.05, **{member: 0.05})
+        assert caught.value.where == (member,)
 
 
 def test_the_condition_of_simple_acceptance():

@@ -13,6 +13,7 @@ from budgets.components import Component
 from budgets.conformity import Tolerance, tails
 from budgets.correlations import Correlation
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import StudentT
 from budgets.errors import EmptyAcceptanceError, LimitsError, ModelError, NotSupportedError
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.level_dependence import (
@@ -64,25 +65,27 @@ def test_the_limits_hold_the_specific_risk_of_both_tails():
     tolerance = Tolerance(4.6, 5.0)
     wide = LevelDependence(0.05, 0.012)
     for nu in (math.inf, 6.0):
-        accepted = level_dependent_acceptance(RISK, tolerance, wide, nu)
+        accepted = level_dependent_acceptance(RISK, tolerance, wide, StudentT(nu))
         for limit in (accepted.lower, accepted.upper):
-            assert sum(tails(limit, wide.at(limit), nu, tolerance)) == pytest.approx(0.05, rel=1e-11)
+            assert sum(tails(limit, wide.at(limit), StudentT(nu), tolerance)) == pytest.approx(
+                0.05, rel=1e-11
+            )
         assert accepted.guard_band_upper == pytest.approx(5.0 - accepted.upper)
-    far = level_dependent_acceptance(RISK, Tolerance(1.0, 50.0), U, math.inf)
+    far = level_dependent_acceptance(RISK, Tolerance(1.0, 50.0), U, StudentT(math.inf))
     assert far.upper == pytest.approx(upper_acceptance_limit(50.0, coverage_factor(0.9, math.inf), U))
 
 
 def test_one_limit_and_a_factor():
-    accepted = level_dependent_acceptance(FACTOR, Tolerance(None, 5.0), U, 9.0)
+    accepted = level_dependent_acceptance(FACTOR, Tolerance(None, 5.0), U, StudentT(9.0))
     k = coverage_factor(0.95, 9.0)
     assert accepted.upper + k * U.at(accepted.upper) == pytest.approx(5.0, rel=1e-14)
     assert accepted.lower is None
-    accepted = level_dependent_acceptance(FACTOR, Tolerance(5.0, None), U, 9.0, bias=0.1)
+    accepted = level_dependent_acceptance(FACTOR, Tolerance(5.0, None), U, StudentT(9.0), bias=0.1)
     assert accepted.lower - k * U.at(accepted.lower) == pytest.approx(5.1, rel=1e-14)
-    both = level_dependent_acceptance(FACTOR, Tolerance(4.0, 5.0), U, 9.0)
+    both = level_dependent_acceptance(FACTOR, Tolerance(4.0, 5.0), U, StudentT(9.0))
     assert both.upper + k * U.at(both.upper) == pytest.approx(5.0)
     simple = DecisionRule("simple", largest_standard_uncertainty=0.2)
-    assert level_dependent_acceptance(simple, Tolerance(None, 5.0), U, 9.0).upper == 5.0
+    assert level_dependent_acceptance(simple, Tolerance(None, 5.0), U, StudentT(9.0)).upper == 5.0
 
 
 @pytest.mark.parametrize(
@@ -98,14 +101,14 @@ def test_one_limit_and_a_factor():
 )
 def test_what_cannot_be_accepted_is_refused(rule, tolerance, dependence, kind):
     with pytest.raises(kind):
-        level_dependent_acceptance(rule, tolerance, dependence, 20.0)
+        level_dependent_acceptance(rule, tolerance, dependence, StudentT(20.0))
 
 
 def test_a_single_estimate_may_be_all_that_is_accepted():
     """One-sided limits that meet: the risk of both tails decides."""
     tolerance = Tolerance(1.0, 1.0 + 2 * 1.6448536269514722 * 0.1)
     with pytest.raises(EmptyAcceptanceError):
-        level_dependent_acceptance(RISK, tolerance, LevelDependence(0.1, 0), math.inf)
+        level_dependent_acceptance(RISK, tolerance, LevelDependence(0.1, 0), StudentT(math.inf))
 
 
 def a_budget(**changes):
@@ -135,7 +138,7 @@ def test_a_rule_for_an_uncertainty_that_depends_on_the_estimate():
     assert rule.acceptance_limits == "fixed"
     # Each verdict with the uncertainty at its own estimate.
     verdict = rule.judge(3.0)
-    below, above = tails(3.0, math.hypot(s0, 0.06), rule.effective_degrees_of_freedom, tolerance)
+    below, above = tails(3.0, math.hypot(s0, 0.06), rule.error_distribution, tolerance)
     assert (verdict.risk_below, verdict.risk_above) == (pytest.approx(below), pytest.approx(above))
     assert verdict.combined_standard_uncertainty == pytest.approx(math.hypot(s0, 0.06))
     for limit in (rule.lower_acceptance_limit, rule.upper_acceptance_limit):

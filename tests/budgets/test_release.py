@@ -8,9 +8,11 @@ from hypothesis import strategies as st
 
 from budgets.conformity import Tolerance, conformance_probability
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import StudentT
 from budgets.errors import EmptyAcceptanceError, ModelError, ProcedureError
+from budgets.judgements import OUTCOMES
 from budgets.propagation import Counts, combined
-from budgets.release import OUTCOMES, ReleaseRule
+from budgets.release import ReleaseRule
 
 RISK = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
 FACTOR = DecisionRule("guarded_by_factor", multiple=1.0, coverage_probability=0.95, sides=2)
@@ -142,7 +144,7 @@ def test_arrays_of_any_length_and_shape(a_budget):
     many = compiled.judge_many(estimates[::2])
     assert many.outcomes.shape == (10_001,)
     nu, u = compiled.effective_degrees_of_freedom, compiled.combined_standard_uncertainty
-    exact = conformance_probability(estimates[::2], u, nu, TOLERANCES[0])
+    exact = conformance_probability(estimates[::2], u, StudentT(nu), TOLERANCES[0])
     assert np.abs(many.conformance_probability - exact).max() < 1e-10
 
 
