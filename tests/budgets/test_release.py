@@ -13,6 +13,7 @@ from budgets.errors import EmptyAcceptanceError, ModelError, ProcedureError
 from budgets.judgements import OUTCOMES
 from budgets.propagation import Counts, combined
 from budgets.release import ReleaseRule
+from budgets.rounded_comparison import rounded_tolerance
 
 RISK = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
 FACTOR = DecisionRule("guarded_by_factor", multiple=1.0, coverage_probability=0.95, sides=2)
@@ -176,3 +177,16 @@ COMPILED = {
     "measurement_capability_index": None,
     "largest_specific_risk": 0.05,
 }
+
+
+@pytest.mark.parametrize("nu_known", [False, True])
+def test_a_rule_that_compares_rounded_keeps_what_was_stated(a_budget, nu_known):
+    budget = a_budget(components=tuple(map(known, a_budget().components))) if nu_known else a_budget()
+    tolerance = rounded_tolerance(2.0, 3.9, decimals=1)
+    compiled = ReleaseRule.compile(budget, Counts((2,)), tolerance, RISK)
+    assert (compiled.upper_tolerance_limit, compiled.stated_limits.upper) == (3.95, 3.9)
+    assert ReleaseRule.from_document(json.loads(json.dumps(compiled.to_document()))) == compiled
+    # 3.95 would be shown as 4.0, 3.9499 as 3.9; a verdict and its probability use the same limit.
+    assert [compiled.judge(x).outcome for x in (3.949, 3.95)] == ["hold", "reject"]
+    assert compiled.judge(3.95).risk_above == pytest.approx(0.5)
+    assert compiled.judge(compiled.upper_acceptance_limit).specific_consumers_risk == pytest.approx(0.05)
