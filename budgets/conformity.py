@@ -86,6 +86,11 @@ class Tolerance:
                 where=("lower_tolerance_limit",),
             )
 
+    @property
+    def stated_ends(self) -> tuple[float | None, float | None]:
+        """The lower and upper limit as the specification states them."""
+        return (self.lower, self.upper) if self.stated is None else (self.stated.lower, self.stated.upper)
+
     def holds(self, estimate: float) -> bool:
         """Say whether an estimate is within tolerance, each limit inclusive or not as it says."""
         if self.upper is not None and (

@@ -352,13 +352,26 @@ class ReleaseRule:
         risks = []
         for limit in (self.lower_acceptance_limit, self.upper_acceptance_limit):
             if limit is not None:
-                below, _, above = self._probabilities(limit, self.standard_uncertainty_at(limit))
+                u = self.standard_uncertainty_at(limit)
+                below, _, above = self.probabilities(limit, u, self.error_distribution)
                 risks.append(below + above)
         return max(risks)
 
-    def _probabilities(self, estimate: float, u: float) -> tuple[float, float, float]:
-        """Return the probabilities that the true value lies below, within and above tolerance."""
-        distribution, tolerance, bias = self.error_distribution, self.tolerance, self.bias_shift
+    def probabilities(
+        self, estimate: float, standard_uncertainty: float, distribution: ErrorDistribution
+    ) -> tuple[float, float, float]:
+        """Return the probabilities that the true value lies below, within and above tolerance.
+
+        Parameters
+        ----------
+        estimate, standard_uncertainty : float, unit of the characteristic
+        distribution : ErrorDistribution
+
+        Returns
+        -------
+        tuple of float
+        """
+        u, tolerance, bias = standard_uncertainty, self.tolerance, self.bias_shift
         if self.truncated_to is not None:
             found = truncated_probabilities(estimate, u, distribution, tolerance, self.truncated_to)
             return float(found[0]), float(found[1]), float(found[2])
@@ -396,7 +409,7 @@ class ReleaseRule:
                 "all uncertainty is proportional to the value: an estimate of 0 would be known exactly",
                 where=("estimate",),
             )
-        below, within, above = self._probabilities(estimate, u)
+        below, within, above = self.probabilities(estimate, u, self.error_distribution)
         return Judgement(
             outcome=OUTCOMES[self._zones.of(estimate)],
             conformance_probability=within,

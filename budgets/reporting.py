@@ -151,6 +151,27 @@ def acceptance_limit_text(limit: float, decimals: int, *, side: str) -> str:
     return _text(_decimal(limit).quantize(_quantum(decimals), rounding, _CONTEXT))
 
 
+def rejection_limit_text(limit: float, decimals: int, *, side: str) -> str:
+    """Return a rejection limit rounded outward, so that the printed one never rejects more.
+
+    Parameters
+    ----------
+    limit : float, unit of the characteristic
+    decimals : int
+    side : {"lower", "upper"}
+
+    Returns
+    -------
+    str
+
+    Examples
+    --------
+    >>> rejection_limit_text(3.3141, 2, side="upper")
+    '3.32'
+    """
+    return acceptance_limit_text(limit, decimals, side="lower" if side == "upper" else "upper")
+
+
 def probability_text(probability: float) -> str:
     """Return a probability for the screen; nothing below 0.01 % is claimed.
 
@@ -211,6 +232,10 @@ def rule_text(rule: DecisionRule) -> str:
     >>> rule_text(DecisionRule("guarded_by_specific_risk", largest_risk=0.05))
     'guarded acceptance with a specific risk of at most 5 %'
     """
+    return _kind_text(rule) + (", and guarded rejection" if rule.rejection == "guarded" else "")
+
+
+def _kind_text(rule: DecisionRule) -> str:
     if rule.largest_risk is not None:
         return f"guarded acceptance with a specific risk of at most {_percent(rule.largest_risk)} %"
     if rule.multiple is not None and rule.coverage_probability is not None:
@@ -278,8 +303,9 @@ def statement(
     return " ".join(
         (
             _result_text(characteristic, unit, shown, rule.coverage_factor, rule.coverage_probability),
-            f"Tolerance limits: {_pair_text(rule.lower_tolerance_limit, rule.upper_tolerance_limit, unit)}; "
-            f"acceptance limits{' at this reading' if at_this_reading else ''}: {accepted}.",
+            f"Tolerance limits: {_tolerance_text(rule, unit)}; "
+            f"acceptance limits{' at this reading' if at_this_reading else ''}: {accepted}"
+            f"{_rejection_text(rule, shown.decimals + 1, unit)}.",
             _verdict_text(judgement, rule.decision_rule),
         )
     )
@@ -299,6 +325,27 @@ def _verdict_text(judgement: Judgement, rule: DecisionRule) -> str:
         f"Outcome: {judgement.outcome}; conformance probability "
         f"{probability_text(judgement.conformance_probability)}. Decision rule: {rule_text(rule)}."
     )
+
+
+def _tolerance_text(rule: ReleaseRule, unit: str) -> str:
+    stated = _pair_text(*rule.tolerance.stated_ends, unit)
+    if rule.stated_limits is None:
+        return stated
+    effective = _pair_text(rule.lower_tolerance_limit, rule.upper_tolerance_limit, unit)
+    places = rule.stated_limits.decimals
+    return f"{stated}, compared after rounding to {places} decimals, which is {effective} unrounded"
+
+
+def _rejection_text(rule: ReleaseRule, decimals: int, unit: str) -> str:
+    if rule.decision_rule.rejection != "guarded":
+        return ""
+    lower, upper = rule.lower_rejection_limit, rule.upper_rejection_limit
+    limits = _joined(
+        None if lower is None else rejection_limit_text(lower, decimals, side="lower"),
+        None if upper is None else rejection_limit_text(upper, decimals, side="upper"),
+        unit,
+    )
+    return f"; rejection limits: {limits or 'none'}"
 
 
 def _pair_text(lower: float | None, upper: float | None, unit: str) -> str:

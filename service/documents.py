@@ -218,7 +218,11 @@ class RuleOfDecision:
 
 @dataclass(frozen=True)
 class Requirement:
-    """What one characteristic must meet, and by which rule that is decided."""
+    """What one characteristic must meet, and by which rule that is decided.
+
+    ``comparison`` rounded: estimates are rounded to ``decimals`` before they are compared. ``within_domain``:
+    probabilities are those given that the true value lies in the natural domain of the characteristic.
+    """
 
     characteristic: str
     lower_tolerance_limit: ToleranceLimit | None
@@ -228,6 +232,7 @@ class Requirement:
     judged: str = "lot_mean"
     comparison: str = "absolute"
     decimals: int | None = None
+    within_domain: bool = False
 
 
 @dataclass(frozen=True)

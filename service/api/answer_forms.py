@@ -65,12 +65,46 @@ _UNCERTAINTY: Form = {
     "coverage_factor": _NUMBER_OR_NULL,
     "expanded_uncertainty": _NUMBER_OR_NULL,
 }
+_COMPARISON = _object(
+    "How estimates are compared with the limits.",
+    {
+        "kind": {"type": "string", "enum": ["absolute", "rounded"]},
+        "decimals": {"type": ["integer", "null"], "description": "That estimates are rounded to."},
+        "effective_lower_tolerance_limit": _LIMIT,
+        "effective_upper_tolerance_limit": _LIMIT,
+        "lower_inclusive": _YES,
+        "upper_inclusive": _YES,
+    },
+)
 _LIMITS: Form = {
     "lower_tolerance_limit": _LIMIT,
     "upper_tolerance_limit": _LIMIT,
+    "comparison": _or_null(_COMPARISON),
     "lower_acceptance_limit": _LIMIT,
     "upper_acceptance_limit": _LIMIT,
     "guard_band": _or_null(_GUARD_BAND),
+    "lower_rejection_limit": {**_LIMIT, "description": "null: nothing is rejected on that side"},
+    "upper_rejection_limit": {**_LIMIT, "description": "null: nothing is rejected on that side"},
+    "within_domain": {
+        "type": ["boolean", "null"],
+        "description": "Whether probabilities are those given that the value lies in the natural domain.",
+    },
+    "error_distribution": {
+        "type": ["string", "null"],
+        "enum": ["normal", "t", "monte_carlo", None],
+        "description": "What probabilities rest on.",
+    },
+}
+_SURENESS: Form = {
+    "standard_uncertainty_interval": _or_null(
+        _object(
+            "Where u itself lies; null: it is taken as known, or nothing was judged.",
+            {"lower": _NUMBER, "upper": _NUMBER, "coverage_probability": _NUMBER},
+        )
+    ),
+    "conformance_probability_interval": _or_null(
+        _object("The conformance probability at the two ends.", {"lower": _NUMBER, "upper": _NUMBER})
+    ),
 }
 _BUDGET = _object("The budget version used.", {"code": _CODE, "version": _WHOLE, "digest": _TEXT})
 
@@ -122,6 +156,9 @@ _VERDICT = _object(
         "acceptance_limits": _TEXT_OR_NULL,
         "conformance_probability": _NUMBER_OR_NULL,
         "specific_consumers_risk": _NUMBER_OR_NULL,
+        **_SURENESS,
+        "prior": {**_OBJECT_OR_NULL, "description": "Of the production; null: none was used."},
+        "judged": _TEXT_OR_NULL,
         "decision_rule": {"type": ["object", "null"]},
         "budget": _or_null(_BUDGET),
         "samples": _WHOLE,

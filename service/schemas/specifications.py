@@ -47,7 +47,7 @@ class DecisionRuleSchema(StrictSchema):
     largest_risk = Number(above=0, below=0.5, allow_none=True, load_default=None)
     largest_standard_uncertainty = Number(above=0, allow_none=True, load_default=None)
     least_capability_index = Number(above=0, allow_none=True, load_default=None)
-    rejection = Choice("at_tolerance_limit", later=("guarded",), load_default="at_tolerance_limit")
+    rejection = Choice("at_tolerance_limit", "guarded", load_default="at_tolerance_limit")
     rounds = Count(least=1, most=100, load_default=1, about="More than 1 is not supported yet.")
     specific_risk_cap = Later(load_only=True)
     prior = Later(load_only=True)
@@ -74,6 +74,9 @@ class DecisionRuleSchema(StrictSchema):
         if one_of and all(data.get(member) is None for member in one_of):
             wrong = Wrong("a simple rule without its condition", "one of " + ", ".join(one_of))
             wrongs["kind"] = [wrong]
+        if kind == "simple" and data["rejection"] == "guarded":
+            wrong = Wrong("a simple rule has no guard band to mirror", "at_tolerance_limit")
+            wrongs["rejection"] = [wrong]
         if wrongs:
             raise ValidationError(dict(wrongs))
 
@@ -87,8 +90,17 @@ class RequirementSchema(StrictSchema):
     judged = Choice("lot_mean", later=("item",), load_default="lot_mean")
     lower_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
     upper_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
-    comparison = Choice("absolute", later=("rounded",), load_default="absolute")
-    decimals = Count(most=12, allow_none=True, load_default=None)
+    comparison = Choice("absolute", "rounded", load_default="absolute")
+    decimals = Count(
+        most=12,
+        allow_none=True,
+        load_default=None,
+        about="Estimates compared rounded are rounded to so many, half to even.",
+    )
+    within_domain = Flag(
+        load_default=False,
+        about="Probabilities are those given that the true value lies in the natural domain.",
+    )
     decision_rule = Part(DecisionRuleSchema, required=True)
 
     @validates_schema(skip_on_field_errors=True)
@@ -99,6 +111,12 @@ class RequirementSchema(StrictSchema):
         if lower and upper and lower.unit == upper.unit and lower.value >= upper.value:
             detail = f"got the limits {lower.value!r} and {upper.value!r} {upper.unit} the wrong way round"
             raise complaint(detail, "a lower tolerance limit below the upper one")
+
+    @validates_schema(skip_on_field_errors=True)
+    def _rounding(self, data: dict[str, Any], **_: Any) -> None:
+        if data["comparison"] == "rounded" and data["decimals"] is None:
+            wrong = Wrong("missing", "to how many decimals estimates are rounded")
+            raise ValidationError({"decimals": [wrong]})
 
 
 class SpecificationSchema(StrictSchema):

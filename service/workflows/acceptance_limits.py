@@ -11,7 +11,7 @@ from service.access import require
 from service.documents import Actor
 from service.errors import Conflict, NotFound
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
-from service.workflows.rule_figures import FIGURES, figures_of
+from service.workflows.rule_figures import FIGURES, figures_of, tolerance_figures
 from service.workflows.rules import AnyRule, RuleKey, counts_from_text, counts_text, planned_counts
 from service.workflows.services import Services
 
@@ -105,8 +105,8 @@ def _figures(rule: AnyRule) -> dict[str, Any]:
         return {
             **dict.fromkeys(FIGURES),
             "acceptance_limits": rule.acceptance_limits,
-            "lower_tolerance_limit": rule.tolerance.lower,
-            "upper_tolerance_limit": rule.tolerance.upper,
+            **tolerance_figures(rule.tolerance),
+            "within_domain": rule.truncated,
             "coverage_probability": rule.coverage_probability,
             "smallest_standard_uncertainty": rule.box.smallest_standard_uncertainty,
             "largest_standard_uncertainty": rule.box.largest_standard_uncertainty,

@@ -184,6 +184,7 @@ def _explained(
         tolerance=tolerance(requirement, characteristic),
         rule=decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
+        truncated=requirement.within_domain,
     )
 
 

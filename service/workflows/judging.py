@@ -9,6 +9,7 @@ from typing import Any, Final
 from budgets.errors import BudgetsError
 from budgets.judgements import Judgement
 from budgets.release import ReleaseRule
+from budgets.sureness import Sureness, sureness
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.workflows.calendar import NOTICE
@@ -110,10 +111,11 @@ def _rule_on(
     characteristic = register.characteristics[request.product, requirement.characteristic]
     rule, limits, unusable = _release_rule(register, specification, requirement, measured)
     holds = (*measured.holds, *unusable)
-    judgement = shown = None
+    judgement = shown = sure = None
     if rule is not None and measured.estimate is not None:
         judgement = None if holds else rule.judge(measured.estimate)
-        shown = display(rule, measured.estimate, judgement, characteristic, limits)
+        sure = None if holds else sureness(rule, measured.estimate)
+        shown = display(rule, measured.estimate, judgement, sure, characteristic, limits)
     outcome = "hold" if judgement is None else judgement.outcome
     verdict = {
         "characteristic": requirement.characteristic,
@@ -122,6 +124,9 @@ def _rule_on(
         "outcome": outcome,
         "estimate": measured.estimate,
         **_figures(rule, limits, judgement),
+        **_sureness(sure),
+        "prior": None,
+        "judged": requirement.judged,
         "decision_rule": _decision_rule(requirement),
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
         "samples": measured.samples,
@@ -168,6 +173,23 @@ def _figures(rule: ReleaseRule | None, limits: str | None, judgement: Judgement 
     }
 
 
+def _sureness(found: Sureness | None) -> dict[str, Any]:
+    """Write how sure the uncertainty itself is; null where it is taken as known, or nothing was judged."""
+    if found is None:
+        return {"standard_uncertainty_interval": None, "conformance_probability_interval": None}
+    return {
+        "standard_uncertainty_interval": {
+            "lower": found.lower_standard_uncertainty,
+            "upper": found.upper_standard_uncertainty,
+            "coverage_probability": found.coverage_probability,
+        },
+        "conformance_probability_interval": {
+            "lower": found.lower_conformance_probability,
+            "upper": found.upper_conformance_probability,
+        },
+    }
+
+
 def _nothing_in_force(code: str | None) -> Ruling:
     """Rule on a specification that is asked for but not in force, or on a product without any."""
     what = (
@@ -190,6 +212,9 @@ def _nothing_in_force(code: str | None) -> Ruling:
         "outcome": "hold",
         "estimate": None,
         **_figures(None, None, None),
+        **_sureness(None),
+        "prior": None,
+        "judged": None,
         "decision_rule": None,
         "budget": None,
         "samples": 0,

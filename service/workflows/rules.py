@@ -16,6 +16,7 @@ from budgets.errors import LimitsError, ModelError
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
+from budgets.rounded_comparison import rounded_tolerance
 from budgets.units import convert
 from service.documents import Characteristic, Requirement, RuleOfDecision, ToleranceLimit
 from service.store.rows import StoredRule
@@ -99,6 +100,8 @@ def decision_rule(stated: RuleOfDecision) -> DecisionRule:
         coverage_probability=stated.coverage_probability,
         sides=stated.sides,
         largest_risk=stated.largest_risk,
+        rejection=stated.rejection,
+        rounds=stated.rounds,
     )
 
 
@@ -109,11 +112,21 @@ def tolerance(requirement: Requirement, characteristic: Characteristic) -> Toler
         return None if limit is None else convert(limit.value, limit.unit, characteristic.unit)
 
     lower, upper = requirement.lower_tolerance_limit, requirement.upper_tolerance_limit
-    return Tolerance(
-        lower=value(lower),
-        upper=value(upper),
-        lower_inclusive=lower is None or lower.inclusive,
-        upper_inclusive=upper is None or upper.inclusive,
+    inclusive = lower is None or lower.inclusive, upper is None or upper.inclusive
+    if requirement.comparison == "absolute":
+        return Tolerance(value(lower), value(upper), *inclusive)
+    for name, limit in (("lower_tolerance_limit", lower), ("upper_tolerance_limit", upper)):
+        if limit is not None and limit.unit != characteristic.unit:
+            raise LimitsError(
+                f"estimates are rounded in {characteristic.unit}: state the limit in that, not {limit.unit}",
+                where=(name, "unit"),
+            )
+    return rounded_tolerance(
+        value(lower),
+        value(upper),
+        decimals=requirement.decimals or 0,
+        lower_inclusive=inclusive[0],
+        upper_inclusive=inclusive[1],
     )
 
 
@@ -139,6 +152,7 @@ def compile_rule(
         tolerance(requirement, characteristic),
         decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
+        truncated=requirement.within_domain,
         distribution=distribution,
         risk_per_look=risk_per_look,
         guard_band=guard_band,

@@ -69,6 +69,13 @@ def _check_requirement(
     if len(collector.faults) == before:
         collector.attempt(pointer, tolerance, requirement, characteristic)
     collector.attempt(f"{pointer}/decision_rule", decision_rule, requirement.decision_rule)
+    domain = characteristic.natural_domain
+    if requirement.within_domain and domain.lower is None and domain.upper is None:
+        collector.add(
+            f"{pointer}/within_domain",
+            f"{requirement.characteristic} has no natural domain",
+            "false, or a natural domain",
+        )
     one_sided = None in limits.values()
     if one_sided and requirement.decision_rule.least_capability_index is not None:
         collector.add(

@@ -11,20 +11,26 @@ from budgets.reporting import (
     decimal_text,
     number_text,
     probability_text,
+    rejection_limit_text,
     rounded,
     statement,
 )
+from budgets.sureness import Sureness, sureness_text
 from service.documents import Characteristic
 from service.workflows.measured import Hold
 
 # Every double is told from its neighbours by then.
 _MOST_DECIMALS: Final = 17
+_NO_FURTHER_READINGS: Final = (
+    "The rule plans no further readings. A person decides, with an analysis by the laboratory."
+)
 
 
 def display(
     rule: ReleaseRule,
     estimate: float,
     judgement: Judgement | None,
+    sure: Sureness | None,
     characteristic: Characteristic,
     limits: str | None,
 ) -> dict[str, Any]:
@@ -44,6 +50,7 @@ def display(
         "conformance_probability": None
         if judgement is None
         else probability_text(judgement.conformance_probability),
+        "how_sure": None if judgement is None else sureness_text(sure, characteristic.unit),
         "statement": None
         if judgement is None
         else statement(
@@ -62,23 +69,66 @@ def about_the_value(rule: ReleaseRule, estimate: float, outcome: str, unit: str)
     side = "upper" if _misses_upper(rule, estimate) else "lower"
     relation = "above" if side == "upper" else "below"
     tolerance_limit = getattr(rule, f"{side}_tolerance_limit")
+    guarded = rule.decision_rule.rejection == "guarded"
     if outcome == "reject":
-        shown = _told_apart(rule, estimate, tolerance_limit)
+        limit = getattr(rule, f"{side}_rejection_limit") if guarded else tolerance_limit
+        shown = _told_apart(rule, estimate, limit)
+        named = (
+            f"the rejection limit {_rejection_text(limit, shown, side)} {unit}"
+            if guarded
+            else _tolerance_text(rule, side, unit)
+        )
         return Hold(
             "outside-tolerance",
-            f"{shown} {unit} is {relation if estimate != tolerance_limit else 'at'} the tolerance limit "
-            f"{number_text(tolerance_limit)} {unit}.",
+            f"{shown} {unit} is {relation if estimate != limit else 'at'} {named}.",
             "The lot does not meet the specification. A person decides what becomes of it.",
         )
+    if not rule.tolerance.holds(estimate):
+        return _not_proved(rule, estimate, side, unit)
     acceptance_limit = getattr(rule, f"{side}_acceptance_limit")
     shown = _told_apart(rule, estimate, acceptance_limit)
-    decimals = len(shown.partition(".")[2])
     return Hold(
         "in-guard-band",
-        f"{shown} {unit} is within the tolerance limit {number_text(tolerance_limit)} {unit} but {relation} "
-        f"the acceptance limit {acceptance_limit_text(acceptance_limit, decimals, side=side)} {unit}.",
-        "The rule plans no further readings. A person decides, with an analysis by the laboratory.",
+        f"{shown} {unit} is within {_tolerance_text(rule, side, unit)} but {relation} "
+        f"the acceptance limit {_acceptance_text(acceptance_limit, shown, side)} {unit}.",
+        _NO_FURTHER_READINGS,
     )
+
+
+def _not_proved(rule: ReleaseRule, estimate: float, side: str, unit: str) -> Hold:
+    """Say that an estimate is outside of tolerance, but not so far that nonconformity is proved."""
+    limit = getattr(rule, f"{side}_rejection_limit")
+    shown = _told_apart(rule, estimate, getattr(rule, f"{side}_tolerance_limit"))
+    beyond = (
+        "no value proves that"
+        if limit is None
+        else f"only beyond the rejection limit {_rejection_text(limit, shown, side)} {unit} that is proved"
+    )
+    return Hold(
+        "in-guard-band",
+        f"{shown} {unit} is not within {_tolerance_text(rule, side, unit)}, but {beyond}.",
+        _NO_FURTHER_READINGS,
+    )
+
+
+def _tolerance_text(rule: ReleaseRule, side: str, unit: str) -> str:
+    """Name a tolerance limit as it is stated, and what rounding makes of it."""
+    effective = getattr(rule, f"{side}_tolerance_limit")
+    if rule.stated_limits is None:
+        return f"the tolerance limit {number_text(effective)} {unit}"
+    stated = getattr(rule.stated_limits, side)
+    return (
+        f"the tolerance limit {number_text(stated)} {unit} (rounded to {rule.stated_limits.decimals} "
+        f"decimals, so {number_text(effective)} {unit} unrounded)"
+    )
+
+
+def _acceptance_text(limit: float, beside: str, side: str) -> str:
+    return acceptance_limit_text(limit, len(beside.partition(".")[2]), side=side)
+
+
+def _rejection_text(limit: float, beside: str, side: str) -> str:
+    return rejection_limit_text(limit, len(beside.partition(".")[2]), side=side)
 
 
 def _misses_upper(rule: ReleaseRule, estimate: float) -> bool:

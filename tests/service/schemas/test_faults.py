@@ -133,16 +133,14 @@ _RULE = "requires/0/decision_rule"
     ("kind", "path", "value"),
     [
         (Specification, f"{_RULE}/rounds", 2),
-        (Specification, f"{_RULE}/rejection", "guarded"),
         (Specification, f"{_RULE}/kind", "guarded_by_global_risk"),
         (Specification, f"{_RULE}/prior", {"mean": 3}),
         (Specification, f"{_RULE}/specific_risk_cap", 0.1),
         (Specification, f"{_RULE}/replicate_level", 0.01),
         (Specification, f"{_RULE}/largest_lot_risk", 0.01),
-        (Specification, "requires/0/comparison", "rounded"),
         (Specification, "requires/0/judged", "item"),
         (documents.Plant, "replicate_level", 0.01),
-        (documents.Study, "rows", [["P01", 1, 3.1]] * 5001),
+        (documents.Study, "rows", [["P01", 1, 3.1]] * 20_001),
     ],
 )
 def test_what_is_not_built_yet_is_refused_as_such(kind: type[Any], path: str, value: Any) -> None:
