@@ -118,6 +118,42 @@ class Budget:
         """The quantity that is read, of a budget without a model."""
         return next(item.quantity for item in self.components if item.quantity != BIAS)
 
+    @property
+    def correction(self) -> float:
+        """What is taken off the mean reading without a model: the bias, where it is corrected."""
+        return 0.0 if self.bias is None or self.bias_treatment != "corrected" else self.bias
+
+    def estimate(self, means: Mapping[str, float]) -> float:
+        """Return the estimate of the measurand.
+
+        Parameters
+        ----------
+        means : mapping of str to float
+            Of every quantity that is read, the weighted mean over its readings.
+
+        Returns
+        -------
+        float, unit of the characteristic
+            Mean reading less bias, or the value of the measurement model: the mean first, then the model.
+
+        Raises
+        ------
+        ModelError
+            If the means are others than the budget reads, or the model has no value there.
+
+        Notes
+        -----
+        Source: JCGM 100:2008, 4.1.4 (from memory), the second of its two ways: the model of the means.
+        """
+        if self.model is not None:
+            return self.model.value(means)
+        if set(means) != {self.characteristic}:
+            raise ModelError(
+                f"the one quantity that is read is {self.characteristic}",
+                where=("means", self.characteristic),
+            )
+        return means[self.characteristic] - self.correction
+
 
 def _faults_of_members(budget: Budget) -> list[BudgetsError]:
     faults: list[BudgetsError] = []

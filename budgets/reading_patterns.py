@@ -8,6 +8,7 @@ composites, unbalanced numbers and several analyzers have their place.
 from __future__ import annotations
 
 import math
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import pairwise
@@ -150,9 +151,7 @@ class ReadingPattern:
         """
         if self.weights is not None:
             return self.weights
-        samples = self.groups["sample"]
-        counts = {label: samples.count(label) for label in samples}
-        return tuple(1 / len(counts) / counts[label] for label in samples)
+        return mean_weights(self.groups["sample"])
 
     def averaging_weights(self) -> dict[str, float]:
         """Return by how much the estimate reduces the variance of each level.
@@ -192,6 +191,28 @@ class ReadingPattern:
 
 def _parts(label: Label) -> tuple[str, ...]:
     return (label,) if isinstance(label, str) else label
+
+
+def mean_weights(samples: Sequence[Label]) -> tuple[float, ...]:
+    """Return the weight of every reading in the mean of the sample means.
+
+    Parameters
+    ----------
+    samples : sequence of str, shape (n,)
+        The sample of every reading.
+
+    Returns
+    -------
+    tuple of float, shape (n,)
+        ``1/(samples * readings of the sample)``; adding up to 1.
+
+    Examples
+    --------
+    >>> mean_weights(["a", "a", "b"])
+    (0.25, 0.25, 0.5)
+    """
+    counts = Counter(samples)
+    return tuple(1 / (len(counts) * counts[label]) for label in samples)
 
 
 def least_squares_weights(covariance: Sequence[Sequence[float]]) -> tuple[float, ...]:

@@ -11,7 +11,7 @@ from zoneinfo import ZoneInfo
 
 from budgets.errors import ModelError
 from budgets.propagation import Counts
-from budgets.reading_patterns import ReadingPattern
+from budgets.reading_patterns import ReadingPattern, mean_weights
 from budgets.units import conversion
 from service.documents import Calibration, DecisionRequest, Reading
 from service.errors import Fault, InvalidRequest
@@ -102,12 +102,11 @@ def _values(register: Register, request: DecisionRequest, name: str, scans: list
     return [convert(reading.values[name]) for reading in scans]
 
 
-def _weights(scans: list[Reading]) -> list[float]:
+def _weights(scans: list[Reading]) -> tuple[float, ...]:
     """Give each reading its weight: as sent, else such that the estimate is the mean of sample means."""
     if scans[0].weight is not None:
-        return [reading.weight or 0.0 for reading in scans]
-    per_sample = Counter(reading.sample for reading in scans)
-    return [1 / (len(per_sample) * per_sample[reading.sample]) for reading in scans]
+        return tuple(reading.weight or 0.0 for reading in scans)
+    return mean_weights([reading.sample for reading in scans])
 
 
 def _done(scans: list[Reading]) -> Counts | ReadingPattern:
@@ -177,18 +176,10 @@ def _budget(
 
 def _estimate(budget: BudgetInForce, means: Mapping[str, float]) -> float | None:
     """Give the value of the measurement model; none where the model has none at these readings."""
-    if budget.budget.model is None:
-        (mean,) = means.values()
-        return mean - _correction(budget)
     try:
-        return budget.budget.model.value(means)
+        return budget.budget.estimate(means)
     except ModelError:
         return None
-
-
-def _correction(budget: BudgetInForce) -> float:
-    bias = budget.budget.bias if budget.document.bias_treatment == "corrected" else None
-    return bias or 0.0
 
 
 def _nothing_in_force(code: str) -> tuple[Hold, ...]:
@@ -266,7 +257,8 @@ def _range_holds(
     product, characteristic = budget.document.product, budget.document.characteristic
     checked: list[tuple[str, list[float], tuple[float, float]]] = []
     if budget.budget.model is None:
-        values = [value - _correction(budget) for value in by_channel[characteristic]]
+        correction = budget.budget.correction
+        values = [value - correction for value in by_channel[characteristic]]
         checked.append((characteristic, values, budget.budget.validated_range))
     else:
         checked += [(name, by_channel[name], ends) for name, ends in budget.budget.validated_box.items()]

@@ -5,6 +5,7 @@ import pytest
 from budgets.budget import Count, Procedure
 from budgets.errors import BudgetsError, ComponentError, ModelError
 from budgets.evidence.evaluation import MeanSquare, Term
+from tests.budgets.scans import MEANS, a_scan_budget
 
 WHOLE = {"contains": ("repeatability", "remainder", "resolution"), "level": "lot"}
 BIAS = {"quantity": "bias", "level": "calibration"}
@@ -131,3 +132,18 @@ def test_one_code_stands_for_one_mean_square(a_budget, a_component):
         a_budget, *(a_component(str(i), terms=t) for i, t in enumerate(twice)), match="are called same"
     )
     assert error.where == ("components",)
+
+
+def test_the_estimate_is_the_mean_reading_less_a_bias_that_is_corrected(a_budget):
+    assert a_budget(bias=0.03).estimate({"moisture": 3.0}) == 3.0 - 0.03
+    assert a_budget(bias=0.03, bias_treatment="in_guard_band").estimate({"moisture": 3.0}) == 3.0
+    assert a_budget(bias=0.03).correction == 0.03
+
+
+def test_the_estimate_of_a_budget_with_a_model_is_the_model_of_the_means():
+    assert a_scan_budget().estimate(MEANS) == pytest.approx(100 * 25 / (100 - 3 - 27))
+
+
+def test_an_estimate_of_something_else_is_refused(a_budget):
+    with pytest.raises(ModelError, match="moisture"):
+        a_budget().estimate({"fat": 27.0})

@@ -9,7 +9,7 @@ from budgets.budget import Count, Procedure
 from budgets.errors import ProcedureError
 from budgets.levels import LEVELS
 from budgets.propagation import Counts, averaging_weights, check_counts
-from budgets.reading_patterns import ReadingPattern, least_squares_weights
+from budgets.reading_patterns import ReadingPattern, least_squares_weights, mean_weights
 
 
 @given(st.lists(st.integers(1, 5), min_size=1, max_size=5))
@@ -117,3 +117,10 @@ def test_unequal_weights_without_replacement_agree_with_all_orders_of_drawing():
     ]
     found = ReadingPattern({"sample": ("a", "a", "b", "c")}, weights, {"sample": 5}).averaging_weights()
     assert found["sample"] * np.var(lot, ddof=1) == pytest.approx(np.mean(np.square(errors)), rel=1e-12)
+
+
+def test_the_mean_of_sample_means_is_what_its_weights_say():
+    samples = ["b", "a", "b", "c", "b", "a"]
+    values = [3.0, 3.4, 3.2, 2.7, 3.1, 3.6]
+    means = [np.mean([v for v, s in zip(values, samples, strict=True) if s == name]) for name in "abc"]
+    assert np.dot(mean_weights(samples), values) == pytest.approx(np.mean(means))
