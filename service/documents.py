@@ -141,11 +141,14 @@ class Calibration:
 class DeclaredEvidence:
     """A stated figure and what it means; ``estimate`` chooses where the meaning gives several.
 
-    ``declaration`` keeps the members of budgets.declarations.Declaration as they were given.
+    ``declaration`` keeps the members of budgets.declarations.Declaration as they were given. ``stated_on``
+    and ``serves_until`` date the figure; one that says how long it serves lapses as a study does.
     """
 
     declaration: Mapping[str, Any]
     estimate: str | None = None
+    stated_on: date | None = None
+    serves_until: date | None = None
 
 
 @dataclass(frozen=True)
@@ -156,15 +159,36 @@ class StudyEvidence:
     estimate: str
 
 
-Evidence = StudyEvidence | DeclaredEvidence
+StatedEvidence = StudyEvidence | DeclaredEvidence
+
+
+@dataclass(frozen=True)
+class LaboratoryEvidence:
+    """A component of a laboratory as its entry in the master data has it when the reference is resolved.
+
+    ``characteristic`` may be left out where only one is spoken of.
+    """
+
+    laboratory: str
+    component: str
+    characteristic: str | None = None
+
+
+Evidence = StudyEvidence | DeclaredEvidence | LaboratoryEvidence
 
 
 @dataclass(frozen=True)
 class LaboratoryMethod:
-    """A reference method as a laboratory runs it, with its trueness where that is known."""
+    """A reference method as a laboratory runs it, with what is known of its errors, each by its evidence.
+
+    ``repeatability`` is of one determination, ``run`` what runs of the method differ by beside that,
+    ``trueness`` what the laboratory as a whole may be off.
+    """
 
     method: str
-    trueness: Evidence | None = None
+    trueness: StatedEvidence | None = None
+    repeatability: StatedEvidence | None = None
+    run: StatedEvidence | None = None
 
 
 @dataclass(frozen=True)

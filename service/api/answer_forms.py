@@ -297,6 +297,7 @@ _BUDGET_FIGURES = _object(
                 "A component, and what would be without it or with half of it.",
                 {**_LINE, "evidence": {"type": "object"}, "without": _ALTERNATIVE, "halved": _ALTERNATIVE},
                 remark={**_TEXT, "description": "Why the expanded uncertainty rises without it, if it does."},
+                laboratory={"type": "object", "description": "The entry that it was taken from, if any."},
             )
         ),
         "warnings": _list({"type": "object"}),

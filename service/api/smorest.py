@@ -20,9 +20,14 @@ from service.api.converters import CONVERTERS
 from service.api.operations import PHRASES, problem_name
 from service.api.problems import MEDIA_TYPE, problem_response
 from service.schemas import SCHEMAS
-from service.schemas.evidence import DeclaredEvidenceSchema, StudyEvidenceSchema
+from service.schemas.evidence import (
+    DeclaredEvidenceSchema,
+    LaboratoryEvidenceSchema,
+    StudyEvidenceSchema,
+)
 
 PREFIX = "/v1"
+_FORMS_OF_EVIDENCE = (StudyEvidenceSchema(), DeclaredEvidenceSchema(), LaboratoryEvidenceSchema())
 
 
 def is_api_path(path: str) -> bool:
@@ -58,7 +63,7 @@ class ShoalmarkApi(flask_smorest.Api):  # type: ignore[misc] # the package carri
         for converter in CONVERTERS.values():
             self.register_converter(converter, lambda each: each.form())
         components = self.spec.components
-        for schema in (StudyEvidenceSchema(), DeclaredEvidenceSchema(), *SCHEMAS.values()):
+        for schema in (*_FORMS_OF_EVIDENCE, *SCHEMAS.values()):
             name = type(schema).__name__.removesuffix("Schema")
             if name not in components.schemas:
                 components.schema(name, schema=schema)

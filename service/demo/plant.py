@@ -143,7 +143,7 @@ def master_data() -> Iterator[tuple[str, Document]]:
             "kind": "laboratory",
             "methods": {
                 **{
-                    channel.code: {"method": channel.method, "trueness": {"declaration": _trueness(channel)}}
+                    channel.code: {"method": channel.method, "trueness": _trueness(channel)}
                     for channel in CHANNELS
                 },
                 DERIVED: {"method": COMPUTED},
@@ -290,7 +290,7 @@ def budget(channel: Channel = CHANNELS[0]) -> Document:
             component("sampling", name, "sample", {"declaration": _sampling(channel)}),
             component("remainder", name, "lot", estimate("pairs", "remainder")),
             component("bias", "bias", "calibration", estimate("pairs", "bias")),
-            component("reference-trueness", "bias", "reference", {"declaration": _trueness(channel)}),
+            component("reference-trueness", "bias", "reference", _of_laboratory(channel)),
         ],
         "correlations": [],
         "reason": "first budget of this calibration",
@@ -312,12 +312,12 @@ def derived_budget() -> Document:
             "code": f"{channel.code}-{code}",
             "quantity": quantity,
             "level": level,
-            "evidence": {"declaration": declared},
+            "evidence": evidence,
         }
         for channel in CHANNELS
-        for code, quantity, level, declared in (
-            ("sampling", channel.code, "sample", _sampling(channel)),
-            ("trueness", biases[channel.code], "reference", _trueness(channel)),
+        for code, quantity, level, evidence in (
+            ("sampling", channel.code, "sample", {"declaration": _sampling(channel)}),
+            ("trueness", biases[channel.code], "reference", _of_laboratory(channel)),
         )
     ]
     return {
@@ -451,7 +451,16 @@ def _reading(row: dict[str, str], last_day: int) -> Document:
 
 
 def _trueness(channel: Channel) -> Document:
-    return _declared(channel.trueness, "ring test 12, invented")
+    return {
+        "declaration": _declared(channel.trueness, "ring test 12, invented"),
+        "stated_on": _days_ago(60),
+        "serves_until": _days_ago(-305),
+    }
+
+
+def _of_laboratory(channel: Channel) -> Document:
+    """Refer to the trueness that stands in the laboratory's entry."""
+    return {"laboratory": LABORATORY, "component": "trueness", "characteristic": channel.code}
 
 
 def _sampling(channel: Channel) -> Document:

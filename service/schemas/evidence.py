@@ -6,12 +6,14 @@ from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
 
-from marshmallow import fields
+from marshmallow import ValidationError, fields, validates_schema
 
 from budgets.declarations import DISTRIBUTIONS, MEANINGS, RELATIVE_MEANINGS
-from service.documents import DeclaredEvidence, StudyEvidence
-from service.schemas.base import StrictSchema, complaint, got
-from service.schemas.fields import Choice, Code, Count, Name, Number, Part, Text, _Stating
+from service.documents import DeclaredEvidence, LaboratoryEvidence, StudyEvidence
+from service.schemas.base import StrictSchema, Wrong, complaint, got
+from service.schemas.fields import Choice, Code, Count, Day, Name, Number, Part, Text, _Stating
+
+LABORATORY_COMPONENTS = ("trueness", "repeatability", "run")
 
 
 class FactorField(_Stating, fields.Raw):
@@ -72,35 +74,67 @@ class DeclaredEvidenceSchema(StrictSchema):
     loads_to = DeclaredEvidence
     declaration = Part(DeclarationSchema, required=True)
     estimate = Name(allow_none=True, load_default=None)
+    stated_on = Day(allow_none=True, load_default=None, about="The day of the document.")
+    serves_until = Day(
+        allow_none=True, load_default=None, about="The last day on which the figure serves; null: no end."
+    )
+
+    @validates_schema(skip_on_field_errors=True)
+    def _dates_in_order(self, data: dict[str, Any], **_: Any) -> None:
+        stated_on, serves_until = data["stated_on"], data["serves_until"]
+        if None not in (stated_on, serves_until) and serves_until < stated_on:
+            wrong = Wrong("lies before stated_on", "a date not before stated_on")
+            raise ValidationError({"serves_until": [wrong]})
+
+
+class LaboratoryEvidenceSchema(StrictSchema):
+    """A component of a laboratory, as its entry in the master data has it."""
+
+    loads_to = LaboratoryEvidence
+    laboratory = Code(required=True)
+    component = Choice(*LABORATORY_COMPONENTS, required=True)
+    characteristic = Code(
+        allow_none=True, load_default=None, about="Whose method, where several are spoken of."
+    )
 
 
 class EvidenceField(_Stating, fields.Raw):
-    """Either form of evidence; which one is said by its members."""
+    """One of the forms of evidence; which one is said by its members.
 
-    expected = "an object with study and estimate, or with a declaration"
+    The evidence of a laboratory's own components is stated: it does not lead to a laboratory again.
+    """
 
-    def __init__(self, **kwargs: Any) -> None:
-        names = ("StudyEvidence", "DeclaredEvidence")
+    def __init__(self, *, stated: bool = False, **kwargs: Any) -> None:
+        self._forms: dict[str, StrictSchema] = {
+            "declaration": DeclaredEvidenceSchema(),
+            "study": StudyEvidenceSchema(),
+            **({} if stated else {"laboratory": LaboratoryEvidenceSchema()}),
+        }
+        self.expected = "an object with study and estimate, " + (
+            "or with a declaration" if stated else "with laboratory and component, or with a declaration"
+        )
+        names = [type(form).__name__.removesuffix("Schema") for form in self._forms.values()]
         either: list[dict[str, Any]] = [{"$ref": f"#/components/schemas/{name}"} for name in names]
         null = [{"type": "null"}] if kwargs.get("allow_none") else []
         super().__init__(schema={"oneOf": either + null}, **kwargs)
-        self._study, self._declared = StudyEvidenceSchema(), DeclaredEvidenceSchema()
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
         if not isinstance(value, dict):
             raise self.wrong(value)
-        if "declaration" in value and "study" in value:
-            raise complaint("got both a study and a declaration", self.expected)
-        if "declaration" in value:
-            return self._declared.load(value)
-        if "study" in value:
-            return self._study.load(value)
-        raise complaint(got(value) + " with neither of them", self.expected)
+        found = [name for name in self._forms if name in value]
+        if len(found) > 1:
+            raise complaint(f"got {' and '.join(found)} at once", self.expected)
+        if not found:
+            raise complaint(got(value) + " with none of them", self.expected)
+        return self._forms[found[0]].load(value)
 
     def _serialize(self, value: Any, attr: str | None, obj: Any, **kwargs: Any) -> Any:
-        if isinstance(value, StudyEvidence):
+        if isinstance(value, (StudyEvidence, LaboratoryEvidence)):
             return asdict(value)
         if isinstance(value, DeclaredEvidence):
             stated: Mapping[str, Any] = value.declaration
-            return {"declaration": dict(stated), "estimate": value.estimate}
+            # Only what is there: documents from before declarations had dates stay as they are.
+            days = {"stated_on": value.stated_on, "serves_until": value.serves_until}
+            dated = {name: day.isoformat() for name, day in days.items() if day is not None}
+            return {"declaration": dict(stated), "estimate": value.estimate, **dated}
         return None

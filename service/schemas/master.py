@@ -174,7 +174,21 @@ class LaboratoryMethodSchema(StrictSchema):
 
     loads_to = LaboratoryMethod
     method = Text(200, required=True)
-    trueness = EvidenceField(allow_none=True, load_default=None)
+    trueness = EvidenceField(
+        stated=True,
+        allow_none=True,
+        load_default=None,
+        about="What the laboratory as a whole may be off: never averaged away, never taken out.",
+    )
+    repeatability = EvidenceField(
+        stated=True, allow_none=True, load_default=None, about="Of one determination within a run."
+    )
+    run = EvidenceField(
+        stated=True,
+        allow_none=True,
+        load_default=None,
+        about="What runs differ by, beside the repeatability within them.",
+    )
 
 
 class LaboratorySchema(StrictSchema):

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
+from typing import Any
 
 from budgets.units import convert
-from service.documents import BudgetComponent, BudgetDocument, Study, StudyEvidence
+from service.documents import BudgetComponent, BudgetDocument, Evidence, Study, StudyEvidence
 from service.schemas.base import pointer_step
+from service.store.unit_of_work import UnitOfWork
 from service.workflows.evidence import Behind, FaultCollector
 
 
@@ -23,7 +25,7 @@ def check_quantities(document: BudgetDocument, line: BudgetComponent, behind: Be
     collector = FaultCollector()
     study, quantities = behind.study, document.model.quantities
     if study is not None and line.quantity is not None and quantities[line.quantity].source == "reading":
-        about = _about(study, line)
+        about = channel_of(study, line.evidence)
         if about != line.quantity:
             pointer = f"#/components/{index}/evidence"
             collector.add(pointer, f"it is about {about!r}", f"evidence about {line.quantity!r}")
@@ -39,14 +41,51 @@ def check_quantities(document: BudgetDocument, line: BudgetComponent, behind: Be
     collector.finish("The evidence is about something else.")
 
 
-def _about(study: Study, line: BudgetComponent) -> str:
+def channel_of(study: Study, evidence: Evidence) -> str:
     """Name the channel that an estimate of a study is about; of several channels its name ends with it."""
-    if not study.characteristics or not isinstance(line.evidence, StudyEvidence):
+    if not study.characteristics or not isinstance(evidence, StudyEvidence):
         return study.characteristic
     for name in study.characteristics:
-        if line.evidence.estimate.endswith(f"_{name}"):
+        if evidence.estimate.endswith(f"_{name}"):
             return name
     return study.characteristic
+
+
+def check_laboratory_fits(
+    unit_of_work: UnitOfWork,
+    document: BudgetDocument,
+    line: BudgetComponent,
+    laboratory: Mapping[str, Any],
+    ours: Sequence[str],
+    index: int,
+) -> None:
+    """Refuse what is known of a laboratory where something else is spoken of.
+
+    Its trueness stays the same however often is read; what it repeats is no error of another instrument.
+
+    Raises
+    ------
+    InvalidRequest
+        The component is about a characteristic other than ``ours``, or may not stand in this line.
+    """
+    collector = FaultCollector()
+    pointer, component = f"#/components/{index}", laboratory["component"]
+    if line.quantity is not None and document.model.quantities[line.quantity].source == "reading":
+        ours = (line.quantity,)
+    if laboratory["characteristic"] not in ours:
+        detail = f"it is about {laboratory['characteristic']!r}"
+        collector.add(f"{pointer}/evidence/characteristic", detail, " or ".join(ours))
+    if component == "trueness":
+        if line.level != "reference":
+            expected = "'reference' for the trueness of a laboratory"
+            collector.add(f"{pointer}/level", f"got {line.level!r}", expected)
+    else:
+        for analyzer in document.calibrations:
+            stored = unit_of_work.master.get("analyzer", analyzer)
+            if stored is None or stored.document["kind"] != "laboratory":
+                detail = f"the {component} of a laboratory says nothing of {analyzer!r}"
+                collector.add(f"{pointer}/evidence/component", detail, "'trueness'")
+    collector.finish("The evidence is about something else.")
 
 
 def check_values_are_covered(

@@ -80,8 +80,13 @@ def evaluation(
         "acceptance_limits": _limits(explained.acceptance_limits),
         "levels": [_subtotal(level) for level in explained.subtotals],
         "components": [
-            {"evidence": evidence, **_component(part)}
-            for evidence, part in zip(_evidence(subject.document), explained.components, strict=True)
+            {"evidence": evidence, **_taken_from(stored), **_component(part)}
+            for evidence, stored, part in zip(
+                _evidence(subject.document),
+                subject.evaluation["components"],
+                explained.components,
+                strict=True,
+            )
         ],
         "warnings": [asdict(warning) for warning in explained.warnings],
     }
@@ -273,6 +278,11 @@ def _limits(limits: Limits | None) -> Answer | None:
 
 def _evidence(document: BudgetDocument) -> list[Answer]:
     return [line["evidence"] for line in dump(document)["components"]]
+
+
+def _taken_from(stored: Answer) -> Answer:
+    """Name the entry of the laboratory that a component was taken from."""
+    return {"laboratory": stored["laboratory"]} if "laboratory" in stored else {}
 
 
 def _document_changes(before: Answer, after: Answer) -> list[Answer]:

@@ -14,19 +14,26 @@ from service.documents import (
     BudgetDocument,
     Characteristic,
     Evidence,
+    LaboratoryEvidence,
     Specification,
     Study,
 )
-from service.errors import Conflict, Fault
+from service.errors import Conflict, Fault, InvalidRequest
 from service.ledger import format_instant
 from service.schemas import load
 from service.schemas.base import pointer_step
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
-from service.workflows.budget_evidence import check_quantities, check_ranges, check_values_are_covered
+from service.workflows.budget_evidence import (
+    check_laboratory_fits,
+    check_quantities,
+    check_ranges,
+    check_values_are_covered,
+)
 from service.workflows.calendar import lapse_instant
-from service.workflows.evidence import Behind, FaultCollector, resolve
+from service.workflows.evidence import Behind, FaultCollector, resolve_stated
+from service.workflows.laboratories import resolve
 from service.workflows.reference_methods import check_requirement
 from service.workflows.rules import RuleKey, compile_pair
 from service.workflows.stored_budgets import (
@@ -36,10 +43,9 @@ from service.workflows.stored_budgets import (
     component_of,
     is_default_model,
 )
+from service.workflows.trueness import check_trueness
 from service.workflows.versioned_kind import Approval, VersionedKind
 
-# The designs that compare the analyzer with a reference method.
-VALIDATIONS: Final = ("agreement", "covariance")
 _NUMBERED_QUANTITY: Final = re.compile(r"#/quantities/(\d+)(/name)?")
 
 
@@ -69,7 +75,7 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
     behind = tuple(item for item in found if item is not None)
     values = {name: item for name, item in valued.items() if item is not None}
     check_ranges(document, (*behind, *values.values()), collector)
-    _check_trueness(document, behind, collector)
+    check_trueness(document, behind, collector)
     collector.finish("The budget claims more than its evidence shows.")
     components = [
         collector.attempt(f"#/components/{index}", component_of, line, item.estimate, item.evaluation_type)
@@ -109,18 +115,39 @@ def _behind(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComp
     units = {document.model.quantities[name].unit for name in names}
     if len(units) > 1:
         raise NotSupportedError("errors of quantities of several units that go together")
-    behind = resolve(unit_of_work, line.evidence, code=code, unit=units.pop(), pointer=pointer)
+    behind = resolve(
+        unit_of_work,
+        line.evidence,
+        code=code,
+        unit=units.pop(),
+        pointer=pointer,
+        characteristic=_asked_about(unit_of_work, document, line),
+    )
+    if behind.laboratory is not None:
+        ours = (document.characteristic, *_derived_from(unit_of_work, document))
+        check_laboratory_fits(unit_of_work, document, line, behind.laboratory, ours, index)
     if behind.study is not None:
         _check_study_fits(unit_of_work, behind.study, document, pointer)
     check_quantities(document, line, behind, index)
     return behind
 
 
+def _asked_about(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComponent) -> str | None:
+    """Say which characteristic a laboratory is asked about when the evidence does not; None: it has to."""
+    if line.quantity is not None and document.model.quantities[line.quantity].source == "reading":
+        return line.quantity
+    return None if _derived_from(unit_of_work, document) else document.characteristic
+
+
 def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, evidence: Evidence) -> Behind:
     """Give what stands behind the value of a quantity, as a bias."""
     pointer = f"#/model/quantities/{name}/evidence"
     unit = document.model.quantities[name].unit
-    behind = resolve(unit_of_work, evidence, code=f"{document.code}/{name}", unit=unit, pointer=pointer)
+    if isinstance(evidence, LaboratoryEvidence):
+        fault = Fault("what is known of a laboratory is no value", "a study that gives one", pointer)
+        raise InvalidRequest("A quantity has no value.", faults=(fault,))
+    code = f"{document.code}/{name}"
+    behind = resolve_stated(unit_of_work, evidence, code=code, unit=unit, pointer=pointer)
     if behind.study is not None:
         _check_study_fits(unit_of_work, behind.study, document, pointer)
     collector = FaultCollector()
@@ -132,33 +159,6 @@ def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, eviden
         )
         collector.finish("A quantity has no value.")
     return behind
-
-
-def _check_trueness(document: BudgetDocument, behind: tuple[Behind, ...], collector: FaultCollector) -> None:
-    """Refuse a bias against a laboratory whose own trueness is in no component.
-
-    All reference values of a study share the bias of their laboratory: it sits in the bias that was found,
-    and no scatter shows it.
-    """
-    pairs = list(zip(document.components, behind, strict=True))
-    against = {
-        name
-        for line, item in pairs
-        if line.level == "calibration" and item.study is not None and item.study.design in VALIDATIONS
-        for name in ([line.quantity] if line.quantity else line.quantities.values())
-    }
-    known = {
-        name
-        for line in document.components
-        if line.level == "reference"
-        for name in ([line.quantity] if line.quantity else line.quantities.values())
-    }
-    for name in sorted(against - known):
-        collector.add(
-            "#/components",
-            f"no component of {name!r} at the level 'reference' holds the trueness of the laboratory",
-            "one from a ring test, a certified material or the between-laboratory part of its limit",
-        )
 
 
 def _check_study_fits(unit_of_work: UnitOfWork, study: Study, document: BudgetDocument, pointer: str) -> None:

@@ -4,18 +4,22 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
-from datetime import date
-from typing import Any, ParamSpec, TypeVar
+from datetime import UTC, date, datetime, timedelta
+from typing import Any, Final, ParamSpec, TypeVar
 
 from budgets.declarations import Declaration
 from budgets.declarations import evaluate as evaluate_declaration
 from budgets.errors import BudgetsError, NotSupportedError
 from budgets.evidence.evaluation import Estimate, Evaluation
 from budgets.units import conversion
-from service.documents import DeclaredEvidence, Evidence, Study, StudyEvidence
+from service.documents import DeclaredEvidence, StatedEvidence, Study, StudyEvidence
 from service.errors import Fault, InvalidRequest, NotSupported
 from service.schemas import load
 from service.store.unit_of_work import UnitOfWork
+
+LONGEST_SERVICE: Final = 3650
+"""Days that evidence may serve at most, whoever says how long: as much as a plant may say for a design."""
+_EASTERNMOST: Final = timedelta(hours=14)
 
 _T = TypeVar("_T")
 _P = ParamSpec("_P")
@@ -23,17 +27,18 @@ _P = ParamSpec("_P")
 
 @dataclass(frozen=True)
 class Behind:
-    """An estimate, how it was evaluated (GUM 2.3), and the study that it came from, if any."""
+    """An estimate, how it was evaluated (GUM 2.3), and the study that it came from, if any.
+
+    ``serves_until`` is the last day on which the evidence serves, None without an end. ``laboratory`` says
+    which entry of a laboratory it was taken from.
+    """
 
     estimate: Estimate
     evaluation_type: str
     study: Study | None = None
     diagnostics: Mapping[str, Any] = field(default_factory=dict)
-
-    @property
-    def serves_until(self) -> date | None:
-        """The last day on which the evidence serves; a declaration has none."""
-        return None if self.study is None else self.study.serves_until
+    serves_until: date | None = None
+    laboratory: Mapping[str, Any] | None = None
 
 
 class FaultCollector:
@@ -84,8 +89,10 @@ def budget_faults(error: BudgetsError, pointer: str) -> tuple[Fault, ...]:
     return (Fault(error.message, pointer=f"{pointer}{where}", supported=supported),)
 
 
-def resolve(unit_of_work: UnitOfWork, evidence: Evidence, *, code: str, unit: str, pointer: str) -> Behind:
-    """Find the estimate behind ``evidence``, expressed in ``unit``.
+def resolve_stated(
+    unit_of_work: UnitOfWork, evidence: StatedEvidence, *, code: str, unit: str | None, pointer: str
+) -> Behind:
+    """Find the estimate behind a study or a declaration, expressed in ``unit``; None leaves its own.
 
     Raises
     ------
@@ -97,7 +104,7 @@ def resolve(unit_of_work: UnitOfWork, evidence: Evidence, *, code: str, unit: st
     return _from_declaration(evidence, code, unit, pointer)
 
 
-def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str, pointer: str) -> Behind:
+def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str | None, pointer: str) -> Behind:
     stored = unit_of_work.studies.get(evidence.study)
     if stored is None:
         raise InvalidRequest(
@@ -116,16 +123,18 @@ def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str, po
     estimate = collector.attempt(pointer, evaluation.estimate, evidence.estimate)
     collector.finish("Evidence is missing.")
     assert estimate is not None
-    return Behind(_in_unit(estimate, study.unit, unit, pointer), "A", study, evaluation.diagnostics)
+    wanted = in_unit(estimate, study.unit, unit or study.unit, pointer)
+    return Behind(wanted, "A", study, evaluation.diagnostics, study.serves_until)
 
 
-def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer: str) -> Behind:
+def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str | None, pointer: str) -> Behind:
     collector = FaultCollector()
+    _check_days(evidence, pointer, collector)
     members = evidence.declaration
     # A relative figure is a fraction and needs no unit.
     if members.get("unit") is None and members.get("meaning") != "relative":
         collector.add(
-            f"{pointer}/declaration/unit", "is missing", f"the unit of the figure, such as {unit!r}"
+            f"{pointer}/declaration/unit", "is missing", f"the unit of the figure, such as {unit or '%'!r}"
         )
     if not members.get("document"):
         # Type B: whoever audits the budget goes back to the document (JCGM 100:2008, 4.3.1, from memory).
@@ -144,10 +153,23 @@ def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str, pointer:
     estimate = collector.attempt(pointer, evaluation.estimate, name)
     collector.finish("A declaration cannot be used.")
     assert estimate is not None
-    return Behind(estimate, "B")
+    return Behind(estimate, "B", serves_until=evidence.serves_until)
 
 
-def _in_unit(estimate: Estimate, from_unit: str, to_unit: str, pointer: str) -> Estimate:
+def _check_days(evidence: DeclaredEvidence, pointer: str, collector: FaultCollector) -> None:
+    stated_on, serves_until = evidence.stated_on, evidence.serves_until
+    if stated_on is None:
+        return
+    # A day that has begun nowhere on Earth yet, whatever the time zone of the plant.
+    today = (datetime.now(UTC) + _EASTERNMOST).date()
+    if stated_on > today:
+        collector.add(f"{pointer}/stated_on", f"got {stated_on}", f"a day not after {today}")
+    if serves_until is not None and (serves_until - stated_on).days > LONGEST_SERVICE:
+        expected = f"a day at most {LONGEST_SERVICE} days after stated_on: evidence grows old"
+        collector.add(f"{pointer}/serves_until", f"got {serves_until}", expected)
+
+
+def in_unit(estimate: Estimate, from_unit: str, to_unit: str, pointer: str) -> Estimate:
     """Express an estimate in another unit: errors are differences, so an offset of the unit cancels."""
     if from_unit == to_unit:
         return estimate

@@ -6,7 +6,6 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any, Final
 
-from budgets.errors import BudgetsError
 from budgets.units import conversion
 from service.access import require
 from service.documents import (
@@ -23,7 +22,8 @@ from service.ledger import Entry
 from service.schemas import dump
 from service.store.rows import StoredDocument
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.evidence import FaultCollector, resolve
+from service.workflows.evidence import FaultCollector
+from service.workflows.laboratories import check_laboratory
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record, was_recorded
 from service.workflows.services import Services
@@ -249,31 +249,6 @@ def _check_calibration(unit_of_work: UnitOfWork, calibration: Calibration, colle
                 collector.add(f"#/{member}/{channel}", "is no channel of the analyzer", "one of its channels")
 
 
-def _check_laboratory(unit_of_work: UnitOfWork, laboratory: Laboratory, collector: FaultCollector) -> None:
-    for characteristic, method in laboratory.methods.items():
-        trueness = method.trueness
-        if trueness is None:
-            continue
-        pointer = f"#/methods/{characteristic}/trueness"
-        unit = _stated_unit(trueness)
-        if unit is None:
-            collector.add(f"{pointer}/declaration/unit", "is missing", "the unit of the figure")
-            continue
-        collector.attempt(
-            pointer, resolve, unit_of_work, trueness, code=laboratory.code, unit=unit, pointer=pointer
-        )
-
-
-def _stated_unit(trueness: Any) -> str | None:
-    unit = getattr(trueness, "declaration", {}).get("unit")
-    try:
-        if unit is not None:
-            conversion(unit, unit)
-    except BudgetsError:
-        return None
-    return unit
-
-
 KINDS: Final[Mapping[str, MasterKind]] = {
     kind.name: kind
     for kind in (
@@ -287,6 +262,6 @@ KINDS: Final[Mapping[str, MasterKind]] = {
         MasterKind("line", Line, lambda item: item.code, _check_line),
         MasterKind("analyzer", Analyzer, lambda item: item.code, _check_analyzer),
         MasterKind("calibration", Calibration, lambda item: item.code, _check_calibration),
-        MasterKind("laboratory", Laboratory, lambda item: item.code, _check_laboratory),
+        MasterKind("laboratory", Laboratory, lambda item: item.code, check_laboratory),
     )
 }

@@ -20,6 +20,7 @@ from budgets.evidence.evaluation import Estimate
 from budgets.measurement_models import MeasurementModel, Quantity
 from service.documents import Bounds, BudgetComponent, BudgetDocument, PlannedCount
 from service.workflows.evidence import Behind
+from service.workflows.laboratories import used
 
 BIAS: Final = "bias"
 
@@ -120,7 +121,11 @@ def budget_evaluation(document: dict[str, Any], resolved: ResolvedBudget) -> dic
     numbers = {
         "estimates": dict(resolved.estimates),
         "components": [
-            {"evaluation_type": behind.evaluation_type, "estimate": behind.estimate.to_document()}
+            {
+                "evaluation_type": behind.evaluation_type,
+                "estimate": behind.estimate.to_document(),
+                **({} if behind.laboratory is None else {"laboratory": dict(used(behind))}),
+            }
             for behind in resolved.behind
         ],
         "serves_until": resolved.serves_until,

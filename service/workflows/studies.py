@@ -9,13 +9,11 @@ from datetime import UTC, datetime
 from typing import Any, Final
 from zoneinfo import ZoneInfo
 
-from budgets.evidence.agreement import NamedSource
 from budgets.evidence.evaluation import Evaluation, SetAside
 from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.units import conversion
 from service.access import require
 from service.documents import Actor, Plant, Study
-from service.documents import NamedSource as DocumentedSource
 from service.errors import Conflict, Fault, NotFound
 from service.ledger import Entry
 from service.schemas import dump
@@ -23,14 +21,13 @@ from service.store.rows import StoredStudy
 from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
 from service.workflows.calendar import serving_end
-from service.workflows.evidence import FaultCollector, resolve
+from service.workflows.evidence import LONGEST_SERVICE, FaultCollector
+from service.workflows.named_sources import ResolvedSource, resolve_source
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import PLANT_CHAIN, Page, Request, entry_reference, record
-from service.workflows.reference_methods import check_stated_methods, is_same_method, methods_of_study
+from service.workflows.reference_methods import check_stated_methods, methods_of_study
 from service.workflows.services import Services
 
-LONGEST_SERVICE: Final = 3650
-"""Days that a study may serve at most, whoever says how long: as much as a plant may say for a design."""
 _CELL: Final = re.compile(r"#/rows/([0-9]+)/[0-9]+")
 _SHA256: Final = re.compile(r"[0-9A-Fa-f]{64}")
 
@@ -127,7 +124,7 @@ class _Task:
     """What the record says beside a study, so that it can be evaluated without the database."""
 
     plant: Plant
-    named_sources: tuple[NamedSource, ...]
+    sources: tuple[ResolvedSource, ...]
     readings_decimals: int | None
     reference_methods: Mapping[str, str]
 
@@ -140,7 +137,7 @@ def _task(unit_of_work: UnitOfWork, study: Study) -> _Task:
     _check_source(study, collector)
     check_stated_methods(unit_of_work, study, collector)
     sources = [
-        collector.attempt(f"#/named_sources/{index}/evidence", _source, unit_of_work, study, index)
+        collector.attempt(f"#/named_sources/{index}/evidence", resolve_source, unit_of_work, study, index)
         for index in range(len(study.named_sources))
     ]
     collector.finish("The study refers to what does not exist or does not fit.")
@@ -165,7 +162,7 @@ def _evaluate(services: Services, study: Study, task: _Task) -> tuple[Study, Eva
         # Documents count rows from 1, as people do; the computation from 0.
         set_aside=tuple(SetAside(aside.row - 1, aside.reason) for aside in study.set_aside),
         options=_options(study),
-        named_sources=task.named_sources,
+        named_sources=tuple(source.source for source in task.sources),
         readings_decimals=task.readings_decimals,
     )
     collector.faults = [_in_document(fault) for fault in collector.faults]
@@ -173,10 +170,15 @@ def _evaluate(services: Services, study: Study, task: _Task) -> tuple[Study, Eva
     assert evaluation is not None
     serves_until = study.serves_until or serving_end(study.design, study.done_on, task.plant)
     methods = {**task.reference_methods, **study.reference_methods}
+    # Which entry a component of a laboratory was taken from, so that the evaluation can be done once more.
+    laboratories = [dict(source.laboratory) for source in task.sources if source.laboratory is not None]
+    taken = {"laboratory_components": laboratories} if laboratories else {}
     counted_from_1 = tuple(SetAside(aside.row + 1, aside.reason) for aside in evaluation.set_aside)
     return (
         dataclasses.replace(study, serves_until=serves_until, reference_methods=methods),
-        dataclasses.replace(evaluation, set_aside=counted_from_1),
+        dataclasses.replace(
+            evaluation, set_aside=counted_from_1, diagnostics={**evaluation.diagnostics, **taken}
+        ),
     )
 
 
@@ -201,55 +203,6 @@ def _readings_decimals(unit_of_work: UnitOfWork, study: Study) -> int | None:
         return None
     analyzer = unit_of_work.master.get("analyzer", next(iter(study.calibrations)))
     return None if analyzer is None else analyzer.document["decimals"].get(study.characteristic)
-
-
-def _source(unit_of_work: UnitOfWork, study: Study, index: int) -> NamedSource:
-    named = study.named_sources[index]
-    methods = methods_of_study(unit_of_work, study)
-    behind = resolve(
-        unit_of_work,
-        named.evidence,
-        code=f"{study.code}/{named.source}",
-        unit=study.unit,
-        pointer=f"#/named_sources/{index}/evidence",
-    )
-    if behind.study is not None:
-        ours = dataclasses.replace(study, reference_methods=methods)
-        _check_source_fits(behind.study, ours, named, f"#/named_sources/{index}/evidence/study")
-    return NamedSource(source=named.source, estimate=behind.estimate, quantity=named.quantity or "")
-
-
-def _check_source_fits(theirs: Study, ours: Study, named: DocumentedSource, pointer: str) -> None:
-    """Refuse to take out of a validation what was found on something else.
-
-    A reference method may have been studied on another product, an analyzer only on its own calibration.
-    """
-    collector = FaultCollector()
-    wanted = {named.quantity} if named.quantity else set(ours.characteristics or (ours.characteristic,))
-    found = {theirs.characteristic, *theirs.characteristics}
-    if not wanted <= found:
-        detail = f"{theirs.code} is about {' and '.join(sorted(found))}"
-        collector.add(pointer, detail, f"a study about {' and '.join(sorted(wanted))}")
-    if named.source.startswith(("analyzer", "presentation")):
-        if theirs.product != ours.product:
-            collector.add(
-                pointer, f"{theirs.code} is about the product {theirs.product!r}", f"{ours.product!r}"
-            )
-        if theirs.calibrations != ours.calibrations:
-            detail = f"{theirs.code} was not made on the calibration of this study"
-            collector.add(
-                pointer, detail, f"a study made on {', '.join(ours.calibrations.values()) or 'none'}"
-            )
-    if named.source.startswith("reference"):
-        if None not in (theirs.laboratory, ours.laboratory) and theirs.laboratory != ours.laboratory:
-            detail = f"{theirs.code} was made in the laboratory {theirs.laboratory!r}"
-            collector.add(pointer, detail, f"one made in {ours.laboratory!r}, as the reference values")
-        for code in sorted(wanted & theirs.reference_methods.keys() & ours.reference_methods.keys()):
-            method, needed = theirs.reference_methods[code], ours.reference_methods[code]
-            if not is_same_method(method, needed):
-                detail = f"{theirs.code} was made by the method {method!r}"
-                collector.add(pointer, detail, f"one made by {needed!r}, as the reference values")
-    collector.finish("A named source belongs to something else.")
 
 
 def _check_references(unit_of_work: UnitOfWork, study: Study, collector: FaultCollector) -> None:
