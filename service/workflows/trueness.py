@@ -53,7 +53,9 @@ def _check_laboratory(item: Behind, validation: Validation, pointer: str, collec
         whose = f"come from {study.laboratory!r}" if study.laboratory else "name no laboratory"
         detail = f"got {theirs['code']!r}; the reference values of {study.code} {whose}"
         collector.add_once(f"{pointer}/laboratory", detail, "the laboratory of the validation")
-    if theirs["characteristic"] != channel:
+    # A column that the study does not have is refused where the component is made.
+    known = channel in (study.characteristic, *study.characteristics)
+    if known and theirs["characteristic"] != channel:
         detail = f"got {theirs['characteristic']!r}; the bias was found for {channel!r}"
         collector.add_once(f"{pointer}/characteristic", detail, f"{channel!r}")
     method = study.reference_methods.get(channel)
