@@ -51,6 +51,24 @@ class Procedure:
     samples: Count
     readings_per_sample: Count
 
+    def joined(self, rounds: int) -> Procedure:
+        """Return what the readings of some rounds may be together: as many times the most of one.
+
+        Parameters
+        ----------
+        rounds : int
+
+        Returns
+        -------
+        Procedure
+        """
+        return Procedure(
+            *(
+                Count(count.least, count.plan, min(LARGEST_COUNT, rounds * count.most))
+                for count in (self.samples, self.readings_per_sample)
+            )
+        )
+
 
 @dataclass(frozen=True)
 class Budget:

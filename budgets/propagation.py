@@ -180,7 +180,23 @@ def compiled(budget: Budget, counts: Counts | ReadingPattern) -> CompiledPropaga
         Of a budget without a model: of the quantity ``estimate``, that is the mean reading less the bias, or
         the mean reading where the bias is in the guard band.
     """
-    weights = averaging_weights(counts)
+    return compiled_with(budget, averaging_weights(counts))
+
+
+def compiled_with(budget: Budget, weights: Mapping[str, float]) -> CompiledPropagation:
+    """Return the law of propagation of a budget, for averaging weights that are known already.
+
+    Parameters
+    ----------
+    budget : Budget
+    weights : mapping of str to float
+        Of every level.
+
+    Returns
+    -------
+    CompiledPropagation
+        As `compiled`.
+    """
     if budget.model is not None:
         lines = lines_of(budget.components, weights, tuple(budget.model.given))
         return CompiledPropagation(budget.model, lines, budget.correlations)

@@ -174,19 +174,50 @@ class ReadingPattern:
         >>> weights["reading"], weights["sample"]
         (0.375, 0.5)
         """
-        weights = self.reading_weights()
+        return self.shared_weights(self)
+
+    def shared_weights(self, later: ReadingPattern) -> dict[str, float]:
+        """Return what the estimate has in common with one that joins further readings with these.
+
+        Parameters
+        ----------
+        later : ReadingPattern
+            Its first readings are those of this pattern. A label means the same group in both.
+
+        Returns
+        -------
+        dict of str to float
+            For every level ``sum over groups of (weight of the group here) (weight of the group there)``,
+            less ``1/N`` where the groups were drawn without replacement from N: the covariance of the two
+            estimates by an error of variance 1.
+
+        Notes
+        -----
+        Source: JCGM 100:2008, 5.1.2, eq. (10) and 5.2.2 (from memory), applied as in `averaging_weights`.
+
+        Examples
+        --------
+        >>> first, both = ReadingPattern({"sample": ("a",)}), ReadingPattern({"sample": ("a", "b")})
+        >>> first.shared_weights(both)["sample"]
+        0.5
+        """
         found: dict[str, float] = {}
         for level in LEVELS:
-            shares: dict[str, float] = {}
-            for label, weight in zip(self._labels(level), weights, strict=True):
-                parts = _parts(label)
-                for part in parts:
-                    shares[part] = shares.get(part, 0.0) + weight / len(parts)
-            found[level] = math.fsum(share**2 for share in shares.values())
+            ours, theirs = self._shares(level), later._shares(level)
+            found[level] = math.fsum(share * theirs.get(group, 0.0) for group, share in ours.items())
             if level in self.populations:
                 # Of n groups that weigh the same this is 1/n (1 - n/N).
                 found[level] = max(0.0, found[level] - 1 / self.populations[level])
         return found
+
+    def _shares(self, level: str) -> dict[str, float]:
+        """Give every group of a level its weight in the estimate."""
+        shares: dict[str, float] = {}
+        for label, weight in zip(self._labels(level), self.reading_weights(), strict=True):
+            parts = _parts(label)
+            for part in parts:
+                shares[part] = shares.get(part, 0.0) + weight / len(parts)
+        return shares
 
 
 def _parts(label: Label) -> tuple[str, ...]:
