@@ -165,6 +165,28 @@ def averaging_weights(counts: Counts | ReadingPattern) -> dict[str, float]:
     return weights
 
 
+def group_shares(counts: Counts | ReadingPattern, level: str) -> tuple[float, ...]:
+    """Return what every group of a level weighs in the mean of sample means.
+
+    Parameters
+    ----------
+    counts : Counts or ReadingPattern
+    level : str
+
+    Returns
+    -------
+    tuple of float, shape (groups,)
+        Adding up to 1. Without populations their squares add up to the averaging weight of the level.
+    """
+    if isinstance(counts, ReadingPattern):
+        return tuple(counts.shares(level).values())
+    numbers = counts.readings_per_sample
+    samples = len(numbers)
+    if level == "reading":
+        return tuple(1 / samples / number for number in numbers for _ in range(number))
+    return (1 / samples,) * samples if level in ("presentation", "increment", "sample") else (1.0,)
+
+
 def compiled(budget: Budget, counts: Counts | ReadingPattern) -> CompiledPropagation:
     """Return the law of propagation of a budget, for any number of evaluations.
 

@@ -203,15 +203,25 @@ class ReadingPattern:
         """
         found: dict[str, float] = {}
         for level in LEVELS:
-            ours, theirs = self._shares(level), later._shares(level)
+            ours, theirs = self.shares(level), later.shares(level)
             found[level] = math.fsum(share * theirs.get(group, 0.0) for group, share in ours.items())
             if level in self.populations:
                 # Of n groups that weigh the same this is 1/n (1 - n/N).
                 found[level] = max(0.0, found[level] - 1 / self.populations[level])
         return found
 
-    def _shares(self, level: str) -> dict[str, float]:
-        """Give every group of a level its weight in the estimate."""
+    def shares(self, level: str) -> dict[str, float]:
+        """Return what every group of a level weighs in the estimate.
+
+        Parameters
+        ----------
+        level : str
+
+        Returns
+        -------
+        dict of str to float
+            By the labels of the groups; adding up to 1.
+        """
         shares: dict[str, float] = {}
         for label, weight in zip(self._labels(level), self.reading_weights(), strict=True):
             parts = _parts(label)

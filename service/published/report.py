@@ -8,12 +8,19 @@ from dataclasses import dataclass
 from datetime import datetime
 from importlib import metadata
 
-from service.published import run_decisions, run_examples, run_jcgm_100, run_lines, run_precision
+from service.published import (
+    run_decisions,
+    run_examples,
+    run_jcgm_100,
+    run_lines,
+    run_monte_carlo,
+    run_precision,
+)
 from service.published.cases import AGREES, DIFFERS, LATER, Case, Outcome, Runner, document, outcomes
 
 RUNNERS: Mapping[str, Mapping[str, Runner]] = {
     "jcgm_100": run_jcgm_100.RUNNERS,
-    "jcgm_101": run_decisions.JCGM_101,
+    "jcgm_101": run_monte_carlo.JCGM_101,
     "jcgm_106": run_decisions.JCGM_106,
     "ilac_g8": run_decisions.ILAC_G8,
     "iso_5725_2": run_precision.ISO_5725_2,

@@ -13,6 +13,7 @@ from budgets.evidence.sums import f_quantile, mean
 from budgets.measurement_models import MeasurementModel, Quantity
 from budgets.propagation import coverage_factor, expanded_uncertainty
 from service.published.cases import Runner, degrees
+from service.published.run_lines import thermometer
 from service.published.small_budgets import propagated, stated
 
 Inputs = Mapping[str, Any]
@@ -247,5 +248,6 @@ RUNNERS: dict[str, Runner] = {
     "gum-G.4.1": _product_of_three,
     "gum-H.1": _end_gauge,
     "gum-H.2": _impedance,
+    "gum-H.3": thermometer,
     "gum-H.5": _between_days,
 }
