@@ -6,7 +6,7 @@ import math
 from collections.abc import Hashable, Mapping, Sequence
 from dataclasses import dataclass
 
-from scipy.special import stdtr
+from scipy.special import fdtrc, stdtr
 
 from budgets.evidence.evaluation import (
     Estimate,
@@ -21,6 +21,11 @@ from budgets.evidence.validation_pairs import Pair
 from budgets.propagation import coverage_factor
 
 _SIGNIFICANT = 0.05
+# So few clusters seldom show how far they differ. Unless they differ less than chance alone makes them in
+# seven of ten studies, nothing counts as known better than they know it; by the pairs alone 95 % intervals of
+# a bias of two clusters would hold the truth in 87 to 90 % of studies only.
+_FEW_CLUSTERS = 4
+_ALIKE = 0.7
 
 
 @dataclass(frozen=True)
@@ -60,8 +65,10 @@ def bias_terms(
     -----
     ``u(b)^2 = s_c^2 sum n_i^2 / n^2 + s_w^2 / n`` with clusters of n_i pairs; for clusters of one size this
     is the mean square between clusters over n. Clusters that differ less than chance alone would make them
-    count as none, and of several clusterings the one with the largest variance is taken. Source: JCGM
-    100:2008, H.5 (from memory), for the balanced case.
+    count as none, and of several clusterings the one with the largest variance is taken. With two or three
+    clusters the larger of the two variances has the degrees of freedom of the clusters, unless these are
+    alike (F below its 30 % point). Source: JCGM 100:2008, H.5 (from memory), for the balanced case; the rule
+    for few clusters is common practice, no source.
     """
     n = len(differences)
     best: tuple[tuple[Term, ...], str] = ((Term(1 / n, square),), "pairs")
@@ -78,10 +85,20 @@ def bias_terms(
         # Expected mean square between: s_w^2 + n0 s_c^2
         n0 = (n - sizes / n) / (k - 1)
         share = sizes / n**2 / n0
-        terms = (Term(share, mean_between), Term(1 / n - share, mean_within))
+        terms: tuple[Term, ...] = (Term(share, mean_between), Term(1 / n - share, mean_within))
         if mean_between.value > mean_within.value and variance(terms) > variance(best[0]):
             best = (terms, name)
+        elif k < _FEW_CLUSTERS and best[1] == "pairs" and not _alike(mean_between, mean_within):
+            vouched = MeanSquare(f"{code}/pairs_of_few_{name}s", square.value, k - 1)
+            best = ((Term(1 / n, vouched),), name)
     return best
+
+
+def _alike(between: MeanSquare, within: MeanSquare) -> bool:
+    """Say whether clusters differ less than chance alone makes them in seven of ten studies."""
+    # Without scatter within, the clusters were the larger variance already.
+    f = between.value / within.value
+    return float(fdtrc(between.degrees_of_freedom, within.degrees_of_freedom, f)) >= _ALIKE
 
 
 def bias_estimate(
@@ -171,6 +188,10 @@ def bias_warnings(test: BiasTest, pairs: Sequence[Pair]) -> tuple[EvaluationWarn
                 "uncertainty of the bias is larger than shown",
             )
         )
+    elif 1 < len({pair.group for pair in pairs}) < _FEW_CLUSTERS:
+        number = len({pair.group for pair in pairs})
+        detail = f"{number} groups say little about how the bias varies from one to the next; take more"
+        warnings.append(EvaluationWarning("few-groups-of-pairs", detail))
     elif len({pair.group for pair in pairs}) == 1:
         warnings.append(
             EvaluationWarning("one-group", "all pairs are of one group: how the bias varies is not known")

@@ -27,6 +27,11 @@ LAYOUT = Layout(required=("reading",), optional=("position",), numbers=("reading
 OPTIONS = ("held_sample", "readings_averaged", "lot_length", "increments", "scheme")
 
 LEAST_READINGS, MOST_READINGS = 30, 20_000
+# Where readings follow one another fewer do not know how far: of 30 or 60 readings with a correlation of 0.8
+# 95 % intervals hold the truth in 80 to 91 % of studies.
+LEAST_HELD_READINGS = 100
+# A held sample tells the noise when it lasts so many times as long as readings follow one another.
+_TIMES_THE_CORRELATION = 10
 # Positions may be off by this part of a step.
 _UNEVEN = 0.05
 _SHOWN_LAGS = 200
@@ -61,7 +66,8 @@ def evaluate(study: Study) -> Evaluation:
     Notes
     -----
     See `mean_of_readings` and `sampling_weights`. The degrees of freedom, of a variance estimated from a
-    correlated series, are approximate: `quadratic_degrees_of_freedom`.
+    correlated series, are approximate. Of 100 readings on a held sample with a correlation of up to 0.8, and
+    of a running process recorded for twice the length of a lot, 95 % intervals hold 93 to 98 % of the truths.
     """
     held = study.options.get("held_sample")
     if not isinstance(held, bool):
@@ -73,10 +79,11 @@ def evaluate(study: Study) -> Evaluation:
     readings = study.full("reading")
     if sum_of_squares(readings) == 0:
         raise EvidenceError("all readings are equal: they show no variation", where=("rows",))
-    if len(readings) < LEAST_READINGS:
+    least = LEAST_HELD_READINGS if held else LEAST_READINGS
+    if len(readings) < least:
+        what = "of a held sample" if held else "of a running process"
         raise EvidenceError(
-            f"{len(readings)} readings; a series in equal steps is evaluated from {LEAST_READINGS} on",
-            where=("rows",),
+            f"{len(readings)} readings; a series {what} is evaluated from {least} on", where=("rows",)
         )
     step = _step(study)
     values = np.asarray(readings)
@@ -142,10 +149,18 @@ def _of_held_sample(study: Study, values: Array) -> Evaluation:
 
 
 def _warnings_of_dependence(found: MeanOfReadings, number: int, n: int) -> tuple[EvaluationWarning, ...]:
+    warnings = []
+    independent = n / (2 * math.fsum(found.autocorrelations) - 1)
+    if independent < _TIMES_THE_CORRELATION:
+        detail = (
+            f"{n} readings that follow one another so long are worth {max(1.0, independent):.0f} independent "
+            "ones: the figure is less well known than its interval says; record a longer series"
+        )
+        warnings.append(EvaluationWarning("short-for-its-correlation", detail))
     first = found.autocorrelations[1] if len(found.autocorrelations) > 1 else 0.0
     # 1 % of the series of independent values lie beyond 2.58 standard deviations of their autocorrelation.
     if abs(first) < 2.58 / math.sqrt(n):
-        return ()
+        return tuple(warnings)
     detail = f"successive readings are not independent (autocorrelation {first:.2f}): "
     if number > 1:
         detail += f"{number} of them are worth {found.effective_number:.1f}"
@@ -154,4 +169,4 @@ def _warnings_of_dependence(found: MeanOfReadings, number: int, n: int) -> tuple
             "a budget that averages them as if they were promises too much; say how many are averaged "
             "(readings_averaged) and use the mean as one reading"
         )
-    return (EvaluationWarning("autocorrelated", detail),)
+    return (*warnings, EvaluationWarning("autocorrelated", detail))

@@ -50,6 +50,32 @@ def test_independent_noise_is_that_of_its_standard_deviation():
     assert Component.from_estimate("noise", "moisture", None, estimate, "A").level == "reading"
 
 
+def test_a_series_short_for_its_correlation_is_told():
+    short = evaluated(autoregressive(8, 0.9, 200), HELD)
+    (detail,) = [w.detail for w in short.warnings if w.code == "short-for-its-correlation"]
+    # In truth worth 200 (1 - 0.9)/(1 + 0.9) = 10.5.
+    assert "200 readings that follow one another so long are worth" in detail
+    assert "short-for-its-correlation" not in codes(evaluated(autoregressive(3, 0.5, 200), HELD))
+    # Also where successive readings seem independent: what follows later counts.
+    wave = 0.5 * np.sin(2 * np.pi * np.arange(120) / 4) + HELD_X
+    assert "short-for-its-correlation" not in codes(evaluated(wave, HELD))
+
+
+@pytest.mark.parametrize(("phi", "number"), [(0.0, 1), (0.0, 40), (0.5, 20), (0.7, 1)])
+def test_the_degrees_of_freedom_are_those_of_simulated_variances(phi, number):
+    """2 mean^2 / variance of the variances of 200 series of 400; within what 200 series tell.
+
+    Without correlation and number 1 they are n - 1 (JCGM 100:2008, 4.2.3 with G.3, from memory).
+    """
+    options = {**HELD, "readings_averaged": number}
+    found = [evaluated(autoregressive(seed, phi, 400), options).estimate() for seed in range(200)]
+    variances = np.array([estimate.variance for estimate in found])
+    simulated = 2 * variances.mean() ** 2 / variances.var()
+    stated = np.median([estimate.degrees_of_freedom for estimate in found])
+    # Never too many by much; of a mean of readings that do not hang together too few.
+    assert simulated / 2 < stated < simulated * 1.35
+
+
 def test_a_mean_of_correlated_readings_is_worth_what_the_theory_says():
     phi, number = 0.8, 16
     k = np.arange(1, number)
@@ -209,6 +235,7 @@ def test_shift_and_scale_do_not_matter(seed, shift, scale, held):
 
 
 X = np.random.default_rng(12).normal(3, 0.1, 60)
+HELD_X = np.random.default_rng(12).normal(3, 0.1, 120)
 
 
 @pytest.mark.parametrize(
@@ -218,9 +245,10 @@ X = np.random.default_rng(12).normal(3, 0.1, 60)
         (X, {"held_sample": "yes"}, ("options", "held_sample"), "held in place"),
         ([3.0] * 60, HELD, ("rows",), "all readings are equal"),
         (X * 1e-200, {**PROCESS, "lot_length": 30}, ("rows",), "all readings are equal"),
-        (X[:29], HELD, ("rows",), "29 readings"),
-        (X, {**HELD, "readings_averaged": 7}, ("options", "readings_averaged"), "1 to 6"),
-        (X, {**HELD, "scheme": "random"}, ("options", "scheme"), "does not belong"),
+        (X[:29], {**PROCESS, "lot_length": 10}, ("rows",), "29 readings; a series of a running process"),
+        (HELD_X[:99], HELD, ("rows",), "99 readings; a series of a held sample is evaluated from 100 on"),
+        (HELD_X, {**HELD, "readings_averaged": 13}, ("options", "readings_averaged"), "1 to 12"),
+        (HELD_X, {**HELD, "scheme": "random"}, ("options", "scheme"), "does not belong"),
         (
             X,
             {**PROCESS, "lot_length": 30, "readings_averaged": 2},
@@ -231,7 +259,7 @@ X = np.random.default_rng(12).normal(3, 0.1, 60)
         (X, {**PROCESS, "lot_length": math.inf}, ("options", "lot_length"), "above 0"),
         (X, {**PROCESS, "lot_length": 30, "increments": 2.5}, ("options", "increments"), "whole number"),
         (X, {**PROCESS, "lot_length": 30, "scheme": "zigzag"}, ("options", "scheme"), "one of random"),
-        (np.arange(60) / 10, HELD, ("rows",), "drifted"),
+        (np.arange(120) / 10, HELD, ("rows",), "drifted"),
     ],
 )
 def test_what_cannot_be_answered_is_refused(values, options, where, match):
@@ -247,19 +275,19 @@ def test_all_missing_options_are_named_at_once():
 
 
 def test_unequal_steps_are_named_by_their_row():
-    positions = np.arange(60.0)
+    positions = np.arange(120.0)
     positions[40:] += 1
     with pytest.raises(EvidenceError, match="a step of 2 among steps of 1") as caught:
-        evaluated(X, HELD, positions)
+        evaluated(HELD_X, HELD, positions)
     assert caught.value.where == ("rows", 40)
     with pytest.raises(EvidenceError, match="do not increase"):
-        evaluated(X, HELD, positions[::-1])
+        evaluated(HELD_X, HELD, positions[::-1])
 
 
 def test_sources_that_cannot_be_taken_out_are_refused(an_estimate):
     good = NamedSource("analyzer_repeatability", an_estimate())
     with pytest.raises(EvidenceError, match="nothing is taken out"):
-        evaluated(X, HELD, named_sources=[good])
+        evaluated(HELD_X, HELD, named_sources=[good])
     options = {**PROCESS, "lot_length": 30}
     with pytest.raises(NotSupportedError, match="presentation in a stream"):
         evaluated(X, options, named_sources=[NamedSource("presentation", an_estimate())])
