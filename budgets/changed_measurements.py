@@ -9,15 +9,16 @@ from budgets.budget import Budget
 from budgets.components import Component
 from budgets.errors import ComponentError, LimitsError, ProcedureError
 from budgets.evidence.evaluation import MeanSquare, Term, variance
-from budgets.planned_measurements import PlannedLooks
+from budgets.planned_measurements import Demand, LotProcedure
 
 
 @dataclass(frozen=True)
 class Measuring:
-    """A budget and what is done at every look."""
+    """A budget, what is done at every look, and what the lots must meet."""
 
     budget: Budget
-    looks: PlannedLooks
+    procedure: LotProcedure
+    demands: tuple[Demand, ...]
 
 
 @dataclass(frozen=True)
@@ -50,13 +51,16 @@ class ChangedLooks:
         given = {name: value for name, value in vars(self).items() if value is not None}
         if not given:
             raise ProcedureError("the option changes no number", where=("samples",))
-        if self.looks is not None and self.looks > measuring.looks.looks:
+        if self.looks is not None and self.looks > measuring.procedure.looks:
             raise ProcedureError(
-                f"the decision rules plan {measuring.looks.looks} looks; more of them change the rule, which "
-                "is agreed with the customer",
+                f"the decision rules plan {measuring.procedure.looks} looks; more of them change the rule, "
+                "which is agreed with the customer",
                 where=("looks",),
             )
-        return replace(measuring, looks=replace(measuring.looks, **given))
+        demands = measuring.demands
+        if self.looks is not None:
+            demands = tuple(_with_rounds(demand, self.looks) for demand in demands)
+        return Measuring(measuring.budget, replace(measuring.procedure, **given), demands)
 
     @property
     def remark(self) -> str:
@@ -288,6 +292,11 @@ def component_of(budget: Budget, code: str) -> Component:
             return component
     known = ", ".join(component.code for component in budget.components)
     raise LimitsError(f"{code!r} is no component of the budget; there are {known}", where=("component",))
+
+
+def _with_rounds(demand: Demand, looks: int) -> Demand:
+    rule = demand.decision_rule
+    return replace(demand, decision_rule=replace(rule, rounds=min(rule.rounds, looks)))
 
 
 def _with_terms(line: Component, square: float, degrees_of_freedom: float | None) -> Component:

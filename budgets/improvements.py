@@ -11,7 +11,7 @@ from budgets.budget import Budget
 from budgets.changed_measurements import Change, ChangedBudget, ChangedLooks, Measuring, go_together
 from budgets.errors import BudgetsError, LimitsError
 from budgets.money import Money
-from budgets.planned_measurements import Demand, PlannedLooks, PlannedMeasurement, planned_measurement
+from budgets.planned_measurements import Demand, LotProcedure, PlannedMeasurement, planned_measurement
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production, SetPointFigures
 from budgets.set_point_search import Wanted
@@ -57,7 +57,7 @@ class Situation:
     Parameters
     ----------
     budget : Budget
-    looks : PlannedLooks
+    procedure : LotProcedure
     demands : tuple of Demand
     process : ProcessVariation
     money : Money
@@ -67,7 +67,7 @@ class Situation:
     """
 
     budget: Budget
-    looks: PlannedLooks
+    procedure: LotProcedure
     demands: tuple[Demand, ...]
     process: ProcessVariation
     money: Money
@@ -166,7 +166,7 @@ def improvements(situation: Situation, options: Sequence[Option]) -> Improvement
         raise LimitsError(
             f"1 to {MOST_OPTIONS} options, each with a code of its own, are compared", where=("options",)
         )
-    now = Measuring(situation.budget, situation.looks)
+    now = Measuring(situation.budget, situation.procedure, situation.demands)
     base_measurement, base = _cheapest(situation, now)
     as_it_is = _improvement(situation, (), base_measurement, base, base)
     found: list[Improvement] = []
@@ -196,7 +196,7 @@ def _made(now: Measuring, chosen: Sequence[Option]) -> Measuring:
 
 
 def _cheapest(situation: Situation, measuring: Measuring) -> tuple[PlannedMeasurement, SetPointFigures]:
-    measurement = planned_measurement(measuring.budget, measuring.looks, situation.demands)
+    measurement = planned_measurement(measuring.budget, measuring.procedure, measuring.demands)
     # Another analyzer has another bias: today's readings on it are moved by the difference.
     moved = (measuring.budget.bias or 0.0) - (situation.budget.bias or 0.0)
     process = replace(situation.process, mean=situation.process.mean + moved)

@@ -13,10 +13,13 @@ from budgets.budget import LARGEST_COUNT, Budget, Count, Procedure
 from budgets.components import Component
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import Tabulated
 from budgets.errors import EmptyAcceptanceError, ProcedureError
 from budgets.evidence.evaluation import Term
+from budgets.joined_looks import covariance_of_looks
 from budgets.look_limits import LookLimits
-from budgets.propagation import Counts, combined
+from budgets.planned_looks import risk_per_look_of
+from budgets.propagation import combined
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
 
@@ -37,6 +40,10 @@ class Demand:
         Whether the limits are those of the law.
     domain : tuple of float or None
         Natural domain of the characteristic.
+    truncated : bool
+        Whether probabilities are those within the domain.
+    distribution : Tabulated or None
+        Monte Carlo quantiles, where the rule rests on them instead of Student's t.
     """
 
     code: str
@@ -44,10 +51,12 @@ class Demand:
     decision_rule: DecisionRule
     legal: bool = False
     domain: tuple[float | None, float | None] = (None, None)
+    truncated: bool = False
+    distribution: Tabulated | None = None
 
 
 @dataclass(frozen=True)
-class PlannedLooks:
+class LotProcedure:
     """What is done at every look at a lot; a further look takes as many samples again.
 
     Parameters
@@ -76,7 +85,7 @@ class PlannedLooks:
         if max(self.samples * self.looks, self.readings_per_sample) > LARGEST_COUNT:
             raise ProcedureError(f"more than {LARGEST_COUNT} samples of a lot", where=("samples",))
 
-    def done(self, looks: int) -> Counts | ReadingPattern:
+    def done(self, looks: int) -> ReadingPattern:
         """Return all that has been done when so many looks are over.
 
         Parameters
@@ -85,11 +94,9 @@ class PlannedLooks:
 
         Returns
         -------
-        Counts or ReadingPattern
+        ReadingPattern
             A session for each look; the readings of a sample share its presentation.
         """
-        if looks == 1 and self.increments_per_sample == 1:
-            return Counts((self.readings_per_sample,) * self.samples)
         samples = [f"{look}/{sample}" for look in range(looks) for sample in range(self.samples)]
         labels = tuple(label for label in samples for _ in range(self.readings_per_sample))
         parts = {
@@ -104,10 +111,12 @@ class PlannedLooks:
             }
         )
 
-    def procedure(self) -> Procedure:
-        """Return the procedure of a budget that has room for all looks."""
-        samples, readings = self.samples, self.readings_per_sample
-        return Procedure(Count(samples, samples, samples * self.looks), Count(readings, readings, readings))
+    def within(self, procedure: Procedure) -> Procedure:
+        """Return the procedure of a budget that has this one: its own where that leaves room for it."""
+        own = (procedure.samples, self.samples), (procedure.readings_per_sample, self.readings_per_sample)
+        if all(count.least <= number <= count.most for count, number in own):
+            return procedure
+        return Procedure(*(Count(number, number, number) for _, number in own))
 
 
 @dataclass(frozen=True)
@@ -152,15 +161,17 @@ class PlannedMeasurement:
         return self.limits[0].released
 
 
-def planned_measurement(budget: Budget, looks: PlannedLooks, demands: Sequence[Demand]) -> PlannedMeasurement:
+def planned_measurement(
+    budget: Budget, procedure: LotProcedure, demands: Sequence[Demand]
+) -> PlannedMeasurement:
     """Return how lots will be measured and judged.
 
     Parameters
     ----------
     budget : Budget
         Without a model.
-    looks : PlannedLooks
-        Takes the place of the procedure of the budget.
+    procedure : LotProcedure
+        Takes the place of the procedure of the budget where that leaves no room for it.
     demands : sequence of Demand
         At least one.
 
@@ -179,21 +190,17 @@ def planned_measurement(budget: Budget, looks: PlannedLooks, demands: Sequence[D
 
     Notes
     -----
-    The error of the mean after k looks has the variance V_k, and ``cov(e_j, e_k) = V_k`` for j < k: the later
-    mean holds the earlier one, and its own readings weigh the same. Source: JCGM 100:2008, 5.1.2, eq. (10)
-    (from memory), applied to readings that means share.
+    Each look is judged with all readings so far, by the risk per look that its rule of so many rounds leaves.
+    Where the uncertainty depends on the value it is taken at the tolerance limit that lies furthest out.
     """
-    budget = replace(budget, procedure=looks.procedure())
-    limits, rules = [], []
-    for look in range(1, looks.looks + 1):
-        own = tuple(
-            ReleaseRule.compile(
-                budget, looks.done(look), demand.tolerance, demand.decision_rule, domain=demand.domain
-            )
-            for demand in demands
-        )
-        limits.append(_limits_of(own, budget.validated_range))
-        rules.append(own)
+    budget = replace(budget, procedure=procedure.within(budget.procedure))
+    patterns = [procedure.done(look) for look in range(1, procedure.looks + 1)]
+    risks = [risk_per_look_of(budget, demand.tolerance, demand.decision_rule) for demand in demands]
+    rules = [
+        [_rule(budget, pattern, demand, risk) for demand, risk in zip(demands, risks, strict=True)]
+        for pattern in patterns
+    ]
+    limits = [_limits_of(own, budget.validated_range) for own in rules]
     lower, upper = limits[0].released
     if lower > upper:
         raise EmptyAcceptanceError(
@@ -201,8 +208,8 @@ def planned_measurement(budget: Budget, looks: PlannedLooks, demands: Sequence[D
             capability_index=None,
             remedy="Measure better, or agree on limits that leave room for each other.",
         )
-    variances = [_variances(budget, looks.done(look), rules[0]) for look in range(1, looks.looks + 1)]
-    later = np.maximum.outer(np.arange(looks.looks), np.arange(looks.looks))
+    estimates = _largest_limit(budget, rules[0])
+    common = _common_variance(budget, patterns[0], estimates)
     bias = budget.bias or 0.0
     corrected = budget.bias_treatment == "corrected"
     return PlannedMeasurement(
@@ -211,11 +218,11 @@ def planned_measurement(budget: Budget, looks: PlannedLooks, demands: Sequence[D
         legal_tolerance=_joined(
             [rule_ends(rule) for rule, demand in zip(rules[0], demands, strict=True) if demand.legal]
         ),
-        random_covariance=np.array([random for random, _ in variances])[later],
-        common_standard_uncertainty=math.sqrt(variances[0][1]),
+        random_covariance=covariance_of_looks(budget, patterns, estimates) - common,
+        common_standard_uncertainty=math.sqrt(common),
         reading_offset=bias if corrected else 0.0,
         residual_bias=0.0 if corrected else bias,
-        rules=rules[0],
+        rules=tuple(rules[0]),
     )
 
 
@@ -248,24 +255,38 @@ def _joined(intervals: Sequence[tuple[float, float]]) -> tuple[float, float]:
     )
 
 
-def _variances(
-    budget: Budget, done: Counts | ReadingPattern, rules: Sequence[ReleaseRule]
-) -> tuple[float, float]:
-    """Return the variance that is drawn anew with every lot, and that of what all lots share.
+def _rule(budget: Budget, done: ReadingPattern, demand: Demand, risk: float | None) -> ReleaseRule:
+    # All looks together may have more samples than the procedure has for each of them.
+    samples = budget.procedure.samples
+    room = replace(samples, most=max(samples.most, len(done.readings_per_sample)))
+    return ReleaseRule.compile(
+        replace(budget, procedure=replace(budget.procedure, samples=room)),
+        done,
+        demand.tolerance,
+        demand.decision_rule,
+        domain=demand.domain,
+        truncated=demand.truncated,
+        distribution=demand.distribution,
+        risk_per_look=risk,
+    )
 
-    Where the uncertainty depends on the value it is taken where it is largest: at a tolerance limit.
-    """
-    estimates = None
-    if any(component.relative_terms for component in budget.components):
-        ends = [end for rule in rules for end in rule_ends(rule) if math.isfinite(end)]
-        estimates = {budget.characteristic: max(ends, key=abs)}
+
+def _largest_limit(budget: Budget, rules: Sequence[ReleaseRule]) -> dict[str, float] | None:
+    if not any(component.relative_terms for component in budget.components):
+        return None
+    ends = [end for rule in rules for end in rule_ends(rule) if math.isfinite(end)]
+    return {budget.characteristic: max(ends, key=abs)}
+
+
+def _common_variance(budget: Budget, done: ReadingPattern, estimates: dict[str, float] | None) -> float:
+    """Return the variance of the error that all lots share."""
     result = combined(budget, done, estimates=estimates)
     common = math.fsum(
         part.share_of_variance * result.variance
         for part in result.contributions
         if part.component.level in COMMON_LEVELS
     )
-    return max(0.0, result.variance - common), max(0.0, common)
+    return max(0.0, common)
 
 
 def scaled(budget: Budget, factor: float, *, component: str | None = None) -> Budget:

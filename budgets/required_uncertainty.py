@@ -9,7 +9,7 @@ from scipy.optimize import brentq
 
 from budgets.budget import Budget
 from budgets.errors import EmptyAcceptanceError, LimitsError
-from budgets.planned_measurements import Demand, PlannedLooks, planned_measurement, scaled
+from budgets.planned_measurements import Demand, LotProcedure, planned_measurement, scaled
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted
@@ -41,7 +41,7 @@ class RequiredUncertainty:
 
 def required_uncertainty(
     budget: Budget,
-    looks: PlannedLooks,
+    procedure: LotProcedure,
     demands: Sequence[Demand],
     process: ProcessVariation,
     wanted: Wanted,
@@ -52,7 +52,7 @@ def required_uncertainty(
     Parameters
     ----------
     budget : Budget
-    looks : PlannedLooks
+    procedure : LotProcedure
     demands : sequence of Demand
     process : ProcessVariation
     wanted : Wanted
@@ -76,7 +76,7 @@ def required_uncertainty(
 
     def slack(factor: float) -> float:
         try:
-            measurement = planned_measurement(scaled(budget, factor), looks, demands)
+            measurement = planned_measurement(scaled(budget, factor), procedure, demands)
         except EmptyAcceptanceError:
             return -1.0
         centre = set_point - measurement.reading_offset
@@ -89,7 +89,7 @@ def required_uncertainty(
             return kept
         return min(kept, wanted.largest_risk - float(found.conditional_global_consumers_risk[0]))
 
-    today = planned_measurement(budget, looks, demands)
+    today = planned_measurement(budget, procedure, demands)
     if slack(_SMALLEST) < 0:
         raise LimitsError(
             f"no uncertainty is small enough for the set point {set_point:.5g}: even an exact measurement "

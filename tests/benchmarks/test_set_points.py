@@ -11,7 +11,7 @@ from budgets.decision_rules import DecisionRule
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.improvements import Option, Situation, improvements
 from budgets.money import Money
-from budgets.planned_measurements import Demand, PlannedLooks, planned_measurement
+from budgets.planned_measurements import Demand, LotProcedure, planned_measurement
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted
@@ -66,7 +66,7 @@ OPTIONS = (
 @pytest.mark.parametrize("looks", [1, 2])
 def test_a_set_point(benchmark, looks):
     def answer():
-        measurement = planned_measurement(BUDGET, PlannedLooks(1, 2, looks=looks), DEMANDS)
+        measurement = planned_measurement(BUDGET, LotProcedure(1, 2, looks=looks), DEMANDS)
         return set_points(Production(PROCESS, measurement, MONEY), WANTED)
 
     found = benchmark(answer)
@@ -74,7 +74,7 @@ def test_a_set_point(benchmark, looks):
 
 
 def test_twelve_options_with_all_pairs(benchmark):
-    situation = Situation(BUDGET, PlannedLooks(1, 2), DEMANDS, PROCESS, MONEY, WANTED)
+    situation = Situation(BUDGET, LotProcedure(1, 2), DEMANDS, PROCESS, MONEY, WANTED)
     found = benchmark(improvements, situation, OPTIONS)
     assert len(found.ranked) >= 12 + 50
     assert not found.impossible
@@ -82,7 +82,7 @@ def test_twelve_options_with_all_pairs(benchmark):
 
 def test_bare_65_set_points(benchmark):
     """What one round of a search costs: the distribution of the readings and the risk at 65 set points."""
-    measurement = planned_measurement(BUDGET, PlannedLooks(1, 2), DEMANDS)
+    measurement = planned_measurement(BUDGET, LotProcedure(1, 2), DEMANDS)
     production = Production(PROCESS, measurement, MONEY)
     found = benchmark(production.outcomes, np.linspace(2.8, 3.1, 65))
     assert (np.diff(found.release_rate) < 0).all()

@@ -18,7 +18,7 @@ from budgets.errors import BudgetsError, ComponentError, LimitsError, ProcedureE
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.improvements import Option, Situation, improvements
 from budgets.money import Money
-from budgets.planned_measurements import Demand, PlannedLooks, planned_measurement
+from budgets.planned_measurements import Demand, LotProcedure, planned_measurement
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted
@@ -28,7 +28,7 @@ RISK = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
 CUSTOMER = Demand("customer-b", Tolerance(None, 3.2), RISK)
 PROCESS = ProcessVariation(2.9, 0.08, 0.03)
 MONEY = Money(25.0, 2000.0, 120.0, 300.0, 40.0, 20_000.0, 1500.0)
-LOOKS = PlannedLooks(1, 2)
+LOOKS = LotProcedure(1, 2)
 
 
 @pytest.fixture
@@ -75,7 +75,7 @@ def test_options_are_ranked_by_what_they_bring_after_their_cost(situation):
 def test_an_option_gives_what_its_measurement_gives(situation):
     found = improvements(situation(), OPTIONS[1:2])
     (two,) = found.ranked
-    measurement = planned_measurement(situation().budget, PlannedLooks(2, 2), (CUSTOMER,))
+    measurement = planned_measurement(situation().budget, LotProcedure(2, 2), (CUSTOMER,))
     figures = cheapest_set_point(Production(PROCESS, measurement, MONEY), Wanted(0.9))
     assert two.set_point == figures
     assert two.standard_uncertainty == measurement.standard_uncertainty
@@ -119,12 +119,16 @@ def test_what_does_not_help_a_reading_is_said(situation):
 
 
 def test_fewer_looks_are_no_matter_of_uncertainty(situation):
-    found = improvements(
-        situation(looks=PlannedLooks(1, 2, looks=2)), [Option("one-look", ChangedLooks(looks=1))]
+    rule = replace(RISK, rounds=2)
+    two = replace(
+        situation(looks=LotProcedure(1, 2, looks=2)), demands=(replace(CUSTOMER, decision_rule=rule),)
     )
+    found = improvements(two, [Option("one-look", ChangedLooks(looks=1))])
     (one,) = found.ranked
     assert one.remarks == ()
     assert one.set_point.further_looks == 0 < found.as_it_is.set_point.further_looks
+    # One look may take the whole risk, of two each takes less.
+    assert one.upper_acceptance_limit > found.as_it_is.upper_acceptance_limit
 
 
 def test_a_worse_measurement_is_said_to_be_worse(situation):
@@ -171,10 +175,10 @@ def test_a_pair_that_is_too_much_together_is_impossible_as_a_pair(situation):
         Option("samples", ChangedLooks(samples=20)),
         Option("readings", ChangedLooks(readings_per_sample=30)),
     ]
-    found = improvements(situation(looks=PlannedLooks(1, 2, looks=2)), many)
+    found = improvements(situation(looks=LotProcedure(1, 2, looks=2)), many)
     assert len(found.ranked) == 3
     both = [Option("samples", ChangedLooks(samples=26)), Option("looks", ChangedLooks(looks=1))]
-    found = improvements(situation(looks=PlannedLooks(1, 2, looks=2)), both)
+    found = improvements(situation(looks=LotProcedure(1, 2, looks=2)), both)
     assert [item.options for item in found.impossible] == [("samples",)]
 
 
@@ -194,7 +198,7 @@ def test_a_cost_is_not_negative(cost):
 
 
 def test_new_evidence_has_its_own_degrees_of_freedom(situation):
-    now = Measuring(situation().budget, LOOKS)
+    now = Measuring(situation().budget, LOOKS, (CUSTOMER,))
     made = ChangedComponent("trueness", factor=0.5, degrees_of_freedom=50).made(now)
     line = made.budget.components[-1]
     assert line.standard_uncertainty == pytest.approx(0.025)
@@ -206,7 +210,7 @@ def test_new_evidence_has_its_own_degrees_of_freedom(situation):
 def test_a_part_proportional_to_the_value_takes_a_factor_only(situation, a_component):
     relative = a_component("relative", terms=(), relative_terms=(Term(1.0, MeanSquare("r", 1e-4, 40)),))
     budget = situation().budget
-    now = Measuring(replace(budget, components=(*budget.components, relative)), LOOKS)
+    now = Measuring(replace(budget, components=(*budget.components, relative)), LOOKS, (CUSTOMER,))
     with pytest.raises(ComponentError, match="give a factor"):
         ChangedComponent("relative", standard_uncertainty=0.01).made(now)
     made = ChangedComponent("relative", factor=0.5, degrees_of_freedom=9).made(now).budget.components[-1]
@@ -215,7 +219,7 @@ def test_a_part_proportional_to_the_value_takes_a_factor_only(situation, a_compo
 
 
 def test_more_determinations_take_their_part_out_of_the_bias(situation):
-    now = Measuring(situation().budget, LOOKS)
+    now = Measuring(situation().budget, LOOKS, (CUSTOMER,))
     made = ReferenceDeterminations("bias", 0.08, 2, 1, 60).made(now)
     assert made.budget.components[3].variance == pytest.approx(0.02**2 - 0.08**2 * 0.5 / 60)
 
@@ -235,7 +239,7 @@ def test_more_determinations_take_their_part_out_of_the_bias(situation):
 )
 def test_changes_that_cannot_be_made_are_refused(situation, change, error, words):
     with pytest.raises(error, match=words) as raised:
-        change.made(Measuring(situation().budget, LOOKS))
+        change.made(Measuring(situation().budget, LOOKS, (CUSTOMER,)))
     assert isinstance(raised.value, BudgetsError)
 
 

@@ -12,8 +12,10 @@ from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.errors import EmptyAcceptanceError, LimitsError, ModelError, ProcedureError
 from budgets.money import Money
-from budgets.planned_measurements import Demand, PlannedLooks, planned_measurement, scaled
+from budgets.planned_looks import risk_per_look_of
+from budgets.planned_measurements import Demand, LotProcedure, planned_measurement, scaled
 from budgets.process_variation import ProcessVariation, steered_process
+from budgets.propagation import Counts
 from budgets.release import ReleaseRule
 from budgets.required_uncertainty import required_uncertainty
 from budgets.set_point_figures import Production
@@ -38,7 +40,7 @@ def production(a_budget):
     ):
         budget = scaled(a_budget(**changes), factor)
         return Production(
-            process, planned_measurement(budget, PlannedLooks(1, 2, looks=looks), demands), money, towards
+            process, planned_measurement(budget, LotProcedure(1, 2, looks=looks), demands), money, towards
         )
 
     return make
@@ -214,6 +216,9 @@ LOTS = 1_000_000
 @pytest.mark.parametrize("demands", [(LEGAL, CUSTOMER), (TWO_LIMITS,)], ids=["one limit", "two limits"])
 def test_a_million_lots_show_rate_risk_cost_and_gain(production, a_budget, demands, steered):
     """Lots and readings drawn one by one and judged by the rules; held lots are read again and joined."""
+    demands = tuple(
+        replace(demand, decision_rule=replace(demand.decision_rule, rounds=2)) for demand in demands
+    )
     process = PROCESS
     if steered:
         random = float(production(demands, towards="upper").measurement.random_covariance[0, 0])
@@ -253,9 +258,9 @@ class SimulatedLots:
         deviation = own - process.steering * first_error
         self.truth = set_point - budget.bias + deviation - of_bias
         shown = set_point - budget.bias + deviation
-        first = self._judged(budget, demands, PlannedLooks(1, 2), 1, shown + first_error)
+        first = self._judged(budget, demands, 1, shown + first_error)
         joined = shown + of_lot + readings.mean(axis=1)
-        second = self._judged(budget, demands, PlannedLooks(1, 2, looks=2), 2, joined)
+        second = self._judged(budget, demands, 2, joined)
         self.held_first = first == 1
         self.released = (first == 0) | (self.held_first & (second == 0))
         tolerances = [demand.tolerance for demand in demands]
@@ -267,10 +272,15 @@ class SimulatedLots:
                 self.conforming &= self.truth >= tolerance.lower
         self.limit = min(tolerance.upper for tolerance in tolerances)
 
-    def _judged(self, budget, demands, looks, number, estimates):
-        room = replace(budget, procedure=looks.procedure())
+    def _judged(self, budget, demands, looks, estimates):
         rules = [
-            ReleaseRule.compile(room, looks.done(number), demand.tolerance, demand.decision_rule)
+            ReleaseRule.compile(
+                budget,
+                Counts((2,) * looks),
+                demand.tolerance,
+                demand.decision_rule,
+                risk_per_look=risk_per_look_of(budget, demand.tolerance, demand.decision_rule),
+            )
             for demand in demands
         ]
         return np.max([rule.judge_many(estimates).outcomes for rule in rules], axis=0)
@@ -301,7 +311,7 @@ def test_a_better_measurement_never_lowers_what_can_be_gained(factor, variation,
     process = ProcessVariation(2.8, variation)
     costs, sets = [], []
     for each in (1.0, factor):
-        measurement = planned_measurement(scaled(budget, each), PlannedLooks(1, 2), (CUSTOMER,))
+        measurement = planned_measurement(scaled(budget, each), LotProcedure(1, 2), (CUSTOMER,))
         made = Production(process, measurement, MONEY)
         costs.append(cheapest_set_point(made, WANTED).cost)
         sets.append(nearest_set_point(made, Wanted(rate)))
@@ -312,7 +322,7 @@ def test_a_better_measurement_never_lowers_what_can_be_gained(factor, variation,
 @settings(max_examples=25, deadline=None)
 @given(rates=st.lists(st.floats(0.5, 0.99), min_size=2, max_size=2), variation=st.floats(0.03, 0.2))
 def test_a_higher_wanted_release_rate_never_moves_the_set_point_nearer(rates, variation):
-    measurement = planned_measurement(_plain_budget(), PlannedLooks(1, 2, looks=2), (CUSTOMER,))
+    measurement = planned_measurement(_plain_budget(), LotProcedure(1, 2, looks=2), (CUSTOMER,))
     made = Production(ProcessVariation(2.8, variation), measurement)
     low, high = (nearest_set_point(made, Wanted(rate)) for rate in sorted(rates))
     assert high <= low + 1e-7
@@ -325,7 +335,7 @@ def test_units_change_nothing(scale, variation):
         budget = scaled(_plain_budget(by), by)
         demand = Demand("customer-b", Tolerance(None, 3.2 * by), RISK)
         money = replace(MONEY, value_of_one_unit=MONEY.value_of_one_unit / by)
-        measurement = planned_measurement(budget, PlannedLooks(1, 2), (demand,))
+        measurement = planned_measurement(budget, LotProcedure(1, 2), (demand,))
         return set_points(
             Production(ProcessVariation(2.8 * by, variation * by), measurement, money), Wanted(0.9)
         )
@@ -362,7 +372,7 @@ def _plain_budget(by=1.0):
 
 
 def test_the_uncertainty_needed_leads_back_to_the_set_point(a_budget):
-    looks, demands = PlannedLooks(1, 2), (CUSTOMER,)
+    looks, demands = LotProcedure(1, 2), (CUSTOMER,)
     found = required_uncertainty(a_budget(), looks, demands, PROCESS, WANTED, 3.0)
     assert 0 < found.factor < 1
     better = planned_measurement(scaled(a_budget(), found.factor), looks, demands)
@@ -372,7 +382,7 @@ def test_the_uncertainty_needed_leads_back_to_the_set_point(a_budget):
 
 def test_a_measurement_better_than_needed_says_by_how_much(a_budget):
     found = required_uncertainty(
-        a_budget(), PlannedLooks(1, 2), (CUSTOMER,), PROCESS, Wanted(0.95, 0.01), 2.85
+        a_budget(), LotProcedure(1, 2), (CUSTOMER,), PROCESS, Wanted(0.95, 0.01), 2.85
     )
     assert found.factor > 1
     assert found.standard_uncertainty == pytest.approx(found.factor * found.todays_standard_uncertainty)
@@ -382,14 +392,14 @@ def test_where_only_the_risk_bounds_it_the_largest_factor_is_given(a_budget):
     simple = Demand("wide", Tolerance(None, 50.0), SIMPLE)
     budget = a_budget(validated_range=(1.5, 49.0))
     wide = Demand("wide", Tolerance(None, 50.0), replace(SIMPLE, largest_standard_uncertainty=100.0))
-    found = required_uncertainty(budget, PlannedLooks(1, 2), (wide,), PROCESS, Wanted(0.5), 20.0)
+    found = required_uncertainty(budget, LotProcedure(1, 2), (wide,), PROCESS, Wanted(0.5), 20.0)
     assert found.factor == 16.0
     assert simple.tolerance == wide.tolerance
 
 
 def test_two_limits_close_at_some_uncertainty(a_budget):
     found = required_uncertainty(
-        a_budget(), PlannedLooks(1, 2), (TWO_LIMITS,), ProcessVariation(2.98, 0.01), Wanted(0.5), 2.98
+        a_budget(), LotProcedure(1, 2), (TWO_LIMITS,), ProcessVariation(2.98, 0.01), Wanted(0.5), 2.98
     )
     assert 1 < found.factor < 16
 
@@ -397,7 +407,7 @@ def test_two_limits_close_at_some_uncertainty(a_budget):
 @pytest.mark.parametrize("set_point", [3.15, 3.5])
 def test_a_set_point_that_no_measurement_allows_is_refused(a_budget, set_point):
     with pytest.raises(LimitsError, match="even an exact measurement"):
-        required_uncertainty(a_budget(), PlannedLooks(1, 2), (CUSTOMER,), PROCESS, WANTED, set_point)
+        required_uncertainty(a_budget(), LotProcedure(1, 2), (CUSTOMER,), PROCESS, WANTED, set_point)
 
 
 # --- what is not possible ------------------------------------------------------------------------------
@@ -499,11 +509,11 @@ def test_a_direction_without_a_limit_or_without_a_need_is_refused(production):
 def test_demands_that_exclude_each_other_accept_nothing(a_budget):
     high = Demand("high", Tolerance(3.3, None), RISK)
     with pytest.raises(EmptyAcceptanceError, match="another one does not"):
-        planned_measurement(a_budget(), PlannedLooks(1, 2), (CUSTOMER, high))
+        planned_measurement(a_budget(), LotProcedure(1, 2), (CUSTOMER, high))
 
 
 def test_a_further_look_halves_what_is_drawn_anew_within_it(a_budget):
-    found = planned_measurement(a_budget(), PlannedLooks(1, 2, looks=2), (CUSTOMER,))
+    found = planned_measurement(a_budget(), LotProcedure(1, 2, looks=2), (CUSTOMER,))
     lot, reading = 0.05**2, 0.04**2
     assert found.random_covariance[0, 0] == pytest.approx(lot + reading / 2)
     assert found.random_covariance[1, 1] == pytest.approx(lot + reading / 4)
@@ -517,8 +527,8 @@ def test_increments_are_parts_of_a_composite(a_budget, a_component):
         a_component("cup", 0.02, level="presentation"),
     )
     budget = a_budget(components=components, bias=None)
-    one = planned_measurement(budget, PlannedLooks(1, 2), (CUSTOMER,))
-    four = planned_measurement(budget, PlannedLooks(1, 2, 4), (CUSTOMER,))
+    one = planned_measurement(budget, LotProcedure(1, 2), (CUSTOMER,))
+    four = planned_measurement(budget, LotProcedure(1, 2, 4), (CUSTOMER,))
     assert one.random_covariance[0, 0] == pytest.approx(0.06**2 + 0.02**2)
     assert four.random_covariance[0, 0] == pytest.approx(0.06**2 / 4 + 0.02**2)
 
@@ -527,14 +537,14 @@ def test_an_uncertainty_that_grows_with_the_value_is_that_at_the_limit(a_budget,
     from budgets.evidence.evaluation import MeanSquare, Term
 
     relative = a_component("relative", terms=(), relative_terms=(Term(1.0, MeanSquare("r", 0.01**2, 40)),))
-    found = planned_measurement(a_budget(components=(relative,), bias=None), PlannedLooks(1, 1), (CUSTOMER,))
+    found = planned_measurement(a_budget(components=(relative,), bias=None), LotProcedure(1, 1), (CUSTOMER,))
     assert found.random_covariance[0, 0] == pytest.approx((0.01 * 3.2) ** 2)
 
 
 @pytest.mark.parametrize("changes", [{"samples": 0}, {"looks": 0}, {"samples": 26, "looks": 2}])
 def test_impossible_numbers_of_looks_are_refused(changes):
     with pytest.raises(ProcedureError):
-        PlannedLooks(**{"samples": 1, "readings_per_sample": 1, **changes})
+        LotProcedure(**{"samples": 1, "readings_per_sample": 1, **changes})
 
 
 def test_one_line_can_be_scaled_alone(a_budget):
@@ -550,4 +560,4 @@ def test_a_derived_characteristic_has_no_limit_to_run_towards(a_budget, a_compon
         model=model, components=(a_component(),), bias=None, validated_box={"moisture": (1.5, 5.5)}
     )
     with pytest.raises(ModelError, match="no fixed acceptance limits"):
-        planned_measurement(budget, PlannedLooks(1, 2), (CUSTOMER,))
+        planned_measurement(budget, LotProcedure(1, 2), (CUSTOMER,))
