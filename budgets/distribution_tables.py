@@ -43,8 +43,8 @@ class DistributionTable:
         self._cells = (1 + int(np.count_nonzero(tail > _NEGLIGIBLE))) << _CELL_BITS
         edges = ((np.arange(self._cells + 1) + _OFFSET) << _SHIFT).view(np.float64)
         value = stdtr(degrees_of_freedom, 1 - edges)
-        slope = -_density(edges - 1, degrees_of_freedom) * np.diff(edges, append=edges[-1])
-        slope_at_end = -_density(edges[1:] - 1, degrees_of_freedom) * np.diff(edges)
+        slope = -student_density(edges - 1, degrees_of_freedom) * np.diff(edges, append=edges[-1])
+        slope_at_end = -student_density(edges[1:] - 1, degrees_of_freedom) * np.diff(edges)
         rise = np.diff(value)
         # Coefficients in the place t of [0, 1) inside a cell: f0 + f1 t + f2 t^2 + f3 t^3.
         self._coefficients = (
@@ -79,7 +79,24 @@ class DistributionTable:
         z[...] = tail
 
 
-def _density(z: NDArray[np.float64], nu: float) -> NDArray[np.float64]:
-    """Return the density of Student's t; the beta function by its logarithm, for any degrees of freedom."""
+def student_density(z: NDArray[np.float64], nu: float) -> NDArray[np.float64]:
+    """Return the density of Student's t.
+
+    Parameters
+    ----------
+    z : ndarray, any shape
+        In units of the scale.
+    nu : float
+        Finite degrees of freedom.
+
+    Returns
+    -------
+    ndarray, shape of z
+
+    Notes
+    -----
+    The beta function is taken by its logarithm, for any degrees of freedom.
+    Source: JCGM 101:2008, 6.4.9.2 (from memory).
+    """
     constant = -betaln(nu / 2, 0.5) - 0.5 * math.log(nu)
     return np.exp(constant - (nu + 1) / 2 * np.log1p(z * (z / nu)))
