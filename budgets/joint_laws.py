@@ -14,7 +14,7 @@ from typing import NamedTuple, Self
 import numpy as np
 from numpy.typing import NDArray
 
-from budgets.conformity import upper_tail
+from budgets.error_distributions import StudentT
 from budgets.level_dependence import LevelDependence
 from budgets.production_priors import ProductionPrior, standard_marks
 
@@ -209,6 +209,7 @@ def _shares(
     expected: Array, spread: Array | float, interval: tuple[Array | None, Array | None], nu: float
 ) -> tuple[Array, Array]:
     """Return the probabilities of a value inside and outside of an interval, each summed as such."""
+    error = StudentT(nu)
     lower, upper = interval
     if lower is None or upper is None:
         if upper is not None:
@@ -216,11 +217,11 @@ def _shares(
         else:
             assert lower is not None  # a tolerance has at least one limit
             beyond = (expected - lower[:, None]) / spread
-        return upper_tail(-beyond, nu), upper_tail(beyond, nu)
+        return error.lower_tail(beyond), error.upper_tail(beyond)
     above = (upper[:, None] - expected) / spread
     below = (expected - lower[:, None]) / spread
-    outside = upper_tail(above, nu) + upper_tail(below, nu)
+    outside = error.upper_tail(above) + error.upper_tail(below)
     # From the side on which the value is expected, as in conformity.conformance_probability.
     near, far = np.minimum(above, below), np.maximum(above, below)
-    inside = upper_tail(-near, nu) - upper_tail(far, nu)
+    inside = error.lower_tail(near) - error.upper_tail(far)
     return np.maximum(inside, 0.0), outside

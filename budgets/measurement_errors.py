@@ -12,7 +12,7 @@ from budgets.errors import LimitsError, NotSupportedError
 from budgets.evidence.evaluation import Term
 from budgets.level_dependence import LevelDependence
 from budgets.levels import LEVELS
-from budgets.linear_propagation import CompiledPropagation, Line
+from budgets.linear_propagation import CompiledPropagation
 from budgets.propagation import ESTIMATE, Counts, compiled
 from budgets.reading_patterns import ReadingPattern
 from budgets.uncertainty_at_limits import uncertainty_of_law_at_limits
@@ -154,7 +154,7 @@ def _part_of(budget: Budget, law: CompiledPropagation, levels: Collection[str]) 
     lines = tuple(
         line
         for component, line in zip(budget.components, law.lines, strict=True)
-        if component.level in levels and line.weight > 0 and _has_spread(line)
+        if component.level in levels and line.weight > 0
     )
     if not lines:
         return None
@@ -162,8 +162,3 @@ def _part_of(budget: Budget, law: CompiledPropagation, levels: Collection[str]) 
     # Correlations hold within one level, so a pair is in or out as a whole.
     correlations = tuple(item for item in law.correlations if codes.issuperset(item.between))
     return CompiledPropagation(law.model, lines, correlations)
-
-
-def _has_spread(line: Line) -> bool:
-    terms = line.terms + line.relative_terms
-    return bool(line.matrix_terms) or any(term.coefficient * term.mean_square.value != 0 for term in terms)

@@ -15,14 +15,14 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.interpolate import CubicSpline
 
-from budgets.conformity import Tolerance, upper_tail
+from budgets.conformity import Tolerance
+from budgets.error_distributions import StudentT
 from budgets.errors import LimitsError
 from budgets.joint_laws import JointLaw, LimitRows, Rates
 from budgets.level_dependence import LevelDependence
 from budgets.measurement_errors import MeasurementErrors
 from budgets.normal_risk_curves import is_normal, nested_rates
 from budgets.production_priors import ProductionPrior
-from budgets.propagation import upper_quantile
 
 Array = NDArray[np.float64]
 
@@ -34,7 +34,7 @@ _COARSE = np.linspace(-5.0, 5.0, 41)
 _FINE = np.linspace(-5.0, 5.0, 5001)
 _SMALLEST = 1e-300
 # An acceptance limit that lets everything pass, and is finite.
-_FAR = 1e300
+_FAR = 1e100
 
 
 @dataclass(frozen=True)
@@ -157,7 +157,7 @@ class Production:
             return mean.nonconforming_accepted, mean.conforming_not_accepted
         if rows.lower_tolerance is None or rows.upper_tolerance is None:
             # With one limit each risk rises or falls with the common error all the way.
-            end = u * upper_quantile(1 - QUANTILE, nu)
+            end = u * StudentT(nu).upper_quantile(1 - QUANTILE)
             harmful = -end if rows.lower_tolerance is None else end
             return (
                 self.given(rows, harmful).nonconforming_accepted,
@@ -209,7 +209,8 @@ def _steered_law(prior: ProductionPrior, deviation: float) -> JointLaw:
 
 def _places(nu: float) -> list[float]:
     """Return common errors in their standard uncertainties, by the normal places of `_COARSE`."""
-    return [upper_quantile(float(upper_tail(x, math.inf)), nu) for x in _COARSE.tolist()]
+    normal, student = StudentT(math.inf), StudentT(nu)
+    return [student.upper_quantile(float(normal.upper_tail(x))) for x in _COARSE.tolist()]
 
 
 def _quantile(risks: Array) -> Array:

@@ -10,8 +10,8 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from budgets.conformity import upper_tail
 from budgets.distribution_tables import student_density
+from budgets.error_distributions import StudentT
 from budgets.errors import LimitsError
 
 Array = NDArray[np.float64]
@@ -163,7 +163,7 @@ class ProductionPrior:
         """Of the normal distribution around every value of an empirical prior."""
         quartiles = np.quantile(self.values, [0.25, 0.75])
         spread = float(quartiles[1] - quartiles[0]) / 1.34 or self.standard_deviation
-        return 0.9 * min(self.standard_deviation, spread) * len(self.values) ** -0.2
+        return float(0.9 * min(self.standard_deviation, spread) * len(self.values) ** -0.2)
 
     @property
     def _scale(self) -> float:
@@ -211,8 +211,8 @@ class ProductionPrior:
         sign = 1.0 if above else -1.0
         if self.distribution == "empirical":
             z = sign * (limit - self._centres) / self._width
-            return float(np.mean(upper_tail(z, math.inf)))
-        return float(upper_tail(sign * (limit - self.mean) / self._scale, self.degrees_of_freedom))
+            return float(np.mean(StudentT(math.inf).upper_tail(z)))
+        return float(StudentT(self.degrees_of_freedom).upper_tail(sign * (limit - self.mean) / self._scale))
 
     @cached_property
     def marks(self) -> Array:
@@ -243,7 +243,7 @@ def standard_marks(degrees_of_freedom: float) -> Array:
     # Steps that grow as fast as the distribution flattens out.
     growth = 1 + min(1.0, 3 / math.sqrt(degrees_of_freedom))
     found = [0.0, 0.75, 1.5]
-    while upper_tail(found[-1], degrees_of_freedom) > _NEGLIGIBLE:
+    while StudentT(degrees_of_freedom).upper_tail(found[-1]) > _NEGLIGIBLE:
         found.append(max(found[-1] + 0.75, found[-1] * growth))
     half = np.asarray(found)
     return np.concatenate((-half[:0:-1], half))

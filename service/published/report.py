@@ -15,6 +15,7 @@ from service.published import (
     run_lines,
     run_monte_carlo,
     run_precision,
+    run_risks,
 )
 from service.published.cases import AGREES, DIFFERS, LATER, Case, Outcome, Runner, document, outcomes
 
@@ -23,6 +24,7 @@ RUNNERS: Mapping[str, Mapping[str, Runner]] = {
     "jcgm_101": run_monte_carlo.JCGM_101,
     "jcgm_106": run_decisions.JCGM_106,
     "ilac_g8": run_decisions.ILAC_G8,
+    "z540_3": run_risks.Z540_3,
     "iso_5725_2": run_precision.ISO_5725_2,
     "iso_7870_2": run_precision.ISO_7870_2,
     "nist_tn_1297": run_examples.NIST_TN_1297,
