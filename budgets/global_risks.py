@@ -41,7 +41,8 @@ class GlobalRisks:
     release_rate : ndarray
         Probability that a lot is accepted.
     nonconforming_share_of_accepted, conforming_share_of_not_accepted : ndarray
-        Conditional probabilities: the risks over the rates of acceptance and of no acceptance.
+        Conditional probabilities: the risks over the rates of acceptance and of no acceptance; NaN where
+        that rate is 0.
     nonconforming_share : float
         Probability that a lot does not conform, accepted or not.
     """
@@ -129,9 +130,6 @@ def risks_of_acceptance(
     rows = production.rows(lower, upper)
     mean = production.mean(rows)
     consumers, producers = production.quantiles(rows, mean)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        of_accepted = mean.nonconforming_accepted / mean.accepted
-        of_others = mean.conforming_not_accepted / (1 - mean.accepted)
     return GlobalRisks(
         guard_band=_bands(tolerance, rows) if guard_bands is None else guard_bands,
         lower_acceptance_limit=rows.lower_acceptance,
@@ -141,8 +139,8 @@ def risks_of_acceptance(
         global_consumers_risk_quantile=consumers,
         global_producers_risk_quantile=producers,
         release_rate=mean.accepted,
-        nonconforming_share_of_accepted=of_accepted,
-        conforming_share_of_not_accepted=of_others,
+        nonconforming_share_of_accepted=_share(mean.nonconforming_accepted, mean.accepted),
+        conforming_share_of_not_accepted=_share(mean.conforming_not_accepted, mean.not_accepted),
         nonconforming_share=production.nonconforming_share(),
     )
 
@@ -186,6 +184,11 @@ def nonconforming_share(prior: ProductionPrior, errors: MeasurementErrors, toler
     float
     """
     return Production(prior, errors, tolerance).nonconforming_share()
+
+
+def _share(part: Array, whole: Array) -> Array:
+    share: Array = np.divide(part, whole, out=np.full(part.shape, np.nan), where=whole > 0)
+    return share
 
 
 def _bands(tolerance: Tolerance, rows: LimitRows) -> Array:

@@ -68,7 +68,18 @@ class Rates(NamedTuple):
 
     nonconforming_accepted: Array
     conforming_not_accepted: Array
-    accepted: Array
+    nonconforming_not_accepted: Array
+    conforming_accepted: Array
+
+    @property
+    def accepted(self) -> Array:
+        """The rate of acceptance."""
+        return np.minimum(self.nonconforming_accepted + self.conforming_accepted, 1.0)
+
+    @property
+    def not_accepted(self) -> Array:
+        """The rate of no acceptance, not one minus the other."""
+        return self.conforming_not_accepted + self.nonconforming_not_accepted
 
 
 @dataclass(frozen=True)
@@ -108,22 +119,20 @@ class JointLaw:
         Rates
             Relative error below 1e-10 down to 1e-12; what lies more than twelve standard deviations out is 0.
         """
-        found = np.empty((3, rows.size))
+        found = np.empty((4, rows.size))
         for start in range(0, rows.size, _BLOCK):
             block = slice(start, start + _BLOCK)
             found[:, block] = self._rates(rows.chosen(block))
         return Rates(*found)
 
-    def _rates(self, rows: LimitRows) -> tuple[Array, Array, Array]:
+    def _rates(self, rows: LimitRows) -> tuple[Array, ...]:
         z, mass = self.nodes(rows)
         accepted, refused = self._estimates(z, rows)
         share_outside, share_inside = self.truths(z, rows)
         wrong, right = mass * share_outside, mass * share_inside
-        consumers = np.einsum("ij,ij->i", wrong, accepted)
-        return (
-            consumers,
-            np.einsum("ij,ij->i", right, refused),
-            consumers + np.einsum("ij,ij->i", right, accepted),
+        return tuple(
+            np.einsum("ij,ij->i", one, other)
+            for one, other in ((wrong, accepted), (right, refused), (wrong, refused), (right, accepted))
         )
 
     def nodes(self, rows: LimitRows) -> tuple[Array, Array]:

@@ -60,11 +60,22 @@ def nested_rates(law: JointLaw, rows: LimitRows) -> Rates:
         estimates.add(rows, rows.upper_acceptance[1:], rows.upper_acceptance[:-1], wrong, right)
     if rows.lower_acceptance is not None:
         estimates.add(rows, rows.lower_acceptance[:-1], rows.lower_acceptance[1:], wrong, right)
-    consumers = np.append(wrong[::-1].cumsum()[::-1], 0.0) + ends.nonconforming_accepted[1]
-    producers = np.insert(right.cumsum(), 0, 0.0) + ends.conforming_not_accepted[0]
-    both = wrong + right
-    accepted = np.append(both[::-1].cumsum()[::-1], 0.0) + ends.accepted[1]
-    return Rates(consumers, producers, accepted)
+    return Rates(
+        _outwards(wrong) + ends.nonconforming_accepted[1],
+        _inwards(right) + ends.conforming_not_accepted[0],
+        _inwards(wrong) + ends.nonconforming_not_accepted[0],
+        _outwards(right) + ends.conforming_accepted[1],
+    )
+
+
+def _outwards(strips: Array) -> Array:
+    """Return what lies in the strips between the innermost interval and each."""
+    return np.append(strips[::-1].cumsum()[::-1], 0.0)
+
+
+def _inwards(strips: Array) -> Array:
+    """Return what lies in the strips between the outermost interval and each."""
+    return np.insert(strips.cumsum(), 0, 0.0)
 
 
 @dataclass(frozen=True)
