@@ -431,10 +431,15 @@ class Study:
 
 @dataclass(frozen=True)
 class Replacement:
-    """The study that takes the place of another one behind every budget, and why."""
+    """The study that takes the place of another one behind every budget, and why.
+
+    ``evaluated_anew`` gives codes for what is evaluated once more because it took the old study out of its
+    scatter, each by the code of the study that it was.
+    """
 
     study: str
     reason: str
+    evaluated_anew: Mapping[str, str] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

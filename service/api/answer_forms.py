@@ -411,6 +411,14 @@ _BIAS_PLAN = _object(
     },
 )
 
+_EVALUATED_ANEW: Form = {"study": _CODE, "becomes": _CODE}
+_ESTIMATES_COMPARED = _list(
+    _object(
+        "An estimate of either study; null where one does not give it.",
+        {"name": _TEXT, "was": {"type": ["object", "null"]}, "becomes": {"type": ["object", "null"]}},
+    )
+)
+
 _STUDY_SUMMARY = _object(
     "A study without its data.",
     {
@@ -452,21 +460,24 @@ ANSWERS: dict[str, Form] = {
     "StudyPage": page_of(_STUDY_SUMMARY),
     "Renewal": _object(
         "What an act on a renewal left of each budget.",
-        {"study": _CODE, "replacement": _CODE, "budgets": _list(ref("BudgetVersion")), "entry": ref("Entry")},
+        {
+            "study": _CODE,
+            "replacement": _CODE,
+            "evaluated_anew": _list(_object("A study that took the old one out.", _EVALUATED_ANEW)),
+            "budgets": _list(ref("BudgetVersion")),
+            "entry": ref("Entry"),
+        },
     ),
     "RenewalComparison": _object(
         "What a renewal changes.",
         {
             "study": _CODE,
             "replacement": _CODE,
-            "estimates": _list(
+            "estimates": _ESTIMATES_COMPARED,
+            "evaluated_anew": _list(
                 _object(
-                    "An estimate of either study; null where one does not give it.",
-                    {
-                        "name": _TEXT,
-                        "was": {"type": ["object", "null"]},
-                        "becomes": {"type": ["object", "null"]},
-                    },
+                    "A study that took the old one out.",
+                    {**_EVALUATED_ANEW, "estimates": _ESTIMATES_COMPARED},
                 )
             ),
             "budgets": _list(ref("BudgetComparison"), "Each against the version in force."),

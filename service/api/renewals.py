@@ -9,7 +9,7 @@ from service.api import requests
 from service.api.answers import answer, recorded
 from service.api.operations import SIGNED, Operation, describe
 from service.documents import Replacement
-from service.workflows import renewals
+from service.workflows import renewal_approvals, renewals
 
 blueprint = Blueprint("renewals", __name__, description="One study renewed behind many budgets.")
 
@@ -29,7 +29,7 @@ def replace_study(code: str) -> Response:
 def compare_renewal(code: str, replacement: str) -> Response:
     """Compare what a renewal that waits changes, study by study and budget by budget."""
     requests.query()
-    return answer(renewals.comparison(requests.services(), requests.actor(), code, replacement))
+    return answer(renewal_approvals.comparison(requests.services(), requests.actor(), code, replacement))
 
 
 @describe(
@@ -43,5 +43,7 @@ def approve_renewal(code: str, replacement: str) -> Response:
     signed = requests.body(SIGNED)
     requests.forget_signature()
     request = requests.recording()
-    result = renewals.approve(requests.services(), requests.actor(), code, replacement, signed, request)
+    result = renewal_approvals.approve(
+        requests.services(), requests.actor(), code, replacement, signed, request
+    )
     return recorded(result, 200)

@@ -164,6 +164,14 @@ class ReplacementSchema(StrictSchema):
     loads_to = Replacement
     study = Code(required=True)
     reason = Text(2000, lines=True, required=True, about="The reason of the new versions.")
+    evaluated_anew = ByKey(
+        Code(),
+        Code(),
+        most=100,
+        load_default=dict,
+        about="Codes for studies that took the old one out of their scatter and are evaluated anew, each by "
+        "the code that it had; without one the next free number is added to that.",
+    )
 
 
 class StudySchema(StrictSchema):

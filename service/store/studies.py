@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
 from typing import Any
 
 from sqlalchemy import Row, select, tuple_
@@ -22,9 +24,21 @@ class Studies:
 
     def __init__(self, session: Session) -> None:
         self._session = session
+        self._expected: dict[str, StoredStudy] = {}
+
+    @contextmanager
+    def expecting(self, coming: Iterable[StoredStudy]) -> Iterator[None]:
+        """Within the block let ``get`` find studies that the act at hand is going to add."""
+        self._expected = {study.code: study for study in coming}
+        try:
+            yield
+        finally:
+            self._expected = {}
 
     def get(self, code: str) -> StoredStudy | None:
         """Return a study."""
+        if code in self._expected:
+            return self._expected[code]
         row = self._session.row(select(studies).where(studies.c.code == code), studies)
         return None if row is None else _stored(row)
 

@@ -48,7 +48,8 @@ def resolve_source(unit_of_work: UnitOfWork, study: Study, index: int) -> Resolv
     )
     _check_served(study, behind, pointer)
     if behind.study is not None:
-        ours = replace(study, reference_methods=methods_of_study(unit_of_work, study))
+        methods = {**methods_of_study(unit_of_work, study), **study.reference_methods}
+        ours = replace(study, reference_methods=methods)
         _check_study_fits(behind.study, ours, named, f"{pointer}/study")
     source = NamedSource(source=named.source, estimate=behind.estimate, quantity=named.quantity or "")
     particulars = {"source": named.source, "quantity": named.quantity}

@@ -44,6 +44,8 @@ class Expected:
         elif entry.kind in ("person-added", "token-added", "token-revoked"):
             self._add_account(entry, where)
         elif subject == "renewal":
+            for part in content.get("studies", ()):
+                self.rows["study", part["study"]["code"]] = ((part["study"], part["evaluation"]), where)
             for part in content["versions"]:
                 self._add_version("budget", part, where)
         elif act in VERSION_ACTS:
