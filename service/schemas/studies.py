@@ -169,8 +169,7 @@ class ReplacementSchema(StrictSchema):
         Code(),
         most=100,
         load_default=dict,
-        about="Codes for studies that took the old one out of their scatter and are evaluated anew, each by "
-        "the code that it had; without one the next free number is added to that.",
+        about="Codes for what is evaluated anew, each by its old code; else a number is added to that.",
     )
 
 

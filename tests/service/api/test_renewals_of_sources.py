@@ -102,8 +102,11 @@ def test_what_took_the_study_out_is_evaluated_anew(
     # Less is taken out of the same scatter.
     assert remainder["becomes"]["standard_uncertainty"] > remainder["was"]["standard_uncertainty"]
     (budget,) = compared["budgets"]
-    changed = {line["code"] for line in budget["components"] if line["changed"]}
-    assert changed == {"repeatability", "remainder"}
+    lines = {line["code"]: line for line in budget["components"] if line["changed"]}
+    assert set(lines) == {"repeatability", "remainder", "bias"}
+    # Of the bias nothing but the study is another: the pairs are the same.
+    was_and_becomes = [lines["bias"][each]["contribution"] for each in ("was", "becomes")]
+    assert was_and_becomes[0] == was_and_becomes[1]
 
     done(callers["max"].post(f"{renewals_of(REPEATABILITY)}/rep-2/approve", signed()), 200)
     assert in_force(callers) == document
