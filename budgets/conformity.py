@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from budgets.error_distributions import ErrorDistribution, Real, probability_between
+from budgets.error_distributions import ErrorDistribution, Real
 from budgets.errors import LimitsError
 
 
@@ -218,12 +218,7 @@ def conformance_probability(
     0.66
     """
     lower, upper = standardised_limits(estimate, standard_uncertainty, tolerance, bias=bias)
-    if lower is not None and upper is not None:
-        return probability_between(distribution, lower, upper)
-    if upper is not None:
-        return distribution.lower_tail(upper)
-    assert lower is not None  # a tolerance has at least one limit
-    return distribution.upper_tail(lower)
+    return distribution.within(lower, upper)
 
 
 def measurement_capability_index(tolerance: Tolerance, standard_uncertainty: float) -> float | None:

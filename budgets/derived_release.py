@@ -229,5 +229,5 @@ def _tolerance(document: Mapping[str, Any]) -> Tolerance:
 
 
 def release_rule_kind(document: Mapping[str, Any]) -> str:
-    """Return how the acceptance limits of a stored rule are to be read: ``fixed`` or ``at_this_reading``."""
-    return str(document.get("acceptance_limits", "fixed"))
+    """Return the kind of a stored rule: ``fixed``, ``at_this_reading`` or ``spread_from_lot``."""
+    return str(document.get("kind") or document.get("acceptance_limits", "fixed"))

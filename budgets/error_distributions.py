@@ -32,6 +32,9 @@ class ErrorDistribution(Protocol):
     def lower_tail(self, z: Real) -> Real:
         """Return the probability that the error lies below z."""
 
+    def within(self, lower: Real | None, upper: Real | None) -> Real:
+        """Return the probability that the error lies between two values, None where there is no such end."""
+
     def upper_quantile(self, probability: float) -> float:
         """Return the error that is exceeded with a probability."""
 
@@ -97,6 +100,21 @@ class StudentT:
         else:
             probability = stdtr(nu, z)
         return cast("Real", probability)
+
+    def within(self, lower: Real | None, upper: Real | None) -> Real:
+        """Return the probability that the error lies between two values.
+
+        Parameters
+        ----------
+        lower, upper : float or ndarray or None
+            None where there is no such end.
+
+        Returns
+        -------
+        float or ndarray
+            See `probability_between`.
+        """
+        return _within(self, lower, upper)
 
     def upper_quantile(self, probability: float) -> float:
         """Return the error that is exceeded with a probability.
@@ -212,6 +230,21 @@ class Tabulated:
         below, above = self._least
         return cast("Real", np.clip(ndtr(-np.interp(z, *self._table)), above, 1 - below))
 
+    def within(self, lower: Real | None, upper: Real | None) -> Real:
+        """Return the probability that the error lies between two values.
+
+        Parameters
+        ----------
+        lower, upper : float or ndarray or None
+            None where there is no such end.
+
+        Returns
+        -------
+        float or ndarray
+            See `probability_between`.
+        """
+        return _within(self, lower, upper)
+
     def lower_quantile(self, probability: float) -> float:
         """Return the error below which lies a probability.
 
@@ -299,3 +332,12 @@ def probability_between(distribution: ErrorDistribution, lower: Real, upper: Rea
     if lower + upper > 0:
         return max(0.0, float(distribution.upper_tail(lower) - distribution.upper_tail(upper)))
     return max(0.0, float(distribution.lower_tail(upper) - distribution.lower_tail(lower)))
+
+
+def _within(distribution: ErrorDistribution, lower: Real | None, upper: Real | None) -> Real:
+    if lower is not None and upper is not None:
+        return probability_between(distribution, lower, upper)
+    if upper is not None:
+        return distribution.lower_tail(upper)
+    assert lower is not None  # a tolerance has at least one limit
+    return distribution.upper_tail(lower)

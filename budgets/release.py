@@ -29,6 +29,7 @@ from budgets.decision_rules import DecisionRule
 from budgets.distribution_tables import DistributionTable
 from budgets.error_distributions import ErrorDistribution, StudentT, Tabulated
 from budgets.errors import ModelError
+from budgets.item_spread import ItemSpread
 from budgets.judgements import OUTCOMES, Judgement, Judgements, Zones, fill_conformance
 from budgets.level_dependence import LevelDependence, level_dependent_acceptance
 from budgets.natural_bounds import truncated_probabilities
@@ -76,6 +77,9 @@ class ReleaseRule:
         Under guarded rejection: only what lies beyond is rejected; None: nothing on that side.
     distribution : Tabulated or None
         Monte Carlo quantiles, where they take the place of Student's t.
+    items : ItemSpread or None
+        Where the items of the lot are judged: tolerance and probabilities are theirs, the uncertainty and the
+        acceptance limits are those of the mean.
     truncated_to : tuple of float or None, or None
         The natural domain, where probabilities are those within it.
     risk_per_look : float or None
@@ -105,6 +109,7 @@ class ReleaseRule:
     lower_rejection_limit: float | None = None
     upper_rejection_limit: float | None = None
     distribution: Tabulated | None = None
+    items: ItemSpread | None = None
     truncated_to: Ends | None = None
     risk_per_look: float | None = None
 
@@ -191,6 +196,7 @@ class ReleaseRule:
         rule: DecisionRule,
         coverage_probability: float,
         tabulated: Tabulated | None = None,
+        items: ItemSpread | None = None,
         **options: Unpack[AcceptanceOptions],
     ) -> ReleaseRule:
         """Return the rule for an uncertainty that is known already.
@@ -203,6 +209,8 @@ class ReleaseRule:
         coverage_probability : float
         tabulated : Tabulated or None
             Takes the place of Student's t.
+        items : ItemSpread or None
+            Items are judged, not the mean of the lot.
         **options
             See `budgets.acceptance.AcceptanceOptions`.
 
@@ -220,7 +228,8 @@ class ReleaseRule:
             uncertain.degrees_of_freedom,
             uncertain.dependence,
         )
-        distribution: ErrorDistribution = tabulated or StudentT(nu)
+        of_mean = tabulated or StudentT(nu)
+        distribution: ErrorDistribution = items or of_mean
         accepted = (
             acceptance_interval(rule, tolerance, u, distribution, **options)
             if dependence is None
@@ -233,7 +242,7 @@ class ReleaseRule:
             rejected = rejection_limits(
                 guard, tolerance, dependence or LevelDependence(u, 0.0), distribution, bias=bias
             )
-        factor = _coverage_factor(coverage_probability, distribution)
+        factor = _coverage_factor(coverage_probability, of_mean)
         made = cls(
             lower_tolerance_limit=tolerance.lower,
             upper_tolerance_limit=tolerance.upper,
@@ -258,6 +267,7 @@ class ReleaseRule:
             lower_rejection_limit=rejected.lower,
             upper_rejection_limit=rejected.upper,
             distribution=tabulated,
+            items=items,
             truncated_to=options.get("domain") if options.get("truncated") else None,
             risk_per_look=options.get("risk_per_look"),
         )
@@ -297,6 +307,8 @@ class ReleaseRule:
     def to_document(self) -> dict[str, Any]:
         """Return the rule as JSON-able members; null stands for infinite degrees of freedom."""
         document = asdict(self)
+        if self.items is not None:
+            document["items"] = self.items.to_document()
         if math.isinf(self.effective_degrees_of_freedom):
             document["effective_degrees_of_freedom"] = None
         return document
@@ -313,6 +325,8 @@ class ReleaseRule:
             members["stated_limits"] = StatedLimits(**members["stated_limits"])
         if members.get("distribution") is not None:
             members["distribution"] = Tabulated.from_document(members["distribution"])
+        if members.get("items") is not None:
+            members["items"] = ItemSpread.from_document(members["items"])
         if members.get("truncated_to") is not None:
             members["truncated_to"] = tuple(members["truncated_to"])
         return cls(**members)
@@ -331,7 +345,7 @@ class ReleaseRule:
     @cached_property
     def error_distribution(self) -> ErrorDistribution:
         """The distribution of (true value - estimate)/u."""
-        return self.distribution or StudentT(self.effective_degrees_of_freedom)
+        return self.items or self.distribution or StudentT(self.effective_degrees_of_freedom)
 
     @cached_property
     def _zones(self) -> Zones:
@@ -345,7 +359,8 @@ class ReleaseRule:
     @cached_property
     def _table(self) -> DistributionTable | None:
         nu = self.effective_degrees_of_freedom
-        return None if self.distribution is not None or math.isinf(nu) else DistributionTable(nu)
+        plain = isinstance(self.error_distribution, StudentT)
+        return DistributionTable(nu) if plain and not math.isinf(nu) else None
 
     def _risk_at_limits(self) -> float:
         """Return the largest specific risk of an estimate exactly at an acceptance limit."""

@@ -84,7 +84,8 @@ def sureness(rule: ReleaseRule, estimate: float) -> Sureness | None:
     Returns
     -------
     Sureness or None
-        None where the uncertainty has infinite degrees of freedom: it is taken as known.
+        None where the uncertainty has infinite degrees of freedom: it is taken as known. None too where items
+        are judged: the doubt about their spread is in the probability already.
 
     Notes
     -----
@@ -92,7 +93,7 @@ def sureness(rule: ReleaseRule, estimate: float) -> Sureness | None:
     would let the same doubt in twice. Monte Carlo quantiles keep their shape. The verdict stays what it is.
     """
     nu = rule.effective_degrees_of_freedom
-    if math.isinf(nu):
+    if math.isinf(nu) or rule.items is not None:
         return None
     lower, upper = standard_uncertainty_interval(rule.standard_uncertainty_at(estimate), nu)
     distribution = rule.distribution or _NORMAL

@@ -39,7 +39,7 @@ def test_the_effective_limits_compare_as_the_rounded_decimals_do(case, inclusive
     assert upper.holds(x) == (shown <= stated if inclusive else shown < stated)
     lower = rounded_tolerance(limit, None, decimals=decimals, lower_inclusive=inclusive)
     assert lower.holds(x) == (shown >= stated if inclusive else shown > stated)
-    assert (upper.stated.upper, lower.stated.lower) == (limit, limit)
+    assert (upper.stated_ends, lower.stated_ends) == ((None, limit), (limit, None))
 
 
 def test_the_rounding_method_of_the_standard():
