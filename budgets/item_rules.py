@@ -113,6 +113,7 @@ def item_rule(
             other_standard_uncertainty=math.sqrt(variance(others)),
             other_degrees_of_freedom=_freedom(others),
             factor=factor,
+            least_share=items.least_share,
             tolerance=tolerance,
             decision_rule=rule,
             coverage_probability=budget.coverage_probability,
@@ -145,6 +146,7 @@ def item_rule(
             other_standard_uncertainty=math.sqrt(variance(rest)),
             other_degrees_of_freedom=_freedom(rest),
             factor=factor,
+            least_share=items.least_share,
         ),
         bias=shift,
         domain=domain,
@@ -164,7 +166,7 @@ class LotSpreadRule:
         Of what was read of one sample.
     other_standard_uncertainty : float, unit of the characteristic
         Of the mean, from all that the samples share.
-    other_degrees_of_freedom, factor : float
+    other_degrees_of_freedom, factor, least_share : float
     tolerance : Tolerance
         Of the items.
     decision_rule : DecisionRule
@@ -181,6 +183,7 @@ class LotSpreadRule:
     other_standard_uncertainty: float
     other_degrees_of_freedom: float
     factor: float
+    least_share: float
     tolerance: Tolerance
     decision_rule: DecisionRule
     coverage_probability: float
@@ -247,6 +250,7 @@ class LotSpreadRule:
                 other_standard_uncertainty=other,
                 other_degrees_of_freedom=self.other_degrees_of_freedom,
                 factor=self.factor,
+                least_share=self.least_share,
             ),
             bias=self.bias_shift,
             domain=self.domain,

@@ -50,6 +50,8 @@ class ItemSpread:
     other_degrees_of_freedom : float
     factor : float
         q.
+    least_share : float
+        Of the items, that q was made for.
 
     Notes
     -----
@@ -67,6 +69,12 @@ class ItemSpread:
     other_standard_uncertainty: float
     other_degrees_of_freedom: float
     factor: float
+    least_share: float
+
+    @property
+    def item_standard_deviation(self) -> float:
+        """What is left of s as the spread between items."""
+        return math.sqrt(max(0.0, self.standard_deviation**2 - self.measurement_standard_deviation**2))
 
     @cached_property
     def _nodes(self) -> tuple[NDArray[np.float64], ...]:

@@ -303,7 +303,7 @@ def statement(
     return " ".join(
         (
             _result_text(characteristic, unit, shown, rule.coverage_factor, rule.coverage_probability),
-            f"Tolerance limits: {_tolerance_text(rule, unit)}; "
+            f"Tolerance limits{_share_text(rule)}: {_tolerance_text(rule, unit)}; "
             f"acceptance limits{' at this reading' if at_this_reading else ''}: {accepted}"
             f"{_rejection_text(rule, shown.decimals + 1, unit)}.",
             _verdict_text(judgement, rule.decision_rule),
@@ -325,6 +325,10 @@ def _verdict_text(judgement: Judgement, rule: DecisionRule) -> str:
         f"Outcome: {judgement.outcome}; conformance probability "
         f"{probability_text(judgement.conformance_probability)}. Decision rule: {rule_text(rule)}."
     )
+
+
+def _share_text(rule: ReleaseRule) -> str:
+    return "" if rule.items is None else f" for at least {_percent(rule.items.least_share)} % of the items"
 
 
 def _tolerance_text(rule: ReleaseRule, unit: str) -> str:

@@ -101,13 +101,15 @@ def sureness(rule: ReleaseRule, estimate: float) -> Sureness | None:
     return Sureness(nu, COVERAGE_PROBABILITY, lower, upper, min(first, second), max(first, second))
 
 
-def sureness_text(found: Sureness | None, unit: str) -> str:
+def sureness_text(found: Sureness | None, unit: str, *, items: bool = False) -> str:
     """Return in a plain sentence how sure an uncertainty is.
 
     Parameters
     ----------
     found : Sureness or None
     unit : str
+    items : bool
+        Items are judged.
 
     Returns
     -------
@@ -119,6 +121,8 @@ def sureness_text(found: Sureness | None, unit: str) -> str:
     'u rests on 15 degrees of freedom: it lies from 0.052 to 0.108 % (95 %)'
     """
     if found is None:
+        if items:
+            return "How surely the spread of the items is known is in the probability already."
         return "u is taken as known: it has infinite degrees of freedom."
     decimals = significant_decimals(found.lower_standard_uncertainty)
     low, high = (

@@ -246,6 +246,8 @@ class Requirement:
 
     ``comparison`` rounded: estimates are rounded to ``decimals`` before they are compared. ``within_domain``:
     probabilities are those given that the true value lies in the natural domain of the characteristic.
+    ``item_share`` and ``item_spread`` belong to ``judged`` item: the least share of the items that must lie
+    within the limits, and where their spread is taken from.
     """
 
     characteristic: str
@@ -257,6 +259,8 @@ class Requirement:
     comparison: str = "absolute"
     decimals: int | None = None
     within_domain: bool = False
+    item_share: float | None = None
+    item_spread: str | None = None
 
 
 @dataclass(frozen=True)

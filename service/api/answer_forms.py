@@ -91,7 +91,7 @@ _LIMITS: Form = {
     },
     "error_distribution": {
         "type": ["string", "null"],
-        "enum": ["normal", "t", "monte_carlo", None],
+        "enum": ["normal", "t", "monte_carlo", "items", None],
         "description": "What probabilities rest on.",
     },
 }
@@ -159,6 +159,17 @@ _VERDICT = _object(
         **_SURENESS,
         "prior": {**_OBJECT_OR_NULL, "description": "Of the production; null: none was used."},
         "judged": _TEXT_OR_NULL,
+        "items": _or_null(
+            _object(
+                "What the items must meet, and their spread; null: the mean of the lot is judged.",
+                {
+                    "least_share": _NUMBER,
+                    "spread": {"type": "string", "enum": ["known", "from_lot"]},
+                    "standard_deviation": _NUMBER_OR_NULL,
+                    "degrees_of_freedom": {**_NUMBER_OR_NULL, "description": "null: infinite"},
+                },
+            )
+        ),
         "decision_rule": {"type": ["object", "null"]},
         "budget": _or_null(_BUDGET),
         "samples": _WHOLE,

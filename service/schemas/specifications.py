@@ -87,7 +87,26 @@ class RequirementSchema(StrictSchema):
     loads_to = Requirement
     characteristic = Code(required=True)
     method = Text(200, allow_none=True, load_default=None)
-    judged = Choice("lot_mean", later=("item",), load_default="lot_mean")
+    judged = Choice(
+        "lot_mean",
+        "item",
+        load_default="lot_mean",
+        about="Whether the limits are for the mean of the lot or for its items.",
+    )
+    item_share = Number(
+        least=0.5,
+        below=1,
+        allow_none=True,
+        load_default=None,
+        about="Least share of the items that must lie within the limits.",
+    )
+    item_spread = Choice(
+        "known",
+        "from_lot",
+        allow_none=True,
+        load_default=None,
+        about="Spread between items: of the budget at the level sample, or of the samples of the lot.",
+    )
     lower_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
     upper_tolerance_limit = Part(ToleranceLimitSchema, required=True, allow_none=True)
     comparison = Choice("absolute", "rounded", load_default="absolute")
@@ -117,6 +136,17 @@ class RequirementSchema(StrictSchema):
         if data["comparison"] == "rounded" and data["decimals"] is None:
             wrong = Wrong("missing", "to how many decimals estimates are rounded")
             raise ValidationError({"decimals": [wrong]})
+
+    @validates_schema(skip_on_field_errors=True)
+    def _items(self, data: dict[str, Any], **_: Any) -> None:
+        wrongs: dict[str, list[Wrong]] = {}
+        for member in ("item_share", "item_spread"):
+            if data["judged"] == "item" and data[member] is None:
+                wrongs[member] = [Wrong("missing", "a value, where items are judged")]
+            elif data["judged"] != "item" and data[member] is not None:
+                wrongs[member] = [Wrong("belongs to items", "no such member for the mean of the lot")]
+        if wrongs:
+            raise ValidationError(dict(wrongs))
 
 
 class SpecificationSchema(StrictSchema):

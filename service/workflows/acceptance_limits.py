@@ -7,6 +7,7 @@ import json
 from typing import Any
 
 from budgets.derived_release import DerivedReleaseRule
+from budgets.item_rules import LotSpreadRule
 from service.access import require
 from service.documents import Actor
 from service.errors import Conflict, NotFound
@@ -101,6 +102,13 @@ def _items(
 
 def _figures(rule: AnyRule) -> dict[str, Any]:
     """Write the figures of a rule; those that a derived characteristic has only at its readings are null."""
+    if isinstance(rule, LotSpreadRule):
+        return {
+            **dict.fromkeys(FIGURES),
+            "acceptance_limits": rule.acceptance_limits,
+            **tolerance_figures(rule.tolerance),
+            "coverage_probability": rule.coverage_probability,
+        }
     if isinstance(rule, DerivedReleaseRule):
         return {
             **dict.fromkeys(FIGURES),

@@ -175,7 +175,8 @@ def _requirement(
 def _explained(
     unit_of_work: UnitOfWork, subject: Subject, requirement: Requirement | None, place: Mapping[str, float]
 ) -> Explanation:
-    if requirement is None:
+    # What one component does to the limits of items is not built: the uncertainty of the mean is explained.
+    if requirement is None or requirement.judged == "item":
         return explain(subject.budget, subject.counts, estimates=place)
     key = f"{subject.document.product}/{subject.document.characteristic}"
     stored = unit_of_work.master.get("characteristic", key)

@@ -127,6 +127,7 @@ def _rule_on(
         **_sureness(sure),
         "prior": None,
         "judged": requirement.judged,
+        "items": _items(rule, requirement),
         "decision_rule": _decision_rule(requirement),
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
         "samples": measured.samples,
@@ -156,7 +157,8 @@ def _release_rule(
     assert measured.budget is not None and measured.done is not None and measured.estimate is not None
     try:
         rule = register.rule(specification, requirement, measured.budget, measured.done)
-        return rule_here(rule, measured.means, measured.estimate), rule.acceptance_limits, ()
+        here = rule_here(rule, measured.means, measured.estimate, measured.sample_means)
+        return here, rule.acceptance_limits, ()
     except BudgetsError as error:
         hold = Hold(
             "cannot-be-proved", error.message, "Read as the procedure plans. A person decides on this lot."
@@ -170,6 +172,20 @@ def _figures(rule: ReleaseRule | None, limits: str | None, judgement: Judgement 
         **(dict.fromkeys(FIGURES) if rule is None else figures_of(rule, limits)),
         "conformance_probability": None if judgement is None else judgement.conformance_probability,
         "specific_consumers_risk": None if judgement is None else judgement.specific_consumers_risk,
+    }
+
+
+def _items(rule: ReleaseRule | None, requirement: Requirement) -> dict[str, Any] | None:
+    """Write what the items must meet, and the spread that was used; null where the mean is judged."""
+    if requirement.judged != "item":
+        return None
+    spread = None if rule is None else rule.items
+    nu = None if spread is None else spread.degrees_of_freedom
+    return {
+        "least_share": requirement.item_share,
+        "spread": requirement.item_spread,
+        "standard_deviation": None if spread is None else spread.item_standard_deviation,
+        "degrees_of_freedom": None if nu == float("inf") else nu,
     }
 
 
@@ -215,6 +231,7 @@ def _nothing_in_force(code: str | None) -> Ruling:
         **_sureness(None),
         "prior": None,
         "judged": None,
+        "items": None,
         "decision_rule": None,
         "budget": None,
         "samples": 0,

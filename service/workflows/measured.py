@@ -39,7 +39,8 @@ class Hold:
 class Measured:
     """What was read for one characteristic, joined: a mean for each quantity that is read, in its own unit.
 
-    ``done`` says how the readings were grouped, ``estimate`` is the value of the measurement model.
+    ``done`` says how the readings were grouped, ``estimate`` is the value of the measurement model,
+    ``sample_means`` are those of the one quantity that is read, where it is one.
     """
 
     budget: BudgetInForce | None
@@ -49,6 +50,7 @@ class Measured:
     means: Mapping[str, float]
     estimate: float | None
     holds: tuple[Hold, ...]
+    sample_means: tuple[float, ...] = ()
 
 
 def measure(register: Register, request: DecisionRequest, code: str, recorded_at: str) -> Measured:
@@ -93,7 +95,29 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         holds.extend(_range_holds(register, budget, by_channel, estimate))
         holds.extend(_count_holds(budget, [sum(r.sample == name for r in scans) for name in samples]))
         holds.extend(_lapse_holds(budget, recorded_at))
-    return Measured(budget, done, len(samples), len(scans), means, estimate, tuple(_unique(holds)))
+    return Measured(
+        budget,
+        done,
+        len(samples),
+        len(scans),
+        means,
+        estimate,
+        tuple(_unique(holds)),
+        _sample_means(scans, samples, by_channel),
+    )
+
+
+def _sample_means(
+    scans: list[Reading], samples: list[str], by_channel: Mapping[str, list[float]]
+) -> tuple[float, ...]:
+    if len(by_channel) > 1:
+        return ()
+    (values,) = by_channel.values()
+    each = [
+        [value for reading, value in zip(scans, values, strict=True) if reading.sample == name]
+        for name in samples
+    ]
+    return tuple(fsum(readings) / len(readings) for readings in each)
 
 
 def _values(register: Register, request: DecisionRequest, name: str, scans: list[Reading]) -> list[float]:

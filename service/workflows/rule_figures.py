@@ -74,6 +74,8 @@ def tolerance_figures(tolerance: Tolerance) -> dict[str, Any]:
 
 
 def _distribution(rule: ReleaseRule) -> str:
+    if rule.items is not None:
+        return "items"
     if rule.distribution is not None:
         return "monte_carlo"
     return "normal" if rule.effective_degrees_of_freedom == float("inf") else "t"

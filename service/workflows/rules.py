@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from itertools import islice
 from typing import Any, Final
@@ -12,7 +12,8 @@ from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.derived_release import DerivedReleaseRule, release_rule_kind
 from budgets.error_distributions import Tabulated
-from budgets.errors import LimitsError, ModelError
+from budgets.errors import LimitsError, ModelError, NotSupportedError
+from budgets.item_rules import ItemRequirement, LotSpreadRule, item_rule
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
@@ -22,7 +23,7 @@ from service.documents import Characteristic, Requirement, RuleOfDecision, Toler
 from service.store.rows import StoredRule
 from service.workflows.evidence import FaultCollector
 
-AnyRule = ReleaseRule | DerivedReleaseRule
+AnyRule = ReleaseRule | DerivedReleaseRule | LotSpreadRule
 
 
 @dataclass(frozen=True)
@@ -145,6 +146,17 @@ def compile_rule(
     Raises the errors of budgets, an empty acceptance interval among them.
     """
     domain = characteristic.natural_domain
+    if requirement.judged == "item":
+        if requirement.within_domain:
+            raise NotSupportedError("judging items within the natural domain", where=("within_domain",))
+        return item_rule(
+            budget,
+            done,
+            tolerance(requirement, characteristic),
+            decision_rule(requirement.decision_rule),
+            ItemRequirement(requirement.item_share or 0.0, requirement.item_spread or ""),
+            domain=(domain.lower, domain.upper),
+        )
     kind = ReleaseRule if budget.model is None else DerivedReleaseRule
     return kind.compile(
         budget,
@@ -163,10 +175,14 @@ def stored_rule(numbers: Mapping[str, Any]) -> AnyRule:
     """Rebuild a rule from its stored numbers."""
     if release_rule_kind(numbers) == "fixed":
         return ReleaseRule.from_document(numbers)
+    if release_rule_kind(numbers) == LotSpreadRule.kind:
+        return LotSpreadRule.from_document(numbers)
     return DerivedReleaseRule.from_document(numbers)
 
 
-def rule_here(rule: AnyRule, means: Mapping[str, float], estimate: float) -> ReleaseRule:
+def rule_here(
+    rule: AnyRule, means: Mapping[str, float], estimate: float, sample_means: Sequence[float] = ()
+) -> ReleaseRule:
     """Give the rule with the uncertainty, and the acceptance limits, that hold at these readings.
 
     Raises
@@ -174,6 +190,8 @@ def rule_here(rule: AnyRule, means: Mapping[str, float], estimate: float) -> Rel
     LimitsError
         The decision rule cannot be used at these readings, or accepts nothing there.
     """
+    if isinstance(rule, LotSpreadRule):
+        return rule.at(sample_means)
     return rule.at(estimate) if isinstance(rule, ReleaseRule) else rule.at(means)
 
 

@@ -50,7 +50,9 @@ def display(
         "conformance_probability": None
         if judgement is None
         else probability_text(judgement.conformance_probability),
-        "how_sure": None if judgement is None else sureness_text(sure, characteristic.unit),
+        "how_sure": None
+        if judgement is None
+        else sureness_text(sure, characteristic.unit, items=rule.items is not None),
         "statement": None
         if judgement is None
         else statement(

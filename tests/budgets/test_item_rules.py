@@ -46,7 +46,9 @@ def budget(a_budget, a_component):
 def pure(samples, share):
     """Return the spread of so many samples without any other error, s = 1."""
     root = math.sqrt(samples)
-    return ItemSpread(1 / root, 1.0, samples - 1, 0.0, 1 / samples, 0.0, math.inf, share_factor(share, 1))
+    return ItemSpread(
+        1 / root, 1.0, samples - 1, 0.0, 1 / samples, 0.0, math.inf, share_factor(share, 1), share
+    )
 
 
 # ISO 16269-6, factors of one-sided tolerance intervals, unknown spread, confidence 95 % (from memory).
@@ -96,7 +98,7 @@ def test_a_known_spread_of_few_degrees_of_freedom_costs_something(budget, a_comp
 
 def test_other_errors_of_few_degrees_of_freedom_are_students_t():
     # Hardly any spread: what is left is the mean with its own t distribution.
-    alone = ItemSpread(0.1, 1e-9, math.inf, 0.0, 0.5, 0.1, 8.0, 1.645)
+    alone = ItemSpread(0.1, 1e-9, math.inf, 0.0, 0.5, 0.1, 8.0, 1.645, 0.95)
     assert float(alone.upper_tail(1.96)) == pytest.approx(0.0428, abs=5e-5)
 
 
@@ -109,7 +111,7 @@ def test_a_lot_with_too_few_good_items_is_accepted_no_oftener_than_the_risk(samp
         means = generator.normal(0, math.hypot(1, noise), samples) + generator.normal(0, common)
         s = means.std(ddof=1)
         u = math.hypot(s / math.sqrt(samples), common)
-        spread = ItemSpread(u, s, samples - 1, noise, 1 / samples, common, math.inf, Q)
+        spread = ItemSpread(u, s, samples - 1, noise, 1 / samples, common, math.inf, Q, 0.95)
         accepted += float(spread.upper_tail((Q - means.mean()) / u)) <= 0.05
     assert accepted / runs <= 0.05 + 4 * math.sqrt(0.05 * 0.95 / runs)
     if noise == common == 0:
@@ -125,6 +127,7 @@ def test_the_spread_of_the_lot_at_hand(budget):
     assert here.combined_standard_uncertainty == pytest.approx(math.sqrt(s**2 / 3 + 0.03**2))
     assert here.items.standard_deviation == pytest.approx(s)
     assert here.items.measurement_standard_deviation == pytest.approx(u_r)
+    assert here.items.item_standard_deviation == pytest.approx(math.sqrt(s**2 - u_r**2))
     # Between the factor of noncentral t without other errors, and that with all of them added.
     k = pure(3, 0.95).upper_quantile(0.05) / math.sqrt(3)
     assert 4 - k * s - Q * 0.03 - 0.01 < here.upper_acceptance_limit < 4 - k * s * 0.95
@@ -214,7 +217,7 @@ def test_what_items_cannot_stand_beside(budget, a_component):
 
 def test_a_spread_that_is_hardly_known_reaches_no_small_risk():
     with pytest.raises(LimitsError, match="known too badly"):
-        ItemSpread(1.0, 1.0, 0.05, 0.0, 0.5, 0.0, math.inf, Q).upper_quantile(1e-4)
+        ItemSpread(1.0, 1.0, 0.05, 0.0, 0.5, 0.0, math.inf, Q, 0.95).upper_quantile(1e-4)
 
 
 def test_quantiles_undo_the_tails_also_far_down():

@@ -62,4 +62,5 @@ def test_it_is_said_in_a_plain_sentence():
     )
     sure = sureness_text(sureness(a_rule(), 3.0), "%")
     assert sure.endswith("the conformance probability is > 99.99 % either way. The verdict stays.")
-    assert "taken as known" in sureness_text(None, "%")
+    assert "u is taken as known" in sureness_text(None, "%")
+    assert "spread of the items" in sureness_text(None, "%", items=True)

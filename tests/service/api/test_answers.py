@@ -47,7 +47,7 @@ def test_the_forms_refuse_what_the_service_refuses(check: Any) -> None:
     assert check("DecisionRequest", {**decision(), "colour": "white"})
     assert check("DecisionRequest", decision(line="Tower 1"))
     unsupported = house.specification("new-one", 3.0)
-    unsupported["requires"][0]["judged"] = "item"
+    unsupported["requires"][0]["decision_rule"]["prior"] = {"mean": 3}
     assert check("Specification", unsupported)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 from dataclasses import replace
 from typing import Any
@@ -9,11 +10,13 @@ from typing import Any
 import pytest
 from scipy.stats import chi2, norm
 
+from budgets.budget import Count, Procedure
 from budgets.errors import LimitsError, NotSupportedError
 from budgets.evidence.evaluation import MeanSquare, Term
+from budgets.propagation import Counts
 from service.documents import Bounds, Characteristic, Requirement, RuleOfDecision, ToleranceLimit
 from service.workflows.judging import judge
-from service.workflows.rules import compile_rule, planned_counts, tolerance
+from service.workflows.rules import compile_pair, compile_rule, planned_counts, stored_rule, tolerance
 from tests.service.workflows.registers import (
     BIAS,
     NOW,
@@ -179,3 +182,59 @@ def test_a_verdict_says_how_sure_its_uncertainty_is() -> None:
 def test_what_a_verdict_rests_on_is_said() -> None:
     found, _ = verdict(3.1, a_requirement())
     assert (found["prior"], found["judged"], found["within_domain"]) == (None, "lot_mean", False)
+
+
+def with_items(**changes: Any) -> Any:
+    """Give a budget whose samples differ, read in two samples of two."""
+    items = a_component("items", "moisture", "sample", 0.05)
+    members = {
+        "components": (*a_budget().components, items),
+        "procedure": Procedure(Count(1, 2, 3), Count(2, 2, 4)),
+        "bias": 0.0,
+        "validated_range": (0.5, 4.6),
+    }
+    return a_budget_in_force(budget=a_budget(**members | changes))
+
+
+@pytest.mark.parametrize("spread", ["known", "from_lot"])
+def test_items_are_judged_by_their_share(spread: str) -> None:
+    requirement = a_requirement(judged="item", item_share=0.9, item_spread=spread)
+    specification = a_specification("customer-b", requirement)
+    register = a_register(
+        specifications={"customer-b": specification},
+        budgets={("whole-milk-powder", "moisture", "nir-1"): with_items()},
+    )
+    request = a_request(
+        *(a_reading(2.60, second) for second in (1, 2)),
+        *(a_reading(2.64, second, sample="2") for second in (3, 4)),
+    )
+    found = judge(register, request, NOW)["verdicts"][0]
+    assert found["judged"] == "item"
+    assert found["items"]["least_share"] == 0.9
+    assert found["error_distribution"] == "items"
+    assert "Tolerance limits for at least 90 % of the items: upper 3.2 %" in found["display"]["statement"]
+    if spread == "known":
+        assert (found["outcome"], found["acceptance_limits"]) == ("release", "fixed")
+        u = math.sqrt(0.06**2 / 2 + 0.05**2 / 2 + 0.08**2)
+        limit = 3.2 - norm.ppf(0.9) * 0.05 - norm.ppf(0.95) * u
+        assert found["upper_acceptance_limit"] == pytest.approx(limit)
+        assert found["items"]["standard_deviation"] == pytest.approx(0.05)
+        assert found["items"]["degrees_of_freedom"] is None
+    else:
+        # Two samples say little of the spread, and it is hardly more than that of their readings.
+        assert (found["outcome"], found["acceptance_limits"]) == ("hold", "at_this_reading")
+        assert found["items"]["degrees_of_freedom"] == 1
+    assert "spread of the items" in found["display"]["how_sure"]
+
+
+def test_rules_of_items_are_stored_and_read_again() -> None:
+    budget = with_items().budget
+    for spread in ("known", "from_lot"):
+        requirement = a_requirement(judged="item", item_share=0.9, item_spread=spread)
+        rules = compile_pair(budget, requirement, MOISTURE, label="here")
+        # One sample shows no spread.
+        assert ("2" in rules) == (spread == "known")
+        numbers = json.loads(json.dumps(rules["2,2"]))
+        assert stored_rule(numbers) == compile_rule(budget, Counts((2, 2)), requirement, MOISTURE)
+    with pytest.raises(NotSupportedError, match="items within the natural domain"):
+        compile_rule(budget, Counts((2, 2)), replace(requirement, within_domain=True), MOISTURE)
