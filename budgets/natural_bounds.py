@@ -12,7 +12,7 @@ from typing import cast
 
 import numpy as np
 
-from budgets.conformity import Tolerance
+from budgets.conformity import Tolerance, conformance_probability, tails
 from budgets.decision_rules import DecisionRule
 from budgets.empty_acceptance import nothing_left
 from budgets.error_distributions import ErrorDistribution, Real, probability_between
@@ -88,6 +88,37 @@ def truncated_probabilities(
 
     whole = between(start, end)
     return between(start, lower) / whole, between(lower, upper) / whole, between(upper, end) / whole
+
+
+def probabilities(
+    estimate: float,
+    standard_uncertainty: float,
+    distribution: ErrorDistribution,
+    tolerance: Tolerance,
+    *,
+    bias: float = 0.0,
+    truncated_to: Ends | None = None,
+) -> tuple[float, float, float]:
+    """Return the probabilities that the true value lies below, within and above tolerance.
+
+    Parameters
+    ----------
+    estimate, standard_uncertainty, distribution, tolerance, bias
+        As in `budgets.conformity.tails`.
+    truncated_to : tuple of float or None, or None
+        The natural domain, where probabilities are those within it.
+
+    Returns
+    -------
+    tuple of float
+    """
+    u = standard_uncertainty
+    if truncated_to is not None:
+        found = truncated_probabilities(estimate, u, distribution, tolerance, truncated_to)
+        return float(found[0]), float(found[1]), float(found[2])
+    below, above = tails(estimate, u, distribution, tolerance, bias=bias)
+    within = conformance_probability(estimate, u, distribution, tolerance, bias=bias)
+    return float(below), float(within), float(above)
 
 
 def truncated_limits(

@@ -16,14 +16,13 @@ from typing import Any, Unpack
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from budgets.acceptance import AcceptanceOptions, Ends, acceptance_interval, guards_of
+from budgets.acceptance import AcceptanceOptions, Ends
 from budgets.budget import Budget
+from budgets.compiled_limits import compiled_limits, truncation
 from budgets.conformity import (
     StatedLimits,
     Tolerance,
-    conformance_probability,
     measurement_capability_index,
-    tails,
 )
 from budgets.decision_rules import DecisionRule
 from budgets.distribution_tables import DistributionTable
@@ -31,11 +30,9 @@ from budgets.error_distributions import ErrorDistribution, StudentT, Tabulated
 from budgets.errors import ModelError
 from budgets.item_spread import ItemSpread
 from budgets.judgements import OUTCOMES, Judgement, Judgements, Zones, fill_conformance
-from budgets.level_dependence import LevelDependence, level_dependent_acceptance
-from budgets.natural_bounds import truncated_probabilities
+from budgets.natural_bounds import probabilities, truncated_probabilities
 from budgets.propagation import Counts, check_counts
 from budgets.reading_patterns import ReadingPattern
-from budgets.rejection import RejectionLimits, rejection_limits
 from budgets.uncertainty_at_limits import UncertaintyAtLimits, uncertainty_at_limits
 
 # Small enough for the working arrays to stay in the processor's cache.
@@ -229,49 +226,36 @@ class ReleaseRule:
             uncertain.dependence,
         )
         of_mean = tabulated or StudentT(nu)
-        distribution: ErrorDistribution = items or of_mean
-        accepted = (
-            acceptance_interval(rule, tolerance, u, distribution, **options)
-            if dependence is None
-            else level_dependent_acceptance(rule, tolerance, dependence, distribution, **options)
-        )
-        bias = options.get("bias", 0.0)
-        rejected = RejectionLimits(None, None)
-        if rule.rejection == "guarded":
-            guard = guards_of(rule, distribution, options)[0]
-            rejected = rejection_limits(
-                guard, tolerance, dependence or LevelDependence(u, 0.0), distribution, bias=bias
-            )
+        limits = compiled_limits(uncertain, tolerance, rule, items or of_mean, options)
         factor = _coverage_factor(coverage_probability, of_mean)
-        made = cls(
+        return cls(
             lower_tolerance_limit=tolerance.lower,
             upper_tolerance_limit=tolerance.upper,
             lower_inclusive=tolerance.lower_inclusive,
             upper_inclusive=tolerance.upper_inclusive,
-            lower_acceptance_limit=accepted.lower,
-            upper_acceptance_limit=accepted.upper,
-            guard_band_lower=accepted.guard_band_lower,
-            guard_band_upper=accepted.guard_band_upper,
+            lower_acceptance_limit=limits.acceptance.lower,
+            upper_acceptance_limit=limits.acceptance.upper,
+            guard_band_lower=limits.acceptance.guard_band_lower,
+            guard_band_upper=limits.acceptance.guard_band_upper,
             combined_standard_uncertainty=u,
             effective_degrees_of_freedom=nu,
             coverage_probability=coverage_probability,
             coverage_factor=factor,
             expanded_uncertainty=factor * u,
-            bias_shift=bias,
+            bias_shift=options.get("bias", 0.0),
             decision_rule=rule,
             measurement_capability_index=measurement_capability_index(tolerance, u),
-            largest_specific_risk=math.nan,
+            largest_specific_risk=limits.largest_specific_risk,
             constant_standard_uncertainty=None if dependence is None else dependence.constant,
             proportional_standard_uncertainty=0.0 if dependence is None else dependence.proportional,
             stated_limits=tolerance.stated,
-            lower_rejection_limit=rejected.lower,
-            upper_rejection_limit=rejected.upper,
+            lower_rejection_limit=limits.rejection.lower,
+            upper_rejection_limit=limits.rejection.upper,
             distribution=tabulated,
             items=items,
-            truncated_to=options.get("domain") if options.get("truncated") else None,
+            truncated_to=truncation(options),
             risk_per_look=options.get("risk_per_look"),
         )
-        return replace(made, largest_specific_risk=made._risk_at_limits())
 
     @property
     def acceptance_limits(self) -> str:
@@ -362,16 +346,6 @@ class ReleaseRule:
         plain = isinstance(self.error_distribution, StudentT)
         return DistributionTable(nu) if plain and not math.isinf(nu) else None
 
-    def _risk_at_limits(self) -> float:
-        """Return the largest specific risk of an estimate exactly at an acceptance limit."""
-        risks = []
-        for limit in (self.lower_acceptance_limit, self.upper_acceptance_limit):
-            if limit is not None:
-                u = self.standard_uncertainty_at(limit)
-                below, _, above = self.probabilities(limit, u, self.error_distribution)
-                risks.append(below + above)
-        return max(risks)
-
     def probabilities(
         self, estimate: float, standard_uncertainty: float, distribution: ErrorDistribution
     ) -> tuple[float, float, float]:
@@ -386,13 +360,14 @@ class ReleaseRule:
         -------
         tuple of float
         """
-        u, tolerance, bias = standard_uncertainty, self.tolerance, self.bias_shift
-        if self.truncated_to is not None:
-            found = truncated_probabilities(estimate, u, distribution, tolerance, self.truncated_to)
-            return float(found[0]), float(found[1]), float(found[2])
-        below, above = tails(estimate, u, distribution, tolerance, bias=bias)
-        within = conformance_probability(estimate, u, distribution, tolerance, bias=bias)
-        return float(below), float(within), float(above)
+        return probabilities(
+            estimate,
+            standard_uncertainty,
+            distribution,
+            self.tolerance,
+            bias=self.bias_shift,
+            truncated_to=self.truncated_to,
+        )
 
     def judge(self, estimate: float) -> Judgement:
         """Judge one estimate with the exact distribution function.
