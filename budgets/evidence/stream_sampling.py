@@ -47,7 +47,10 @@ def sampling_of_process(study: Study, values: Array, step: float) -> Evaluation:
     Notes
     -----
     The degrees of freedom are approximate: for first-order autoregressive processes and series two to four
-    times as long as the lot, 95 % intervals held the truth in 92 to 95 % of 600 simulated studies each.
+    times as long as the lot, 95 % intervals held the truth in 92 to 99 % of the simulated studies, most often
+    with random increments. Where successive readings correlate by 0.5 or less, the nugget that is
+    extrapolated is a little too large (3 % of the variance of stratified increments): intervals of 1,000
+    readings, which are narrow, then held it in 88 to 90 %, erring on the side of too large an uncertainty.
     Source: as in `sampling_weights`; the variance of the analyzer, which the variogram holds at every lag but
     0, is taken out with the weight of those lags.
     """

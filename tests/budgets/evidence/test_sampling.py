@@ -208,35 +208,3 @@ def test_shift_scale_and_order(values, shift, scale, order):
     size = max(abs(e.variance) for e in before.estimates)
     for one, other in zip(before.estimates, after.estimates, strict=True):
         assert other.variance == pytest.approx(scale**2 * one.variance, rel=1e-6, abs=1e-7 * scale**2 * size)
-
-
-# --- coverage ---------------------------------------------------------------------------------------------
-
-
-@pytest.mark.slow
-def test_intervals_cover_the_truth():
-    """2,000 studies of 8 targets, the least number that goes without a warning, with little sampling error.
-
-    Negative components, of which there are many here, make the interval of the sum a little too wide.
-    """
-    deviations = (0.3, 0.05, 0.1)
-    truths = {
-        "repeatability": deviations[2],
-        "sampling": deviations[1],
-        "between_targets": deviations[0],
-        "measurement": float(np.hypot(*deviations[1:])),
-    }
-    shares = coverage(truths, deviations)
-    assert all(0.93 <= shares[name] <= 0.98 for name in truths), shares
-    assert all(0.90 <= shares[f"robust_{name}"] <= 0.99 for name in truths), shares
-
-
-def coverage(truths, deviations, studies=2000):
-    generator = np.random.default_rng(20261202)
-    held = dict.fromkeys([*truths, *(f"robust_{name}" for name in truths)], 0)
-    for _ in range(studies):
-        evaluation = evaluated(rows_of(simulated(generator, deviations)))
-        for name in held:
-            interval = evaluation.estimate(name).interval
-            held[name] += interval.lower <= truths[name.removeprefix("robust_")] <= interval.upper
-    return {name: count / studies for name, count in held.items()}
