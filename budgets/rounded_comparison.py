@@ -73,6 +73,27 @@ def rounded_tolerance(
     return Tolerance(low, high, low_tie, high_tie, stated)
 
 
+def without_averaging_noise(estimate: float) -> float:
+    """Return an estimate with the fifteen significant digits that every double keeps.
+
+    Parameters
+    ----------
+    estimate : float, unit of the characteristic
+
+    Returns
+    -------
+    float
+        A mean of decimals is off by a last digit or two: 9.6/3 is 3.1999999999999997. At a tie that would
+        round it the wrong way.
+
+    Examples
+    --------
+    >>> without_averaging_noise((3.1 + 3.2 + 3.3) / 3)
+    3.2
+    """
+    return float(f"{estimate:.15g}")
+
+
 def _effective(limit: float | None, decimals: int, inclusive: bool, side: str) -> tuple[float | None, bool]:
     """Return the effective limit, and whether the tie counts inside.
 

@@ -9,6 +9,7 @@ from typing import Any, Final
 from budgets.errors import BudgetsError
 from budgets.judgements import Judgement
 from budgets.release import ReleaseRule
+from budgets.rounded_comparison import without_averaging_noise
 from budgets.sureness import Sureness, sureness
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
@@ -111,18 +112,21 @@ def _rule_on(
     characteristic = register.characteristics[request.product, requirement.characteristic]
     rule, limits, unusable = _release_rule(register, specification, requirement, measured)
     holds = (*measured.holds, *unusable)
+    estimate = measured.estimate
+    if estimate is not None and requirement.comparison == "rounded":
+        estimate = without_averaging_noise(estimate)
     judgement = shown = sure = None
-    if rule is not None and measured.estimate is not None:
-        judgement = None if holds else rule.judge(measured.estimate)
-        sure = None if holds else sureness(rule, measured.estimate)
-        shown = display(rule, measured.estimate, judgement, sure, characteristic, limits)
+    if rule is not None and estimate is not None:
+        judgement = None if holds else rule.judge(estimate)
+        sure = None if holds else sureness(rule, estimate)
+        shown = display(rule, estimate, judgement, sure, characteristic, limits)
     outcome = "hold" if judgement is None else judgement.outcome
     verdict = {
         "characteristic": requirement.characteristic,
         "unit": characteristic.unit,
         "specification": _reference(specification),
         "outcome": outcome,
-        "estimate": measured.estimate,
+        "estimate": estimate,
         **_figures(rule, limits, judgement),
         **_sureness(sure),
         "prior": None,
@@ -135,8 +139,8 @@ def _rule_on(
         "display": shown,
     }
     reasons = [_reason(hold, requirement.characteristic, specification) for hold in holds]
-    if rule is not None and measured.estimate is not None and judgement is not None and outcome != "release":
-        value_hold = about_the_value(rule, measured.estimate, outcome, characteristic.unit)
+    if rule is not None and estimate is not None and judgement is not None and outcome != "release":
+        value_hold = about_the_value(rule, estimate, outcome, characteristic.unit)
         reasons.append(_reason(value_hold, requirement.characteristic, specification))
     return Ruling(verdict, tuple(reasons))
 

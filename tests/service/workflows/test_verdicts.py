@@ -238,3 +238,17 @@ def test_rules_of_items_are_stored_and_read_again() -> None:
         assert stored_rule(numbers) == compile_rule(budget, Counts((2, 2)), requirement, MOISTURE)
     with pytest.raises(NotSupportedError, match="items within the natural domain"):
         compile_rule(budget, Counts((2, 2)), replace(requirement, within_domain=True), MOISTURE)
+
+
+def test_a_tie_is_that_of_the_decimals_that_were_read() -> None:
+    """Readings of 3.35, 3.35 and 3.35 have a mean of 3.35, which rounds to 3.4; of 3.45, to 3.4 as well."""
+    budget = a_budget(bias=0.0, procedure=Procedure(Count(1, 1, 2), Count(2, 3, 4)))
+    in_force = {("whole-milk-powder", "moisture", "nir-1"): a_budget_in_force(budget=budget)}
+    requirement = rounded(3.4)
+    for value, outcome in ((3.35, "hold"), (3.45, "hold"), (3.46, "reject")):
+        register = a_register(
+            specifications={"customer-b": a_specification("customer-b", requirement)}, budgets=in_force
+        )
+        readings = (a_reading(value + step, second) for second, step in ((1, -0.1), (2, 0.0), (3, 0.1)))
+        found = judge(register, a_request(*readings), NOW)["verdicts"][0]
+        assert (found["estimate"], found["outcome"]) == (value, outcome)
