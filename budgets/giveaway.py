@@ -90,7 +90,7 @@ def giveaway(
     (0.1, 50.0)
     """
     if not estimates:
-        raise LimitsError("no lot was released in this period: nothing was given away", where=("from",))
+        raise LimitsError("no lot was released in this period: nothing was given away", where=("first_day",))
     if not money.value_of_lot > 0:
         raise LimitsError("without a value of one unit closer nothing is given away", where=("money",))
     sign = _SIDES[towards]

@@ -18,13 +18,11 @@ from budgets.errors import EmptyAcceptanceError, ProcedureError
 from budgets.evidence.evaluation import Term
 from budgets.joined_looks import covariance_of_looks
 from budgets.look_limits import LookLimits
+from budgets.measurement_errors import COMMON_LEVELS
 from budgets.planned_looks import risk_per_look_of
 from budgets.propagation import combined
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
-
-# Drawn once for the plant and not for each lot: an error of these levels is the same in every reading.
-COMMON_LEVELS = ("instrument", "calibration", "reference")
 
 
 @dataclass(frozen=True)

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from budgets.errors import BudgetsError, EvidenceError, LimitsError, raise_collected
+from budgets.prior_estimates import PriorEstimate
 from budgets.retest_paths import LotDistribution
 
 _ROUNDING = 1e-9
@@ -113,7 +114,7 @@ class ProcessVariation:
                 "no variation of the process was given: without one every set point up to the acceptance "
                 "limit would release every lot, which no plant does; take it from the record, from a study "
                 "of the design production, or state it",
-                where=("lot_to_lot",),
+                where=("process_variation", "lot_to_lot"),
             )
         first = random_covariance[0]
         spread = own + beta * beta * first[0]
@@ -122,55 +123,6 @@ class ProcessVariation:
         whole[0, 1:] = whole[1:, 0] = spread - beta * first
         whole[1:, 1:] = spread - beta * (first[:, None] + first[None, :]) + random_covariance
         return LotDistribution(whole, common_standard_uncertainty)
-
-
-def unsteered_process(
-    mean: float,
-    reading_standard_deviation: float,
-    random_variance: float,
-    *,
-    drift: float = 0.0,
-    within_lot: float | None = None,
-) -> ProcessVariation:
-    """Return the variation of a process from what its readings show.
-
-    Parameters
-    ----------
-    mean : float, unit of the characteristic
-        Of the first readings of lots.
-    reading_standard_deviation : float, unit of the characteristic
-        Of the first readings of lots, held and rejected lots included; drift included.
-    random_variance : float, unit of the characteristic squared
-        Of the error of such a reading; only what scatters from lot to lot.
-    drift : float, unit of the characteristic
-        Standard deviation of the means of periods, which is told apart.
-    within_lot : float or None, unit of the characteristic
-
-    Returns
-    -------
-    ProcessVariation
-
-    Raises
-    ------
-    EvidenceError
-        If the readings vary less than their own error: then the process is steered by them.
-
-    Notes
-    -----
-    ``s_process^2 = s_obs^2 - u_random^2``. Source: variance of a sum of independent parts; JCGM 106:2012,
-    Annex A, for the use (from memory).
-    """
-    if not (math.isfinite(reading_standard_deviation) and reading_standard_deviation > 0):
-        raise EvidenceError("the readings do not vary", where=("reading_standard_deviation",))
-    left = reading_standard_deviation**2 - random_variance - drift**2
-    if left < -_ROUNDING * reading_standard_deviation**2:
-        raise EvidenceError(
-            f"the readings vary by {reading_standard_deviation:.4g}, less than their own error "
-            f"({math.sqrt(random_variance):.4g}) and the drift ({drift:.4g}) together: a process does that "
-            "when it is steered by this analyzer. Say so, and give the variation of reference values of lots",
-            where=("reading_standard_deviation",),
-        )
-    return ProcessVariation(mean, math.sqrt(max(0.0, left)), drift, within_lot)
 
 
 def steered_process(
@@ -235,3 +187,28 @@ def steered_process(
             where=("reading_standard_deviation",),
         )
     return ProcessVariation(mean, math.sqrt(max(0.0, left)), drift, within_lot, steering)
+
+
+def process_of_prior(
+    estimate: PriorEstimate, reading_offset: float, *, drift: float = 0.0, within_lot: float | None = None
+) -> ProcessVariation:
+    """Return the variation of a process from the prior that readings or a study gave.
+
+    Parameters
+    ----------
+    estimate : PriorEstimate
+        Of a normal distribution, in the scale of estimates, drift included.
+    reading_offset : float, unit of the characteristic
+        Reading less estimate.
+    drift : float, unit of the characteristic
+        Standard deviation of the means of periods, which is told apart; no more of it than there is.
+    within_lot : float or None, unit of the characteristic
+
+    Returns
+    -------
+    ProcessVariation
+    """
+    whole = estimate.prior.standard_deviation
+    told_apart = min(drift, whole)
+    lot_to_lot = math.sqrt(max(0.0, whole**2 - told_apart**2))
+    return ProcessVariation(estimate.prior.mean + reading_offset, lot_to_lot, told_apart, within_lot)

@@ -95,7 +95,7 @@ def required_uncertainty(
             f"no uncertainty is small enough for the set point {set_point:.5g}: even an exact measurement "
             f"would not keep what is wanted there; the process varies by "
             f"{process.unsteered_standard_deviation:.3g}, and a set point lies inside tolerance",
-            where=("wanted", "set_point"),
+            where=("wanted_set_point",),
         )
     factor = _LARGEST
     if slack(_LARGEST) < 0:

@@ -454,6 +454,120 @@ class StudyPlanRequest:
     bias: Mapping[str, Any] | None = None
 
 
+# --- set points and improvements -----------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class StatedVariation:
+    """How the lots vary: taken from the record, from a study of the design production, or stated.
+
+    ``source`` is record, study or stated. Of a steered process the variation of reference values
+    (``true_standard_deviation``) is needed beside that of its readings.
+    """
+
+    source: str
+    steered_by_this_analyzer: bool | None = None
+    study: str | None = None
+    first_day: date | None = None
+    last_day: date | None = None
+    mean: float | None = None
+    lot_to_lot: float | None = None
+    drift: float | None = None
+    within_lot: float | None = None
+    true_standard_deviation: float | None = None
+    reading_standard_deviation: float | None = None
+
+
+@dataclass(frozen=True)
+class WantedShares:
+    """The share of lots to be released, and the largest share of released lots that do not conform."""
+
+    release_rate: float
+    largest_risk: float | None = None
+
+
+@dataclass(frozen=True)
+class StatedMoney:
+    """What closeness, holds, further looks and wrong releases are worth, in one currency."""
+
+    currency: str
+    lot_size: float
+    quantity_unit: str
+    lots_per_year: float
+    value_of_one_unit: float
+    cost_of_hold: float
+    cost_of_retest: float
+    cost_of_nonconforming: float
+    cost_of_not_released: float | None = None
+
+
+@dataclass(frozen=True)
+class LookNumbers:
+    """What is done at every look at a lot."""
+
+    samples: int
+    readings_per_sample: int
+    increments_per_sample: int = 1
+
+
+@dataclass(frozen=True)
+class SetPointRequest:
+    """How close to the limit may the process run? Figures are in ``unit``, set points those of readings."""
+
+    product: str
+    characteristic: str
+    analyzer: str
+    unit: str
+    process_variation: StatedVariation
+    wanted: WantedShares
+    specifications: tuple[str, ...] | None = None
+    procedure: LookNumbers | None = None
+    money: StatedMoney | None = None
+    towards: str | None = None
+    wanted_set_point: float | None = None
+
+
+@dataclass(frozen=True)
+class ImprovementOption:
+    """Something that can be bought; ``kind`` says which of the members it has."""
+
+    code: str
+    kind: str
+    cost_per_lot: float = 0.0
+    cost_per_year: float = 0.0
+    samples: int | None = None
+    readings_per_sample: int | None = None
+    increments_per_sample: int | None = None
+    looks: int | None = None
+    component: str | None = None
+    standard_uncertainty: float | None = None
+    factor: float | None = None
+    degrees_of_freedom: float | None = None
+    standard_deviation: float | None = None
+    determinations: int | None = None
+    instead_of: int | None = None
+    pairs: int | None = None
+    budget: str | None = None
+    version: int | None = None
+
+
+@dataclass(frozen=True)
+class ImprovementsRequest:
+    """What to buy first, of the options, at a production as a set point is asked for."""
+
+    production: SetPointRequest
+    options: tuple[ImprovementOption, ...]
+
+
+@dataclass(frozen=True)
+class GiveawayRequest:
+    """What running further from the limit than needed cost, over the lots of a period."""
+
+    production: SetPointRequest
+    first_day: date | None = None
+    last_day: date | None = None
+
+
 # --- decisions ----------------------------------------------------------------------------------------
 
 

@@ -6,31 +6,12 @@ real answers against these forms. Members may be added to answers later, so the 
 
 from __future__ import annotations
 
-from typing import Any
-
+from service.api.forms import Form, ref
+from service.api.forms import list_of as _list
+from service.api.forms import object_of as _object
+from service.api.forms import or_null as _or_null
 from service.api.problems import slugs
-
-Form = dict[str, Any]
-
-
-def ref(name: str) -> Form:
-    """Refer to a form by name."""
-    return {"$ref": f"#/components/schemas/{name}"}
-
-
-def _object(about: str, required: Form, **optional: Form) -> Form:
-    form: Form = {"type": "object", "description": about, "properties": {**required, **optional}}
-    return {**form, "required": list(required)}
-
-
-def _list(items: Form, about: str = "") -> Form:
-    return {"type": "array", "items": items, **({"description": about} if about else {})}
-
-
-def _or_null(form: Form) -> Form:
-    if "$ref" in form:
-        return {"anyOf": [form, {"type": "null"}]}
-    return {**form, "type": [form["type"], "null"]}
+from service.api.set_point_forms import SET_POINT_ANSWERS
 
 
 def page_of(items: Form) -> Form:
@@ -498,6 +479,7 @@ ANSWERS: dict[str, Form] = {
         "The smallest study for each wish; null where there was none.",
         {"precision": _or_null(_PRECISION_PLAN), "bias": _or_null(_BIAS_PLAN)},
     ),
+    **SET_POINT_ANSWERS,
     "BudgetFigures": _BUDGET_FIGURES,
     "BudgetComparison": _BUDGET_COMPARISON,
     "AcceptanceLimits": _ACCEPTANCE_LIMITS,

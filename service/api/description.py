@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from service.api.answer_forms import ref
+from service.api.forms import ref
 
 # That of the distribution (a test holds both together).
 VERSION = "0.1.0"

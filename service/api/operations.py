@@ -13,8 +13,8 @@ from flask_smorest import Blueprint
 
 from service import documents
 from service.api import requests
-from service.api.answer_forms import Form, ref
 from service.api.answers import EARLIER_HEADER
+from service.api.forms import Form, ref
 from service.schemas import SCHEMAS
 from service.schemas.examples import EXAMPLES
 

@@ -15,8 +15,9 @@ from flask import current_app, request
 from marshmallow import fields
 from werkzeug.exceptions import HTTPException
 
-from service.api.answer_forms import ANSWERS, ref
+from service.api.answer_forms import ANSWERS
 from service.api.converters import CONVERTERS
+from service.api.forms import ref
 from service.api.operations import PHRASES, problem_name
 from service.api.problems import MEDIA_TYPE, problem_response
 from service.schemas import SCHEMAS

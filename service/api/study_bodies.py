@@ -14,7 +14,7 @@ from flask import g, request
 from werkzeug.exceptions import UnsupportedMediaType
 
 from service.api import requests
-from service.api.answer_forms import Form
+from service.api.forms import Form
 from service.api.operations import parameter
 from service.api.reader import request_bytes
 from service.documents import Study

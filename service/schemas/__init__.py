@@ -25,6 +25,11 @@ from service.schemas.master import (
     PlantSchema,
     ProductSchema,
 )
+from service.schemas.set_points import (
+    GiveawayRequestSchema,
+    ImprovementsRequestSchema,
+    SetPointRequestSchema,
+)
 from service.schemas.specifications import SpecificationSchema
 from service.schemas.studies import ReplacementSchema, StudySchema
 from service.schemas.study_plans import StudyPlanRequestSchema
@@ -46,6 +51,9 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.Study: StudySchema(),
     documents.Replacement: ReplacementSchema(),
     documents.StudyPlanRequest: StudyPlanRequestSchema(),
+    documents.SetPointRequest: SetPointRequestSchema(),
+    documents.ImprovementsRequest: ImprovementsRequestSchema(),
+    documents.GiveawayRequest: GiveawayRequestSchema(),
     documents.DecisionRequest: DecisionRequestSchema(),
     documents.SignedAct: SignedActSchema(),
 }

@@ -24,6 +24,65 @@ def _of_study(study: str, estimate: str) -> dict[str, Any]:
     return {"study": study, "estimate": estimate}
 
 
+_SET_POINT: dict[str, Any] = {
+    "product": "whole-milk-powder",
+    "characteristic": "moisture",
+    "analyzer": "nir-1",
+    "unit": "%",
+    "specifications": ["legal", "customer-b"],
+    "procedure": None,
+    "process_variation": {
+        "from": "stated",
+        "steered_by_this_analyzer": False,
+        "study": None,
+        "first_day": None,
+        "last_day": None,
+        "mean": 2.85,
+        "lot_to_lot": 0.08,
+        "drift": 0.02,
+        "within_lot": 0.03,
+        "true_standard_deviation": None,
+        "reading_standard_deviation": None,
+    },
+    "wanted": {"release_rate": 0.95, "largest_risk": 0.001},
+    "money": {
+        "currency": "EUR",
+        "lot_size": 25.0,
+        "quantity_unit": "t",
+        "lots_per_year": 2000.0,
+        "value_of_one_unit": 30.0,
+        "cost_of_hold": 250.0,
+        "cost_of_retest": 40.0,
+        "cost_of_nonconforming": 20000.0,
+        "cost_of_not_released": 1500.0,
+    },
+    "towards": "upper",
+    "wanted_set_point": 2.95,
+}
+
+_NO_OPTION: dict[str, Any] = {
+    "cost_per_lot": 0.0,
+    "cost_per_year": 0.0,
+    **dict.fromkeys(
+        (
+            "samples",
+            "readings_per_sample",
+            "increments_per_sample",
+            "looks",
+            "component",
+            "standard_uncertainty",
+            "factor",
+            "degrees_of_freedom",
+            "standard_deviation",
+            "determinations",
+            "instead_of",
+            "pairs",
+            "budget",
+            "version",
+        )
+    ),
+}
+
 EXAMPLES: dict[type[Any], dict[str, Any]] = {
     documents.Product: {
         "code": "whole-milk-powder",
@@ -189,6 +248,26 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
     documents.StudyPlanRequest: {
         "precision": {"relative_uncertainty": 0.25, "design": "repeatability", "values_per_sample": 2},
         "bias": {"bias": 0.05, "standard_deviation": 0.1, "power": 0.9, "pairs_per_group": 2},
+    },
+    documents.SetPointRequest: _SET_POINT,
+    documents.ImprovementsRequest: {
+        "production": _SET_POINT,
+        "options": [
+            {**_NO_OPTION, "code": "two-samples", "kind": "procedure", "cost_per_lot": 12.0, "samples": 2},
+            {
+                **_NO_OPTION,
+                "code": "better-reference",
+                "kind": "component",
+                "cost_per_year": 3000.0,
+                "component": "reference-trueness",
+                "standard_uncertainty": 0.02,
+            },
+        ],
+    },
+    documents.GiveawayRequest: {
+        "production": _SET_POINT,
+        "first_day": "2026-02-01",
+        "last_day": "2026-02-28",
     },
     documents.DecisionRequest: {
         "lot": "W26-04711",

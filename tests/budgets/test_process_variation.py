@@ -4,23 +4,23 @@ import numpy as np
 import pytest
 
 from budgets.errors import EvidenceError, LimitsError
-from budgets.process_variation import ProcessVariation, steered_process, unsteered_process
+from budgets.prior_estimates import prior_of_readings
+from budgets.process_variation import ProcessVariation, process_of_prior, steered_process
+from budgets.propagation import Counts
 
 
-def test_the_random_error_is_taken_out_of_the_readings_once():
-    process = unsteered_process(2.9, 0.13, 0.05**2, drift=0.04, within_lot=0.03)
-    assert process.lot_to_lot == pytest.approx(math.sqrt(0.13**2 - 0.05**2 - 0.04**2))
-    assert process.unsteered_standard_deviation == pytest.approx(0.12)
-    shown = process.distribution(np.array([[0.05**2]]), 0.02)
-    assert shown.covariance[1, 1] == pytest.approx(0.13**2)
-    assert process.true_standard_deviation(0.05**2) == pytest.approx(0.12)
-
-
-def test_readings_that_vary_less_than_their_error_say_steering():
-    with pytest.raises(EvidenceError, match="steered by this analyzer"):
-        unsteered_process(2.9, 0.05, 0.1**2)
-    with pytest.raises(EvidenceError, match="do not vary"):
-        unsteered_process(2.9, 0.0, 0.1**2)
+def test_the_variation_of_readings_is_taken_over_with_its_drift_told_apart(a_budget):
+    readings = [2.8, 2.9, 3.1, 2.7, 3.0, 2.95, 2.85]
+    estimate = prior_of_readings(readings, a_budget(), Counts((2,)), steered=False)
+    process = process_of_prior(estimate, 0.03, drift=0.04, within_lot=0.02)
+    assert process.mean == pytest.approx(np.mean(readings) + 0.03)
+    random = 0.05**2 + 0.04**2 / 2
+    assert process.unsteered_standard_deviation == pytest.approx(math.sqrt(np.var(readings, ddof=1) - random))
+    assert (process.drift, process.within_lot) == (0.04, 0.02)
+    shown = process.distribution(np.array([[random]]), 0.02)
+    assert shown.covariance[1, 1] == pytest.approx(np.var(readings, ddof=1))
+    assert process.true_standard_deviation(random) == pytest.approx(process.unsteered_standard_deviation)
+    assert process_of_prior(estimate, 0.03, drift=9.0).lot_to_lot == 0
 
 
 def test_a_steered_process_is_that_of_rule_36():
