@@ -45,7 +45,7 @@ from budgets.evidence.repeatability import finding_warnings
 from budgets.evidence.screening import grubbs_findings
 from budgets.evidence.study_tables import Layout, NamedSource, Study
 from budgets.evidence.sums import mean, standard_deviation_interval, sum_of_squares
-from budgets.evidence.validation_pairs import UNCERTAINTIES, Pair, validation_pairs
+from budgets.evidence.validation_pairs import BULK, UNCERTAINTIES, Pair, validation_pairs
 
 __all__ = ["LAYOUT", "OPTIONS", "NamedSource", "evaluate"]
 
@@ -56,7 +56,6 @@ LAYOUT = Layout(
     nullable=("reading", "reference", *UNCERTAINTIES),
     censorable=("reading", "reference"),
 )
-_BULK = (5, 95)
 
 
 def evaluate(study: Study) -> Evaluation:
@@ -240,7 +239,7 @@ def _diagnostics(pairs: Sequence[Pair], square: MeanSquare, test: BiasTest) -> d
     n = len(pairs)
     differences = [pair.difference for pair in pairs]
     references = [mean(pair.references) for pair in pairs]
-    lower, upper = np.percentile(references, _BULK)
+    lower, upper = np.percentile(references, BULK)
     return {
         "pairs": n,
         "bias": test.estimate.value,

@@ -16,13 +16,12 @@ from budgets.evidence.censored_normal import CensoredNormal, censored_normal
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, Interval, MeanSquare, Term
 from budgets.evidence.study_tables import BelowLimit, Study
 from budgets.evidence.sums import CONFIDENCE, standard_deviation_interval, sum_of_squares
-from budgets.evidence.validation_pairs import Pair
+from budgets.evidence.validation_pairs import BULK, Pair
 from budgets.propagation import coverage_factor
 
 _LEAST_KNOWN = 10
 # Less scatter than that has no digits left when it is squared.
 _LEAST_SQUARES = 1e-100
-_BULK = (5, 95)
 _TAKEN = ("independent",)
 _COLUMNS = {"pair", "reading", "reference"}
 
@@ -170,7 +169,7 @@ def _standard_error(square: MeanSquare, known: Sequence[Pair]) -> Estimate:
 def _diagnostics(known: Sequence[Pair], square: MeanSquare, test: BiasTest) -> dict[str, Any]:
     # The range is that of the values that are known: below the limit nothing was validated.
     references = [pair.reference for pair in known]
-    lower, upper = np.percentile(references, _BULK)
+    lower, upper = np.percentile(references, BULK)
     return {
         "bias": test.estimate.value,
         "bias_t_statistic": test.statistic,

@@ -11,6 +11,8 @@ from budgets.evidence.evaluation import MeanSquare
 from budgets.evidence.study_tables import Study
 from budgets.evidence.sums import grouped, mean, sum_of_squares
 
+# Percentiles between which most reference values lie: at their extremes single pairs vouch for the range.
+BULK = (5, 95)
 UNCERTAINTIES = ("reading_standard_uncertainty", "reference_standard_uncertainty")
 
 

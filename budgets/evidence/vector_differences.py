@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 
@@ -13,6 +13,7 @@ from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning
 from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix, covariance_of
 from budgets.evidence.study_tables import Study
 from budgets.evidence.sums import grouped
+from budgets.evidence.validation_pairs import BULK
 from budgets.evidence.vector_remainder import remainder
 from budgets.evidence.vectors import (
     Array,
@@ -93,6 +94,8 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
         used=len(study.labels["pair"]),
         diagnostics={
             "pairs": n,
+            "validated_range_lower": _percentile(levels, BULK[0]),
+            "validated_range_upper": _percentile(levels, BULK[1]),
             "reference_lowest": {name: min(found) for name, found in levels.items()},
             "reference_highest": {name: max(found) for name, found in levels.items()},
             "biases": (values[0] + (values - values[0]).mean(axis=0)).tolist(),
@@ -105,6 +108,10 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
             *_warnings_of_remainder(left),
         ),
     )
+
+
+def _percentile(levels: Mapping[str, Sequence[float]], percent: float) -> dict[str, float]:
+    return {name: float(np.percentile(found, percent)) for name, found in levels.items()}
 
 
 def _between_groups(

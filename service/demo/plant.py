@@ -43,9 +43,9 @@ DERIVED: Final = "protein-in-snf"
 COMPUTED: Final = "computed from nitrogen, oven and gravimetric method"
 
 CHANNELS: Final = (
-    Channel("moisture", "oven method", 0.05, 0.03, (2.2, 4.5), 6, 0.08),
-    Channel("fat", "gravimetric method", 0.08, 0.05, (25.3, 28.8), 7, 0.18),
-    Channel("protein", "nitrogen method", 0.06, 0.04, (23.7, 26.3), 8, 0.15),
+    Channel("moisture", "oven method", 0.05, 0.03, (2.3, 4.5), 6, 0.08),
+    Channel("fat", "gravimetric method", 0.08, 0.05, (25.3, 28.6), 7, 0.18),
+    Channel("protein", "nitrogen method", 0.06, 0.04, (23.8, 26.3), 8, 0.15),
 )
 
 

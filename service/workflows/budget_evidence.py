@@ -1,11 +1,10 @@
-"""Whether the evidence of a budget is about the quantities, and the ranges, that it is used for."""
+"""Whether the evidence of a budget is about the quantities that it is used for."""
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from typing import Any
 
-from budgets.units import convert
 from service.documents import BudgetComponent, BudgetDocument, Evidence, Study, StudyEvidence
 from service.schemas.base import pointer_step
 from service.store.unit_of_work import UnitOfWork
@@ -118,36 +117,3 @@ def check_values_are_covered(
         elif study is not None and study.characteristic not in columns:
             detail = f"the value is of {study.characteristic!r}, its uncertainty that of {columns[0]!r}"
             collector.add(f"#/model/quantities/{name}/evidence/study", detail, "both of one channel")
-
-
-def check_ranges(document: BudgetDocument, behind: Sequence[Behind], collector: FaultCollector) -> None:
-    """Refuse a validated range beyond all reference values of the validation (ISO 12099, from memory)."""
-    for item in behind:
-        if item.study is None:
-            continue
-        for name, lowest, highest in _references(item):
-            own = name == document.characteristic
-            bounds = document.validated_range if own else document.validated_ranges.get(name)
-            if bounds is None or bounds.lower is None or bounds.upper is None:
-                continue
-            quantity = document.model.quantities.get(name)
-            unit = document.unit if own or quantity is None else quantity.unit
-            ends = [convert(end, item.study.unit, unit) for end in (lowest, highest)]
-            if bounds.lower < ends[0] or bounds.upper > ends[1]:
-                collector.add_once(
-                    "#/validated_range" if own else f"#/validated_ranges/{name}",
-                    f"got {bounds.lower:g} to {bounds.upper:g}; the reference values of {item.study.code} "
-                    f"run from {ends[0]:g} to {ends[1]:g}",
-                    "a range within them, best the bulk of them",
-                )
-
-
-def _references(item: Behind) -> Iterator[tuple[str, float, float]]:
-    """Give the lowest and the highest reference value of each channel that a validation is about."""
-    lowest, highest = (item.diagnostics.get(f"reference_{end}") for end in ("lowest", "highest"))
-    if item.study is None or lowest is None or highest is None:
-        return
-    if isinstance(lowest, Mapping):
-        yield from ((name, lowest[name], highest[name]) for name in lowest)
-    else:
-        yield item.study.characteristic, lowest, highest

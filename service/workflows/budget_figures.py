@@ -20,6 +20,7 @@ from service.workflows.budgets import resolve_budget
 from service.workflows.rules import decision_rule, planned_counts, tolerance
 from service.workflows.services import Services
 from service.workflows.stored_budgets import budget_evaluation, budget_from_evaluation
+from service.workflows.validated_ranges import range_warnings
 
 Answer = dict[str, Any]
 
@@ -63,6 +64,7 @@ def evaluation(
         subject = _subject(unit_of_work, code, version)
         by = _requirement(unit_of_work, subject, specification)
         explained = _explained(unit_of_work, subject, None if by is None else by[1], subject.centre)
+        warnings = (*explained.warnings, *range_warnings(unit_of_work, subject.document))
     return {
         "code": code,
         "version": version,
@@ -88,7 +90,7 @@ def evaluation(
                 strict=True,
             )
         ],
-        "warnings": [asdict(warning) for warning in explained.warnings],
+        "warnings": [asdict(warning) for warning in warnings],
     }
 
 

@@ -28,7 +28,6 @@ from service.workflows import plant
 from service.workflows.budget_evidence import (
     check_laboratory_fits,
     check_quantities,
-    check_ranges,
     check_values_are_covered,
 )
 from service.workflows.calendar import lapse_instant
@@ -44,6 +43,7 @@ from service.workflows.stored_budgets import (
     is_default_model,
 )
 from service.workflows.trueness import check_trueness
+from service.workflows.validated_ranges import check_ranges
 from service.workflows.versioned_kind import Approval, VersionedKind
 
 _NUMBERED_QUANTITY: Final = re.compile(r"#/quantities/(\d+)(/name)?")

@@ -111,6 +111,11 @@ def test_differences_give_the_whole_the_bias_and_what_is_left():
     assert covariance_of(whole.matrix_terms) == pytest.approx(expected, rel=1e-9)
     assert covariance_of(bias.matrix_terms) == pytest.approx(expected / 400, rel=1e-9)
     assert evaluation.diagnostics["biases"] == pytest.approx(differences.mean(axis=0))
+    for percent, end in ((5, "lower"), (95, "upper")):
+        bulk = evaluation.diagnostics[f"validated_range_{end}"]
+        assert [bulk[name] for name in CHANNELS] == pytest.approx(
+            np.percentile(means[:, 3:], percent, axis=0)
+        )
     assert (whole.may_feed, bias.may_feed, whole.reading_weight) == (("lot",), ("calibration",), 0.5)
     # The simulated truth: the analyzer's own errors, within what 400 pairs can tell.
     assert left.usable

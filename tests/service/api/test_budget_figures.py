@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
+import statistics
 from typing import Any
 
+import numpy as np
 import pytest
 
 from service import documents
@@ -161,3 +163,25 @@ def test_versions_are_compared_at_one_place_and_with_their_biases(callers: Calle
     assert was["acceptance_limits"] == becomes["acceptance_limits"]
     assert was["estimates"] == figures(callers)["estimates"]
     assert was["bias_treatment"] == "corrected"
+
+
+@pytest.mark.parametrize("to_the_extremes", [True, False])
+def test_a_range_to_the_extremes_of_the_reference_values_is_told(
+    callers: Callers, to_the_extremes: bool
+) -> None:
+    """Within all of them it is taken; beyond the 5 % and 95 % points (numpy's) single pairs vouch for it."""
+    study = done(callers["engineer"].get("/v1/studies/wmp-val-2026-01"), 200)["study"]
+    references: dict[str, list[float]] = {}
+    for row in study["rows"]:
+        cells = dict(zip(study["columns"], row, strict=True))
+        if cells["reference"] is not None:
+            references.setdefault(cells["pair"], []).append(cells["reference"])
+    means = [statistics.fmean(values) for values in references.values()]
+    lower, upper = map(float, np.percentile(means, [5, 95]))
+    ends = (min(means), max(means)) if to_the_extremes else (lower + 1e-6, upper - 1e-6)
+    claimed = {"lower": ends[0], "upper": ends[1]}
+    draft(callers, example(documents.BudgetDocument, validated_range=claimed))
+    found = figures(callers, 2, "")["warnings"]
+    details = [warning["detail"] for warning in found if warning["code"] == "range-beyond-the-bulk"]
+    assert len(details) == to_the_extremes
+    assert all(f"nine in ten lie from {lower:.4g} to {upper:.4g}" in detail for detail in details)
