@@ -73,6 +73,24 @@ def check_correlation_matrix(matrix: ArrayLike) -> NDArray[np.float64]:
     array = np.asarray(matrix, dtype=np.float64)
     if array.ndim != 2 or array.shape[0] != array.shape[1]:
         raise CorrelationError("a correlation matrix has as many rows as columns")
+    if not _looks_right(array):
+        raise_collected(_faults_of_elements(array))
+    smallest = float(np.linalg.eigvalsh(array)[0]) if array.size else 1.0
+    if smallest < SMALLEST_EIGENVALUE:
+        raise CorrelationError(
+            f"these correlations cannot hold together: the matrix is not positive semi-definite (smallest "
+            f"eigenvalue is {smallest:.3g})"
+        )
+    return array
+
+
+def _looks_right(array: NDArray[np.float64]) -> bool:
+    return bool(
+        (np.abs(array) <= 1).all() and (array.diagonal() == 1).all() and np.array_equal(array, array.T)
+    )
+
+
+def _faults_of_elements(array: NDArray[np.float64]) -> list[BudgetsError]:
     faults: list[BudgetsError] = []
     for i, j in np.ndindex(*array.shape):
         value = array[i, j]
@@ -86,14 +104,7 @@ def check_correlation_matrix(matrix: ArrayLike) -> NDArray[np.float64]:
             faults.append(
                 CorrelationError(f"the matrix is not symmetric: {value} and {array[j, i]}", where=(i, j))
             )
-    raise_collected(faults)
-    smallest = float(np.linalg.eigvalsh(array)[0]) if array.size else 1.0
-    if smallest < SMALLEST_EIGENVALUE:
-        raise CorrelationError(
-            f"these correlations cannot hold together: the matrix is not positive semi-definite (smallest "
-            f"eigenvalue is {smallest:.3g})"
-        )
-    return array
+    return faults
 
 
 def check_correlations(correlations: Sequence[Correlation], levels: Mapping[str, str]) -> None:

@@ -16,10 +16,10 @@ _MEMBERS: dict[str, tuple[str, ...]] = {
 }
 # Understood, but without what gives them their meaning.
 _LATER_KINDS = ("guarded_by_global_risk",)
-_LATER = ("replicate_level", "largest_lot_risk")
 _OWN_MEMBERS = tuple(dict.fromkeys(name for members in _MEMBERS.values() for name in members))
 REJECTIONS = ("at_tolerance_limit", "guarded")
 LARGEST_ROUNDS = 10
+LEAST_LEVEL, LARGEST_LEVEL = 0.5, 0.999999
 
 
 @dataclass(frozen=True)
@@ -49,9 +49,11 @@ class DecisionRule:
     rounds : int
         How often a lot that is held may be judged, with all its readings joined.
     replicate_level : float
-        Level at which replicates disagree.
+        Probability that replicates agree when nothing but their own spread separates them, from
+        ``LEAST_LEVEL`` to ``LARGEST_LEVEL``; see `budgets.replicates`.
     largest_lot_risk : float
-        Largest probability that a released lot misses any of what is required.
+        Largest probability that a released lot misses any of what its specification requires; see
+        `budgets.joint_conformance`.
 
     Raises
     ------
@@ -139,11 +141,18 @@ class DecisionRule:
         return faults
 
     def _faults_of_common_members(self) -> list[BudgetsError]:
-        faults: list[BudgetsError] = [
-            NotSupportedError(f"{name} of a decision rule", where=(name,))
-            for name in _LATER
-            if getattr(self, name) is not None
-        ]
+        faults: list[BudgetsError] = []
+        if self.replicate_level is not None and not LEAST_LEVEL <= self.replicate_level <= LARGEST_LEVEL:
+            faults.append(
+                LimitsError(
+                    f"replicate_level must lie between {LEAST_LEVEL:g} and {LARGEST_LEVEL:g}",
+                    where=("replicate_level",),
+                )
+            )
+        if self.largest_lot_risk is not None and not 0 < self.largest_lot_risk < 0.5:
+            faults.append(
+                LimitsError("largest_lot_risk must lie between 0 and 0.5", where=("largest_lot_risk",))
+            )
         if self.rejection not in REJECTIONS:
             faults.append(LimitsError(f"rejection is {' or '.join(REJECTIONS)}", where=("rejection",)))
         if not 1 <= self.rounds <= LARGEST_ROUNDS:

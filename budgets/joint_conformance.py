@@ -187,30 +187,18 @@ def _risk_of_more(risks: Sequence[tuple[float, float]], matrix: NDArray[np.float
     scales = np.sqrt(1 - shared * shared)
     if not (scales > _NEARLY_DEGENERATE).all():
         return _sampled(risks, matrix)
-    # Either of the first two, or the third without them: that one tail by tail, the others given it.
-    total = [_risk_of_two(risks[:2], float(matrix[0, 1]))]
+    # Either of the first two, or the third without them: both of its tails, the others given it.
     partial = float(np.clip((matrix[0, 1] - shared[0] * shared[1]) / (scales[0] * scales[1]), -1, 1))
+    shares = np.asarray(risks[2], dtype=np.float64)[:, np.newaxis]
+    values = np.array([[1.0], [-1.0]]) * ndtri(np.maximum(_TINY, shares * _NODES))
     with np.errstate(divide="ignore"):
         scores = ndtri(np.asarray(risks[:2], dtype=np.float64))
-    for side, sign in enumerate((1.0, -1.0)):
-        share = risks[2][side]
-        if share == 0:
-            continue
-        values = sign * ndtri(np.maximum(_TINY, share * _NODES))
-        centres = values[:, np.newaxis] * shared
-        one, other = (
-            np.stack(
-                [
-                    ndtr((scores[i, 0] - centres[:, i]) / scales[i]),
-                    ndtr((scores[i, 1] + centres[:, i]) / scales[i]),
-                ],
-                axis=-1,
-            )
-            for i in (0, 1)
-        )
-        inside = 1 - one.sum(axis=-1) - other.sum(axis=-1) + _both(one, other, partial)
-        total.append(share * float(_WEIGHTS @ np.maximum(0.0, inside)))
-    return math.fsum(total)
+    # by the characteristic, the tail of the third, its value, and the tail of the characteristic
+    centres = (shared[:, np.newaxis, np.newaxis] * values)[..., np.newaxis] * np.array([1.0, -1.0])
+    one, other = ndtr((scores.reshape(2, 1, 1, 2) - centres) / scales.reshape(2, 1, 1, 1))
+    inside = 1 - one.sum(axis=-1) - other.sum(axis=-1) + _both(one, other, partial)
+    third = (shares * np.maximum(0.0, inside)) @ _WEIGHTS
+    return math.fsum((_risk_of_two(risks[:2], float(matrix[0, 1])), *third))
 
 
 def _sampled(risks: Sequence[tuple[float, float]], matrix: NDArray[np.float64]) -> float:

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, replace
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,6 +19,7 @@ from scipy.special import gammaln, ndtr
 
 from budgets.budget import LARGEST_COUNT, Budget
 from budgets.components import Component
+from budgets.decision_rules import LARGEST_LEVEL, LEAST_LEVEL
 from budgets.errors import LimitsError, ModelError
 from budgets.evidence.evaluation import effective_degrees_of_freedom
 from budgets.evidence.mean_square_matrices import covariance_of
@@ -27,7 +28,6 @@ from budgets.measurement_models import MeasurementModel, Quantity
 
 # Readings of a sample, in several looks at it.
 MOST_REPLICATES = 20 * LARGEST_COUNT
-LEAST_LEVEL, LARGEST_LEVEL = 0.5, 0.999999
 # What lies beyond exp(-40) of a density is lost in rounding.
 _EXPONENT = 40.0
 _WHOLE = 30.0
@@ -303,7 +303,7 @@ class ReplicateLaw:
         )
         return cls(quantity, CompiledPropagation(_ONE, lines, budget.correlations) if lines else None)
 
-    @property
+    @cached_property
     def depends_on_value(self) -> bool:
         """Whether a part of the spread is proportional to the value."""
         return self.law is not None and any(line.relative_terms for line in self.law.lines)
@@ -328,8 +328,16 @@ class ReplicateLaw:
         """
         if self.law is None:
             return None
-        coefficients = {name: 0.0 for line in self.law.lines for name in line.inputs} | {self.quantity: 1.0}
-        total, terms, _ = self.law.combination(coefficients, estimates)
+        return self._spread(self.law, estimates) if self.depends_on_value else self._constant
+
+    @cached_property
+    def _constant(self) -> ReplicateSpread:
+        assert self.law is not None  # the caller asked
+        return self._spread(self.law, {})
+
+    def _spread(self, law: CompiledPropagation, estimates: Mapping[str, float]) -> ReplicateSpread:
+        coefficients = {name: 0.0 for line in law.lines for name in line.inputs} | {self.quantity: 1.0}
+        total, terms, _ = law.combination(coefficients, estimates)
         return ReplicateSpread(math.sqrt(total), effective_degrees_of_freedom(terms))
 
 

@@ -24,6 +24,10 @@ from budgets.linear_propagation import CompiledPropagation
 from budgets.propagation import Counts, compiled, estimates_for
 from budgets.reading_patterns import ReadingPattern
 
+# A covariance of the quantities for each level at which they have errors; with the names of the quantities.
+Blocks = Mapping[str, NDArray[np.float64]]
+Said = tuple[tuple[str, ...], Blocks]
+
 
 @dataclass(frozen=True)
 class NamedBudget:
@@ -62,24 +66,37 @@ class _Source:
 
     law: CompiledPropagation
     names: tuple[str, ...]
+    levels: Mapping[str, str]
+    slopes: tuple[float, ...] | None = None
 
     @classmethod
     def of(cls, named: NamedBudget, done: Counts | ReadingPattern) -> _Source:
         law = compiled(named.budget, done)
+        levels = {item.code: item.level for item in named.budget.components}
         if named.budget.model is not None:
-            return cls(law, tuple(named.names[name] for name in law.model.names))
+            return cls(law, tuple(named.names[name] for name in law.model.names), levels)
         # The mean reading, and where there is one the error of the bias.
         own = (named.budget.characteristic, BIAS)[: len(law.model.names)]
-        return cls(law, tuple(named.names[name] for name in own))
+        # reading - bias, whatever the readings are
+        return cls(law, tuple(named.names[name] for name in own), levels, (1.0, -1.0)[: len(own)])
 
-    def at_levels(
-        self, levels: Mapping[str, str], estimates: Mapping[str, float]
-    ) -> dict[str, NDArray[np.float64]]:
+    @property
+    def depends_on_value(self) -> bool:
+        return any(line.relative_terms for line in self.law.lines)
+
+    def slopes_at(self, estimates: Mapping[str, float]) -> tuple[float, ...]:
+        """Return the sensitivity coefficients in the order of the names."""
+        if self.slopes is not None:
+            return self.slopes
+        found = self.law.model.sensitivity_coefficients(estimates)
+        return tuple(found[name] for name in self.law.model.names)
+
+    def at_levels(self, estimates: Mapping[str, float]) -> Blocks:
         """Return the covariance of the quantities for each level on which they have errors."""
         full = self.law.model.estimates(estimates)
         found = {}
         for level in LEVELS:
-            lines = tuple(line for line in self.law.lines if levels[line.code] == level)
+            lines = tuple(line for line in self.law.lines if self.levels[line.code] == level)
             if lines:
                 part = CompiledPropagation(self.law.model, lines, self.law.correlations)
                 found[level] = part.input_covariance(full)
@@ -96,10 +113,14 @@ class SharedErrors:
         One for each characteristic.
     done : Counts or ReadingPattern
         The same readings for all of them.
+    others : tuple of NamedBudget
+        Further budgets that say how errors of such scans go together. One with parts that are proportional
+        to a value is passed over: there is no value to take them at.
     """
 
     budgets: tuple[NamedBudget, ...]
     done: Counts | ReadingPattern
+    others: tuple[NamedBudget, ...] = ()
 
     @cached_property
     def _sources(self) -> tuple[_Source, ...]:
@@ -108,9 +129,19 @@ class SharedErrors:
     @cached_property
     def _fixed(self) -> NDArray[np.float64] | None:
         """The covariance of all quantities, where no part of it is proportional to a value."""
-        if any(line.relative_terms for source in self._sources for line in source.law.lines):
+        if any(source.depends_on_value for source in self._sources):
             return None
         return self._covariance([dict.fromkeys(source.law.model.read, 1.0) for source in self._sources])
+
+    @cached_property
+    def _further(self) -> tuple[Said, ...]:
+        """What the other budgets say: the names of their quantities, and a covariance for each level."""
+        sources = [_Source.of(named, self.done) for named in self.others]
+        return tuple(
+            (source.names, source.at_levels(dict.fromkeys(source.law.model.read, 1.0)))
+            for source in sources
+            if not source.depends_on_value
+        )
 
     def correlations(self, means: Sequence[Mapping[str, float]]) -> NDArray[np.float64]:
         """Return the correlation matrix of the errors of the estimates.
@@ -146,72 +177,55 @@ class SharedErrors:
         slopes = np.zeros((len(places), len(covariance)))
         start = 0
         for row, (source, given) in enumerate(zip(self._sources, places, strict=True)):
-            found = source.law.model.sensitivity_coefficients(given)
             end = start + len(source.names)
-            slopes[row, start:end] = [found[name] for name in source.law.model.names]
+            slopes[row, start:end] = source.slopes_at(given)
             start = end
         return _normalised(slopes @ covariance @ slopes.T)
 
     def _covariance(self, places: Sequence[Mapping[str, float]]) -> NDArray[np.float64]:
-        blocks = [
-            source.at_levels({item.code: item.level for item in named.budget.components}, given)
-            for source, named, given in zip(self._sources, self.budgets, places, strict=True)
+        said = [
+            (source.names, source.at_levels(given))
+            for source, given in zip(self._sources, places, strict=True)
         ]
-        names = [source.names for source in self._sources]
-        ends = np.cumsum([0, *map(len, names)])
+        ends = np.cumsum([0, *(len(names) for names, _ in said)])
         whole = np.zeros((ends[-1], ends[-1]))
         for level in LEVELS:
-            for i, one in enumerate(blocks):
-                for j, other in enumerate(blocks):
-                    if level in one and level in other:
+            for i, one in enumerate(said):
+                for j, other in enumerate(said):
+                    if level in one[1] and level in other[1]:
                         rows, columns = slice(ends[i], ends[i + 1]), slice(ends[j], ends[j + 1])
                         whole[rows, columns] += (
-                            one[level] if i == j else self._between(level, blocks, names, i, j)
+                            one[1][level] if i == j else _between(level, one, other, (*said, *self._further))
                         )
         return whole
 
-    def _between(
-        self,
-        level: str,
-        blocks: Sequence[Mapping[str, NDArray[np.float64]]],
-        names: Sequence[tuple[str, ...]],
-        i: int,
-        j: int,
-    ) -> NDArray[np.float64]:
-        """Return the covariance at a level between the quantities of two budgets."""
-        one, other = (np.sqrt(np.diag(blocks[place][level])) for place in (i, j))
-        found = np.zeros((len(one), len(other)))
-        for row, first in enumerate(names[i]):
-            for column, second in enumerate(names[j]):
-                size = one[row] * other[column]
-                if size > 0:
-                    found[row, column] = size * _correlation(level, first, second, blocks, names)
-        return found
+
+def _between(level: str, one: Said, other: Said, said: Sequence[Said]) -> NDArray[np.float64]:
+    """Return the covariance at a level between the quantities of two budgets."""
+    deviations = [np.sqrt(np.diag(block[level])) for _, block in (one, other)]
+    found = np.outer(*deviations)
+    for row, first in enumerate(one[0]):
+        for column, second in enumerate(other[0]):
+            if found[row, column] > 0 and first != second:
+                found[row, column] *= _correlation(level, first, second, said)
+    return found
 
 
-def _correlation(
-    level: str,
-    first: str,
-    second: str,
-    blocks: Sequence[Mapping[str, NDArray[np.float64]]],
-    names: Sequence[tuple[str, ...]],
-) -> float:
-    if first == second:
-        return 1.0
-    said = []
-    for known, block in zip(names, blocks, strict=True):
+def _correlation(level: str, first: str, second: str, said: Sequence[Said]) -> float:
+    coefficients = []
+    for known, block in said:
         if level in block and first in known and second in known:
             i, j = known.index(first), known.index(second)
             size = math.sqrt(block[level][i, i] * block[level][j, j])
             if size > 0:
-                said.append(float(block[level][i, j]) / size)
-    if not said:
+                coefficients.append(float(block[level][i, j]) / size)
+    if not coefficients:
         raise CorrelationError(
             f"no budget says how the errors of {first} and {second} go together at the level {level!r}",
             where=(level, first, second),
         )
     # What budgets say differently is settled by the one that gives the joint risk the least relief.
-    return min(said, key=abs)
+    return min(coefficients, key=abs)
 
 
 def _normalised(covariance: NDArray[np.float64]) -> NDArray[np.float64]:

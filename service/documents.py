@@ -203,7 +203,11 @@ class Laboratory:
 
 @dataclass(frozen=True)
 class Plant:
-    """All that can change a verdict and belongs to no product; approved like a specification."""
+    """All that can change a verdict and belongs to no product; approved like a specification.
+
+    ``replicate_level`` holds where a rule names none; ``identical_readings`` in a row are those of a sensor
+    that is stuck.
+    """
 
     time_zone: str
     lapse_hour: time
@@ -211,6 +215,7 @@ class Plant:
     serving_days: Mapping[str, int]
     reason: str
     replicate_level: float | None = None
+    identical_readings: int = 8
 
 
 # --- specifications -----------------------------------------------------------------------------------
@@ -238,6 +243,8 @@ class RuleOfDecision:
     least_capability_index: float | None = None
     rejection: str = "at_tolerance_limit"
     rounds: int = 1
+    replicate_level: float | None = None
+    largest_lot_risk: float | None = None
 
 
 @dataclass(frozen=True)

@@ -124,6 +124,44 @@ _REASON = _object(
     },
 )
 
+_REPLICATES = _object(
+    "Whether the readings of each sample agree; null: there are none, or the budget has no spread for them.",
+    {
+        "level": {"type": "number", "description": "Probability that replicates agree by their own spread."},
+        "false_hold_rate": {
+            "type": "number",
+            "description": "How often these checks hold a good lot, at most.",
+        },
+        "checks": _list(
+            _object(
+                "The readings of one channel and one sample.",
+                {
+                    "characteristic": _CODE,
+                    "sample": _TEXT,
+                    "readings": _WHOLE,
+                    "range": _NUMBER,
+                    "critical_difference": _NUMBER,
+                    "agrees": _YES,
+                },
+            )
+        ),
+    },
+)
+
+_JOINT = _object(
+    "The characteristics of one specification taken together; null where one of them was not judged.",
+    {
+        "specification": _REFERENCE,
+        "characteristics": _list(_CODE),
+        "least_risk": {**_NUMBER_OR_NULL, "description": "That one or more do not conform, at least."},
+        "most_risk": {**_NUMBER_OR_NULL, "description": "At most, whatever their errors have in common."},
+        "risk": {**_NUMBER_OR_NULL, "description": "null: what the errors have in common is not known."},
+        "conformance_probability": {**_NUMBER_OR_NULL, "description": "That all conform, where it is known."},
+        "largest_lot_risk": {**_NUMBER_OR_NULL, "description": "The smallest cap that a rule states."},
+        "rests_on": _TEXT,
+    },
+)
+
 _VERDICT = _object(
     "One characteristic judged against one specification.",
     {
@@ -155,6 +193,7 @@ _VERDICT = _object(
         "budget": _or_null(_BUDGET),
         "samples": _WHOLE,
         "readings": _WHOLE,
+        "replicates": _or_null(_REPLICATES),
         "display": {"type": ["object", "null"], "description": "Rounded texts for people."},
     },
 )
@@ -169,6 +208,7 @@ _JUDGED: Form = {
     "outcome": _OUTCOME,
     "reasons": _list(ref("Reason")),
     "verdicts": _list(ref("Verdict")),
+    "joint_conformance": _list(_JOINT),
     "not_judged": _list(_TEXT),
     "notices": _list(_object("What will need attention.", {"code": _TEXT, "at": _INSTANT, "detail": _TEXT})),
     "caution": _TEXT,

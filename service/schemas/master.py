@@ -31,7 +31,6 @@ from service.schemas.fields import (
     Day,
     Flag,
     HourOfDay,
-    Later,
     Name,
     Number,
     Part,
@@ -211,7 +210,19 @@ class PlantSchema(StrictSchema):
     serving_days = ByKey(
         Name(), Count(least=1, most=3650), required=True, about="How long a study serves, by its design."
     )
-    replicate_level = Later(load_default=None, about="Replicate disagreement is not supported yet.")
+    replicate_level = Number(
+        least=0.5,
+        most=0.999999,
+        allow_none=True,
+        load_default=None,
+        about="Level of the check of replicates where a decision rule names none; null is 0.99.",
+    )
+    identical_readings = Count(
+        least=3,
+        most=100,
+        load_default=8,
+        about="So many readings of a channel in a row with the same digits are those of a stuck sensor.",
+    )
     reason = Text(2000, lines=True, required=True)
 
     @validates_schema(skip_on_field_errors=False)

@@ -39,7 +39,7 @@ class DecisionRuleSchema(StrictSchema):
     """How uncertainty is taken into account when conformity is stated."""
 
     loads_to = RuleOfDecision
-    without = frozenset({"specific_risk_cap", "prior", "replicate_level", "largest_lot_risk"})
+    without = frozenset({"specific_risk_cap", "prior"})
     kind = Choice(*RULE_MEMBERS, later=("guarded_by_global_risk",), required=True)
     multiple = Number(above=0, most=10, allow_none=True, load_default=None, about="Guard band, in U.")
     coverage_probability = Number(above=0, below=1, allow_none=True, load_default=None)
@@ -49,10 +49,22 @@ class DecisionRuleSchema(StrictSchema):
     least_capability_index = Number(above=0, allow_none=True, load_default=None)
     rejection = Choice("at_tolerance_limit", "guarded", load_default="at_tolerance_limit")
     rounds = Count(least=1, most=100, load_default=1, about="More than 1 is not supported yet.")
+    replicate_level = Number(
+        least=0.5,
+        most=0.999999,
+        allow_none=True,
+        load_default=None,
+        about="Probability that replicates agree by their own spread; null: the plant's.",
+    )
+    largest_lot_risk = Number(
+        above=0,
+        below=0.5,
+        allow_none=True,
+        load_default=None,
+        about="Largest risk that a released lot misses any limit of the specification.",
+    )
     specific_risk_cap = Later(load_only=True)
     prior = Later(load_only=True)
-    replicate_level = Later(load_only=True)
-    largest_lot_risk = Later(load_only=True)
 
     @validates_schema(skip_on_field_errors=False)
     def _one_round(self, data: dict[str, Any], **_: Any) -> None:

@@ -32,6 +32,7 @@ DEFAULT_PLANT: Final = Plant(
         "production": 365,
     },
     reason="default, until the plant approves a document of its own",
+    replicate_level=0.99,
 )
 
 

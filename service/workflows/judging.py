@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any, Final
 
@@ -14,8 +14,11 @@ from budgets.sureness import Sureness, sureness
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.workflows.calendar import NOTICE
-from service.workflows.measured import Hold, Measured, measure
+from service.workflows.holds import Hold
+from service.workflows.lot_risk import LotRisk, lot_risk
+from service.workflows.measured import Measured, measure
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
+from service.workflows.replicate_checks import judge_replicates, level_of
 from service.workflows.request_checks import check_request
 from service.workflows.rule_figures import FIGURES, figures_of
 from service.workflows.rules import rule_here
@@ -28,6 +31,24 @@ CAUTION: Final = (
     "This answer speaks of the named characteristics only; it is no safety clearance. Local regulations and "
     "the plant's authorised person decide on the lot."
 )
+
+
+@dataclass(frozen=True)
+class Weighed:
+    """What was measured for a requirement, held against its rule; not judged where a hold forbids it.
+
+    ``estimate`` is the one that is compared, ``limits`` says how the acceptance limits are to be read,
+    ``replicates`` what their check found.
+    """
+
+    requirement: Requirement
+    measured: Measured
+    estimate: float | None
+    rule: ReleaseRule | None
+    limits: str | None
+    holds: tuple[Hold, ...]
+    replicates: dict[str, Any] | None
+    judgement: Judgement | None
 
 
 @dataclass(frozen=True)
@@ -58,6 +79,7 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
     if codes is None:
         codes = register.products[request.product].default_specifications
     rulings: list[Ruling] = []
+    together: list[dict[str, Any]] = []
     not_judged: dict[str, None] = {}
     for code in codes:
         specification = register.specifications.get(code)
@@ -66,18 +88,28 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
             rulings.append(_nothing_in_force(code))
             continue
         not_judged.update(dict.fromkeys(specification.document.not_judged))
-        for requirement in specification.document.requires:
-            rulings.append(
-                _rule_on(register, request, specification, requirement, measured(requirement.characteristic))
-            )
+        weighed = [
+            _weigh(register, specification, requirement, measured(requirement.characteristic))
+            for requirement in specification.document.requires
+        ]
+        risk = lot_risk(
+            register,
+            specification,
+            [(each.requirement, each.measured, each.judgement) for each in weighed],
+            recorded_at,
+        )
+        together.append(risk.figures)
+        rulings += [_rule_on(register, specification, each, risk) for each in weighed]
     if not codes:
         rulings.append(_nothing_in_force(None))
-    return _answer(request, rulings, tuple(not_judged), recorded_at, _notices(judged, recorded_at))
+    notices = _notices(judged, recorded_at)
+    return _answer(request, rulings, together, tuple(not_judged), recorded_at, notices)
 
 
 def _answer(
     request: DecisionRequest,
     rulings: list[Ruling],
+    together: list[dict[str, Any]],
     not_judged: tuple[str, ...],
     recorded_at: str,
     notices: list[dict[str, Any]],
@@ -93,6 +125,7 @@ def _answer(
         "outcome": max(outcomes, key=SEVERITY.__getitem__),
         "reasons": [reason for ruling in rulings for reason in ruling.reasons],
         "verdicts": [ruling.verdict for ruling in rulings],
+        "joint_conformance": together,
         "not_judged": list(not_judged),
         "notices": notices,
         "caution": CAUTION,
@@ -102,24 +135,35 @@ def _answer(
 # --- one verdict ---------------------------------------------------------------------------------------
 
 
-def _rule_on(
-    register: Register,
-    request: DecisionRequest,
-    specification: SpecificationInForce,
-    requirement: Requirement,
-    measured: Measured,
-) -> Ruling:
-    characteristic = register.characteristics[request.product, requirement.characteristic]
+def _weigh(
+    register: Register, specification: SpecificationInForce, requirement: Requirement, measured: Measured
+) -> Weighed:
     rule, limits, unusable = _release_rule(register, specification, requirement, measured)
-    holds = (*measured.holds, *unusable)
+    level = level_of(requirement.decision_rule, register.plant)
+    repeated = judge_replicates(measured.replicates, level)
+    holds = (*measured.holds, *repeated.holds, *unusable)
     estimate = measured.estimate
     if estimate is not None and requirement.comparison == "rounded":
         estimate = without_averaging_noise(estimate)
-    judgement = shown = sure = None
+    judgement = None
+    if rule is not None and estimate is not None and not holds:
+        judgement = rule.judge(estimate)
+    return Weighed(requirement, measured, estimate, rule, limits, holds, repeated.figures, judgement)
+
+
+def _rule_on(
+    register: Register, specification: SpecificationInForce, weighed: Weighed, risk: LotRisk
+) -> Ruling:
+    requirement, measured, rule = weighed.requirement, weighed.measured, weighed.rule
+    characteristic = register.characteristics[specification.document.product, requirement.characteristic]
+    judgement, estimate, holds = weighed.judgement, weighed.estimate, weighed.holds
+    # What is accepted by itself is held when the lot as a whole is not.
+    if judgement is not None and judgement.outcome == "release" and (hold := risk.hold(requirement)):
+        judgement, holds = replace(judgement, outcome="hold"), (*holds, hold)
+    sure = shown = None
     if rule is not None and estimate is not None:
-        judgement = None if holds else rule.judge(estimate)
-        sure = None if holds else sureness(rule, estimate)
-        shown = display(rule, estimate, judgement, sure, characteristic, limits)
+        sure = None if judgement is None else sureness(rule, estimate)
+        shown = display(rule, estimate, judgement, sure, characteristic, weighed.limits)
     outcome = "hold" if judgement is None else judgement.outcome
     verdict = {
         "characteristic": requirement.characteristic,
@@ -127,7 +171,7 @@ def _rule_on(
         "specification": _reference(specification),
         "outcome": outcome,
         "estimate": estimate,
-        **_figures(rule, limits, judgement),
+        **_figures(rule, weighed.limits, judgement),
         **_sureness(sure),
         "prior": None,
         "judged": requirement.judged,
@@ -136,10 +180,11 @@ def _rule_on(
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
         "samples": measured.samples,
         "readings": measured.readings,
+        "replicates": weighed.replicates,
         "display": shown,
     }
     reasons = [_reason(hold, requirement.characteristic, specification) for hold in holds]
-    if rule is not None and estimate is not None and judgement is not None and outcome != "release":
+    if rule is not None and estimate is not None and not holds and outcome != "release":
         value_hold = about_the_value(rule, estimate, outcome, characteristic.unit)
         reasons.append(_reason(value_hold, requirement.characteristic, specification))
     return Ruling(verdict, tuple(reasons))
@@ -240,6 +285,7 @@ def _nothing_in_force(code: str | None) -> Ruling:
         "budget": None,
         "samples": 0,
         "readings": 0,
+        "replicates": None,
         "display": None,
     }
     return Ruling(verdict, (reason,))

@@ -16,7 +16,9 @@ from budgets.units import conversion
 from service.documents import Calibration, DecisionRequest, Reading
 from service.errors import Fault, InvalidRequest
 from service.workflows.evidence import FaultCollector
+from service.workflows.holds import Hold
 from service.workflows.register import BudgetInForce, Register
+from service.workflows.replicate_checks import Replicates, replicates_of
 
 _ASK_THE_LABORATORY: Final = "Have the laboratory analyse a sample of this lot."
 _WEIGHTS: Final = "one weight above 0 for all readings of one presentation"
@@ -27,20 +29,12 @@ _SCAN_AGAIN: Final = (
 
 
 @dataclass(frozen=True)
-class Hold:
-    """A reason to hold that is not about the value: the reading cannot be trusted either way."""
-
-    code: str
-    detail: str
-    next: str
-
-
-@dataclass(frozen=True)
 class Measured:
     """What was read for one characteristic, joined: a mean for each quantity that is read, in its own unit.
 
-    ``done`` says how the readings were grouped, ``estimate`` is the value of the measurement model,
-    ``sample_means`` are those of the one quantity that is read, where it is one.
+    ``scans`` are the places of its readings in the request, ``done`` says how they were grouped,
+    ``estimate`` is the value of the measurement model, ``sample_means`` are those of the one quantity that is
+    read, where it is one. The holds are not about the value: the readings cannot be trusted either way.
     """
 
     budget: BudgetInForce | None
@@ -51,6 +45,8 @@ class Measured:
     estimate: float | None
     holds: tuple[Hold, ...]
     sample_means: tuple[float, ...] = ()
+    scans: tuple[int, ...] = ()
+    replicates: tuple[Replicates, ...] = ()
 
 
 def measure(register: Register, request: DecisionRequest, code: str, recorded_at: str) -> Measured:
@@ -63,7 +59,12 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         analyzers that no one budget names.
     """
     channels = register.characteristics[request.product, code].derived_from or (code,)
-    scans = [reading for reading in request.readings if all(name in reading.values for name in channels)]
+    places = tuple(
+        place
+        for place, reading in enumerate(request.readings)
+        if all(name in reading.values for name in channels)
+    )
+    scans = [request.readings[place] for place in places]
     if not scans:
         what = " and ".join(channels)
         missing = Hold(
@@ -87,9 +88,11 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         for hold in _scan_holds(register.calibrations[reading.calibration], reading, register.plant.time_zone)
     ]
     estimate = None
+    replicates: tuple[Replicates, ...] = ()
     if budget is None:
         holds = [*_nothing_in_force(code), *holds]
     else:
+        replicates = replicates_of(register, budget, scans, by_channel, means)
         estimate = _estimate(budget, means)
         holds.extend(_calibration_holds(budget, scans))
         holds.extend(_range_holds(register, budget, by_channel, estimate))
@@ -104,6 +107,8 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         estimate,
         tuple(_unique(holds)),
         _sample_means(scans, samples, by_channel),
+        places,
+        replicates,
     )
 
 

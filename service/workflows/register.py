@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import threading
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
+from budgets.replicates import ReplicateLaw
+from budgets.shared_errors import NamedBudget, SharedErrors
 from service.documents import (
     Analyzer,
     BudgetDocument,
@@ -67,6 +69,8 @@ class Register:
     budgets: Mapping[tuple[str, str, str], BudgetInForce]
     rules: Mapping[RuleKey, AnyRule]
     compiled: dict[RuleKey, AnyRule] = field(default_factory=dict)
+    replicate_laws: dict[tuple[str, int, str, frozenset[str]], ReplicateLaw] = field(default_factory=dict)
+    shared: dict[tuple[str, tuple[str, ...], tuple[str, ...]], SharedErrors] = field(default_factory=dict)
 
     def rule(
         self,
@@ -83,7 +87,7 @@ class Register:
             characteristic=requirement.characteristic,
             budget=budget.document.code,
             budget_version=budget.version,
-            counts=counts_text(done) if isinstance(done, Counts) else pattern_text(done),
+            counts=_done_text(done),
         )
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
@@ -91,6 +95,35 @@ class Register:
             if len(self.compiled) < MOST_COMPILED:
                 self.compiled[key] = rule
         return rule
+
+    def replicate_law(self, budget: BudgetInForce, quantity: str, levels: frozenset[str]) -> ReplicateLaw:
+        """Give what separates readings of one sample, with the levels drawn anew between them."""
+        key = (budget.document.code, budget.version, quantity, levels)
+        law = self.replicate_laws.get(key)
+        if law is None:
+            law = self.replicate_laws[key] = ReplicateLaw.compile(budget.budget, quantity, levels)
+        return law
+
+    def shared_errors(
+        self,
+        done: Counts | ReadingPattern,
+        budgets: Sequence[BudgetInForce],
+        others: Sequence[BudgetInForce],
+        named: Callable[[BudgetInForce], NamedBudget],
+    ) -> SharedErrors:
+        """Give what the errors have in common of characteristics that were read in the same scans."""
+        one, other = (tuple(budget.document.code for budget in each) for each in (budgets, others))
+        key = (_done_text(done), one, other)
+        errors = self.shared.get(key)
+        if errors is None:
+            errors = SharedErrors(tuple(map(named, budgets)), done, tuple(map(named, others)))
+            if len(self.shared) < MOST_COMPILED:
+                self.shared[key] = errors
+        return errors
+
+
+def _done_text(done: Counts | ReadingPattern) -> str:
+    return counts_text(done) if isinstance(done, Counts) else pattern_text(done)
 
 
 def load_register(unit_of_work: UnitOfWork, revision: int) -> Register:

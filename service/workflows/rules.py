@@ -103,6 +103,8 @@ def decision_rule(stated: RuleOfDecision) -> DecisionRule:
         largest_risk=stated.largest_risk,
         rejection=stated.rejection,
         rounds=stated.rounds,
+        replicate_level=stated.replicate_level,
+        largest_lot_risk=stated.largest_lot_risk,
     )
 
 

@@ -17,7 +17,7 @@ from budgets.reporting import (
 )
 from budgets.sureness import Sureness, sureness_text
 from service.documents import Characteristic
-from service.workflows.measured import Hold
+from service.workflows.holds import Hold
 
 # Every double is told from its neighbours by then.
 _MOST_DECIMALS: Final = 17

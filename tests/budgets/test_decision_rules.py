@@ -49,9 +49,26 @@ def test_several_faults_of_a_rule_are_told_at_once():
 def test_what_has_no_meaning_yet_is_not_supported():
     with pytest.raises(NotSupportedError):
         DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1)
-    for member in ("replicate_level", "largest_lot_risk"):
-        with pytest.raises(NotSupportedError) as caught:
-            DecisionRule("guarded_by_specific_risk", largest_risk=0.05, **{member: 0.05})
+
+
+@pytest.mark.parametrize(
+    "kind",
+    [
+        {"kind": "guarded_by_specific_risk", "largest_risk": 0.05},
+        {"kind": "simple", "largest_standard_uncertainty": 0.1},
+    ],
+)
+def test_every_kind_may_check_replicates_and_cap_the_risk_of_the_lot(kind):
+    rule = DecisionRule(**kind, replicate_level=0.99, largest_lot_risk=0.08)
+    assert (rule.replicate_level, rule.largest_lot_risk) == (0.99, 0.08)
+    for member, value in (
+        ("replicate_level", 0.4),
+        ("replicate_level", 1.0),
+        ("largest_lot_risk", 0.5),
+        ("largest_lot_risk", 0.0),
+    ):
+        with pytest.raises(LimitsError, match=member) as caught:
+            DecisionRule(**kind, **{member: value})
         assert caught.value.where == (member,)
 
 

@@ -71,6 +71,17 @@ def test_two_channels_go_together_as_the_budget_says_that_holds_both():
     assert np.linalg.eigvalsh(matrix)[0] > 0
 
 
+def test_a_budget_that_judges_nothing_here_may_say_how_errors_go_together():
+    pair, means = (direct("moisture"), direct("protein")), [{"moisture": 3.0}, {"protein": 25.0}]
+    among = SharedErrors((*pair, derived()), COUNTS).correlations([*means, MEANS])
+    beside = SharedErrors(pair, COUNTS, (derived(),)).correlations(means)
+    assert beside == pytest.approx(among[:2, :2])
+    relative = (Term(1.0, MeanSquare("s1", 1e-4, 20)),)
+    scale = line("scale", "moisture", 0.0, level="instrument", terms=(), relative_terms=relative)
+    with pytest.raises(CorrelationError):
+        SharedErrors(pair, COUNTS, (derived(more=(scale,)),)).correlations(means)
+
+
 def test_where_no_budget_holds_both_nothing_is_assumed():
     pair = SharedErrors((direct("moisture"), direct("protein")), COUNTS)
     with pytest.raises(CorrelationError, match=r"moisture and protein go together at the level 'reading'"):

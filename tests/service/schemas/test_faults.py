@@ -136,9 +136,6 @@ _RULE = "requires/0/decision_rule"
         (Specification, f"{_RULE}/kind", "guarded_by_global_risk"),
         (Specification, f"{_RULE}/prior", {"mean": 3}),
         (Specification, f"{_RULE}/specific_risk_cap", 0.1),
-        (Specification, f"{_RULE}/replicate_level", 0.01),
-        (Specification, f"{_RULE}/largest_lot_risk", 0.01),
-        (documents.Plant, "replicate_level", 0.01),
         (documents.Study, "rows", [["P01", 1, 3.1]] * 20_001),
     ],
 )

@@ -154,7 +154,7 @@ def test_a_reading_outside_of_the_validated_range_is_held_even_beyond_the_limit(
 
 
 def test_one_reading_outside_of_the_range_is_enough() -> None:
-    answer = judged(a_request(a_reading(1.9, 1), a_reading(2.9, 2)))
+    answer = judged(a_request(a_reading(1.94, 1), a_reading(2.0, 2)))
     assert reasons(answer) == ["outside-validated-range"]
 
 
