@@ -125,7 +125,7 @@ _REASON = _object(
 )
 
 _REPLICATES = _object(
-    "Whether the readings of each sample agree; null: there are none, or the budget has no spread for them.",
+    "Whether the readings of each sample agree; null: nothing could be checked.",
     {
         "level": {"type": "number", "description": "Probability that replicates agree by their own spread."},
         "false_hold_rate": {
