@@ -149,7 +149,7 @@ _REPLICATES = _object(
 )
 
 _JOINT = _object(
-    "The characteristics of one specification taken together; null where one of them was not judged.",
+    "The characteristics of one specification together; null: not all were judged.",
     {
         "specification": _REFERENCE,
         "characteristics": _list(_CODE),

@@ -62,9 +62,8 @@ def lot_risk(
             for _, _, judgement in judged
             if judgement is not None
         ]
-        measured = [item for _, item, _ in judged]
         try:
-            joint = joint_conformance(risks, _correlations(register, measured, recorded_at))
+            joint = joint_conformance(risks, _correlations(register, judged, recorded_at))
             rests_on = "The risks and the correlations of the errors, level by level as the budgets say."
         except BudgetsError as error:
             joint = joint_conformance(risks)
@@ -94,10 +93,15 @@ def _figures(
     }
 
 
-def _correlations(register: Register, measured: Sequence[Measured], recorded_at: str) -> Any:
+def _correlations(
+    register: Register, judged: Sequence[tuple[Requirement, Measured, Judgement | None]], recorded_at: str
+) -> Any:
     """Give the correlations of the errors. Raises BudgetsError with what is not known."""
-    if len(measured) == 1:
+    if len(judged) == 1:
         return None
+    if any(requirement.judged != "lot_mean" for requirement, _, _ in judged):
+        raise CorrelationError("items are judged, and how they vary together is not known")
+    measured = [item for _, item, _ in judged]
     first = measured[0]
     if any(item.scans != first.scans for item in measured):
         raise CorrelationError("the characteristics were not all read in the same scans")
