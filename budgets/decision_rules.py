@@ -14,8 +14,6 @@ _MEMBERS: dict[str, tuple[str, ...]] = {
     "guarded_by_specific_risk": ("largest_risk",),
     "guarded_by_global_risk": ("largest_risk", "specific_risk_cap"),
 }
-# Understood, but without what gives them their meaning.
-_LATER_KINDS = ("guarded_by_global_risk",)
 _OWN_MEMBERS = tuple(dict.fromkeys(name for members in _MEMBERS.values() for name in members))
 REJECTIONS = ("at_tolerance_limit", "guarded")
 LARGEST_ROUNDS = 10
@@ -60,7 +58,7 @@ class DecisionRule:
     LimitsError
         With all faults: a member that does not belong to the kind, is missing or outside of its range.
     NotSupportedError
-        For a kind that this version does not build.
+        For several rounds of a rule by global risk.
 
     Notes
     -----
@@ -82,8 +80,6 @@ class DecisionRule:
     largest_lot_risk: float | None = None
 
     def __post_init__(self) -> None:
-        if self.kind in _LATER_KINDS:
-            raise NotSupportedError(f"the decision rule {self.kind}", where=("kind",))
         if self.kind not in _MEMBERS:
             raise LimitsError(
                 f"{self.kind!r} is no decision rule; there are {', '.join(_MEMBERS)}", where=("kind",)
@@ -157,6 +153,8 @@ class DecisionRule:
             faults.append(LimitsError(f"rejection is {' or '.join(REJECTIONS)}", where=("rejection",)))
         if not 1 <= self.rounds <= LARGEST_ROUNDS:
             faults.append(LimitsError(f"rounds must lie between 1 and {LARGEST_ROUNDS}", where=("rounds",)))
+        if self.kind == "guarded_by_global_risk" and self.rounds > 1:
+            faults.append(NotSupportedError("several rounds of a rule by global risk", where=("rounds",)))
         if self.kind == "simple":
             # Without a guard band nothing is held about the value: there is nothing to mirror or to repeat.
             if self.rejection == "guarded":

@@ -264,6 +264,8 @@ def _with_factor(law: CompiledPropagation, index: int, factor: float) -> Compile
 def _limits(judged: Judged | None, law: CompiledPropagation, u: float, nu: float) -> Limits | None:
     if judged is None:
         return None
+    if judged.rule.kind == "guarded_by_global_risk":
+        return Limits(None, None, "by global risk the limits follow from the production too")
     try:
         accepted = _accepted(judged, law, u, nu)
     except BudgetsError as error:

@@ -148,9 +148,8 @@ class ProductionPrior:
         array = np.asarray(values, dtype=np.float64)
         deviation = float(array.std(ddof=1)) if array.size > 1 else 0.0
         kept = tuple(array.tolist())
-        return cls(
-            "empirical", float(array.mean()) if kept else 0.0, deviation or math.nan, math.inf, kept, anchor
-        )
+        centre = float(array.mean()) if kept else 0.0
+        return cls("empirical", centre, deviation, math.inf, kept, anchor)
 
     @cached_property
     def _centres(self) -> Array:

@@ -30,6 +30,7 @@ from budgets.error_distributions import ErrorDistribution, StudentT, Tabulated
 from budgets.errors import ModelError
 from budgets.item_spread import ItemSpread
 from budgets.judgements import OUTCOMES, Judgement, Judgements, Zones, fill_conformance
+from budgets.known_productions import KnownProduction
 from budgets.natural_bounds import probabilities, truncated_probabilities
 from budgets.propagation import Counts, check_counts
 from budgets.reading_patterns import ReadingPattern
@@ -81,6 +82,8 @@ class ReleaseRule:
         The natural domain, where probabilities are those within it.
     risk_per_look : float or None
         Of a rule with several rounds.
+    production : KnownProduction or None
+        Where the decision rule names a prior of the production (see `budgets.production_release`).
     """
 
     lower_tolerance_limit: float | None
@@ -109,6 +112,7 @@ class ReleaseRule:
     items: ItemSpread | None = None
     truncated_to: Ends | None = None
     risk_per_look: float | None = None
+    production: KnownProduction | None = None
 
     @classmethod
     def compile(
@@ -293,6 +297,7 @@ class ReleaseRule:
         document = asdict(self)
         if self.items is not None:
             document["items"] = self.items.to_document()
+        document["production"] = None if self.production is None else self.production.to_document()
         if math.isinf(self.effective_degrees_of_freedom):
             document["effective_degrees_of_freedom"] = None
         return document
@@ -311,6 +316,8 @@ class ReleaseRule:
             members["distribution"] = Tabulated.from_document(members["distribution"])
         if members.get("items") is not None:
             members["items"] = ItemSpread.from_document(members["items"])
+        if members.get("production") is not None:
+            members["production"] = KnownProduction.from_document(members["production"])
         if members.get("truncated_to") is not None:
             members["truncated_to"] = tuple(members["truncated_to"])
         return cls(**members)

@@ -236,6 +236,11 @@ def rule_text(rule: DecisionRule) -> str:
 
 
 def _kind_text(rule: DecisionRule) -> str:
+    if rule.specific_risk_cap is not None and rule.largest_risk is not None:
+        return (
+            f"guarded acceptance with a global consumer's risk of at most {_percent(rule.largest_risk)} % "
+            f"and a specific risk of at most {_percent(rule.specific_risk_cap)} %"
+        )
     if rule.largest_risk is not None:
         return f"guarded acceptance with a specific risk of at most {_percent(rule.largest_risk)} %"
     if rule.multiple is not None and rule.coverage_probability is not None:

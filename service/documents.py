@@ -231,6 +231,39 @@ class ToleranceLimit:
 
 
 @dataclass(frozen=True)
+class SteeredReadings:
+    """How the readings of a steered process go with its true values, observed on the same lots."""
+
+    mean: float
+    standard_deviation: float
+    correlation: float
+
+
+@dataclass(frozen=True)
+class DeclaredPrior:
+    """A production prior as someone states it; ``known_from`` is true_values or readings."""
+
+    unit: str
+    steered_by_this_analyzer: bool
+    document: str
+    mean: float | None = None
+    standard_deviation: float | None = None
+    degrees_of_freedom: float | None = None
+    values: tuple[float, ...] = ()
+    known_from: str = "true_values"
+    readings: SteeredReadings | None = None
+
+
+@dataclass(frozen=True)
+class StatedPrior:
+    """How the true values of lots are distributed: by a production study or by a declaration, one of them."""
+
+    distribution: str = "normal"
+    study: str | None = None
+    declaration: DeclaredPrior | None = None
+
+
+@dataclass(frozen=True)
 class RuleOfDecision:
     """The decision rule of a requirement as the document states it (contracts.md, section 5)."""
 
@@ -241,6 +274,8 @@ class RuleOfDecision:
     largest_risk: float | None = None
     largest_standard_uncertainty: float | None = None
     least_capability_index: float | None = None
+    specific_risk_cap: float | None = None
+    prior: StatedPrior | None = None
     rejection: str = "at_tolerance_limit"
     rounds: int = 1
     replicate_level: float | None = None

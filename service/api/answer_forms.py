@@ -162,6 +162,27 @@ _JOINT = _object(
     },
 )
 
+_PRIOR = _object(
+    "Of the production, where the rule names one; the verdict rests on the reading.",
+    {
+        "study": _TEXT_OR_NULL,
+        "document": _TEXT_OR_NULL,
+        "distribution": {"type": "string", "enum": ["normal", "t", "empirical"]},
+        "mean": _NUMBER,
+        "standard_deviation": _NUMBER,
+        "known_from": {"type": "string", "enum": ["true_values", "readings"]},
+        "steered_by_this_analyzer": {"type": "boolean"},
+        "global_consumers_risk": _NUMBER,
+        "global_producers_risk": _NUMBER,
+        "release_rate": _NUMBER,
+        "used": {"type": ["boolean", "null"], "description": "false: the reading contradicts it."},
+        "conflict": {**_NUMBER_OR_NULL, "description": "In standard deviations; beyond 3 it is left out."},
+        "conformance_probability": _NUMBER_OR_NULL,
+        "specific_consumers_risk": _NUMBER_OR_NULL,
+        "statement": _TEXT_OR_NULL,
+    },
+)
+
 _VERDICT = _object(
     "One characteristic judged against one specification.",
     {
@@ -176,7 +197,7 @@ _VERDICT = _object(
         "conformance_probability": _NUMBER_OR_NULL,
         "specific_consumers_risk": _NUMBER_OR_NULL,
         **_SURENESS,
-        "prior": {**_OBJECT_OR_NULL, "description": "Of the production; null: none was used."},
+        "prior": _or_null(_PRIOR),
         "judged": _TEXT_OR_NULL,
         "items": _or_null(
             _object(

@@ -8,13 +8,15 @@ from marshmallow import ValidationError, validates_schema
 
 from service.documents import Requirement, RuleOfDecision, Specification, ToleranceLimit
 from service.schemas.base import StrictSchema, Wrong, complaint
-from service.schemas.fields import Choice, Code, Count, Flag, Later, Number, Part, Parts, Text
+from service.schemas.fields import Choice, Code, Count, Flag, Number, Part, Parts, Text
+from service.schemas.priors import StatedPriorSchema
 
 # Which members a kind of rule takes: all of the first, at least one of the second.
 RULE_MEMBERS: dict[str, tuple[tuple[str, ...], tuple[str, ...]]] = {
     "simple": ((), ("largest_standard_uncertainty", "least_capability_index")),
     "guarded_by_factor": (("multiple", "coverage_probability", "sides"), ()),
     "guarded_by_specific_risk": (("largest_risk",), ()),
+    "guarded_by_global_risk": (("largest_risk", "specific_risk_cap", "prior"), ()),
 }
 _OWN_MEMBERS = (
     "multiple",
@@ -23,6 +25,7 @@ _OWN_MEMBERS = (
     "largest_risk",
     "largest_standard_uncertainty",
     "least_capability_index",
+    "specific_risk_cap",
 )
 
 
@@ -39,8 +42,7 @@ class DecisionRuleSchema(StrictSchema):
     """How uncertainty is taken into account when conformity is stated."""
 
     loads_to = RuleOfDecision
-    without = frozenset({"specific_risk_cap", "prior"})
-    kind = Choice(*RULE_MEMBERS, later=("guarded_by_global_risk",), required=True)
+    kind = Choice(*RULE_MEMBERS, required=True)
     multiple = Number(above=0, most=10, allow_none=True, load_default=None, about="Guard band, in U.")
     coverage_probability = Number(above=0, below=1, allow_none=True, load_default=None)
     sides = Count(least=1, most=2, allow_none=True, load_default=None)
@@ -56,6 +58,19 @@ class DecisionRuleSchema(StrictSchema):
         load_default=None,
         about="Probability that replicates agree by their own spread; null: the plant's.",
     )
+    specific_risk_cap = Number(
+        above=0,
+        below=0.5,
+        allow_none=True,
+        load_default=None,
+        about="Of a rule by global risk: largest specific risk of any lot.",
+    )
+    prior = Part(
+        StatedPriorSchema,
+        allow_none=True,
+        load_default=None,
+        about="Of the production. Needed by global risk; else only shown beside the verdict.",
+    )
     largest_lot_risk = Number(
         above=0,
         below=0.5,
@@ -63,8 +78,6 @@ class DecisionRuleSchema(StrictSchema):
         load_default=None,
         about="Largest risk that a released lot misses any limit of the specification.",
     )
-    specific_risk_cap = Later(load_only=True)
-    prior = Later(load_only=True)
 
     @validates_schema(skip_on_field_errors=False)
     def _one_round(self, data: dict[str, Any], **_: Any) -> None:
@@ -81,7 +94,8 @@ class DecisionRuleSchema(StrictSchema):
             given = data.get(member) is not None
             if given and member not in needed + one_of:
                 wrongs[member] = [Wrong(f"does not belong to the rule {kind}", "no such member")]
-            elif not given and member in needed:
+        for member in needed:
+            if data.get(member) is None:
                 wrongs[member] = [Wrong("missing", f"a value, for the rule {kind}")]
         if one_of and all(data.get(member) is None for member in one_of):
             wrong = Wrong("a simple rule without its condition", "one of " + ", ".join(one_of))

@@ -33,6 +33,7 @@ from service.workflows.budget_evidence import (
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import Behind, FaultCollector, resolve_stated
 from service.workflows.laboratories import resolve
+from service.workflows.production_priors import resolve_prior
 from service.workflows.reference_methods import check_requirement
 from service.workflows.rules import RuleKey, compile_pair
 from service.workflows.stored_budgets import (
@@ -362,7 +363,14 @@ def rules_of_pair(
             f"{specification.code} (version {specification_version}, requires/{index}) with {document.code}"
         )
         check_requirement(unit_of_work, requirement, document, label)
-        compiled = compile_pair(budget, requirement, characteristic, label=label)
+        stated = requirement.decision_rule.prior
+        prior = None
+        if stated is not None:
+            pointer = f"#/requires/{index}/decision_rule/prior"
+            prior = resolve_prior(
+                unit_of_work, stated, characteristic, document, budget, pointer=pointer
+            ).prior
+        compiled = compile_pair(budget, requirement, characteristic, label=label, prior=prior)
         for counts, numbers in compiled.items():
             key = RuleKey(
                 specification=specification.code,

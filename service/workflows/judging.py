@@ -17,6 +17,7 @@ from service.workflows.calendar import NOTICE
 from service.workflows.holds import Hold
 from service.workflows.lot_risk import LotRisk, lot_risk
 from service.workflows.measured import Measured, measure
+from service.workflows.prior_figures import lapsed_prior, prior_figures
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
 from service.workflows.replicate_checks import judge_replicates, level_of
 from service.workflows.request_checks import check_request
@@ -89,7 +90,7 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
             continue
         not_judged.update(dict.fromkeys(specification.document.not_judged))
         weighed = [
-            _weigh(register, specification, requirement, measured(requirement.characteristic))
+            _weigh(register, specification, requirement, measured(requirement.characteristic), recorded_at)
             for requirement in specification.document.requires
         ]
         risk = lot_risk(
@@ -136,12 +137,17 @@ def _answer(
 
 
 def _weigh(
-    register: Register, specification: SpecificationInForce, requirement: Requirement, measured: Measured
+    register: Register,
+    specification: SpecificationInForce,
+    requirement: Requirement,
+    measured: Measured,
+    recorded_at: str,
 ) -> Weighed:
     rule, limits, unusable = _release_rule(register, specification, requirement, measured)
     level = level_of(requirement.decision_rule, register.plant)
     repeated = judge_replicates(measured.replicates, level)
-    holds = (*measured.holds, *repeated.holds, *unusable)
+    lapsed = lapsed_prior(register, specification, requirement.characteristic, recorded_at)
+    holds = (*measured.holds, *repeated.holds, *unusable, *lapsed)
     estimate = measured.estimate
     if estimate is not None and requirement.comparison == "rounded":
         estimate = without_averaging_noise(estimate)
@@ -173,7 +179,7 @@ def _rule_on(
         "estimate": estimate,
         **_figures(rule, weighed.limits, judgement),
         **_sureness(sure),
-        "prior": None,
+        "prior": prior_figures(rule, requirement.decision_rule, estimate, judged=judgement is not None),
         "judged": requirement.judged,
         "items": _items(rule, requirement),
         "decision_rule": _decision_rule(requirement),
@@ -304,7 +310,8 @@ def _budget_reference(budget: BudgetInForce) -> dict[str, Any]:
 
 def _decision_rule(requirement: Requirement) -> dict[str, Any]:
     stated = vars(requirement.decision_rule)
-    return {name: value for name, value in stated.items() if value is not None}
+    # The prior has a member of its own in the verdict.
+    return {name: value for name, value in stated.items() if value is not None and name != "prior"}
 
 
 def _reason(hold: Hold, characteristic: str, specification: SpecificationInForce) -> dict[str, Any]:

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, Final
 
 from budgets.budget import Budget
+from budgets.production_priors import ProductionPrior
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
+from budgets.release import ReleaseRule
 from budgets.replicates import ReplicateLaw
 from budgets.shared_errors import NamedBudget, SharedErrors
 from service.documents import (
@@ -27,6 +29,7 @@ from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.calendar import DEFAULT_PLANT
+from service.workflows.production_priors import prior_lapses_at
 from service.workflows.rules import AnyRule, RuleKey, compile_rule, counts_text, pattern_text, stored_rule
 from service.workflows.stored_budgets import budget_from_evaluation
 
@@ -68,6 +71,7 @@ class Register:
     specifications: Mapping[str, SpecificationInForce]
     budgets: Mapping[tuple[str, str, str], BudgetInForce]
     rules: Mapping[RuleKey, AnyRule]
+    prior_lapses: Mapping[tuple[str, str], str] = field(default_factory=dict)
     compiled: dict[RuleKey, AnyRule] = field(default_factory=dict)
     replicate_laws: dict[tuple[str, int, str, frozenset[str]], ReplicateLaw] = field(default_factory=dict)
     shared: dict[tuple[str, tuple[str, ...], tuple[str, ...]], SharedErrors] = field(default_factory=dict)
@@ -91,10 +95,21 @@ class Register:
         )
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
-            rule = compile_rule(budget.budget, done, requirement, characteristic)
+            prior = self._prior(key) if requirement.decision_rule.prior is not None else None
+            rule = compile_rule(budget.budget, done, requirement, characteristic, prior=prior)
             if len(self.compiled) < MOST_COMPILED:
                 self.compiled[key] = rule
         return rule
+
+    def _prior(self, wanted: RuleKey) -> ProductionPrior:
+        """Give the prior that the approval stored with the rules of the same pair."""
+        return next(
+            rule.production.prior
+            for key, rule in self.rules.items()
+            if replace(key, counts=wanted.counts) == wanted
+            and isinstance(rule, ReleaseRule)
+            and rule.production is not None
+        )
 
     def replicate_law(self, budget: BudgetInForce, quantity: str, levels: frozenset[str]) -> ReplicateLaw:
         """Give what separates readings of one sample, with the levels drawn anew between them."""
@@ -152,7 +167,23 @@ def load_register(unit_of_work: UnitOfWork, revision: int) -> Register:
             for analyzer in budget.document.calibrations
         },
         rules={RuleKey.of(stored): stored_rule(stored.numbers) for stored in unit_of_work.rules.in_force()},
+        prior_lapses=_prior_lapses(unit_of_work, specifications),
     )
+
+
+def _prior_lapses(
+    unit_of_work: UnitOfWork, specifications: Sequence[StoredVersion]
+) -> dict[tuple[str, str], str]:
+    """Say, by specification and characteristic, when the study behind a rule by global risk lapses."""
+    found = {}
+    for version in specifications:
+        for requirement in load(Specification, version.document).requires:
+            rule = requirement.decision_rule
+            stated = rule.prior if rule.kind == "guarded_by_global_risk" else None
+            lapses_at = None if stated is None else prior_lapses_at(unit_of_work, stated)
+            if lapses_at is not None:
+                found[version.code, requirement.characteristic] = lapses_at
+    return found
 
 
 def _masters(unit_of_work: UnitOfWork, kind: str, document_class: type[Any]) -> list[Any]:

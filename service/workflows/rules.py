@@ -14,6 +14,8 @@ from budgets.derived_release import DerivedReleaseRule, release_rule_kind
 from budgets.error_distributions import Tabulated
 from budgets.errors import LimitsError, ModelError, NotSupportedError
 from budgets.item_rules import ItemRequirement, LotSpreadRule, item_rule
+from budgets.production_priors import ProductionPrior
+from budgets.production_release import release_rule_over_production
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
@@ -101,6 +103,7 @@ def decision_rule(stated: RuleOfDecision) -> DecisionRule:
         coverage_probability=stated.coverage_probability,
         sides=stated.sides,
         largest_risk=stated.largest_risk,
+        specific_risk_cap=stated.specific_risk_cap,
         rejection=stated.rejection,
         rounds=stated.rounds,
         replicate_level=stated.replicate_level,
@@ -141,7 +144,7 @@ def compile_rule(
     *,
     distribution: Tabulated | None = None,
     risk_per_look: float | None = None,
-    guard_band: float | None = None,
+    prior: ProductionPrior | None = None,
 ) -> AnyRule:
     """Compile one release rule; the options are those of the rule.
 
@@ -151,6 +154,9 @@ def compile_rule(
     if requirement.judged == "item":
         if requirement.within_domain:
             raise NotSupportedError("judging items within the natural domain", where=("within_domain",))
+        if prior is not None:
+            where = ("decision_rule", "prior")
+            raise NotSupportedError("a production prior where items are judged", where=where)
         return item_rule(
             budget,
             done,
@@ -158,6 +164,18 @@ def compile_rule(
             decision_rule(requirement.decision_rule),
             ItemRequirement(requirement.item_share or 0.0, requirement.item_spread or ""),
             domain=(domain.lower, domain.upper),
+        )
+    if prior is not None:
+        return release_rule_over_production(
+            budget,
+            done,
+            tolerance(requirement, characteristic),
+            decision_rule(requirement.decision_rule),
+            prior,
+            domain=(domain.lower, domain.upper),
+            truncated=requirement.within_domain,
+            distribution=distribution,
+            risk_per_look=risk_per_look,
         )
     kind = ReleaseRule if budget.model is None else DerivedReleaseRule
     return kind.compile(
@@ -169,7 +187,6 @@ def compile_rule(
         truncated=requirement.within_domain,
         distribution=distribution,
         risk_per_look=risk_per_look,
-        guard_band=guard_band,
     )
 
 
@@ -203,6 +220,7 @@ def compile_pair(
     characteristic: Characteristic,
     *,
     label: str,
+    prior: ProductionPrior | None = None,
 ) -> dict[str, dict[str, Any]]:
     """Compile the rules of one budget and one requirement for all balanced numbers of readings.
 
@@ -216,7 +234,7 @@ def compile_pair(
     """
     collector = FaultCollector()
     planned = planned_counts(budget.procedure)
-    collector.attempt("#", compile_rule, budget, planned, requirement, characteristic)
+    collector.attempt("#", compile_rule, budget, planned, requirement, characteristic, prior=prior)
     if collector.faults:
         detail = "; ".join(fault.detail for fault in collector.faults)
         collector.faults.clear()
@@ -225,7 +243,7 @@ def compile_pair(
     rules = {}
     for counts in dict.fromkeys((planned, *islice(balanced_counts(budget.procedure), MOST_STORED))):
         try:
-            rule = compile_rule(budget, counts, requirement, characteristic)
+            rule = compile_rule(budget, counts, requirement, characteristic, prior=prior)
         except (LimitsError, ModelError):
             # Also where fewer readings leave so much uncertainty that the model curves within it.
             continue

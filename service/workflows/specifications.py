@@ -12,6 +12,7 @@ from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.budgets import rules_of_pair
 from service.workflows.evidence import FaultCollector
+from service.workflows.production_priors import check_prior
 from service.workflows.rules import RuleKey, decision_rule, tolerance
 from service.workflows.stored_budgets import budget_from_evaluation
 from service.workflows.versioned_kind import Approval, VersionedKind
@@ -69,6 +70,7 @@ def _check_requirement(
     if len(collector.faults) == before:
         collector.attempt(pointer, tolerance, requirement, characteristic)
     collector.attempt(f"{pointer}/decision_rule", decision_rule, requirement.decision_rule)
+    _check_production(unit_of_work, document, requirement, characteristic, pointer, collector)
     domain = characteristic.natural_domain
     if requirement.within_domain and domain.lower is None and domain.upper is None:
         collector.add(
@@ -83,6 +85,32 @@ def _check_requirement(
             "a capability index needs two tolerance limits",
             "largest_standard_uncertainty, for one limit",
         )
+
+
+def _check_production(
+    unit_of_work: UnitOfWork,
+    document: Specification,
+    requirement: Requirement,
+    characteristic: Characteristic,
+    pointer: str,
+    collector: FaultCollector,
+) -> None:
+    """Check what a decision rule says of the production, where it says anything."""
+    rule = requirement.decision_rule
+    at = f"{pointer}/decision_rule"
+    if rule.kind == "guarded_by_global_risk" and document.kind == "legal":
+        collector.add(
+            f"{at}/kind",
+            "a legal limit holds for every lot, not on the average of a production",
+            "guarded_by_specific_risk or guarded_by_factor",
+        )
+    if rule.prior is None:
+        return
+    if characteristic.derived_from:
+        detail = "not supported yet: a production prior of a characteristic computed from several"
+        collector.add(f"{at}/prior", detail, "no prior")
+        return
+    collector.attempt(f"{at}/prior", check_prior, unit_of_work, rule.prior, characteristic, f"{at}/prior")
 
 
 def _check_unit(

@@ -47,8 +47,9 @@ def test_several_faults_of_a_rule_are_told_at_once():
 
 
 def test_what_has_no_meaning_yet_is_not_supported():
-    with pytest.raises(NotSupportedError):
-        DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1)
+    with pytest.raises(NotSupportedError) as several:
+        DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1, rounds=2)
+    assert several.value.where == ("rounds",)
 
 
 @pytest.mark.parametrize(

@@ -133,9 +133,6 @@ _RULE = "requires/0/decision_rule"
     ("kind", "path", "value"),
     [
         (Specification, f"{_RULE}/rounds", 2),
-        (Specification, f"{_RULE}/kind", "guarded_by_global_risk"),
-        (Specification, f"{_RULE}/prior", {"mean": 3}),
-        (Specification, f"{_RULE}/specific_risk_cap", 0.1),
         (documents.Study, "rows", [["P01", 1, 3.1]] * 20_001),
     ],
 )
