@@ -22,6 +22,7 @@ PERMISSIONS: Final[dict[str, frozenset[str]]] = {
     "approve a version": frozenset({"approver"}),
     "return a version": frozenset({"approver"}),
     "withdraw an open version": frozenset({"engineer", "approver"}),
+    "extend a study": frozenset({"approver"}),
     "withdraw a version in force": frozenset({"approver"}),
     "verify the record": frozenset({"engineer", "approver", "auditor", "administrator"}),
 }

@@ -489,6 +489,16 @@ class Replacement:
 
 
 @dataclass(frozen=True)
+class Extension:
+    """A study let serve until another day, with its uncertainty widened; signed by an approver."""
+
+    until: date
+    widening_factor: float
+    reason: str
+    signature: Signature
+
+
+@dataclass(frozen=True)
 class StudyPlanRequest:
     """What a study is wanted for: to know a standard deviation, to find a bias; a wish by its members."""
 

@@ -292,6 +292,8 @@ _EVALUATION = _object(
     },
 )
 
+_EXTENDED: Form = {"until": _TEXT, "widening_factor": _NUMBER, "lapses_at": _INSTANT}
+_EXTENSION = _object("A study let serve longer, with a wider uncertainty.", {"study": _CODE, **_EXTENDED})
 _TWO_LIMITS = _object(
     "Acceptance limits; where nothing could be accepted, detail says why.",
     {"lower": _LIMIT, "upper": _LIMIT, "detail": _TEXT},
@@ -326,6 +328,7 @@ _BUDGET_FIGURES = _object(
         "unit": _TEXT,
         "digest": _TEXT,
         "serves_until": _TEXT_OR_NULL,
+        "extensions": _list(_EXTENSION, "Evidence that serves beyond its time."),
         "estimates": {"type": "object", "description": "Values of biases and the like."},
         "bias_treatment": _TEXT,
         "samples": _WHOLE,
@@ -410,6 +413,7 @@ _ACCEPTANCE_LIMITS = _object(
                     "planned": _YES,
                     "state": {"type": "string", "enum": ["in_force", "lapsed"]},
                     "lapses_at": _TEXT_OR_NULL,
+                    "extensions": _list(_EXTENSION, "Evidence that serves beyond its time."),
                     **_LIMITS,
                     **_UNCERTAINTY,
                 },
@@ -509,6 +513,12 @@ ANSWERS: dict[str, Form] = {
         "A study with its evaluation.",
         {"recorded": _YES, "study": ref("Study"), "evaluation": ref("Evaluation")},
         entry=ref("Entry"),
+        extension=_or_null(_object("How it serves beyond its time.", _EXTENDED)),
+    ),
+    "StudyExtension": _object(
+        "A study extended, and the versions of its budgets that are in force by that.",
+        {"study": _CODE, "extension": _object("How it serves now.", _EXTENDED)}
+        | {"budgets": _list(ref("BudgetVersion")), "entry": ref("Entry")},
     ),
     "StudyPage": page_of(_STUDY_SUMMARY),
     "Renewal": _object(

@@ -64,7 +64,9 @@ KINDS: dict[type[ServiceError], Kind] = {
 
 CONFLICTS: dict[str, str] = {
     "already-exists": "The code is taken",
+    "already-extended": "The study was extended before",
     "another-budget-in-force": "Another budget serves the same analyzer",
+    "evidence-changed": "The evidence of a budget has changed since its approval",
     "evidence-lapsed": "The evidence does not serve any more",
     "lot-already-judged": "The lot is judged already",
     "not-in-this-state": "The version is in another state",

@@ -11,7 +11,7 @@ from marshmallow import ValidationError
 
 from service import documents
 from service.errors import Fault, InvalidRequest
-from service.schemas.acts import SignedActSchema
+from service.schemas.acts import ExtensionSchema, SignedActSchema
 from service.schemas.base import StrictSchema, got, refusal
 from service.schemas.budgets import BudgetDocumentSchema
 from service.schemas.decisions import DecisionRequestSchema
@@ -50,6 +50,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.BudgetDocument: BudgetDocumentSchema(),
     documents.Study: StudySchema(),
     documents.Replacement: ReplacementSchema(),
+    documents.Extension: ExtensionSchema(),
     documents.StudyPlanRequest: StudyPlanRequestSchema(),
     documents.SetPointRequest: SetPointRequestSchema(),
     documents.ImprovementsRequest: ImprovementsRequestSchema(),

@@ -245,6 +245,12 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
         "source": {"name": "replicates.csv", "sha256": None},
     },
     documents.Replacement: {"study": "wmp-rep-2027-01", "reason": "yearly study of repeatability"},
+    documents.Extension: {
+        "until": "2027-03-01",
+        "widening_factor": 1.5,
+        "reason": "the new study is under way; check samples show no drift",
+        "signature": {"password": "the person's own"},
+    },
     documents.StudyPlanRequest: {
         "precision": {"relative_uncertainty": 0.25, "design": "repeatability", "values_per_sample": 2},
         "bias": {"bias": 0.05, "standard_deviation": 0.1, "power": 0.9, "pairs_per_group": 2},

@@ -106,6 +106,16 @@ class StoredStudy:
 
 
 @dataclass(frozen=True)
+class StoredExtension:
+    """What was said of a study when it was let serve longer."""
+
+    study: str
+    document: dict[str, Any]
+    chain: str
+    sequence: int
+
+
+@dataclass(frozen=True)
 class StoredDecision:
     """A decision's look-up columns and the entry that says it in full."""
 

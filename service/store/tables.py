@@ -188,6 +188,14 @@ studies = Table(
     *_entry_columns(),
 )
 
+study_extensions = Table(
+    "study_extensions",
+    metadata,
+    _required("study", key=True),
+    _required("document"),
+    *_entry_columns(),
+)
+
 people = Table(
     "people",
     metadata,
@@ -221,5 +229,5 @@ revision = Table(
     CheckConstraint("id = 1", name="one_row"),
 )
 
-APPEND_ONLY = (entries, idempotency_keys, decisions, readings, release_rules, studies)
+APPEND_ONLY = (entries, idempotency_keys, decisions, readings, release_rules, studies, study_extensions)
 """The tables whose rows are never changed nor removed."""

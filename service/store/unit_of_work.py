@@ -30,6 +30,7 @@ from service.store.rows import (
     ReadingIdentity,
     StoredDecision,
     StoredDocument,
+    StoredExtension,
     StoredKey,
     StoredLot,
     StoredPerson,
@@ -41,6 +42,7 @@ from service.store.rows import (
 )
 from service.store.session import Session
 from service.store.studies import Studies
+from service.store.study_extensions import StudyExtensions
 from service.store.tables import chains, entries, revision
 from service.store.versions import Rules, Versions
 
@@ -52,6 +54,7 @@ __all__ = [
     "ReadingIdentity",
     "StoredDecision",
     "StoredDocument",
+    "StoredExtension",
     "StoredKey",
     "StoredLot",
     "StoredPerson",
@@ -114,6 +117,7 @@ class UnitOfWork:
         self.versions = Versions(session)
         self.rules = Rules(session)
         self.studies = Studies(session)
+        self.extensions = StudyExtensions(session)
         self.decisions = Decisions(session)
         self.lots = Lots(session)
         self.readings = Readings(session)

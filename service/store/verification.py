@@ -11,7 +11,15 @@ from sqlalchemy import ColumnElement, Select, Table, and_, or_, select
 from service.ledger import Anchor, ChainCheck, Finding, Head, StoredEntry
 from service.store.record import LARGEST_PAGE, Ledger
 from service.store.session import Session
-from service.store.tables import decisions, entries, idempotency_keys, lots, readings, studies
+from service.store.tables import (
+    decisions,
+    entries,
+    idempotency_keys,
+    lots,
+    readings,
+    studies,
+    study_extensions,
+)
 from service.store.triggers import missing_triggers
 from service.store.unit_of_work import Database
 
@@ -74,7 +82,7 @@ def _stored_entries(ledger: Ledger, chain: str) -> Iterator[StoredEntry]:
 
 
 def _pointer_finding(session: Session) -> Finding | None:
-    for table in (decisions, readings, idempotency_keys, studies):
+    for table in (decisions, readings, idempotency_keys, studies, study_extensions):
         if (row := session.row(_astray(table))) is not None:
             detail = f"a row of {table.name} names this entry, but the entry is missing or differs from it"
             return Finding(row.chain, row.sequence, detail)

@@ -133,6 +133,11 @@ class Versions:
         self._session.write(versions.insert().values(**_values(stored)))
         return stored
 
+    def insert_in_force(self, version: StoredVersion, entry: Entry) -> None:
+        """Keep a version that comes into force by the act that makes it; none of its code may be in force."""
+        made = replace(version, state="in_force", chain=entry.chain, sequence=entry.sequence)
+        self._session.write(versions.insert().values(**_values(made)))
+
     def revise(
         self, stored: StoredVersion, document: Document, entry: Entry, **changes: Any
     ) -> StoredVersion:

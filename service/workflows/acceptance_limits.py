@@ -92,6 +92,7 @@ def _items(
                 "planned": key.counts == planned,
                 "state": "lapsed" if lapsed else "in_force",
                 "lapses_at": budget.lapses_at,
+                "extensions": [dict(extension) for extension in budget.extensions],
                 "bias": budget.budget.bias,
                 "bias_treatment": budget.budget.bias_treatment,
                 **_figures(rule),

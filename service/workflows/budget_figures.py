@@ -72,6 +72,7 @@ def evaluation(
         "unit": subject.document.unit,
         "digest": subject.evaluation["digest"],
         "serves_until": subject.evaluation["serves_until"],
+        "extensions": subject.evaluation.get("extensions", []),
         "estimates": subject.evaluation["estimates"],
         "bias_treatment": subject.budget.bias_treatment,
         "samples": len(subject.counts.readings_per_sample),

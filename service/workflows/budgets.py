@@ -123,6 +123,7 @@ def _behind(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComp
         unit=units.pop(),
         pointer=pointer,
         characteristic=_asked_about(unit_of_work, document, line),
+        extended=True,
     )
     if behind.laboratory is not None:
         ours = (document.characteristic, *_derived_from(unit_of_work, document))
@@ -293,14 +294,28 @@ def _check_calibration(
 def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetDocument) -> Approval:
     _check_sole_budget(unit_of_work, document)
     resolved = resolve_budget(unit_of_work, document)
+    approval = approval_of_resolved(unit_of_work, stored, document, resolved)
+    if approval.lapses_at is not None and approval.lapses_at <= unit_of_work.now("plant"):
+        raise Conflict(
+            "evidence-lapsed", f"The evidence served until {resolved.serves_until}; renew it first."
+        )
+    return approval
+
+
+def approval_of_resolved(
+    unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetDocument, resolved: ResolvedBudget
+) -> Approval:
+    """Compute what is stored of a budget in force, whether or not its evidence has lapsed.
+
+    Raises
+    ------
+    InvalidRequest
+        A specification in force could not be proved with it.
+    """
     lapses_at = None
     if resolved.serves_until is not None:
         instant = lapse_instant(date.fromisoformat(resolved.serves_until), plant.in_force(unit_of_work))
         lapses_at = format_instant(instant)
-        if lapses_at <= unit_of_work.now("plant"):
-            raise Conflict(
-                "evidence-lapsed", f"The evidence served until {resolved.serves_until}; renew it first."
-            )
     rules = []
     for specification_version in unit_of_work.versions.all_in_force():
         if (

@@ -11,6 +11,7 @@ from budgets.declarations import Declaration
 from budgets.declarations import evaluate as evaluate_declaration
 from budgets.errors import BudgetsError, NotSupportedError
 from budgets.evidence.evaluation import Estimate, Evaluation
+from budgets.evidence.widening import widened
 from budgets.units import conversion
 from service.documents import DeclaredEvidence, StatedEvidence, Study, StudyEvidence
 from service.errors import Fault, InvalidRequest, NotSupported
@@ -30,7 +31,7 @@ class Behind:
     """An estimate, how it was evaluated (GUM 2.3), and the study that it came from, if any.
 
     ``serves_until`` is the last day on which the evidence serves, None without an end. ``laboratory`` says
-    which entry of a laboratory it was taken from.
+    which entry of a laboratory it was taken from, ``extension`` how the study serves beyond its time.
     """
 
     estimate: Estimate
@@ -39,6 +40,7 @@ class Behind:
     diagnostics: Mapping[str, Any] = field(default_factory=dict)
     serves_until: date | None = None
     laboratory: Mapping[str, Any] | None = None
+    extension: Mapping[str, Any] | None = None
 
 
 class FaultCollector:
@@ -90,9 +92,18 @@ def budget_faults(error: BudgetsError, pointer: str) -> tuple[Fault, ...]:
 
 
 def resolve_stated(
-    unit_of_work: UnitOfWork, evidence: StatedEvidence, *, code: str, unit: str | None, pointer: str
+    unit_of_work: UnitOfWork,
+    evidence: StatedEvidence,
+    *,
+    code: str,
+    unit: str | None,
+    pointer: str,
+    extended: bool = False,
 ) -> Behind:
     """Find the estimate behind a study or a declaration, expressed in ``unit``; None leaves its own.
+
+    ``extended`` takes a study as an approver extended it: it serves longer, and its uncertainty is wider.
+    What is taken out of a scatter is never widened, for that would leave less.
 
     Raises
     ------
@@ -100,7 +111,9 @@ def resolve_stated(
         There is no such study or estimate, or the declared figure does not say what it means.
     """
     if isinstance(evidence, StudyEvidence):
-        return _from_study(unit_of_work, evidence, unit, pointer)
+        behind = _from_study(unit_of_work, evidence, unit, pointer)
+        extension = unit_of_work.extensions.document_of(evidence.study) if extended else None
+        return behind if extension is None else _extended(behind, evidence.study, extension)
     return _from_declaration(evidence, code, unit, pointer)
 
 
@@ -125,6 +138,15 @@ def _from_study(unit_of_work: UnitOfWork, evidence: StudyEvidence, unit: str | N
     assert estimate is not None
     wanted = in_unit(estimate, study.unit, unit or study.unit, pointer)
     return Behind(wanted, "A", study, evaluation.diagnostics, study.serves_until)
+
+
+def _extended(behind: Behind, study: str, extension: Mapping[str, Any]) -> Behind:
+    return replace(
+        behind,
+        estimate=widened(behind.estimate, extension["widening_factor"]),
+        serves_until=date.fromisoformat(extension["until"]),
+        extension={"study": study, **extension},
+    )
 
 
 def _from_declaration(evidence: DeclaredEvidence, code: str, unit: str | None, pointer: str) -> Behind:

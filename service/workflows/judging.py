@@ -339,4 +339,21 @@ def _notices(judged: dict[str, Measured], recorded_at: str) -> list[dict[str, An
                 "at": budget.lapses_at,
                 "detail": f"The evidence behind {budget.document.code} serves {left.days} more days.",
             }
+    return [*notices.values(), *_extension_notices(judged)]
+
+
+def _extension_notices(judged: dict[str, Measured]) -> list[dict[str, Any]]:
+    """Say which evidence serves beyond its time, once per budget and study."""
+    notices = {}
+    for measured in judged.values():
+        if (budget := measured.budget) is None:
+            continue
+        for extension in budget.extensions:
+            notices[budget.document.code, extension["study"]] = {
+                "code": "evidence-extended",
+                "at": extension["lapses_at"],
+                "detail": f"The study {extension['study']} behind {budget.document.code} serves beyond its "
+                f"time until {extension['until']}; its uncertainty is widened by the factor "
+                f"{extension['widening_factor']:g}.",
+            }
     return list(notices.values())

@@ -41,10 +41,12 @@ def resolve(
     unit: str,
     pointer: str,
     characteristic: str | None,
+    extended: bool = False,
 ) -> Behind:
     """Find the estimate behind evidence of any form, expressed in ``unit``.
 
-    ``characteristic`` is the one that a laboratory is asked about when the evidence does not say.
+    ``characteristic`` is the one that a laboratory is asked about when the evidence does not say; for
+    ``extended`` see resolve_stated.
 
     Raises
     ------
@@ -53,12 +55,13 @@ def resolve(
         means, or a component of a laboratory is not dated.
     """
     if not isinstance(evidence, LaboratoryEvidence):
-        return resolve_stated(unit_of_work, evidence, code=code, unit=unit, pointer=pointer)
+        return resolve_stated(
+            unit_of_work, evidence, code=code, unit=unit, pointer=pointer, extended=extended
+        )
     about = evidence.characteristic or characteristic
     stored, method, stated = _component(unit_of_work, evidence, about, pointer)
-    behind = _behind(
-        unit_of_work, f"{evidence.laboratory}/{about}/{evidence.component}", stated, unit, pointer
-    )
+    code = f"{evidence.laboratory}/{about}/{evidence.component}"
+    behind = _behind(unit_of_work, code, stated, unit, pointer, extended=extended)
     _check_is_dated(evidence, stated, behind, pointer)
     assert behind.serves_until is not None  # checked just now
     reference = {
@@ -123,11 +126,17 @@ def _component(
 
 
 def _behind(
-    unit_of_work: UnitOfWork, code: str, stated: StatedEvidence, unit: str | None, pointer: str
+    unit_of_work: UnitOfWork,
+    code: str,
+    stated: StatedEvidence,
+    unit: str | None,
+    pointer: str,
+    *,
+    extended: bool = False,
 ) -> Behind:
     """Find the estimate of a component; in its own unit where none is asked for."""
     if isinstance(stated, StudyEvidence):
-        return resolve_stated(unit_of_work, stated, code=code, unit=unit, pointer=pointer)
+        return resolve_stated(unit_of_work, stated, code=code, unit=unit, pointer=pointer, extended=extended)
     # One figure is one mean square, whoever refers to it; another figure is another one.
     text = json.dumps(dict(stated.declaration), sort_keys=True)
     code = f"{code}/{hashlib.sha256(text.encode()).hexdigest()[:8]}"

@@ -43,6 +43,10 @@ class Expected:
             self.rows["study", code] = ((content["study"], content["evaluation"]), where)
         elif entry.kind in ("person-added", "token-added", "token-revoked"):
             self._add_account(entry, where)
+        elif entry.kind == "study-extended":
+            self.rows["extension", content["study"]] = (content["extension"], where)
+            for part in content["versions"]:
+                self._add_version("budget", part, where)
         elif subject == "renewal":
             for part in content.get("studies", ()):
                 self.rows["study", part["study"]["code"]] = ((part["study"], part["evaluation"]), where)
@@ -140,6 +144,8 @@ def _rows(unit_of_work: UnitOfWork) -> Iterator[tuple[Key, Any]]:
             yield ("master", kind, stored.key), (stored.revision, stored.document)
     for study in unit_of_work.studies.all():
         yield ("study", study.code), (study.document, study.evaluation)
+    for extension in unit_of_work.extensions.all():
+        yield ("extension", extension.study), extension.document
     for kind in ("budget", "specification", "plant"):
         for version in unit_of_work.versions.all(kind):
             yield (

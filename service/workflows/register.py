@@ -54,6 +54,7 @@ class BudgetInForce:
     budget: Budget
     digest: str
     lapses_at: str | None
+    extensions: tuple[Mapping[str, Any], ...] = ()
 
 
 @dataclass
@@ -199,6 +200,7 @@ def _budget_in_force(version: StoredVersion) -> BudgetInForce:
         budget=budget_from_evaluation(document, version.evaluation),
         digest=version.evaluation["digest"],
         lapses_at=version.lapses_at,
+        extensions=tuple(version.evaluation.get("extensions", ())),
     )
 
 

@@ -186,7 +186,13 @@ def _keep_submitted(unit_of_work: UnitOfWork, actor: Actor, draft: StoredVersion
     unit_of_work.versions.set_state(kept, "submitted", entry, submitted_by=actor.principal)
 
 
-def each_budget(versions: list[StoredVersion], step: Callable[[StoredVersion], _T]) -> list[_T]:
+def each_budget(
+    versions: list[StoredVersion],
+    step: Callable[[StoredVersion], _T],
+    *,
+    pointer: str = "#/study",
+    act: str = "renewed",
+) -> list[_T]:
     """Do a step for each version; all are refused with every fault of each, by the code of its budget."""
     done: list[_T] = []
     faults: list[Fault] = []
@@ -195,21 +201,21 @@ def each_budget(versions: list[StoredVersion], step: Callable[[StoredVersion], _
             done.append(step(stored))
         except InvalidRequest as error:
             found = error.faults or (Fault(error.message),)
-            faults.extend(_of_budget(stored.code, fault) for fault in found)
+            faults.extend(_of_budget(stored.code, fault, pointer) for fault in found)
     if faults:
-        raise refused(faults)
+        raise refused(faults, act)
     return done
 
 
-def _of_budget(code: str, fault: Fault) -> Fault:
+def _of_budget(code: str, fault: Fault, pointer: str) -> Fault:
     place = (fault.pointer or "#").removeprefix("#").removeprefix("/")
     said = f"{place}: {fault.detail}" if place else fault.detail
-    return dataclasses.replace(fault, pointer="#/study", detail=f"budget {code}: {said}")
+    return dataclasses.replace(fault, pointer=pointer, detail=f"budget {code}: {said}")
 
 
-def refused(faults: list[Fault]) -> InvalidRequest:
-    """Say that a renewal cannot be done so."""
-    return InvalidRequest("The study cannot be renewed so; nothing was recorded.", faults=tuple(faults))
+def refused(faults: list[Fault], act: str = "renewed") -> InvalidRequest:
+    """Say that an act on a study cannot be done so."""
+    return InvalidRequest(f"The study cannot be {act} so; nothing was recorded.", faults=tuple(faults))
 
 
 # --- answers -------------------------------------------------------------------------------------------

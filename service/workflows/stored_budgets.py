@@ -118,7 +118,7 @@ def _ends(bounds: Bounds, *where: str) -> tuple[float, float]:
 
 def budget_evaluation(document: dict[str, Any], resolved: ResolvedBudget) -> dict[str, Any]:
     """Write down the numbers of a budget, with a digest over the document and them."""
-    numbers = {
+    numbers: dict[str, Any] = {
         "estimates": dict(resolved.estimates),
         "components": [
             {
@@ -130,6 +130,9 @@ def budget_evaluation(document: dict[str, Any], resolved: ResolvedBudget) -> dic
         ],
         "serves_until": resolved.serves_until,
     }
+    extensions = {item.extension["study"]: dict(item.extension) for item in resolved.behind if item.extension}
+    if extensions:
+        numbers["extensions"] = list(extensions.values())
     return {**numbers, "digest": _digest({"document": document, **numbers})}
 
 

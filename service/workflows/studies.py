@@ -75,9 +75,15 @@ def get(services: Services, actor: Actor, code: str) -> dict[str, Any]:
     require(actor, "read")
     with services.database.reading() as unit_of_work:
         stored = unit_of_work.studies.get(code)
+        extension = unit_of_work.extensions.document_of(code)
     if stored is None:
         raise NotFound(f"There is no study {code!r}.")
-    return {"recorded": True, "study": stored.document, "evaluation": stored.evaluation}
+    return {
+        "recorded": True,
+        "study": stored.document,
+        "evaluation": stored.evaluation,
+        "extension": extension,
+    }
 
 
 def listing(

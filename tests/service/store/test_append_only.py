@@ -24,6 +24,7 @@ def filled_url(database, database_url):
     def keep(unit, entry):
         unit.rules.add(RULE)
         unit.studies.add("wmp-rep-2026-01", {"rows": []}, {"used": 0}, entry, **STUDY)
+        unit.extensions.add("wmp-rep-2026-01", {"until": "2027-03-01", "widening_factor": 1.5}, entry)
 
     perform_now(database, note(chain="plant", after=keep))
     return database_url
