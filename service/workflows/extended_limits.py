@@ -6,17 +6,22 @@ raises the effective degrees of freedom, and the coverage factor falls faster th
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from typing import Any
+import math
+from collections.abc import Callable, Mapping
+from functools import partial
+from typing import Any, Final
 
 from budgets.derived_release import DerivedReleaseRule
 from budgets.errors import LimitsError
+from budgets.item_rules import LotSpreadRule
 from budgets.release import ReleaseRule
 from service.errors import Fault, InvalidRequest
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.rules import RuleKey, stored_rule
+from service.workflows.rules import AnyRule, RuleKey, stored_rule
 from service.workflows.versioned_kind import Approval
+
+_SPREADS: Final = (0.5, 1.0, 2.0, 4.0)
 
 
 def check_limits_are_narrower(unit_of_work: UnitOfWork, before: StoredVersion, approval: Approval) -> None:
@@ -36,7 +41,7 @@ def check_limits_are_narrower(unit_of_work: UnitOfWork, before: StoredVersion, a
         earlier = was.get(_place(key))
         if earlier is not None and _accepts_more(numbers, earlier):
             detail = f"{key.specification} would accept more than before with {key.counts} readings"
-            faults.append(Fault(detail, "a larger factor", "#/widening_factor"))
+            faults.append(Fault(detail, "a larger factor, or a new study", "#/widening_factor"))
     if faults:
         raise InvalidRequest("The factor does not widen the guard bands.", faults=tuple(faults))
 
@@ -46,9 +51,14 @@ def _place(key: RuleKey) -> tuple[Any, ...]:
 
 
 def _accepts_more(numbers: Mapping[str, Any], earlier: Mapping[str, Any]) -> bool:
-    now, then = _representative(numbers), _representative(earlier)
-    if now is None or then is None:
-        return now is not None
+    before = stored_rule(earlier)
+    for now, then in zip(_rules_at(stored_rule(numbers), before), _rules_at(before, before), strict=True):
+        if now is not None and (then is None or _wider(now, then)):
+            return True
+    return False
+
+
+def _wider(now: ReleaseRule, then: ReleaseRule) -> bool:
     pairs = (
         (then.lower_acceptance_limit, now.lower_acceptance_limit),
         (now.upper_acceptance_limit, then.upper_acceptance_limit),
@@ -56,12 +66,24 @@ def _accepts_more(numbers: Mapping[str, Any], earlier: Mapping[str, Any]) -> boo
     return any(inner is not None and outer is not None and inner > outer for inner, outer in pairs)
 
 
-def _representative(numbers: Mapping[str, Any]) -> ReleaseRule | None:
-    """Give the rule, of a derived characteristic that in the middle of its box; None: it accepts nothing."""
-    rule = stored_rule(numbers)
-    if not isinstance(rule, DerivedReleaseRule):
-        return rule
+def _rules_at(rule: AnyRule, before: AnyRule) -> list[ReleaseRule | None]:
+    """Give the rule where two are compared; None where it accepts nothing.
+
+    Of a derived characteristic that is the middle of its box, of items whose spread is seen in the lot some
+    spreads about what was measured before.
+    """
+    if isinstance(rule, ReleaseRule):
+        return [rule]
+    if isinstance(rule, DerivedReleaseRule):
+        middle = {name: sum(ends) / 2 for name, ends in rule.box.ranges.items()}
+        return [_rule_or_none(partial(rule.at, middle))]
+    assert isinstance(before, LotSpreadRule)  # rules of one requirement are of one kind
+    scale = math.hypot(before.measurement_standard_deviation, before.other_standard_uncertainty)
+    return [_rule_or_none(partial(rule.with_spread, scale * times)) for times in _SPREADS]
+
+
+def _rule_or_none(compute: Callable[[], ReleaseRule]) -> ReleaseRule | None:
     try:
-        return rule.at({name: sum(ends) / 2 for name, ends in rule.box.ranges.items()})
+        return compute()
     except LimitsError:
         return None
