@@ -428,6 +428,30 @@ def test_a_derived_characteristic_is_extended(at_start: Callers) -> None:
     assert 1 < ratio < 1.3
 
 
+def test_items_are_judged_more_cautiously_too(callers: Callers) -> None:
+    engineer = callers["engineer"]
+    document = example(documents.BudgetDocument)
+    document["procedure"]["samples"] = {"least": 2, "plan": 3, "most": 3}
+    done(engineer.post(f"/v1/budgets/{BUDGET}/versions", document))
+    done(engineer.post(f"/v1/budgets/{BUDGET}/versions/2/submit"), 200)
+    done(callers["max"].post(f"/v1/budgets/{BUDGET}/versions/2/approve", signed()), 200)
+    items = house.specification("items", 5.0)
+    items["requires"][0] |= {"judged": "item", "item_share": 0.9, "item_spread": "from_lot"}
+    house.put_in_force(engineer, callers["max"], "specifications", items)
+
+    def limit() -> float:
+        request = house.decision("items", (2.7, 2.74, 2.8, 2.78, 2.66, 2.7), specifications=["items"])
+        for number, reading in enumerate(request["readings"]):
+            reading["sample"] = str(number // 2 + 1)
+        (verdict,) = done(callers["mes"].post("/v1/decisions/preview", request), 200)["verdicts"]
+        found: float = verdict["upper_acceptance_limit"]
+        return found
+
+    before = limit()
+    done(callers["max"].post(extension_of(STUDY), wish(factor=2)))
+    assert limit() < before
+
+
 # --- the record ----------------------------------------------------------------------------------------
 
 
