@@ -24,7 +24,7 @@ _SIGNIFICANT = 0.05
 # So few clusters seldom show how far they differ. Unless they differ less than chance alone makes them in
 # seven of ten studies, nothing counts as known better than they know it; by the pairs alone 95 % intervals of
 # a bias of two clusters would hold the truth in 87 to 90 % of studies only.
-_FEW_CLUSTERS = 4
+FEW_CLUSTERS = 4
 _ALIKE = 0.7
 
 
@@ -88,17 +88,32 @@ def bias_terms(
         terms: tuple[Term, ...] = (Term(share, mean_between), Term(1 / n - share, mean_within))
         if mean_between.value > mean_within.value and variance(terms) > variance(best[0]):
             best = (terms, name)
-        elif k < _FEW_CLUSTERS and best[1] == "pairs" and not _alike(mean_between, mean_within):
+        # Without scatter within, the clusters were the larger variance already.
+        elif (
+            k < FEW_CLUSTERS
+            and best[1] == "pairs"
+            and not alike(mean_between.value / mean_within.value, k - 1, n - k)
+        ):
             vouched = MeanSquare(f"{code}/pairs_of_few_{name}s", square.value, k - 1)
             best = ((Term(1 / n, vouched),), name)
     return best
 
 
-def _alike(between: MeanSquare, within: MeanSquare) -> bool:
-    """Say whether clusters differ less than chance alone makes them in seven of ten studies."""
-    # Without scatter within, the clusters were the larger variance already.
-    f = between.value / within.value
-    return float(fdtrc(between.degrees_of_freedom, within.degrees_of_freedom, f)) >= _ALIKE
+def alike(ratio: float, between: float, within: float) -> bool:
+    """Say whether clusters differ less than chance alone makes them in seven of ten studies.
+
+    Parameters
+    ----------
+    ratio : float
+        Mean square between clusters over that within.
+    between, within : float
+        Their degrees of freedom.
+
+    Returns
+    -------
+    bool
+    """
+    return float(fdtrc(between, within, ratio)) >= _ALIKE
 
 
 def bias_estimate(
@@ -188,7 +203,7 @@ def bias_warnings(test: BiasTest, pairs: Sequence[Pair]) -> tuple[EvaluationWarn
                 "uncertainty of the bias is larger than shown",
             )
         )
-    elif 1 < len({pair.group for pair in pairs}) < _FEW_CLUSTERS:
+    elif 1 < len({pair.group for pair in pairs}) < FEW_CLUSTERS:
         number = len({pair.group for pair in pairs})
         detail = f"{number} groups say little about how the bias varies from one to the next; take more"
         warnings.append(EvaluationWarning("few-groups-of-pairs", detail))

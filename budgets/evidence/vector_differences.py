@@ -9,6 +9,7 @@ import numpy as np
 
 from budgets.correlations import is_possible
 from budgets.errors import BudgetsError, EvidenceError, raise_collected
+from budgets.evidence.bias import FEW_CLUSTERS, alike
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning
 from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix, covariance_of
 from budgets.evidence.study_tables import Study
@@ -121,11 +122,12 @@ def _between_groups(
 
     With n_g pairs of n in k groups and n0 = (n - sum n_g^2/n)/(k - 1) the mean difference has the covariance
     ``a MB + (1/n - a) MW``, a = sum n_g^2 / (n^2 n0): for equal groups MB/n. As in the design agreement,
-    groups count only where some quantity is less well known with them.
+    groups count only where some quantity is less well known with them; and of two or three groups that are
+    not alike in every quantity the mean difference is known no better than with their degrees of freedom.
     """
     labels = _groups_of_pairs(study)
     n, members = len(values), list(grouped(labels, range(len(labels))).values())
-    if len(members) < 2:
+    if not 1 < len(members) < n:
         return []
     scatter = centred(values)
     rows = [scatter[[int(row) for row in group]] for group in members]
@@ -136,13 +138,25 @@ def _between_groups(
     between = (means * sizes[:, None]).T @ means
     code = f"{study.code}/between_groups_covariance"
     terms = [MatrixTerm(share, scatter_matrix(code, quantities, between, len(rows) - 1))]
-    if abs(1 / n - share) > 1e-12 / n and n > len(rows):
-        within = scatter.T @ scatter - between
+    within = scatter.T @ scatter - between
+    if abs(1 / n - share) > 1e-12 / n:
         code = f"{study.code}/within_groups_covariance"
         terms.append(MatrixTerm(1 / n - share, scatter_matrix(code, quantities, within, n - len(rows))))
     found = covariance_of(terms)
     larger = (np.diag(found) > np.diag(np.asarray(matrix.value)) / n).any()
-    return terms if larger and is_possible(found) else []
+    if larger and is_possible(found):
+        return terms
+    freedoms = len(rows) - 1, n - len(rows)
+    if len(rows) >= FEW_CLUSTERS or _all_alike(between, within, *freedoms):
+        return []
+    code = f"{study.code}/pairs_of_few_groups_covariance"
+    return [MatrixTerm(1 / n, MeanSquareMatrix(code, quantities, matrix.value, freedoms[0]))]
+
+
+def _all_alike(between: Array, within: Array, first: int, second: int) -> bool:
+    """Say of every quantity that groups differ in it less than chance alone mostly makes them."""
+    squares = zip(np.diag(between) / first, np.diag(within) / second, strict=True)
+    return all(other > 0 and alike(float(one / other), first, second) for one, other in squares)
 
 
 def _groups_of_pairs(study: Study) -> list[str]:

@@ -308,13 +308,26 @@ def test_biases_of_pairs_in_groups_are_as_well_known_as_each_by_itself(sizes):
     assert "pairs-taken-as-independent" not in [warning.code for warning in evaluation.warnings]
 
 
-@pytest.mark.parametrize("sizes", [[60], [1] * 60])
-def test_groups_that_say_nothing_leave_the_covariance_of_the_mean(sizes):
-    data = grouped_pairs(sizes, between=0.0)
+@pytest.mark.parametrize(("sizes", "seed"), [([60], 5), ([1] * 60, 5), ([15] * 4, 0)])
+def test_groups_that_say_nothing_leave_the_covariance_of_the_mean(sizes, seed):
+    data = grouped_pairs(sizes, between=0.0, seed=seed)
     bias = evaluated(data, options={"independent": True}).estimate("bias_covariance")
     (term,) = bias.matrix_terms
     assert term.coefficient == pytest.approx(1 / 60)
     assert term.mean_square.degrees_of_freedom == 59
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_few_groups_know_the_biases_as_few_groups_know_them(seed):
+    """With degrees of freedom of the groups wherever one channel by itself has them."""
+    data = grouped_pairs([10, 10], between=0.05, seed=seed)
+    (term, *_) = evaluated(data, options={"independent": True}).estimate("bias_covariance").matrix_terms
+    alone = [single(data, channel).estimate("bias") for channel in CHANNELS]
+    known = [estimate.degrees_of_freedom < 2 for estimate in alone]
+    assert term.mean_square.degrees_of_freedom == (1 if any(known) else 19)
+    if "few" in term.mean_square.code:
+        diagonal = np.diag(np.asarray(term.mean_square.value)) * term.coefficient
+        assert diagonal == pytest.approx([estimate.variance for estimate in alone], rel=1e-9)
 
 
 def test_one_pair_in_two_groups_is_refused():
