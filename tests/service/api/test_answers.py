@@ -35,7 +35,7 @@ def form_name(kind: type[Any]) -> str:
 def test_examples_and_what_is_kept_of_them_fit_their_form(check: Any) -> None:
     for kind, document in EXAMPLES.items():
         assert check(form_name(kind), document) == [], kind
-        if kind is not documents.SignedAct:
+        if "signature" not in document:
             assert check(form_name(kind), dump(load(kind, document))) == [], kind
 
 
