@@ -112,7 +112,7 @@ class Impossible:
     """Options that cannot be had, and why."""
 
     options: tuple[str, ...]
-    error: BudgetsError
+    reason: str
 
 
 @dataclass(frozen=True)
@@ -180,7 +180,7 @@ def improvements(situation: Situation, options: Sequence[Option]) -> Improvement
             measuring = _made(now, chosen)
             measurement, figures = _cheapest(situation, measuring)
         except BudgetsError as error:
-            impossible.append(Impossible(tuple(option.code for option in chosen), error))
+            impossible.append(Impossible(tuple(option.code for option in chosen), error.message))
             refused |= {option.code for option in chosen} if len(chosen) == 1 else set()
             continue
         found.append(_improvement(situation, chosen, measurement, figures, base, as_it_is))

@@ -14,15 +14,17 @@ from budgets.components import Component
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.error_distributions import Tabulated
-from budgets.errors import EmptyAcceptanceError, ProcedureError
+from budgets.errors import EmptyAcceptanceError, ModelError, ProcedureError
 from budgets.evidence.evaluation import Term
 from budgets.joined_looks import covariance_of_looks
+from budgets.linear_propagation import CompiledPropagation
 from budgets.look_limits import LookLimits
 from budgets.measurement_errors import COMMON_LEVELS
 from budgets.planned_looks import risk_per_look_of
-from budgets.propagation import combined
+from budgets.propagation import compiled, estimates_for
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
+from budgets.uncertainty_at_limits import uncertainty_of_law_at_limits
 
 
 @dataclass(frozen=True)
@@ -191,12 +193,19 @@ def planned_measurement(
     Each look is judged with all readings so far, by the risk per look that its rule of so many rounds leaves.
     Where the uncertainty depends on the value it is taken at the tolerance limit that lies furthest out.
     """
+    if budget.model is not None:
+        raise ModelError(
+            "a characteristic computed from several quantities has no fixed acceptance limits, so there is "
+            "none to run towards",
+            where=("model",),
+        )
     budget = replace(budget, procedure=procedure.within(budget.procedure))
     patterns = [procedure.done(look) for look in range(1, procedure.looks + 1)]
+    laws = [compiled(budget, pattern) for pattern in patterns]
     risks = [risk_per_look_of(budget, demand.tolerance, demand.decision_rule) for demand in demands]
     rules = [
-        [_rule(budget, pattern, demand, risk) for demand, risk in zip(demands, risks, strict=True)]
-        for pattern in patterns
+        [_rule(budget, law, demand, risk) for demand, risk in zip(demands, risks, strict=True)]
+        for law in laws
     ]
     limits = [_limits_of(own, budget.validated_range) for own in rules]
     lower, upper = limits[0].released
@@ -206,8 +215,7 @@ def planned_measurement(
             capability_index=None,
             remedy="Measure better, or agree on limits that leave room for each other.",
         )
-    estimates = _largest_limit(budget, rules[0])
-    common = _common_variance(budget, patterns[0], estimates)
+    covariance, common = _covariance(budget, laws[0], patterns, rules[0])
     bias = budget.bias or 0.0
     corrected = budget.bias_treatment == "corrected"
     return PlannedMeasurement(
@@ -216,7 +224,7 @@ def planned_measurement(
         legal_tolerance=_joined(
             [rule_ends(rule) for rule, demand in zip(rules[0], demands, strict=True) if demand.legal]
         ),
-        random_covariance=covariance_of_looks(budget, patterns, estimates) - common,
+        random_covariance=covariance,
         common_standard_uncertainty=math.sqrt(common),
         reading_offset=bias if corrected else 0.0,
         residual_bias=0.0 if corrected else bias,
@@ -253,38 +261,40 @@ def _joined(intervals: Sequence[tuple[float, float]]) -> tuple[float, float]:
     )
 
 
-def _rule(budget: Budget, done: ReadingPattern, demand: Demand, risk: float | None) -> ReleaseRule:
-    # All looks together may have more samples than the procedure has for each of them.
-    samples = budget.procedure.samples
-    room = replace(samples, most=max(samples.most, len(done.readings_per_sample)))
-    return ReleaseRule.compile(
-        replace(budget, procedure=replace(budget.procedure, samples=room)),
-        done,
+def _rule(
+    budget: Budget, law: CompiledPropagation, demand: Demand, risk_per_look: float | None
+) -> ReleaseRule:
+    """Return the rule that approval compiles: from the law, which is the same for all demands."""
+    return ReleaseRule.of_uncertainty(
+        uncertainty_of_law_at_limits(law, demand.tolerance),
         demand.tolerance,
         demand.decision_rule,
+        budget.coverage_probability,
+        demand.distribution,
+        bias=0.0 if budget.bias is None or budget.bias_treatment == "corrected" else budget.bias,
         domain=demand.domain,
+        validated_range=budget.validated_range,
         truncated=demand.truncated,
-        distribution=demand.distribution,
-        risk_per_look=risk,
+        risk_per_look=risk_per_look,
     )
 
 
-def _largest_limit(budget: Budget, rules: Sequence[ReleaseRule]) -> dict[str, float] | None:
-    if not any(component.relative_terms for component in budget.components):
-        return None
-    ends = [end for rule in rules for end in rule_ends(rule) if math.isfinite(end)]
-    return {budget.characteristic: max(ends, key=abs)}
-
-
-def _common_variance(budget: Budget, done: ReadingPattern, estimates: dict[str, float] | None) -> float:
-    """Return the variance of the error that all lots share."""
-    result = combined(budget, done, estimates=estimates)
-    common = math.fsum(
-        part.share_of_variance * result.variance
-        for part in result.contributions
-        if part.component.level in COMMON_LEVELS
-    )
-    return max(0.0, common)
+def _covariance(
+    budget: Budget, law: CompiledPropagation, patterns: Sequence[ReadingPattern], rules: Sequence[ReleaseRule]
+) -> tuple[NDArray[np.float64], float]:
+    """Return the covariance of what is drawn anew with every lot, and the variance of what all lots share."""
+    estimates = None
+    if any(component.relative_terms for component in budget.components):
+        ends = [end for rule in rules for end in rule_ends(rule) if math.isfinite(end)]
+        estimates = {budget.characteristic: max(ends, key=abs)}
+    full = law.model.estimates(estimates_for(budget, estimates))
+    whole, _, parts = law.combination(law.model.linearised(full)[1], full)
+    levels = (component.level for component in budget.components)
+    shared = math.fsum(part for part, level in zip(parts, levels, strict=True) if level in COMMON_LEVELS)
+    common = max(0.0, shared)
+    if len(patterns) == 1:
+        return np.array([[max(0.0, whole - common)]]), common
+    return covariance_of_looks(budget, patterns, estimates) - common, common
 
 
 def scaled(budget: Budget, factor: float, *, component: str | None = None) -> Budget:

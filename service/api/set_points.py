@@ -25,7 +25,7 @@ def find_set_points() -> Response:
     blueprint,
     "/v1/improvements",
     "POST",
-    Operation("Improvements", body=ImprovementsRequest, problems=(409,)),
+    Operation("Improvements", body=ImprovementsRequest, problems=(409, 503)),
 )
 def compare_improvements() -> Response:
     """Rank options for a better measurement by what they bring in a year; nothing is recorded."""

@@ -30,11 +30,11 @@ def giveaway_of(services: Services, actor: Actor, request: GiveawayRequest) -> A
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        register = services.registers.current(unit_of_work)
-        question = question_of(unit_of_work, register, request.production, "#/production")
+        question = question_of(services, unit_of_work, request.production, "#/production")
         lots = recorded_lots(
             unit_of_work,
-            register,
+            services.remembered,
+            services.registers.current(unit_of_work),
             question.budget,
             request.production.analyzer,
             first_day=request.first_day,

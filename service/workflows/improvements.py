@@ -37,18 +37,20 @@ def compare(services: Services, actor: Actor, request: ImprovementsRequest) -> A
         Something that is named is not there, there is no money, or no set point can be given as it is.
     Conflict
         Nothing is in force, or the evidence has lapsed.
+    Unavailable
+        Other computations are under way.
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        register = services.registers.current(unit_of_work)
-        question = question_of(unit_of_work, register, request.production, "#/production")
+        question = question_of(services, unit_of_work, request.production, "#/production")
         options = _options(unit_of_work, question, request.options)
     collector = FaultCollector()
     situation = collector.attempt("#/production", _situation, question)
     production = collector.attempt("#/production", question.production)
     found = None
     if situation is not None and production is not None:
-        found = collector.attempt("#/production", improvements, situation, options)
+        # Seconds of computation, where rules have rounds: in the helper they delay no line.
+        found = collector.attempt("#/production", services.helper.run, improvements, situation, options)
     collector.finish("The options cannot be compared.")
     assert found is not None and production is not None
     return {
@@ -56,9 +58,7 @@ def compare(services: Services, actor: Actor, request: ImprovementsRequest) -> A
         "as_it_is": _improvement(found.as_it_is),
         "ranked": [_improvement(item) for item in found.ranked],
         "frontier": [list(item.options) for item in found.frontier],
-        "impossible": [
-            {"options": list(item.options), "detail": item.error.message} for item in found.impossible
-        ],
+        "impossible": [{"options": list(item.options), "detail": item.reason} for item in found.impossible],
         "best": None if found.best is None else list(found.best.options),
         "statement": _statement(question, found),
         "caution": CAUTION,

@@ -21,7 +21,7 @@ from budgets.units import Conversion
 from service.documents import StatedVariation, Study
 from service.schemas import load
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.recorded_lots import RecordedLots, recorded_lots
+from service.workflows.recorded_lots import RecordedLots, Remembered, recorded_lots
 from service.workflows.register import BudgetInForce, Register
 
 Answer = dict[str, Any]
@@ -46,6 +46,7 @@ NO_FACTS: Final[Answer] = {
 
 def variation_of(
     unit_of_work: UnitOfWork,
+    remembered: Remembered,
     register: Register,
     budget: BudgetInForce,
     analyzer: str,
@@ -65,7 +66,13 @@ def variation_of(
     if stated.source == "study":
         return _of_study(unit_of_work, budget, analyzer, stated, convert.factor)
     lots = recorded_lots(
-        unit_of_work, register, budget, analyzer, first_day=stated.first_day, last_day=stated.last_day
+        unit_of_work,
+        remembered,
+        register,
+        budget,
+        analyzer,
+        first_day=stated.first_day,
+        last_day=stated.last_day,
     )
     return _of_record(budget.budget, lots, stated, convert.factor)
 

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import threading
 from collections import Counter
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
-from datetime import date
+from datetime import date, datetime
 from typing import Any, Final
 from zoneinfo import ZoneInfo
 
@@ -59,8 +60,60 @@ class RecordedLots:
         return Counter(lot.counts for lot in self.first_looks).most_common(1)[0][0]
 
 
+@dataclass(frozen=True)
+class Said:
+    """What a decision said of one characteristic; without a budget it was not judged."""
+
+    taken_at: datetime
+    budget: tuple[str, int] | None
+    estimate: float = 0.0
+    uncorrected_bias: float = 0.0
+    trusted: bool = False
+    counts: Counts | None = None
+
+
+class Remembered:
+    """Keeps what decisions said, by the hash of their entry, which never says anything else; for threads."""
+
+    MOST: Final = 50_000
+
+    def __init__(self) -> None:
+        self._lock = threading.Lock()
+        self._said: dict[tuple[str, str], Said] = {}
+
+    def of(self, stored: StoredDecision, characteristic: str) -> Said:
+        """Give what a decision said of a characteristic."""
+        key = (stored.entry.hash, characteristic)
+        said = self._said.get(key)
+        if said is None:
+            said = _said_by(stored.entry.content, characteristic)
+            with self._lock:
+                if len(self._said) >= self.MOST:
+                    self._said.clear()
+                self._said[key] = said
+        return said
+
+
+def _said_by(content: Mapping[str, Any], characteristic: str) -> Said:
+    taken_at = read_instant(content["request"]["readings"][0]["taken_at"])
+    for verdict in content["verdicts"]:
+        if verdict["characteristic"] != characteristic or verdict["estimate"] is None:
+            continue
+        samples, reference = verdict["samples"], verdict["budget"]
+        return Said(
+            taken_at,
+            (reference["code"], reference["version"]),
+            verdict["estimate"],
+            verdict["uncorrected_bias"] or 0.0,
+            verdict["conformance_probability"] is not None,
+            Counts((max(1, verdict["readings"] // samples),) * samples),
+        )
+    return Said(taken_at, None)
+
+
 def recorded_lots(
     unit_of_work: UnitOfWork,
+    remembered: Remembered,
     register: Register,
     budget: BudgetInForce,
     analyzer: str,
@@ -72,13 +125,15 @@ def recorded_lots(
 
     Held and rejected lots are among them; a reading that was not trusted is not.
     """
-    scan = _Scan(unit_of_work, register, budget, analyzer)
+    scan = _Scan(unit_of_work, budget, analyzer)
+    zone = ZoneInfo(register.plant.time_zone)
     read = 0
     for stored in _decisions(unit_of_work, budget.document.product):
         read += 1
-        day = scan.day_of(stored)
+        said = remembered.of(stored, budget.document.characteristic)
+        day = said.taken_at.astimezone(zone).date()
         if (first_day is None or day >= first_day) and (last_day is None or day <= last_day):
-            scan.take(stored, day)
+            scan.take(stored, said, day)
     return RecordedLots(
         tuple(reversed(scan.first_looks)),
         tuple(reversed(scan.released)),
@@ -101,61 +156,40 @@ def _decisions(unit_of_work: UnitOfWork, product: str) -> Iterator[StoredDecisio
 class _Scan:
     """Goes through decisions, newest first."""
 
-    def __init__(
-        self, unit_of_work: UnitOfWork, register: Register, budget: BudgetInForce, analyzer: str
-    ) -> None:
+    def __init__(self, unit_of_work: UnitOfWork, budget: BudgetInForce, analyzer: str) -> None:
         self._unit_of_work = unit_of_work
-        self._zone = ZoneInfo(register.plant.time_zone)
-        self._document, self._analyzer = budget.document, analyzer
-        self._corrections: dict[tuple[str, int], float | None] = {}
+        self._analyzer, self._calibration = analyzer, budget.document.calibrations[analyzer]
+        # Most lots were judged on the version in force.
+        own = budget.document.code, budget.version
+        self._corrections: dict[tuple[str, int], float | None] = {own: budget.budget.correction}
         self._decided: set[str] = set()
         self.first_looks: list[RecordedLot] = []
         self.released: list[ReleasedLot] = []
         self.left_out: Counter[str] = Counter()
 
-    def day_of(self, stored: StoredDecision) -> date:
-        """Give the plant's day on which a lot was read."""
-        taken_at = stored.entry.content["request"]["readings"][0]["taken_at"]
-        return read_instant(taken_at).astimezone(self._zone).date()
-
-    def take(self, stored: StoredDecision, day: date) -> None:
+    def take(self, stored: StoredDecision, said: Said, day: date) -> None:
         """Take one decision up."""
         newest = stored.lot not in self._decided
         self._decided.add(stored.lot)
-        verdict = self._verdict(stored.entry.content["verdicts"])
-        if verdict is None:
-            self.left_out["not-judged"] += stored.round == 1
-            return
-        correction = self._correction(verdict["budget"])
-        if correction is None:
-            self.left_out["another-calibration"] += stored.round == 1
+        first = stored.round == 1
+        correction = None if said.budget is None else self._correction(said.budget)
+        if said.budget is None or correction is None:
+            self.left_out["not-judged" if said.budget is None else "another-calibration"] += first
             return
         if newest and stored.outcome == "release":
-            true_value = verdict["estimate"] - verdict["uncorrected_bias"]
-            self.released.append(ReleasedLot(stored.lot, day, true_value))
-        if stored.round > 1:
-            return
-        if verdict["conformance_probability"] is None:
+            self.released.append(ReleasedLot(stored.lot, day, said.estimate - said.uncorrected_bias))
+        if first and not said.trusted:
             self.left_out["not-trusted"] += 1
-            return
-        samples, readings = verdict["samples"], verdict["readings"]
-        counts = Counts((max(1, readings // samples),) * samples)
-        self.first_looks.append(RecordedLot(stored.lot, day, verdict["estimate"] + correction, counts))
+        elif first and said.counts is not None:
+            self.first_looks.append(RecordedLot(stored.lot, day, said.estimate + correction, said.counts))
 
-    def _verdict(self, verdicts: list[dict[str, Any]]) -> dict[str, Any] | None:
-        for verdict in verdicts:
-            if verdict["characteristic"] == self._document.characteristic and verdict["estimate"] is not None:
-                return None if verdict["budget"] is None else verdict
-        return None
-
-    def _correction(self, reference: dict[str, Any]) -> float | None:
+    def _correction(self, reference: tuple[str, int]) -> float | None:
         """Give what a budget takes off the readings; None where it is for another calibration."""
-        key = (reference["code"], reference["version"])
-        if key not in self._corrections:
-            stored = self._unit_of_work.versions.get("budget", *key)
+        if reference not in self._corrections:
+            stored = self._unit_of_work.versions.get("budget", *reference)
             assert stored is not None and stored.evaluation is not None  # a decision rested on it
             document = load(BudgetDocument, stored.document)
-            same = document.calibrations.get(self._analyzer) == self._document.calibrations[self._analyzer]
+            same = document.calibrations.get(self._analyzer) == self._calibration
             budget = budget_from_evaluation(document, stored.evaluation)
-            self._corrections[key] = budget.correction if same else None
-        return self._corrections[key]
+            self._corrections[reference] = budget.correction if same else None
+        return self._corrections[reference]

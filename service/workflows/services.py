@@ -8,18 +8,20 @@ from service.helpers import Helper
 from service.settings import Settings
 from service.store.unit_of_work import Database
 from service.store.writer import Writer
+from service.workflows.recorded_lots import Remembered
 from service.workflows.register import RegisterCache
 
 
 @dataclass(frozen=True)
 class Services:
-    """The database, its one writer, the register of what is in force, and the process that evaluates."""
+    """The database, its one writer, what is in force, the process that evaluates, what decisions said."""
 
     settings: Settings
     database: Database
     writer: Writer
     registers: RegisterCache = field(default_factory=RegisterCache)
     helper: Helper = field(default_factory=Helper)
+    remembered: Remembered = field(default_factory=Remembered)
 
     def close(self) -> None:
         """End the helper, let the writer finish what it took, then let go of the database."""

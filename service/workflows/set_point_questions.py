@@ -18,6 +18,7 @@ from service.workflows.evidence import FaultCollector
 from service.workflows.process_variations import Variation, planned, variation_of
 from service.workflows.register import BudgetInForce, Register, SpecificationInForce
 from service.workflows.rules import decision_rule, planned_counts, tolerance
+from service.workflows.services import Services
 
 Answer = dict[str, Any]
 
@@ -48,7 +49,7 @@ class Question:
 
 
 def question_of(
-    unit_of_work: UnitOfWork, register: Register, request: SetPointRequest, pointer: str = "#"
+    services: Services, unit_of_work: UnitOfWork, request: SetPointRequest, pointer: str = "#"
 ) -> Question:
     """Find what a request is about.
 
@@ -59,6 +60,7 @@ def question_of(
     Conflict
         Nothing is in force for it, or the evidence behind the budget has lapsed.
     """
+    register = services.registers.current(unit_of_work)
     characteristic = _characteristic(register, request, pointer)
     budget = _budget(unit_of_work, register, request)
     requirements = _requirements(register, request, pointer)
@@ -76,6 +78,7 @@ def question_of(
             f"{pointer}/process_variation",
             variation_of,
             unit_of_work,
+            services.remembered,
             register,
             budget,
             request.analyzer,
@@ -207,6 +210,9 @@ def _demand(
     if requirement.judged != "lot_mean":
         fault = Fault(f"{document.code} judges {requirement.judged}", supported=False)
         raise NotSupported("Not supported yet: a set point where single items are judged.", faults=(fault,))
+    if requirement.decision_rule.largest_lot_risk is not None:
+        fault = Fault(f"{document.code} caps the risk of the lot as a whole", supported=False)
+        raise NotSupported("Not supported yet: a set point under a cap on the lot's risk.", faults=(fault,))
     domain = characteristic.natural_domain
     rule = register.rule(specification, requirement, budget, planned_counts(budget.budget.procedure))
     return Demand(

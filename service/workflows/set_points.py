@@ -18,8 +18,9 @@ from service.workflows.set_point_questions import Answer, Question, question_of,
 
 CAUTION: Final = (
     "These figures speak of the named characteristic only, for a process that varies as stated and for the "
-    "evidence of the budget. They replace no verdict on a lot; local regulations and the plant's authorised "
-    "person decide."
+    "evidence of the budget. Holds that are not about its value (flags, replicates that disagree, other "
+    "characteristics) are not counted. They replace no verdict on a lot; local regulations and the plant's "
+    "authorised person decide."
 )
 
 MOST_DECIMALS: Final = 12
@@ -37,8 +38,7 @@ def ask(services: Services, actor: Actor, request: SetPointRequest) -> Answer:
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        register = services.registers.current(unit_of_work)
-        question = question_of(unit_of_work, register, request)
+        question = question_of(services, unit_of_work, request)
     collector = FaultCollector()
     production = collector.attempt("#", question.production)
     found = None if production is None else collector.attempt("#", set_points, production, question.wanted)

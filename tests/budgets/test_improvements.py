@@ -162,7 +162,7 @@ def test_what_cannot_be_had_is_told_apart_and_not_paired(situation):
     found = improvements(situation(), [*OPTIONS[:2], wrong])
     (impossible,) = found.impossible
     assert impossible.options == ("wrong",)
-    assert "there are repeatability, sampling" in str(impossible.error)
+    assert "there are repeatability, sampling" in impossible.reason
     assert {item.options for item in found.ranked} == {
         ("four-readings",),
         ("two-samples",),

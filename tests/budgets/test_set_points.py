@@ -506,6 +506,26 @@ def test_a_direction_without_a_limit_or_without_a_need_is_refused(production):
 # --- the planned measurement ---------------------------------------------------------------------------
 
 
+@pytest.mark.parametrize("treatment", ["corrected", "in_guard_band"])
+@pytest.mark.parametrize("rounds", [1, 2])
+def test_limits_are_those_that_approval_compiles(a_budget, rounds, treatment):
+    demand = replace(CUSTOMER, decision_rule=replace(RISK, rounds=rounds))
+    budget = a_budget(bias_treatment=treatment)
+    found = planned_measurement(budget, LotProcedure(1, 2, looks=rounds), (demand,))
+    for look in range(rounds):
+        rule = ReleaseRule.compile(
+            budget,
+            Counts((2,) * (look + 1)),
+            demand.tolerance,
+            demand.decision_rule,
+            risk_per_look=risk_per_look_of(budget, demand.tolerance, demand.decision_rule),
+        )
+        assert found.limits[look].upper_acceptance_limit == pytest.approx(
+            rule.upper_acceptance_limit, rel=1e-14
+        )
+        assert found.limits[look].upper_rejection_limit == rule.upper_tolerance_limit
+
+
 def test_demands_that_exclude_each_other_accept_nothing(a_budget):
     high = Demand("high", Tolerance(3.3, None), RISK)
     with pytest.raises(EmptyAcceptanceError, match="another one does not"):
