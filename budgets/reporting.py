@@ -232,7 +232,8 @@ def rule_text(rule: DecisionRule) -> str:
     >>> rule_text(DecisionRule("guarded_by_specific_risk", largest_risk=0.05))
     'guarded acceptance with a specific risk of at most 5 %'
     """
-    return _kind_text(rule) + (", and guarded rejection" if rule.rejection == "guarded" else "")
+    text = _kind_text(rule) + (", and guarded rejection" if rule.rejection == "guarded" else "")
+    return text if rule.rounds == 1 else f"{text}, held over {rule.rounds} rounds"
 
 
 def _kind_text(rule: DecisionRule) -> str:

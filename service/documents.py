@@ -652,3 +652,13 @@ class DecisionRequest:
     readings: tuple[Reading, ...]
     specifications: tuple[str, ...] | None = None
     operator: str | None = None
+
+
+@dataclass(frozen=True)
+class RetestRequest:
+    """Further readings of a lot on hold, to be judged together with all earlier ones."""
+
+    line: str
+    units: Mapping[str, str]
+    readings: tuple[Reading, ...]
+    operator: str | None = None

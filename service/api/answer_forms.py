@@ -224,8 +224,9 @@ _JUDGED: Form = {
     "lot": _TEXT,
     "product": _CODE,
     "line": _CODE,
-    "round": _WHOLE,
-    "rounds_left": _WHOLE,
+    "round": {**_WHOLE, "description": "1 for the first decision on the lot."},
+    "rounds_left": {**_WHOLE, "description": "How often the lot may still be read again."},
+    "joins": _list(_TEXT, "The earlier decisions whose readings were judged together with these."),
     "outcome": _OUTCOME,
     "reasons": _list(ref("Reason")),
     "verdicts": _list(ref("Verdict")),
@@ -432,6 +433,8 @@ _LOT: Form = {
     "recorded_at": _INSTANT,
 }
 
+_LOT_DECISION: Form = {"id": _TEXT, "round": _WHOLE, "outcome": _OUTCOME, "recorded_at": _INSTANT}
+
 _VERIFICATION = _object(
     "Whether the record is whole.",
     {
@@ -554,7 +557,15 @@ ANSWERS: dict[str, Form] = {
     "BudgetFigures": _BUDGET_FIGURES,
     "BudgetComparison": _BUDGET_COMPARISON,
     "AcceptanceLimits": _ACCEPTANCE_LIMITS,
-    "Lot": _object("How a lot stands.", {**_LOT, "last_decision": ref("Decision")}),
+    "Lot": _object(
+        "How a lot stands.",
+        {
+            **_LOT,
+            "rounds_left": {**_WHOLE, "description": "How often the lot may still be read again."},
+            "decisions": _list(_object("A decision on the lot.", _LOT_DECISION), "In their order."),
+            "last_decision": ref("Decision"),
+        },
+    ),
     "LotPage": page_of(_object("How a lot stands.", _LOT)),
     "Verification": _VERIFICATION,
     **_versions("SpecificationVersion", "Specification"),

@@ -6,10 +6,11 @@ from flask import Response
 from flask_smorest import Blueprint
 
 from service.api import requests
-from service.api.answers import answer, listed
+from service.api.answers import answer, listed, recorded
 from service.api.decisions import OUTCOMES
 from service.api.operations import PAGING, Operation, describe, parameter
-from service.workflows import lots
+from service.documents import RetestRequest
+from service.workflows import lots, retests
 
 blueprint = Blueprint("lots", __name__, description="How lots stand.")
 
@@ -31,3 +32,21 @@ def get_lot(product: str, lot: str) -> Response:
     """Say how a lot stands, with the last decision on it."""
     requests.query()
     return answer(lots.get(requests.services(), requests.actor(), product, lot))
+
+
+@describe(
+    blueprint,
+    "/v1/lots/<code:product>/<lot:lot>/retests",
+    "POST",
+    Operation("Decision", (201,), RetestRequest, key="required", problems=(409, 422)),
+)
+def retest_lot(product: str, lot: str) -> Response:
+    """Judge a lot on hold with further readings, joined with all earlier ones, and record the decision.
+
+    No answer, a time-out or a 5xx means hold; the same request under the same key finds the truth.
+    """
+    further = requests.body(RetestRequest)
+    result = retests.retest(
+        requests.services(), requests.actor(), product, lot, further, requests.recording()
+    )
+    return recorded(result)

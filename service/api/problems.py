@@ -69,6 +69,8 @@ CONFLICTS: dict[str, str] = {
     "evidence-changed": "The evidence of a budget has changed since its approval",
     "evidence-lapsed": "The evidence does not serve any more",
     "lot-already-judged": "The lot is judged already",
+    "lot-not-held": "Only a lot on hold is read again",
+    "no-rounds-left": "The lot was read as often as its rule plans",
     "not-in-this-state": "The version is in another state",
     "nothing-in-force": "Nothing is in force",
     "open-version-exists": "A version is open already",

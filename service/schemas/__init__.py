@@ -14,7 +14,7 @@ from service.errors import Fault, InvalidRequest
 from service.schemas.acts import ExtensionSchema, SignedActSchema
 from service.schemas.base import StrictSchema, got, refusal
 from service.schemas.budgets import BudgetDocumentSchema
-from service.schemas.decisions import DecisionRequestSchema
+from service.schemas.decisions import DecisionRequestSchema, RetestRequestSchema
 from service.schemas.fields import trimmed_text
 from service.schemas.master import (
     AnalyzerSchema,
@@ -56,6 +56,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.ImprovementsRequest: ImprovementsRequestSchema(),
     documents.GiveawayRequest: GiveawayRequestSchema(),
     documents.DecisionRequest: DecisionRequestSchema(),
+    documents.RetestRequest: RetestRequestSchema(),
     documents.SignedAct: SignedActSchema(),
 }
 

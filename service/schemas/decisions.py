@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from service.documents import DecisionRequest, Reading
+from service.documents import DecisionRequest, Reading, RetestRequest
 from service.schemas.base import StrictSchema
 from service.schemas.fields import ByKey, Code, Instant, Name, Number, Parts, Text
 
@@ -50,3 +50,19 @@ class DecisionRequestSchema(StrictSchema):
     )
     units = ByKey(Code(), Text(32), least=1, most=100, required=True)
     readings = Parts(ReadingSchema, least=1, most=2500, required=True)
+
+
+class RetestRequestSchema(StrictSchema):
+    """Further readings of a lot on hold; the lot keeps the specifications that it was judged against."""
+
+    loads_to = RetestRequest
+    line = Code(required=True, about="The line that acts.")
+    operator = Text(64, allow_none=True, load_default=None)
+    units = ByKey(Code(), Text(32), least=1, most=100, required=True)
+    readings = Parts(
+        ReadingSchema,
+        least=1,
+        most=2500,
+        required=True,
+        about="New ones only. The same name of a sample is the same sample; new samples have new names.",
+    )

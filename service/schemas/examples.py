@@ -299,6 +299,22 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
             },
         ],
     },
+    documents.RetestRequest: {
+        "line": "tower-1",
+        "operator": "shift 2",
+        "units": {"moisture": "%"},
+        "readings": [
+            {
+                **_SCAN,
+                "sample": "2",
+                "taken_at": f"2026-03-02T06:31:{second}+01:00",
+                "values": {"moisture": moisture},
+                "flags": {"distance-from-calibration-set": 1.6},
+                "influences": {"sample_temperature": 24.1},
+            }
+            for second, moisture in (("10.020", 3.02), ("44.310", 3.05))
+        ],
+    },
     documents.SignedAct: {
         "reason": "limits agree with the contract",
         "signature": {"password": "the person's own"},

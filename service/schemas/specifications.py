@@ -50,7 +50,12 @@ class DecisionRuleSchema(StrictSchema):
     largest_standard_uncertainty = Number(above=0, allow_none=True, load_default=None)
     least_capability_index = Number(above=0, allow_none=True, load_default=None)
     rejection = Choice("at_tolerance_limit", "guarded", load_default="at_tolerance_limit")
-    rounds = Count(least=1, most=100, load_default=1, about="More than 1 is not supported yet.")
+    rounds = Count(
+        least=1,
+        most=10,
+        load_default=1,
+        about="How often a lot may be judged while it is held; the risk is that of all looks together.",
+    )
     replicate_level = Number(
         least=0.5,
         most=0.999999,
@@ -79,12 +84,6 @@ class DecisionRuleSchema(StrictSchema):
         about="Largest risk that a released lot misses any limit of the specification.",
     )
 
-    @validates_schema(skip_on_field_errors=False)
-    def _one_round(self, data: dict[str, Any], **_: Any) -> None:
-        if data.get("rounds", 1) > 1:
-            wrong = Wrong("not supported yet: further rounds", "1", supported=False)
-            raise ValidationError({"rounds": [wrong]})
-
     @validates_schema(skip_on_field_errors=True)
     def _members_of_kind(self, data: dict[str, Any], **_: Any) -> None:
         kind = data["kind"]
@@ -103,6 +102,9 @@ class DecisionRuleSchema(StrictSchema):
         if kind == "simple" and data["rejection"] == "guarded":
             wrong = Wrong("a simple rule has no guard band to mirror", "at_tolerance_limit")
             wrongs["rejection"] = [wrong]
+        if kind == "simple" and data["rounds"] > 1:
+            wrong = Wrong("a simple rule holds nothing about the value, so nothing is read again", "1")
+            wrongs["rounds"] = [wrong]
         if wrongs:
             raise ValidationError(dict(wrongs))
 

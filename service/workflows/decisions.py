@@ -51,16 +51,17 @@ def decide(
         answer = judge(register, decision_request, unit_of_work.now(decision_request.line))
         content = {**answer, "request": said}
         entry = unit_of_work.append(decision_request.line, "decision", actor.principal, content)
-        _project(unit_of_work, decision_request, content, entry)
+        project(unit_of_work, decision_request, content, entry)
         return entry
 
     recorded = record(services, actor, request, {decision_request.line}, perform)
     return answer_of(recorded.entry), recorded.earlier
 
 
-def _project(
+def project(
     unit_of_work: UnitOfWork, request: DecisionRequest, content: dict[str, Any], entry: Entry
 ) -> None:
+    """Keep what look-ups need of a decision: where its lot stands, and that its readings are used."""
     place = {"product": request.product, "lot": request.lot, "outcome": content["outcome"], "entry": entry}
     unit_of_work.decisions.add(round=content["round"], **place)
     unit_of_work.lots.upsert(line=request.line, rounds=content["round"], **place)
@@ -72,9 +73,15 @@ def _check_unjudged(unit_of_work: UnitOfWork, request: DecisionRequest) -> None:
     if lot is not None:
         raise Conflict(
             "lot-already-judged",
-            f"Lot {request.lot} of {request.product} was judged: {lot.outcome}.",
+            f"Lot {request.lot} of {request.product} was judged: {lot.outcome}. Further readings of a lot on "
+            "hold go to its retests.",
             link=f"/v1/decisions/{lot.chain}.{lot.sequence}",
         )
+    check_unused(unit_of_work, request)
+
+
+def check_unused(unit_of_work: UnitOfWork, request: DecisionRequest) -> None:
+    """Refuse readings that were judged before, in any lot. Raises Conflict."""
     used = unit_of_work.readings.find([reading_identity(reading) for reading in request.readings])
     if used:
         first = used[0]

@@ -14,6 +14,8 @@ from budgets.sureness import Sureness, sureness
 from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.workflows.calendar import NOTICE
+from service.workflows.earlier_looks import FIRST_LOOK, EarlierLooks
+from service.workflows.further_looks import changed_terms, looks_after, next_look
 from service.workflows.holds import Hold
 from service.workflows.lot_risk import LotRisk, lot_risk
 from service.workflows.measured import Measured, measure
@@ -23,7 +25,7 @@ from service.workflows.replicate_checks import judge_replicates, level_of
 from service.workflows.request_checks import check_request
 from service.workflows.rule_figures import FIGURES, figures_of
 from service.workflows.rules import rule_here
-from service.workflows.wording import about_the_value, display
+from service.workflows.wording import IN_GUARD_BAND, about_the_value, display
 
 # The worst verdict decides the lot.
 SEVERITY: Final = {"release": 0, "hold": 1, "reject": 2}
@@ -54,14 +56,33 @@ class Weighed:
 
 @dataclass(frozen=True)
 class Ruling:
-    """One verdict with the reasons that led to it."""
+    """One verdict with the reasons that led to it.
+
+    ``rounds_left`` says how often it lets the lot be read again, ``next_look`` what to read then.
+    """
 
     verdict: dict[str, Any]
     reasons: tuple[dict[str, Any], ...]
+    rounds_left: int = 1
+    next_look: str | None = None
+
+    def with_next_look(self) -> Ruling:
+        """Have the reason that is about the value say what to read next."""
+        if self.next_look is None:
+            return self
+        reasons = tuple(
+            {**reason, "next": self.next_look} if reason["code"] == IN_GUARD_BAND else reason
+            for reason in self.reasons
+        )
+        return replace(self, reasons=reasons)
 
 
-def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dict[str, Any]:
+def judge(
+    register: Register, request: DecisionRequest, recorded_at: str, earlier: EarlierLooks = FIRST_LOOK
+) -> dict[str, Any]:
     """Judge a lot by what is in force; gives the answer but for its place in the record.
+
+    The readings of a further look are joined with all those before it.
 
     Raises
     ------
@@ -69,11 +90,12 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
         The request is not understood; see request_checks and measured.
     """
     check_request(register, request, read_instant(recorded_at))
+    request = earlier.joined(register, request)
     judged: dict[str, Measured] = {}
 
     def measured(code: str) -> Measured:
         if code not in judged:
-            judged[code] = measure(register, request, code, recorded_at)
+            judged[code] = measure(register, request, code, recorded_at, earlier.counted(code).readings)
         return judged[code]
 
     codes = request.specifications
@@ -90,7 +112,14 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
             continue
         not_judged.update(dict.fromkeys(specification.document.not_judged))
         weighed = [
-            _weigh(register, specification, requirement, measured(requirement.characteristic), recorded_at)
+            _weigh(
+                register,
+                specification,
+                requirement,
+                measured(requirement.characteristic),
+                recorded_at,
+                earlier,
+            )
             for requirement in specification.document.requires
         ]
         risk = lot_risk(
@@ -100,11 +129,11 @@ def judge(register: Register, request: DecisionRequest, recorded_at: str) -> dic
             recorded_at,
         )
         together.append(risk.figures)
-        rulings += [_rule_on(register, specification, each, risk) for each in weighed]
+        rulings += [_rule_on(register, specification, each, risk, earlier) for each in weighed]
     if not codes:
         rulings.append(_nothing_in_force(None))
     notices = _notices(judged, recorded_at)
-    return _answer(request, rulings, together, tuple(not_judged), recorded_at, notices)
+    return _answer(request, rulings, together, tuple(not_judged), recorded_at, notices, earlier)
 
 
 def _answer(
@@ -114,16 +143,24 @@ def _answer(
     not_judged: tuple[str, ...],
     recorded_at: str,
     notices: list[dict[str, Any]],
+    earlier: EarlierLooks,
 ) -> dict[str, Any]:
     outcomes = [ruling.verdict["outcome"] for ruling in rulings]
+    outcome = max(outcomes, key=SEVERITY.__getitem__)
+    # A lot that is held for several reasons can be read again only as often as each of them allows.
+    held = [ruling for ruling in rulings if ruling.verdict["outcome"] == "hold"]
+    rounds_left = min(ruling.rounds_left for ruling in held) if outcome == "hold" else 0
+    if rounds_left > 0:
+        rulings = [ruling.with_next_look() for ruling in rulings]
     return {
         "recorded_at": recorded_at,
         "lot": request.lot,
         "product": request.product,
         "line": request.line,
-        "round": 1,
-        "rounds_left": 0,
-        "outcome": max(outcomes, key=SEVERITY.__getitem__),
+        "round": earlier.round,
+        "rounds_left": rounds_left,
+        "joins": list(earlier.identities),
+        "outcome": outcome,
         "reasons": [reason for ruling in rulings for reason in ruling.reasons],
         "verdicts": [ruling.verdict for ruling in rulings],
         "joint_conformance": together,
@@ -142,8 +179,9 @@ def _weigh(
     requirement: Requirement,
     measured: Measured,
     recorded_at: str,
+    earlier: EarlierLooks,
 ) -> Weighed:
-    rule, limits, unusable = _release_rule(register, specification, requirement, measured)
+    rule, limits, unusable = _release_rule(register, specification, requirement, measured, earlier)
     level = level_of(requirement.decision_rule, register.plant)
     repeated = judge_replicates(measured.replicates, level)
     lapsed = lapsed_prior(register, specification, requirement.characteristic, recorded_at)
@@ -158,7 +196,11 @@ def _weigh(
 
 
 def _rule_on(
-    register: Register, specification: SpecificationInForce, weighed: Weighed, risk: LotRisk
+    register: Register,
+    specification: SpecificationInForce,
+    weighed: Weighed,
+    risk: LotRisk,
+    earlier: EarlierLooks,
 ) -> Ruling:
     requirement, measured, rule = weighed.requirement, weighed.measured, weighed.rule
     characteristic = register.characteristics[specification.document.product, requirement.characteristic]
@@ -193,7 +235,12 @@ def _rule_on(
     if rule is not None and estimate is not None and not holds and outcome != "release":
         value_hold = about_the_value(rule, estimate, outcome, characteristic.unit)
         reasons.append(_reason(value_hold, requirement.characteristic, specification))
-    return Ruling(verdict, tuple(reasons))
+    looks = looks_after(earlier, requirement, measured, compared=judgement is not None)
+    left = requirement.decision_rule.rounds - looks
+    further = None
+    if judgement is not None and judgement.outcome == "hold" and not holds and left > 0:
+        further = next_look(register, specification, requirement, measured, looks)
+    return Ruling(verdict, tuple(reasons), left, further)
 
 
 def _release_rule(
@@ -201,6 +248,7 @@ def _release_rule(
     specification: SpecificationInForce,
     requirement: Requirement,
     measured: Measured,
+    earlier: EarlierLooks,
 ) -> tuple[ReleaseRule | None, str | None, tuple[Hold, ...]]:
     """Find the stored rule for what was done, as it is at these readings, and how its limits are to be read.
 
@@ -211,9 +259,11 @@ def _release_rule(
         return None, None, ()
     assert measured.budget is not None and measured.done is not None and measured.estimate is not None
     try:
-        rule = register.rule(specification, requirement, measured.budget, measured.done)
+        looks = looks_after(earlier, requirement, measured, compared=True)
+        rule = register.rule(specification, requirement, measured.budget, measured.done, looks)
         here = rule_here(rule, measured.means, measured.estimate, measured.sample_means)
-        return here, rule.acceptance_limits, ()
+        changed = changed_terms(earlier, specification, requirement, measured.budget, here)
+        return here, rule.acceptance_limits, changed
     except BudgetsError as error:
         hold = Hold(
             "cannot-be-proved", error.message, "Read as the procedure plans. A person decides on this lot."

@@ -11,6 +11,7 @@ from service.store.rows import StoredLot
 from service.workflows.decisions import answer_of
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import Page
+from service.workflows.retests import MOST_ROUNDS
 from service.workflows.services import Services
 
 
@@ -21,9 +22,24 @@ def get(services: Services, actor: Actor, product: str, lot: str) -> dict[str, A
         stored = unit_of_work.lots.get(product, lot)
         if stored is None:
             raise NotFound(f"No lot {lot!r} of {product!r} was judged; a lot without a decision is on hold.")
-        decision = unit_of_work.decisions.get(_decision(stored))
-    assert decision is not None  # a lot's row and its decision are written in one transaction
-    return {**_summary(stored), "last_decision": answer_of(decision.entry)}
+        decisions = unit_of_work.decisions.list(product=product, lot=lot, limit=MOST_ROUNDS)
+    decisions.sort(key=lambda decision: decision.round)
+    # A lot's row and its decision are written in one transaction.
+    last = answer_of(decisions[-1].entry)
+    return {
+        **_summary(stored),
+        "rounds_left": last["rounds_left"],
+        "decisions": [
+            {
+                "id": decision.identity,
+                "round": decision.round,
+                "outcome": decision.outcome,
+                "recorded_at": decision.recorded_at,
+            }
+            for decision in decisions
+        ],
+        "last_decision": last,
+    }
 
 
 def listing(

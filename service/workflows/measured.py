@@ -49,8 +49,12 @@ class Measured:
     replicates: tuple[Replicates, ...] = ()
 
 
-def measure(register: Register, request: DecisionRequest, code: str, recorded_at: str) -> Measured:
+def measure(
+    register: Register, request: DecisionRequest, code: str, recorded_at: str, seen: int = 0
+) -> Measured:
     """Join the readings of one characteristic and find every reason not to trust them.
+
+    The first ``seen`` of them were judged by earlier looks; the procedure counts for the others.
 
     Raises
     ------
@@ -96,7 +100,8 @@ def measure(register: Register, request: DecisionRequest, code: str, recorded_at
         estimate = _estimate(budget, means)
         holds.extend(_calibration_holds(budget, scans))
         holds.extend(_range_holds(register, budget, by_channel, estimate))
-        holds.extend(_count_holds(budget, [sum(r.sample == name for r in scans) for name in samples]))
+        if seen < len(scans):
+            holds.extend(_count_holds(budget, list(Counter(r.sample for r in scans[seen:]).values())))
         holds.extend(_lapse_holds(budget, recorded_at))
     return Measured(
         budget,

@@ -5,9 +5,11 @@ from __future__ import annotations
 import threading
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from typing import Any, Final
 
 from budgets.budget import Budget
+from budgets.item_rules import LotSpreadRule
 from budgets.production_priors import ProductionPrior
 from budgets.propagation import Counts
 from budgets.reading_patterns import ReadingPattern
@@ -83,8 +85,12 @@ class Register:
         requirement: Requirement,
         budget: BudgetInForce,
         done: Counts | ReadingPattern,
+        looks: int = 1,
     ) -> AnyRule:
-        """Give the stored rule for what was done; compile it from the stored budget where none was stored."""
+        """Give the stored rule for what was done; compile it from the stored budget where none was stored.
+
+        ``looks`` says over how many looks it was done: the procedure counts for each of them.
+        """
         characteristic = self.characteristics[budget.document.product, requirement.characteristic]
         key = RuleKey(
             specification=specification.document.code,
@@ -96,8 +102,17 @@ class Register:
         )
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
-            prior = self._prior(key) if requirement.decision_rule.prior is not None else None
-            rule = compile_rule(budget.budget, done, requirement, characteristic, prior=prior)
+            used = budget.budget
+            if looks > 1:
+                used = replace(used, procedure=used.procedure.joined(looks))
+            rule = compile_rule(
+                used,
+                done,
+                requirement,
+                characteristic,
+                risk_per_look=self.risks_per_look.get(_pair(key)),
+                prior=self._prior(key) if requirement.decision_rule.prior is not None else None,
+            )
             if len(self.compiled) < MOST_COMPILED:
                 self.compiled[key] = rule
         return rule
@@ -136,6 +151,20 @@ class Register:
             if len(self.shared) < MOST_COMPILED:
                 self.shared[key] = errors
         return errors
+
+    @cached_property
+    def risks_per_look(self) -> Mapping[RuleKey, float | None]:
+        """The risk that each look may take, found at approval, by what does not depend on what was done."""
+        # Rules on the items of a lot have one round.
+        return {
+            _pair(key): None if isinstance(rule, LotSpreadRule) else rule.risk_per_look
+            for key, rule in self.rules.items()
+        }
+
+
+def _pair(key: RuleKey) -> RuleKey:
+    """Give what all rules of a budget and a requirement have in common."""
+    return replace(key, counts="")
 
 
 def _done_text(done: Counts | ReadingPattern) -> str:

@@ -27,6 +27,7 @@ FIGURES: Final = (
     "within_domain",
     "measurement_capability_index",
     "largest_specific_risk",
+    "risk_per_look",
 )
 
 
@@ -52,6 +53,7 @@ def figures_of(rule: ReleaseRule, acceptance_limits: str | None) -> dict[str, An
         "within_domain": rule.truncated_to is not None,
         "measurement_capability_index": rule.measurement_capability_index,
         "largest_specific_risk": rule.largest_specific_risk,
+        "risk_per_look": rule.risk_per_look,
     }
 
 

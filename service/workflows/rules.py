@@ -14,6 +14,7 @@ from budgets.derived_release import DerivedReleaseRule, release_rule_kind
 from budgets.error_distributions import Tabulated
 from budgets.errors import LimitsError, ModelError, NotSupportedError
 from budgets.item_rules import ItemRequirement, LotSpreadRule, item_rule
+from budgets.planned_looks import risk_per_look_of
 from budgets.production_priors import ProductionPrior
 from budgets.production_release import release_rule_over_production
 from budgets.propagation import Counts
@@ -190,6 +191,13 @@ def compile_rule(
     )
 
 
+def risk_of_looks(budget: Budget, requirement: Requirement, characteristic: Characteristic) -> float | None:
+    """Find the risk that each look of a rule of several rounds may take; None for one round."""
+    return risk_per_look_of(
+        budget, tolerance(requirement, characteristic), decision_rule(requirement.decision_rule)
+    )
+
+
 def stored_rule(numbers: Mapping[str, Any]) -> AnyRule:
     """Rebuild a rule from its stored numbers."""
     if release_rule_kind(numbers) == "fixed":
@@ -234,7 +242,10 @@ def compile_pair(
     """
     collector = FaultCollector()
     planned = planned_counts(budget.procedure)
-    collector.attempt("#", compile_rule, budget, planned, requirement, characteristic, prior=prior)
+    options: dict[str, Any] = {"prior": prior}
+    options["risk_per_look"] = collector.attempt("#", risk_of_looks, budget, requirement, characteristic)
+    if not collector.faults:
+        collector.attempt("#", compile_rule, budget, planned, requirement, characteristic, **options)
     if collector.faults:
         detail = "; ".join(fault.detail for fault in collector.faults)
         collector.faults.clear()
@@ -243,7 +254,7 @@ def compile_pair(
     rules = {}
     for counts in dict.fromkeys((planned, *islice(balanced_counts(budget.procedure), MOST_STORED))):
         try:
-            rule = compile_rule(budget, counts, requirement, characteristic, prior=prior)
+            rule = compile_rule(budget, counts, requirement, characteristic, **options)
         except (LimitsError, ModelError):
             # Also where fewer readings leave so much uncertainty that the model curves within it.
             continue

@@ -21,6 +21,7 @@ from service.workflows.holds import Hold
 
 # Every double is told from its neighbours by then.
 _MOST_DECIMALS: Final = 17
+IN_GUARD_BAND: Final = "in-guard-band"
 _NO_FURTHER_READINGS: Final = (
     "The rule plans no further readings. A person decides, with an analysis by the laboratory."
 )
@@ -90,7 +91,7 @@ def about_the_value(rule: ReleaseRule, estimate: float, outcome: str, unit: str)
     acceptance_limit = getattr(rule, f"{side}_acceptance_limit")
     shown = _told_apart(rule, estimate, acceptance_limit)
     return Hold(
-        "in-guard-band",
+        IN_GUARD_BAND,
         f"{shown} {unit} is within {_tolerance_text(rule, side, unit)} but {relation} "
         f"the acceptance limit {_acceptance_text(acceptance_limit, shown, side)} {unit}.",
         _NO_FURTHER_READINGS,
@@ -107,7 +108,7 @@ def _not_proved(rule: ReleaseRule, estimate: float, side: str, unit: str) -> Hol
         else f"only beyond the rejection limit {_rejection_text(limit, shown, side)} {unit} that is proved"
     )
     return Hold(
-        "in-guard-band",
+        IN_GUARD_BAND,
         f"{shown} {unit} is not within {_tolerance_text(rule, side, unit)}, but {beyond}.",
         _NO_FURTHER_READINGS,
     )

@@ -132,7 +132,6 @@ _RULE = "requires/0/decision_rule"
 @pytest.mark.parametrize(
     ("kind", "path", "value"),
     [
-        (Specification, f"{_RULE}/rounds", 2),
         (documents.Study, "rows", [["P01", 1, 3.1]] * 20_001),
     ],
 )

@@ -59,7 +59,7 @@ def test_dump_keeps_every_member_of_the_example(kind: type[Any]) -> None:
             assert len(given) == len(kept)
             for one, other in zip(given, kept, strict=True):
                 covered(one, other)
-        elif not (isinstance(given, str) and given.startswith("2026-03-02T06:12")):
+        elif not (isinstance(given, str) and given.startswith("2026-03-02T06:")):
             assert given == kept
 
     covered(EXAMPLES[kind], dumped)
