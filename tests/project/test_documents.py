@@ -7,6 +7,7 @@ other ones every day.
 
 from __future__ import annotations
 
+import copy
 import json
 import os
 import re
@@ -116,6 +117,30 @@ def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
     )
     yield "problem", caller.call("POST", "/v1/decisions", "line", wrong)
     yield "lot", caller.call("GET", f"/v1/lots/{plant.PRODUCT}/W26-hold", "line")
+    yield from looks_of(caller)
+
+
+def looks_of(caller: Caller) -> Iterator[tuple[str, Any]]:
+    """Judge a lot in two rounds: held, read again, and where it stands then."""
+    document = next(each for each in plant.specifications() if each["code"] == "customer-b")
+    document = copy.deepcopy(document) | {"code": "customer-two-rounds"}
+    for requirement in document["requires"]:
+        requirement["decision_rule"]["rounds"] = 2
+    caller.call("POST", "/v1/specifications", "engineer", document)
+    version = f"/v1/specifications/{document['code']}/versions/1"
+    caller.call("POST", f"{version}/submit", "engineer")
+    assert caller.call("POST", f"{version}/approve", "approver", caller.signed())["state"] == "in_force"
+    readings = [reading_of(value, number) for value, number in ((3.02, 51), (3.06, 52))]
+    request = plant.decision_request("W26-twice", readings) | {"specifications": [document["code"]]}
+    held = caller.call("POST", "/v1/decisions", "line", request)
+    assert (held["outcome"], held["rounds_left"]) == ("hold", 1)
+    again = plant.decision_request(
+        "W26-twice", [reading_of(value, number, sample="2") for value, number in ((2.90, 53), (2.93, 54))]
+    )
+    again = {name: again[name] for name in ("line", "units", "readings")}
+    retested = caller.call("POST", f"/v1/lots/{plant.PRODUCT}/W26-twice/retests", "line", again)
+    yield "decision-retest", retested
+    yield "lot-read-again", caller.call("GET", f"/v1/lots/{plant.PRODUCT}/W26-twice", "line")
 
 
 @pytest.fixture(scope="module")
