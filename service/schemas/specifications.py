@@ -105,6 +105,9 @@ class DecisionRuleSchema(StrictSchema):
         if kind == "simple" and data["rounds"] > 1:
             wrong = Wrong("a simple rule holds nothing about the value, so nothing is read again", "1")
             wrongs["rounds"] = [wrong]
+        if kind == "guarded_by_global_risk" and data["rounds"] > 1:
+            wrong = Wrong("not supported yet: further rounds of a rule by global risk", "1", supported=False)
+            wrongs["rounds"] = [wrong]
         if wrongs:
             raise ValidationError(dict(wrongs))
 

@@ -25,6 +25,12 @@ _A_PERSON: Final = "A person decides, with an analysis by the laboratory."
 _LIKELY, _HOPELESS = 0.5, 0.05
 
 
+def stated_rule(requirement: Requirement) -> dict[str, Any]:
+    """Write the decision rule as a verdict shows it; a prior has a member of its own there."""
+    stated = vars(requirement.decision_rule)
+    return {name: value for name, value in stated.items() if value is not None and name != "prior"}
+
+
 def looks_after(
     earlier: EarlierLooks, requirement: Requirement, measured: Measured, *, compared: bool
 ) -> int:
@@ -41,9 +47,8 @@ def changed_terms(
     rule: ReleaseRule,
 ) -> tuple[Hold, ...]:
     """Hold where a look by other terms counted: the risk per look is for looks by the same ones."""
-    stated = {name: value for name, value in vars(requirement.decision_rule).items() if value is not None}
     ours: dict[str, Any] = {
-        "decision_rule": stated,
+        "decision_rule": stated_rule(requirement),
         "lower_tolerance_limit": rule.lower_tolerance_limit,
         "upper_tolerance_limit": rule.upper_tolerance_limit,
         "judged": requirement.judged,

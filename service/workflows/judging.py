@@ -15,7 +15,7 @@ from service.documents import DecisionRequest, Requirement
 from service.ledger import read_instant
 from service.workflows.calendar import NOTICE
 from service.workflows.earlier_looks import FIRST_LOOK, EarlierLooks
-from service.workflows.further_looks import changed_terms, looks_after, next_look
+from service.workflows.further_looks import changed_terms, looks_after, next_look, stated_rule
 from service.workflows.holds import Hold
 from service.workflows.lot_risk import LotRisk, lot_risk
 from service.workflows.measured import Measured, measure
@@ -224,7 +224,7 @@ def _rule_on(
         "prior": prior_figures(rule, requirement.decision_rule, estimate, judged=judgement is not None),
         "judged": requirement.judged,
         "items": _items(rule, requirement),
-        "decision_rule": _decision_rule(requirement),
+        "decision_rule": stated_rule(requirement),
         "budget": None if measured.budget is None else _budget_reference(measured.budget),
         "samples": measured.samples,
         "readings": measured.readings,
@@ -356,12 +356,6 @@ def _reference(specification: SpecificationInForce) -> dict[str, Any]:
 
 def _budget_reference(budget: BudgetInForce) -> dict[str, Any]:
     return {"code": budget.document.code, "version": budget.version, "digest": budget.digest}
-
-
-def _decision_rule(requirement: Requirement) -> dict[str, Any]:
-    stated = vars(requirement.decision_rule)
-    # The prior has a member of its own in the verdict.
-    return {name: value for name, value in stated.items() if value is not None and name != "prior"}
 
 
 def _reason(hold: Hold, characteristic: str, specification: SpecificationInForce) -> dict[str, Any]:

@@ -218,3 +218,12 @@ def test_a_risk_out_of_reach_says_what_is_impossible(callers: Callers) -> None:
 def test_items_and_several_rounds_are_not_supported_beside_it(callers: Callers) -> None:
     response = drafted(callers, with_rule({**GLOBAL, "prior": DECLARED, "rounds": 2}))
     assert "rounds" in next(iter(faults(response)))
+
+
+def test_a_rule_by_global_risk_has_one_round(callers: Callers) -> None:
+    """Its guard band holds the risk over the production by one look at each lot."""
+    response = drafted(callers, with_rule({**GLOBAL, "prior": DECLARED, "rounds": 2}))
+    found = faults(response)
+    assert found == {
+        "#/requires/0/decision_rule/rounds": "not supported yet: further rounds of a rule by global risk"
+    }
