@@ -22,6 +22,7 @@ from rich.console import Console
 
 from service.demo import plant
 from service.demo.client import Client
+from service.demo.set_point_walk import SetPointWalk
 from service.demo.walk import Access, Walk
 from service.settings import Settings, load_settings
 from service.workflows.accounts import add_person, add_token
@@ -52,6 +53,7 @@ def run(*, check: bool, port: int | None) -> int:
         walk.set_up()
         walk.decide_first_lot()
         walk.decide_production()
+        SetPointWalk(client, access.engineer, console).ask()
         whole = walk.verify()
         client.close()
         if check:

@@ -23,7 +23,11 @@ from tests.faults.server import Server, free_port
 
 ROOT = Path(__file__).parents[2]
 README = (ROOT / "README.md").read_text("utf-8")
-SECTIONS = ("A budget and a decision by curl", "From raw data to a limit by curl")
+SECTIONS = (
+    "A budget and a decision by curl",
+    "From raw data to a limit by curl",
+    "How close to the limit, and what to buy first",
+)
 NEEDED = (7, 87)  # has --url-query
 # A 4xx or 5xx of any call ends the shell.
 PRELUDE = 'set -euo pipefail\ncurl() { command curl --fail-with-body "$@"; }\n'
@@ -93,6 +97,14 @@ def test_every_study_file_of_the_demo_is_recorded_and_its_evaluation_read(printe
         assert re.search(rf" ({name}|\$channel-{name.partition('-')[2]})( |$)", sent, re.M), name
     for estimate in ("between_days", "sampling", "between_instruments", "remainder_covariance"):
         assert re.search(rf"^  {estimate}\b", printed, re.M), estimate
+
+
+def test_the_set_point_and_what_to_buy_are_answered(printed: str) -> None:
+    assert re.search(
+        r'"statement": "Today the readings average 2\.83 %: [^"]+ EUR a year against today\."', printed
+    )
+    assert re.search(r'"statement": "First [a-z-]+[^"]*: [\d,]+ EUR a year', printed)
+    assert re.search(r'"statement": "\d+ released lots lay on average', printed)
 
 
 def test_the_budget_out_of_them_is_in_force_and_explained(

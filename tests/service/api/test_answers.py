@@ -68,6 +68,19 @@ def test_answers_fit_their_forms(callers: Callers, check: Any) -> None:
     assert check("LotPage", done(mes.get("/v1/lots"), 200)) == []
 
 
+def test_answers_about_set_points_fit_their_forms(callers: Callers, check: Any) -> None:
+    mes, engineer = callers["mes"], callers["engineer"]
+    done(mes.post("/v1/decisions", decision()))
+    asked = example(documents.SetPointRequest)
+    for body in (asked, {**asked, "money": None, "wanted_set_point": None}):
+        assert check("SetPoints", done(engineer.post("/v1/set-points", body), 200)) == []
+    options = example(documents.ImprovementsRequest)
+    options["options"].append({"code": "correct", "kind": "corrected_bias"})
+    assert check("Improvements", done(engineer.post("/v1/improvements", options), 200)) == []
+    given = {"production": asked}
+    assert check("Giveaway", done(engineer.post("/v1/giveaway", given), 200)) == []
+
+
 def test_problems_fit_their_form(callers: Callers, check: Any) -> None:
     for response in (
         callers["mes"].post("/v1/decisions", {}),

@@ -39,6 +39,12 @@ def test_the_check_walks_the_job_and_ends_well(tmp_path: Path) -> None:
     # Most lots are good, but not all can be proved and a few are beyond the customer's limit.
     assert int(outcomes["release"]) > int(outcomes["hold"]) > int(outcomes["reject"]) > 0
     assert "The record is whole." in result.stdout
+    # The process engineer's question is answered from the record of these lots.
+    assert re.search(r"^\d+ first readings of lots in the record", result.stdout, re.M)
+    assert re.search(r"^For the controller: 2\.\d\d %, as nir-1 with wmp-7 reads it", result.stdout, re.M)
+    assert re.search(r"^\d+ released lots lay on average ", result.stdout, re.M)
+    assert re.search(r"^First [a-z-]+( with [a-z-]+)?: [\d,]+ EUR a year", result.stdout, re.M)
+    assert "composite-of-four does not pay. It does not help a reading" in result.stdout
     # Nothing of it is left: no database, no server.
     assert list(tmp_path.iterdir()) == []
 
