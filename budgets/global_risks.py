@@ -3,7 +3,8 @@
 A global risk is a joint probability: a lot does not conform AND is accepted, or conforms AND is not. The
 share of nonconforming lots among the accepted ones is another figure, with a name of its own. The common
 error of the measurement is one constant for the plant that nobody knows: the risks are means over it, and
-beside them stands what they reach in the worst of twenty plants.
+beside them stands what they do not exceed in nineteen of twenty plants. Where few plants take nearly all of
+the risk, that quantile lies below the mean.
 """
 
 from __future__ import annotations
@@ -40,7 +41,7 @@ class GlobalRisks:
         95 % quantile over the common error.
     release_rate : ndarray
         Probability that a lot is accepted.
-    nonconforming_share_of_accepted, conforming_share_of_not_accepted : ndarray
+    conditional_global_consumers_risk, conditional_global_producers_risk : ndarray
         Conditional probabilities: the risks over the rates of acceptance and of no acceptance; NaN where
         that rate is 0.
     nonconforming_share : float
@@ -55,8 +56,8 @@ class GlobalRisks:
     global_consumers_risk_quantile: Array
     global_producers_risk_quantile: Array
     release_rate: Array
-    nonconforming_share_of_accepted: Array
-    conforming_share_of_not_accepted: Array
+    conditional_global_consumers_risk: Array
+    conditional_global_producers_risk: Array
     nonconforming_share: float
 
 
@@ -139,8 +140,8 @@ def risks_of_acceptance(
         global_consumers_risk_quantile=consumers,
         global_producers_risk_quantile=producers,
         release_rate=mean.accepted,
-        nonconforming_share_of_accepted=_share(mean.nonconforming_accepted, mean.accepted),
-        conforming_share_of_not_accepted=_share(mean.conforming_not_accepted, mean.not_accepted),
+        conditional_global_consumers_risk=_share(mean.nonconforming_accepted, mean.accepted),
+        conditional_global_producers_risk=_share(mean.conforming_not_accepted, mean.not_accepted),
         nonconforming_share=production.nonconforming_share(),
     )
 

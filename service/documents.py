@@ -612,6 +612,45 @@ class ImprovementsRequest:
 
 
 @dataclass(frozen=True)
+class RecordedPrior:
+    """A production as the record shows it: the first look at every lot, by the days of the readings."""
+
+    steered_by_this_analyzer: bool
+    first_day: date | None = None
+    last_day: date | None = None
+
+
+@dataclass(frozen=True)
+class AskedPrior(StatedPrior):
+    """A production prior that may be taken from the record too."""
+
+    record: RecordedPrior | None = None
+
+
+@dataclass(frozen=True)
+class LotReadings:
+    """How a lot is read: so many samples, so many readings of each."""
+
+    samples: int
+    readings_per_sample: int
+
+
+@dataclass(frozen=True)
+class GlobalRisksRequest:
+    """What does a rule let pass, and hold back, over a whole production? Guard bands are in ``unit``."""
+
+    product: str
+    characteristic: str
+    analyzer: str
+    specification: str
+    unit: str
+    prior: AskedPrior
+    procedure: LotReadings | None = None
+    guard_bands: tuple[float, ...] | None = None
+    largest_risk: float | None = None
+
+
+@dataclass(frozen=True)
 class GiveawayRequest:
     """What running further from the limit than needed cost, over the lots of a period."""
 

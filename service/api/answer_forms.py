@@ -10,6 +10,7 @@ from service.api.forms import Form, ref
 from service.api.forms import list_of as _list
 from service.api.forms import object_of as _object
 from service.api.forms import or_null as _or_null
+from service.api.global_risk_forms import GLOBAL_RISK_ANSWERS
 from service.api.problems import slugs
 from service.api.set_point_forms import SET_POINT_ANSWERS
 
@@ -553,6 +554,7 @@ ANSWERS: dict[str, Form] = {
         "The smallest study for each wish; null where there was none.",
         {"precision": _or_null(_PRECISION_PLAN), "bias": _or_null(_BIAS_PLAN)},
     ),
+    **GLOBAL_RISK_ANSWERS,
     **SET_POINT_ANSWERS,
     "BudgetFigures": _BUDGET_FIGURES,
     "BudgetComparison": _BUDGET_COMPARISON,

@@ -25,6 +25,7 @@ from service.schemas.master import (
     PlantSchema,
     ProductSchema,
 )
+from service.schemas.priors import GlobalRisksRequestSchema
 from service.schemas.set_points import (
     GiveawayRequestSchema,
     ImprovementsRequestSchema,
@@ -52,6 +53,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.Replacement: ReplacementSchema(),
     documents.Extension: ExtensionSchema(),
     documents.StudyPlanRequest: StudyPlanRequestSchema(),
+    documents.GlobalRisksRequest: GlobalRisksRequestSchema(),
     documents.SetPointRequest: SetPointRequestSchema(),
     documents.ImprovementsRequest: ImprovementsRequestSchema(),
     documents.GiveawayRequest: GiveawayRequestSchema(),

@@ -11,7 +11,7 @@ from budgets.planned_measurements import Demand, LotProcedure, PlannedMeasuremen
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted
 from budgets.units import Conversion, conversion
-from service.documents import Characteristic, Requirement, SetPointRequest, StatedMoney
+from service.documents import Characteristic, GlobalRisksRequest, Requirement, SetPointRequest, StatedMoney
 from service.errors import Conflict, Fault, NotSupported
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.evidence import FaultCollector
@@ -62,7 +62,7 @@ def question_of(
     """
     register = services.registers.current(unit_of_work)
     characteristic = _characteristic(register, request, pointer)
-    budget = _budget(unit_of_work, register, request)
+    budget = budget_of(unit_of_work, register, request)
     requirements = _requirements(register, request, pointer)
     collector = FaultCollector()
     convert = collector.attempt(f"{pointer}/unit", conversion, request.unit, characteristic.unit)
@@ -128,7 +128,10 @@ def _characteristic(register: Register, request: SetPointRequest, pointer: str) 
     return found
 
 
-def _budget(unit_of_work: UnitOfWork, register: Register, request: SetPointRequest) -> BudgetInForce:
+def budget_of(
+    unit_of_work: UnitOfWork, register: Register, request: SetPointRequest | GlobalRisksRequest
+) -> BudgetInForce:
+    """Give the budget in force for the readings that a question is about. Raises Conflict."""
     budget = register.budgets.get((request.product, request.characteristic, request.analyzer))
     if budget is None:
         raise Conflict(
@@ -138,7 +141,7 @@ def _budget(unit_of_work: UnitOfWork, register: Register, request: SetPointReque
     if budget.lapses_at is not None and unit_of_work.now("plant") >= budget.lapses_at:
         raise Conflict(
             "evidence-lapsed",
-            f"The evidence behind {budget.document.code} served until {budget.lapses_at}: a set point would "
+            f"The evidence behind {budget.document.code} served until {budget.lapses_at}: the answer would "
             "rest on it. Renew the study that lapsed.",
         )
     return budget
@@ -213,6 +216,12 @@ def _demand(
     if requirement.decision_rule.largest_lot_risk is not None:
         fault = Fault(f"{document.code} caps the risk of the lot as a whole", supported=False)
         raise NotSupported("Not supported yet: a set point under a cap on the lot's risk.", faults=(fault,))
+    if requirement.decision_rule.kind == "guarded_by_global_risk":
+        fault = Fault(f"{document.code} is guarded by global risk", supported=False)
+        raise NotSupported(
+            "Not supported yet: a set point by a rule whose guard band follows from the set point.",
+            faults=(fault,),
+        )
     domain = characteristic.natural_domain
     rule = register.rule(specification, requirement, budget, planned_counts(budget.budget.procedure))
     return Demand(

@@ -230,15 +230,15 @@ def test_a_curve_of_t_is_made_of_its_points_too():
 def test_shares_are_risks_over_rates():
     found = global_risks(ProductionPrior("normal", 3.0, 0.1), MeasurementErrors.of(0.05), UPPER, [0.0, 0.1])
     np.testing.assert_allclose(
-        found.nonconforming_share_of_accepted * found.release_rate, found.global_consumers_risk
+        found.conditional_global_consumers_risk * found.release_rate, found.global_consumers_risk
     )
     np.testing.assert_allclose(
-        found.conforming_share_of_not_accepted * (1 - found.release_rate), found.global_producers_risk
+        found.conditional_global_producers_risk * (1 - found.release_rate), found.global_producers_risk
     )
     assert found.nonconforming_share == pytest.approx(float(mp.ncdf(-2)), rel=1e-12)
     nowhere = global_risks(ProductionPrior("normal", 9.0, 0.1), MeasurementErrors.of(0.05), UPPER, [0.0])
-    assert nowhere.release_rate[0] == 0 and np.isnan(nowhere.nonconforming_share_of_accepted[0])
-    assert nowhere.conforming_share_of_not_accepted[0] == 0
+    assert nowhere.release_rate[0] == 0 and np.isnan(nowhere.conditional_global_consumers_risk[0])
+    assert nowhere.conditional_global_producers_risk[0] == 0
 
 
 @pytest.mark.parametrize("tolerance", [BOTH, UPPER, LOWER])
