@@ -73,8 +73,7 @@ def ask(services: Services, actor: Actor, request: GlobalRisksRequest) -> Answer
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        register = services.registers.current(unit_of_work)
-        subject = _subject(unit_of_work, register, request)
+        subject = _subject(services, unit_of_work, request)
     prior, errors, tolerance = subject.prior.prior, subject.errors, subject.tolerance
     collector = FaultCollector()
     factor = collector.attempt("#/unit", conversion, request.unit, subject.characteristic.unit)
@@ -108,7 +107,8 @@ def ask(services: Services, actor: Actor, request: GlobalRisksRequest) -> Answer
 # --- what is asked about -------------------------------------------------------------------------------
 
 
-def _subject(unit_of_work: UnitOfWork, register: Register, request: GlobalRisksRequest) -> Subject:
+def _subject(services: Services, unit_of_work: UnitOfWork, request: GlobalRisksRequest) -> Subject:
+    register = services.registers.current(unit_of_work)
     characteristic = _characteristic(register, request)
     budget = budget_of(unit_of_work, register, request)
     specification, requirement = _requirement(register, request)
@@ -117,7 +117,7 @@ def _subject(unit_of_work: UnitOfWork, register: Register, request: GlobalRisksR
         counts = Counts((request.procedure.readings_per_sample,) * request.procedure.samples)
     collector = FaultCollector()
     rule = collector.attempt("#/procedure", register.rule, specification, requirement, budget, counts)
-    prior = collector.attempt("#/prior", _prior, unit_of_work, register, request, characteristic, budget)
+    prior = collector.attempt("#/prior", _prior, services, unit_of_work, request, characteristic, budget)
     collector.finish("The question cannot be answered.")
     assert isinstance(rule, ReleaseRule) and prior is not None
     errors = collector.attempt("#", measurement_errors, budget.budget, counts, rule.tolerance)
@@ -158,8 +158,8 @@ def _requirement(register: Register, request: GlobalRisksRequest) -> tuple[Speci
 
 
 def _prior(
+    services: Services,
     unit_of_work: UnitOfWork,
-    register: Register,
     request: GlobalRisksRequest,
     characteristic: Characteristic,
     budget: BudgetInForce,
@@ -169,13 +169,13 @@ def _prior(
         return resolve_prior(
             unit_of_work, asked, characteristic, budget.document, budget.budget, pointer="#/prior"
         )
-    found = _recorded(unit_of_work, register, request, asked.record, budget)
+    found = _recorded(services, unit_of_work, request, asked.record, budget)
     return ResolvedPrior(found.prior, found)
 
 
 def _recorded(
+    services: Services,
     unit_of_work: UnitOfWork,
-    register: Register,
     request: GlobalRisksRequest,
     asked: RecordedPrior,
     budget: BudgetInForce,
@@ -183,7 +183,8 @@ def _recorded(
     """Make the prior of the first looks in the record, those that were done alike. Raises EvidenceError."""
     lots = recorded_lots(
         unit_of_work,
-        register,
+        services.remembered,
+        services.registers.current(unit_of_work),
         budget,
         request.analyzer,
         first_day=asked.first_day,

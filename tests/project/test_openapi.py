@@ -18,7 +18,7 @@ from service.store.schema import migrate
 
 ROOT = Path(__file__).parents[2]
 # What computes and records nothing.
-COMPUTING = ("/preview", "/study-plans", "/set-points", "/improvements", "/giveaway")
+COMPUTING = ("/global-risks", "/preview", "/study-plans", "/set-points", "/improvements", "/giveaway")
 
 
 @pytest.fixture(scope="module")

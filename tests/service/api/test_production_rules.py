@@ -137,7 +137,7 @@ def test_a_legal_limit_is_no_matter_of_averages(callers: Callers) -> None:
         ({**GLOBAL, "prior": DECLARED, "specific_risk_cap": None}, "", "missing"),
         ({**SPECIFIC, "specific_risk_cap": 0.1}, "", "does not belong"),
         ({**GLOBAL, "prior": {}}, "/prior", "no source"),
-        ({**GLOBAL, "prior": {**DECLARED, "study": "x"}}, "/prior", "or two"),
+        ({**GLOBAL, "prior": {**DECLARED, "study": "x"}}, "/prior", "or several"),
         ({**GLOBAL, "prior": {"study": "x", "distribution": "empirical"}}, "/prior", "empirical"),
         ({**GLOBAL, "prior": {"study": "unknown"}}, "/prior/study", "no study"),
         ({**GLOBAL, "prior": {"study": "wmp-rep-2026-01"}}, "/prior/study", "of the design repeatability"),
