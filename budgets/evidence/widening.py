@@ -42,7 +42,7 @@ def widened(estimate: Estimate, factor: float) -> Estimate:
     >>> terms = (Term(0.5, MeanSquare("rep/repeatability", 0.0008, 20)),)
     >>> single = Estimate("repeatability", terms, None, None, ("reading",), True)
     >>> round(widened(single, 1.5).standard_uncertainty, 6), widened(single, 1.5).degrees_of_freedom
-    (0.03, 20.0)
+    (0.03, 20)
     """
     if not (math.isfinite(factor) and factor > 1):
         raise EvidenceError(

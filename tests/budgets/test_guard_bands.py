@@ -4,7 +4,6 @@ import math
 
 import pytest
 
-from budgets import decision_rules
 from budgets.acceptance import acceptance_interval
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
@@ -19,9 +18,8 @@ FACTOR = DecisionRule("guarded_by_factor", multiple=1.0, coverage_probability=0.
 
 
 @pytest.fixture
-def by_global_risk(monkeypatch):
+def by_global_risk():
     """Give a rule whose meaning another part of the program gives."""
-    monkeypatch.setattr(decision_rules, "_LATER_KINDS", ())
     return DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1)
 
 
