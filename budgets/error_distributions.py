@@ -7,6 +7,7 @@ computed as tails, never as one minus the rest.
 from __future__ import annotations
 
 import math
+from bisect import bisect_right
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -195,6 +196,10 @@ class Tabulated:
         return np.asarray(self.quantiles), np.asarray(ndtri(self.probabilities))
 
     @cached_property
+    def _scores(self) -> tuple[float, ...]:
+        return tuple(float(score) for score in self._table[1])
+
+    @cached_property
     def _least(self) -> tuple[float, float]:
         """The smallest risks that the run can speak of, below and above."""
         least = 3 / self.trials
@@ -213,7 +218,9 @@ class Tabulated:
             Not below what the run can speak of.
         """
         below, above = self._least
-        return cast("Real", np.clip(ndtr(np.interp(z, *self._table)), below, 1 - above))
+        if isinstance(z, np.ndarray):
+            return np.clip(ndtr(np.interp(z, *self._table)), below, 1 - above)
+        return min(max(float(ndtr(self._score(z))), below), 1 - above)
 
     def upper_tail(self, z: Real) -> Real:
         """Return the probability that the error exceeds z.
@@ -228,7 +235,18 @@ class Tabulated:
             Not below what the run can speak of.
         """
         below, above = self._least
-        return cast("Real", np.clip(ndtr(-np.interp(z, *self._table)), above, 1 - below))
+        if isinstance(z, np.ndarray):
+            return np.clip(ndtr(-np.interp(z, *self._table)), above, 1 - below)
+        return min(max(float(ndtr(-self._score(z))), above), 1 - below)
+
+    def _score(self, z: float) -> float:
+        """Return the normal score of one error: as numpy's interpolation, without its cost for one value."""
+        quantiles, scores = self.quantiles, self._scores
+        place = bisect_right(quantiles, z)
+        if place in (0, len(quantiles)):
+            return scores[0 if place == 0 else -1]
+        left, right = quantiles[place - 1], quantiles[place]
+        return scores[place - 1] + (z - left) / (right - left) * (scores[place] - scores[place - 1])
 
     def within(self, lower: Real | None, upper: Real | None) -> Real:
         """Return the probability that the error lies between two values.

@@ -5,15 +5,15 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, fields
-from typing import Any, ClassVar
+from typing import Any, ClassVar, Unpack
 
 import numpy as np
 
-from budgets.acceptance import Ends
+from budgets.acceptance import AcceptanceOptions, Ends
 from budgets.budget import Budget
 from budgets.conformity import StatedLimits, Tolerance
 from budgets.decision_rules import DecisionRule
-from budgets.errors import LimitsError, NotSupportedError
+from budgets.errors import EmptyAcceptanceError, LimitsError, NotSupportedError
 from budgets.evidence.evaluation import Term, effective_degrees_of_freedom, merged, variance
 from budgets.item_spread import ItemSpread, share_factor
 from budgets.propagation import Counts, averaging_weights, check_counts, compiled
@@ -132,12 +132,13 @@ def item_rule(
     mean = averaging_weights(counts)["sample"]
     all_terms = merged([*rest, *(Term(mean * term.coefficient, term.mean_square) for term in between)])
     u = math.sqrt(variance(all_terms))
-    return ReleaseRule.of_uncertainty(
-        UncertaintyAtLimits(u, effective_degrees_of_freedom(all_terms), None),
+    return _compiled(
+        u,
+        effective_degrees_of_freedom(all_terms),
         tolerance,
         rule,
         budget.coverage_probability,
-        items=ItemSpread(
+        ItemSpread(
             standard_uncertainty=u,
             standard_deviation=math.sqrt(variance(between)),
             degrees_of_freedom=effective_degrees_of_freedom(between),
@@ -152,6 +153,29 @@ def item_rule(
         domain=domain,
         validated_range=budget.validated_range,
     )
+
+
+def _compiled(
+    u: float,
+    degrees_of_freedom: float,
+    tolerance: Tolerance,
+    rule: DecisionRule,
+    coverage_probability: float,
+    spread: ItemSpread,
+    **options: Unpack[AcceptanceOptions],
+) -> ReleaseRule:
+    uncertain = UncertaintyAtLimits(u, degrees_of_freedom, None)
+    try:
+        return ReleaseRule.of_uncertainty(
+            uncertain, tolerance, rule, coverage_probability, items=spread, **options
+        )
+    except EmptyAcceptanceError as error:
+        s = spread.item_standard_deviation
+        remedy = f"{error.remedy} The spread of the items, {s:.4g}, would have to shrink alike."
+        message = error.message.replace(error.remedy, remedy) if error.remedy else f"{error.message} {remedy}"
+        raise EmptyAcceptanceError(
+            message, capability_index=error.capability_index, remedy=remedy.lstrip(), where=error.where
+        ) from None
 
 
 @dataclass(frozen=True)
@@ -236,12 +260,13 @@ class LotSpreadRule:
         if u == 0:
             raise LimitsError("all samples read the same, so that the spread of the items is not seen")
         freedom = u**4 / (of_mean**2 / nu + other**4 / self.other_degrees_of_freedom)
-        return ReleaseRule.of_uncertainty(
-            UncertaintyAtLimits(u, freedom, None),
+        return _compiled(
+            u,
+            freedom,
             self.tolerance,
             self.decision_rule,
             self.coverage_probability,
-            items=ItemSpread(
+            ItemSpread(
                 standard_uncertainty=u,
                 standard_deviation=s,
                 degrees_of_freedom=nu,

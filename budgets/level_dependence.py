@@ -67,7 +67,7 @@ def upper_acceptance_limit(limit: float, factor: float, dependence: LevelDepende
     4.784083515826
     """
     k, s0, s1 = factor, dependence.constant, dependence.proportional
-    if k == 0:
+    if k == 0 or limit == s0 == 0:
         return limit
     root = math.sqrt(max(0.0, s0**2 * (1 - (k * s1) ** 2) + (s1 * limit) ** 2))
     return (limit - k * s0) * (limit + k * s0) / (limit + k * root)

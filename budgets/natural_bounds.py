@@ -8,7 +8,7 @@ An estimate outside of the domain counts as one at its end.
 from __future__ import annotations
 
 import math
-from typing import cast
+from typing import Any
 
 import numpy as np
 
@@ -80,14 +80,20 @@ def truncated_probabilities(
     end = math.inf if domain[1] is None else domain[1]
     lower = start if tolerance.lower is None else max(start, min(tolerance.lower, end))
     upper = end if tolerance.upper is None else min(end, max(tolerance.upper, start))
-    y = cast("Real", np.clip(estimate, start, end))
+    y: Any = (
+        np.clip(estimate, start, end) if isinstance(estimate, np.ndarray) else _clipped(estimate, start, end)
+    )
 
     def between(first: float, last: float) -> Real:
-        z = (first - y) / standard_uncertainty, (last - y) / standard_uncertainty
+        z: tuple[Real, Real] = (first - y) / standard_uncertainty, (last - y) / standard_uncertainty
         return probability_between(distribution, *z)
 
     whole = between(start, end)
     return between(start, lower) / whole, between(lower, upper) / whole, between(upper, end) / whole
+
+
+def _clipped(value: float, start: float, end: float) -> float:
+    return min(max(value, start), end)
 
 
 def probabilities(

@@ -137,7 +137,7 @@ def test_the_spread_of_the_lot_at_hand(budget):
     assert same.upper_acceptance_limit > here.upper_acceptance_limit
     with pytest.raises(LimitsError, match="3 samples, not 2"):
         rule.at([3.0, 3.1])
-    with pytest.raises(EmptyAcceptanceError):
+    with pytest.raises(EmptyAcceptanceError, match=r"The spread of the items, 0\.9996, would have to shrink"):
         item_rule(budget, Counts((2, 2, 2)), BOTH, RISK, FROM_LOT).at([2.0, 3.0, 4.0])
 
 

@@ -209,3 +209,7 @@ def test_the_rule_at_an_estimate_has_the_uncertainty_there():
     assert here.judge(3.0) == rule.judge(3.0)
     constant = replace(rule, constant_standard_uncertainty=None, proportional_standard_uncertainty=0.0)
     assert constant.at(3.0) is constant
+
+
+def test_at_zero_without_a_constant_part_there_is_nothing_to_guard():
+    assert upper_acceptance_limit(0.0, 2.0, LevelDependence(0.0, 0.1)) == 0.0
