@@ -14,6 +14,7 @@ from service import documents
 from tests.service.api import house
 from tests.service.api.conftest import Callers
 from tests.service.api.house import decision, done, example
+from tests.service.api.test_production_rules import DECLARED, GLOBAL
 
 
 def heads(app: Flask) -> list[Any]:
@@ -132,7 +133,7 @@ def test_a_body_beyond_the_bound_is_a_413(callers: Callers) -> None:
 def test_forms_that_are_not_built_yet_are_refused_as_such(app: Flask, callers: Callers) -> None:
     before = heads(app)
     document = house.specification("guarded", 3.3)
-    document["requires"][0]["decision_rule"]["prior"] = {"mean": 3}
+    document["requires"][0]["decision_rule"] = {**GLOBAL, "prior": DECLARED, "rounds": 2}
     problem(callers["engineer"].post("/v1/specifications", document), 422, "not-supported")
     document = study(rows=[["P01", 1, 3.1], ["P01", 2, {"below": 0.1}]])
     found = problem(callers["engineer"].post("/v1/studies", document), 422, "not-supported")
