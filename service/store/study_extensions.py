@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from typing import Any
 
@@ -23,21 +23,21 @@ class StudyExtensions:
 
     def __init__(self, session: Session) -> None:
         self._session = session
-        self._expected: tuple[str, Document] | None = None
+        self._expected: Mapping[str, Document] = {}
 
     @contextmanager
-    def expecting(self, study: str, document: Document) -> Iterator[None]:
-        """Within the block let ``document_of`` find an extension that the act at hand is going to add."""
-        self._expected = (study, document)
+    def expecting(self, coming: Mapping[str, Document]) -> Iterator[None]:
+        """Within the block let ``document_of`` find extensions that the act at hand is going to add."""
+        self._expected = coming
         try:
             yield
         finally:
-            self._expected = None
+            self._expected = {}
 
     def document_of(self, study: str) -> Document | None:
         """Return what was said of a study when it was extended."""
-        if self._expected is not None and self._expected[0] == study:
-            return self._expected[1]
+        if study in self._expected:
+            return self._expected[study]
         stored = self.get(study)
         return None if stored is None else stored.document
 

@@ -90,7 +90,7 @@ def extend(
             raise NotFound(f"There is no study {code!r}.")
         using = _using(unit_of_work, actor, stored)
         said = _said(unit_of_work, load(Study, stored.document), extension)
-        with unit_of_work.extensions.expecting(code, said):
+        with unit_of_work.extensions.expecting({code: said}):
             steps = each_budget(
                 using,
                 lambda before: _widened(unit_of_work, actor, before, code, extension.reason),

@@ -49,7 +49,10 @@ class Expected:
                 self._add_version("budget", part, where)
         elif subject == "renewal":
             for part in content.get("studies", ()):
-                self.rows["study", part["study"]["code"]] = ((part["study"], part["evaluation"]), where)
+                code = part["study"]["code"]
+                self.rows["study", code] = ((part["study"], part["evaluation"]), where)
+                if "extension" in part:
+                    self.rows["extension", code] = (part["extension"], where)
             for part in content["versions"]:
                 self._add_version("budget", part, where)
         elif act in VERSION_ACTS:

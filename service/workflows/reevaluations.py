@@ -1,7 +1,7 @@
 """Studies evaluated anew, with the same data, because a study that they took out of their scatter is renewed.
 
 Studies never change, so each becomes a further study with a code of its own; how long it serves does not
-change, for its data are as old as they were.
+change, for its data are as old as they were. One that an approver let serve longer stays extended as it was.
 """
 
 from __future__ import annotations
@@ -26,11 +26,12 @@ _LONGEST_CODE: Final = 63
 
 @dataclass(frozen=True)
 class Reevaluation:
-    """A study evaluated anew, and the code of the one whose data it has."""
+    """A study evaluated anew, the code of the one whose data it has, and how that was extended."""
 
     instead_of: str
     study: Study
     evaluation: Evaluation
+    extension: Mapping[str, Any] | None
 
     def stored(self) -> StoredStudy:
         """Give the row that the study will have; where it is recorded is known once the entry is there."""
@@ -48,7 +49,13 @@ class Reevaluation:
     def written(self) -> dict[str, Any]:
         """Write it down for the record."""
         stored = self.stored()
-        return {"instead_of": self.instead_of, "study": stored.document, "evaluation": stored.evaluation}
+        extended = {} if self.extension is None else {"extension": dict(self.extension)}
+        return {
+            "instead_of": self.instead_of,
+            "study": stored.document,
+            "evaluation": stored.evaluation,
+            **extended,
+        }
 
     def keep(self, unit_of_work: UnitOfWork, entry: Entry) -> None:
         """Add the study that an entry says."""
@@ -62,6 +69,8 @@ class Reevaluation:
             characteristic=stored.characteristic,
             design=stored.design,
         )
+        if self.extension is not None:
+            unit_of_work.extensions.add(stored.code, self.extension, entry)
 
 
 def evidence_of(version: StoredVersion) -> set[str]:
@@ -175,7 +184,8 @@ def evaluated(
             except InvalidRequest as error:
                 raise _of_study(before, error) from error
         _check_laboratories(evaluation.diagnostics, before, becomes)
-        done.append(Reevaluation(before, complete, evaluation))
+        extension = unit_of_work.extensions.document_of(before)
+        done.append(Reevaluation(before, complete, evaluation, extension))
     return tuple(done)
 
 

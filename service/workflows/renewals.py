@@ -115,7 +115,9 @@ def _drafts(
     drafts = [_draft(unit_of_work, actor, before, becomes, replacement) for before in using]
     if not drafts:
         raise Conflict("nothing-in-force", f"No budget in force uses the study {code!r}.")
-    with unit_of_work.studies.expecting(item.stored() for item in anew):
+    extensions = {item.study.code: item.extension for item in anew if item.extension is not None}
+    studies = [item.stored() for item in anew]
+    with unit_of_work.studies.expecting(studies), unit_of_work.extensions.expecting(extensions):
         each_budget(drafts, lambda draft: _check_draft(unit_of_work, draft, becomes))
     return drafts
 

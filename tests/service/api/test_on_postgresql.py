@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
+from datetime import timedelta
 from pathlib import Path
 
 import pytest
@@ -57,6 +58,26 @@ def test_a_lot_is_judged_from_raw_data_to_the_record(callers: Callers) -> None:
     ]
     limits = done(callers["mes"].get("/v1/acceptance-limits/whole-milk-powder/moisture"), 200)
     assert limits["items"]
+    assert done(callers["auditor"].get("/v1/ledger/verification"), 200)["whole"] is True
+
+
+def test_evidence_is_extended_and_renewed(callers: Callers) -> None:
+    engineer, approver = callers["engineer"], callers["max"]
+    house.build(engineer, approver)
+    until = (house.TODAY + timedelta(days=400)).isoformat()
+    extension = {"until": until, "widening_factor": 1.5, **house.signed()}
+    for code in ("wmp-val-2026-01", "wmp-rep-2026-01"):
+        done(approver.post(f"/v1/studies/{code}/extension", extension))
+    again = approver.post("/v1/studies/wmp-rep-2026-01/extension", extension)
+    assert again.get_json()["type"] == "/problems/already-extended"
+    done(engineer.post("/v1/studies", house.repeatability_study(code="rep-2")))
+    renewals = "/v1/studies/wmp-rep-2026-01/replacements"
+    done(engineer.post(renewals, {"study": "rep-2", "reason": "yearly study"}))
+    approved = done(approver.post(f"{renewals}/rep-2/approve", house.signed()), 200)
+    assert [version["version"] for version in approved["budgets"]] == [4]
+    answered = done(callers["mes"].post("/v1/decisions", decision()))
+    assert answered["outcome"] == "release"
+    assert [notice["code"] for notice in answered["notices"]] == ["evidence-extended"]
     assert done(callers["auditor"].get("/v1/ledger/verification"), 200)["whole"] is True
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import random
+from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
@@ -224,6 +225,22 @@ def test_the_entry_of_a_laboratory_is_renewed_first(app: Flask, callers: Callers
     assert submitted["evaluated_anew"] == [{"study": "val-3", "becomes": "val-3-2"}]
     (taken,) = recorded(engineer, "val-3-2")["evaluation"]["diagnostics"]["laboratory_components"]
     assert (taken["study"], taken["revision"]) == ("dup-2", 3)
+
+
+def test_what_was_extended_stays_extended(app: Flask, callers: Callers) -> None:
+    """Its data are no younger, and a second extension of them is none."""
+    until = (house.TODAY + timedelta(days=400)).isoformat()
+    extension = {"until": until, "widening_factor": 1.5, **signed()}
+    done(callers["max"].post(f"/v1/studies/{VALIDATION}/extension", extension))
+    done(callers["engineer"].post("/v1/studies", repeatability()))
+    done(callers["engineer"].post(renewals_of(REPEATABILITY), wish("rep-2")))
+    done(callers["max"].post(f"{renewals_of(REPEATABILITY)}/rep-2/approve", signed()), 200)
+    assert recorded(callers["engineer"], f"{VALIDATION}-2")["extension"]["widening_factor"] == 1.5
+    shown = done(callers["auditor"].get(f"/v1/budgets/{BUDGET}/versions/3/evaluation"), 200)
+    assert [item["study"] for item in shown["extensions"]] == [f"{VALIDATION}-2"]
+    again = callers["max"].post(f"/v1/studies/{VALIDATION}-2/extension", extension)
+    problem(again, 409, "already-extended")
+    assert verify_record(app.extensions["shoalmark"].database).whole
 
 
 def test_it_is_recorded_once(app: Flask, callers: Callers) -> None:
