@@ -158,6 +158,9 @@ def compile_rule(
         if prior is not None:
             where = ("decision_rule", "prior")
             raise NotSupportedError("a production prior where items are judged", where=where)
+        if distribution is not None:
+            # The law of propagation was found wrong for this budget: items have no other one.
+            raise NotSupportedError("Monte Carlo quantiles where items are judged", where=("judged",))
         return item_rule(
             budget,
             done,

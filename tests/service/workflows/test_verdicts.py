@@ -11,6 +11,7 @@ import pytest
 from scipy.stats import chi2, norm
 
 from budgets.budget import Count, Procedure
+from budgets.error_distributions import Tabulated
 from budgets.errors import LimitsError, NotSupportedError
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.propagation import Counts
@@ -238,6 +239,9 @@ def test_rules_of_items_are_stored_and_read_again() -> None:
         assert stored_rule(numbers) == compile_rule(budget, Counts((2, 2)), requirement, MOISTURE)
     with pytest.raises(NotSupportedError, match="items within the natural domain"):
         compile_rule(budget, Counts((2, 2)), replace(requirement, within_domain=True), MOISTURE)
+    quantiles = Tabulated((0.01, 0.5, 0.99), (-2.0, 0.0, 2.0), 10_000)
+    with pytest.raises(NotSupportedError, match="Monte Carlo quantiles where items"):
+        compile_rule(budget, Counts((2, 2)), requirement, MOISTURE, distribution=quantiles)
 
 
 def test_a_tie_is_that_of_the_decimals_that_were_read() -> None:
