@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+Interval = tuple[float, float]
+
 
 @dataclass(frozen=True)
 class LookLimits:
@@ -18,6 +20,8 @@ class LookLimits:
         An estimate beyond them is rejected.
     lower_range, upper_range : float, unit of the characteristic
         Validated range: an estimate outside is held, and another look of the kind does not help.
+    lower_further_limit, upper_further_limit : float, unit of the characteristic
+        A lot that is held beyond them is not read again: a rule that holds it there plans no further round.
     """
 
     lower_acceptance_limit: float
@@ -26,9 +30,11 @@ class LookLimits:
     upper_rejection_limit: float
     lower_range: float = -math.inf
     upper_range: float = math.inf
+    lower_further_limit: float = -math.inf
+    upper_further_limit: float = math.inf
 
     @property
-    def released(self) -> tuple[float, float]:
+    def released(self) -> Interval:
         """The interval of the estimates that are released; empty where its ends are the wrong way round."""
         return (
             max(self.lower_acceptance_limit, self.lower_range),
@@ -36,18 +42,41 @@ class LookLimits:
         )
 
     @property
-    def held(self) -> tuple[tuple[float, float], ...]:
+    def held(self) -> tuple[Interval, ...]:
         """The intervals of the estimates that are held and may be read again."""
-        lower, upper = self.released
-        bottom = max(self.lower_rejection_limit, self.lower_range)
-        top = min(self.upper_rejection_limit, self.upper_range)
-        return tuple(ends for ends in ((bottom, lower), (upper, top)) if ends[0] < ends[1])
+        (bottom, lower), (upper, top) = self._beside()
+        return _real(
+            (max(bottom, self.lower_further_limit), lower), (upper, min(top, self.upper_further_limit))
+        )
 
     @property
-    def rejected(self) -> tuple[tuple[float, float], ...]:
+    def held_for_good(self) -> tuple[Interval, ...]:
+        """The intervals of the estimates that are held and not read again."""
+        (bottom, lower), (upper, top) = self._beside()
+        return _real(
+            (-math.inf, self.lower_range),
+            (bottom, min(lower, self.lower_further_limit)),
+            (max(upper, self.upper_further_limit), top),
+            (self.upper_range, math.inf),
+        )
+
+    def _beside(self) -> tuple[Interval, Interval]:
+        """Return what lies between acceptance and rejection, within the validated range, below and above."""
+        lower, upper = self.released
+        return (
+            (max(self.lower_rejection_limit, self.lower_range), lower),
+            (upper, min(self.upper_rejection_limit, self.upper_range)),
+        )
+
+    @property
+    def rejected(self) -> tuple[Interval, ...]:
         """The intervals of the estimates that are rejected."""
-        ends = (
+        return _real(
             (self.lower_range, min(self.lower_rejection_limit, self.upper_range)),
             (max(self.upper_rejection_limit, self.lower_range), self.upper_range),
         )
-        return tuple(pair for pair in ends if pair[0] < pair[1])
+
+
+def _real(*intervals: Interval) -> tuple[Interval, ...]:
+    """Return the intervals that are not empty."""
+    return tuple(ends for ends in intervals if ends[0] < ends[1])

@@ -139,7 +139,7 @@ def expected_cost(
     giveaway = money.value_of_lot * abs(side) * (distance_of_released + todays_distance * (1 - rate))
     return ExpectedCost(
         giveaway=np.asarray(giveaway),
-        holds=money.cost_of_hold * (outcomes.held[0] + outcomes.outside_range[0]),
+        holds=money.cost_of_hold * (outcomes.held[0] + outcomes.held_for_good[0]),
         retests=money.cost_of_retest * outcomes.further_looks,
         not_released=money.not_released * (1 - rate),
         nonconforming=money.cost_of_nonconforming * outcomes.nonconforming_released,

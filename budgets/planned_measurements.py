@@ -59,13 +59,15 @@ class Demand:
 class LotProcedure:
     """What is done at every look at a lot; a further look takes as many samples again.
 
+    A lot that is held is read again as long as every rule that holds it plans a further round.
+
     Parameters
     ----------
     samples, readings_per_sample : int
     increments_per_sample : int
         A sample is a composite of so many increments.
     looks : int
-        The first one and what the rules plan for lots on hold.
+        The most rounds that a rule plans.
 
     Raises
     ------
@@ -95,7 +97,8 @@ class LotProcedure:
         Returns
         -------
         ReadingPattern
-            A session for each look; the readings of a sample share its presentation.
+            The readings of a sample share its presentation. All looks share one session, the cautious
+            default of a decision whose readings name none.
         """
         samples = [f"{look}/{sample}" for look in range(looks) for sample in range(self.samples)]
         labels = tuple(label for label in samples for _ in range(self.readings_per_sample))
@@ -107,7 +110,7 @@ class LotProcedure:
                 "presentation": labels,
                 "increment": tuple(parts[label] for label in labels),
                 "sample": labels,
-                "session": tuple(label.split("/")[0] for label in labels),
+                "session": ("",) * len(labels),
             }
         )
 
@@ -207,7 +210,10 @@ def planned_measurement(
         [_rule(budget, law, demand, risk) for demand, risk in zip(demands, risks, strict=True)]
         for law in laws
     ]
-    limits = [_limits_of(own, budget.validated_range) for own in rules]
+    limits = [
+        _limits_of(own, budget.validated_range, look, look == procedure.looks)
+        for look, own in enumerate(rules, start=1)
+    ]
     lower, upper = limits[0].released
     if lower > upper:
         raise EmptyAcceptanceError(
@@ -232,9 +238,22 @@ def planned_measurement(
     )
 
 
-def _limits_of(rules: Sequence[ReleaseRule], validated: tuple[float, float]) -> LookLimits:
-    accepted = _joined([_ends(rule.lower_acceptance_limit, rule.upper_acceptance_limit) for rule in rules])
-    return LookLimits(*accepted, *_joined([_rejection_ends(rule) for rule in rules]), *validated)
+def _limits_of(
+    rules: Sequence[ReleaseRule], validated: tuple[float, float], look: int, last: bool
+) -> LookLimits:
+    accepted = [_ends(rule.lower_acceptance_limit, rule.upper_acceptance_limit) for rule in rules]
+    # What a rule without a further round holds is not read again, whatever the other rules plan.
+    used_up = (
+        []
+        if last
+        else [ends for ends, rule in zip(accepted, rules, strict=True) if rule.decision_rule.rounds <= look]
+    )
+    return LookLimits(
+        *_joined(accepted),
+        *_joined([_rejection_ends(rule) for rule in rules]),
+        *validated,
+        *_joined(used_up),
+    )
 
 
 def _rejection_ends(rule: ReleaseRule) -> tuple[float, float]:

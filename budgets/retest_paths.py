@@ -32,8 +32,6 @@ _LEAST_HOLD_NODES, _MOST_HOLD_NODES = 12, 160
 _SAME = 1e-12
 _NO_NEWS = 1e-6
 
-_INFINITE = math.inf
-
 
 @dataclass(frozen=True)
 class LotDistribution:
@@ -65,8 +63,9 @@ class PathOutcomes:
     ----------
     released, held, rejected : tuple of ndarray
         At each look.
-    outside_range : tuple of ndarray
-        At each look: held because the estimate lies outside of the validated range.
+    held_for_good : tuple of ndarray
+        At each look: held and not read again, because the estimate lies outside of the validated range, or a
+        rule that holds the lot plans no further round.
     deviation_of_released : ndarray, unit of the characteristic
         Mean over ALL lots of (true value less its mean, counted where the lot is released).
     nonconforming_released : ndarray
@@ -78,7 +77,7 @@ class PathOutcomes:
     released: tuple[Array, ...]
     held: tuple[Array, ...]
     rejected: tuple[Array, ...]
-    outside_range: tuple[Array, ...]
+    held_for_good: tuple[Array, ...]
     deviation_of_released: Array
     nonconforming_released: Array
     nonconforming: Array
@@ -159,7 +158,7 @@ def path_outcomes(
         tuple(walk.released),
         tuple(walk.held),
         tuple(walk.rejected),
-        tuple(walk.outside),
+        tuple(walk.for_good),
         walk.deviation,
         walk.nonconforming,
         np.asarray(beyond),
@@ -192,7 +191,7 @@ class _Walk:
         self.released: list[Array] = []
         self.held: list[Array] = []
         self.rejected: list[Array] = []
-        self.outside: list[Array] = []
+        self.for_good: list[Array] = []
         self.deviation, self.nonconforming = np.zeros_like(centre), np.zeros_like(centre)
 
     def take(self, look: int, limit: LookLimits) -> None:
@@ -202,7 +201,7 @@ class _Walk:
         scale = math.sqrt(self._lots.covariance[own, own])
         if sd <= _NO_NEWS * scale:
             # A further look that repeats the one before leaves every lot where it was.
-            for shares in (self.released, self.rejected, self.outside):
+            for shares in (self.released, self.rejected, self.for_good):
                 shares.append(np.zeros_like(self._centre))
             self.held.append(self._mass.sum(axis=1))
             return
@@ -222,7 +221,7 @@ class _Walk:
         return np.asarray(on, dtype=np.float64), math.sqrt(max(0.0, left))
 
     def _count(self, limit: LookLimits, mean: Array, sd: float) -> None:
-        """Count what is held, what is rejected, and what lies outside of the validated range."""
+        """Count what is held, what is rejected, and what is not read again."""
         middle = self._centre[:, None] + mean
 
         def share(intervals: tuple[tuple[float, float], ...]) -> Array:
@@ -236,7 +235,7 @@ class _Walk:
 
         self.held.append(share(limit.held))
         self.rejected.append(share(limit.rejected))
-        self.outside.append(share(((-_INFINITE, limit.lower_range), (limit.upper_range, _INFINITE))))
+        self.for_good.append(share(limit.held_for_good))
 
     def _release(self, own: int, limit: LookLimits, mean: Array, sd: float, scale: float) -> None:
         looks = [*self._kept, own]

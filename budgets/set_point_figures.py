@@ -188,7 +188,7 @@ class Production:
                 true_mean=float(estimates[i] - self.measurement.residual_bias),
                 release_rate=float(rate[i]),
                 release_rate_of_first_look=float(found.released[0][i]),
-                hold_rate=float(found.held[0][i] + found.outside_range[0][i]),
+                hold_rate=float(found.held[0][i] + found.held_for_good[0][i]),
                 reject_rate=float(sum(rejected[i] for rejected in found.rejected)),
                 further_looks=float(found.further_looks[i]),
                 global_consumers_risk=float(found.nonconforming_released[i]),

@@ -180,8 +180,8 @@ def _procedure(
     budget: BudgetInForce,
     requirements: list[tuple[SpecificationInForce, Requirement]],
 ) -> LotProcedure:
-    # A lot is read again only as often as every rule allows.
-    looks = min(requirement.decision_rule.rounds for _, requirement in requirements)
+    # A lot is read again as often as the rules that hold it allow.
+    looks = max(requirement.decision_rule.rounds for _, requirement in requirements)
     own = planned(budget.budget)
     stated = request.procedure
     if stated is None:

@@ -138,7 +138,7 @@ def test_three_looks_against_the_multivariate_normal(steering):
 def test_every_lot_is_released_held_or_rejected(looks, tolerance, steering):
     centres = np.linspace(2.3, 3.4, 9)
     found = path_outcomes(centres, centres, lots_of(looks, steering), limits_of(looks, tolerance), tolerance)
-    whole = found.release_rate + sum(found.rejected) + sum(found.outside_range) + found.held[-1]
+    whole = found.release_rate + sum(found.rejected) + sum(found.held_for_good) + found.held[-1]
     assert whole == pytest.approx(np.ones(9), abs=1e-10)
     assert (found.nonconforming_released <= found.nonconforming + 1e-12).all()
 

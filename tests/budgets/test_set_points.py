@@ -532,6 +532,23 @@ def test_demands_that_exclude_each_other_accept_nothing(a_budget):
         planned_measurement(a_budget(), LotProcedure(1, 2), (CUSTOMER, high))
 
 
+def test_a_rule_without_a_further_round_keeps_what_it_holds(production, a_budget):
+    """Two rules of two rounds and of one: what the second one holds is not read again."""
+    twice = replace(CUSTOMER, decision_rule=replace(RISK, rounds=2))
+    once = Demand("own", Tolerance(None, 3.16), RISK)
+    made = production((twice, once), looks=2)
+    first, last = made.measurement.limits
+    own = planned_measurement(a_budget(), LotProcedure(1, 2), (once,)).limits[0]
+    assert first.upper_further_limit == pytest.approx(own.upper_acceptance_limit)
+    assert math.isinf(last.upper_further_limit)
+    both = production((twice,), looks=2)
+    (mixed,), (free,) = (each.figures([2.98]) for each in (made, both))
+    assert mixed.further_looks < free.further_looks
+    assert mixed.hold_rate + mixed.reject_rate + mixed.release_rate_of_first_look == pytest.approx(1)
+    # The stricter rule of one round accepts less than what two rounds of the other one leave to hope for.
+    assert mixed.release_rate < free.release_rate
+
+
 def test_a_further_look_halves_what_is_drawn_anew_within_it(a_budget):
     found = planned_measurement(a_budget(), LotProcedure(1, 2, looks=2), (CUSTOMER,))
     lot, reading = 0.05**2, 0.04**2
