@@ -11,10 +11,13 @@ from scipy.stats import norm
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.errors import EmptyAcceptanceError, LimitsError, ModelError, ProcedureError
+from budgets.global_risks import risks_of_acceptance
+from budgets.measurement_errors import MeasurementErrors, measurement_errors
 from budgets.money import Money
 from budgets.planned_looks import risk_per_look_of
 from budgets.planned_measurements import Demand, LotProcedure, planned_measurement, scaled
 from budgets.process_variation import ProcessVariation, steered_process
+from budgets.production_priors import ProductionPrior
 from budgets.propagation import Counts
 from budgets.release import ReleaseRule
 from budgets.required_uncertainty import required_uncertainty
@@ -198,6 +201,27 @@ def test_the_quantile_over_the_common_error_is_that_of_many_errors(production):
             np.quantile(conditional, 0.95), rel=0.02
         )
         assert found.conditional_global_consumers_risk == pytest.approx(np.mean(conditional), rel=0.01)
+
+
+@pytest.mark.parametrize("demands", [(CUSTOMER,), (TWO_LIMITS,)], ids=["one limit", "two limits"])
+def test_one_look_has_the_global_risks_of_its_acceptance_interval(production, a_budget, demands):
+    """The same shares by another way: the joint law of true value and reading, with the prior of readings."""
+    made = production(demands, money=None, validated_range=(0.0, 9.0))
+    demand, rule = demands[0], made.measurement.rules[0]
+    prior = ProductionPrior("normal", 2.95, PROCESS.unsteered_standard_deviation, anchor="readings")
+    # Shares of lots are counted with the errors as they are, not with what is not known of them.
+    known = measurement_errors(a_budget(), Counts((2,)), demand.tolerance)
+    errors = MeasurementErrors.of(known.random.constant, known.common.constant)
+    other = risks_of_acceptance(
+        prior, errors, demand.tolerance, rule.lower_acceptance_limit, rule.upper_acceptance_limit
+    )
+    found = made.figures_at(2.95)
+    assert found.release_rate == pytest.approx(other.release_rate[0], abs=1e-10)
+    assert found.global_consumers_risk == pytest.approx(other.global_consumers_risk[0], abs=1e-10, rel=1e-6)
+    assert found.global_producers_risk == pytest.approx(other.global_producers_risk[0], abs=1e-9)
+    # With readings as they are, the rate of release is the same for every common error.
+    joint = found.conditional_global_consumers_risk_quantile * found.release_rate
+    assert joint == pytest.approx(other.global_consumers_risk_quantile[0], rel=1e-3)
 
 
 def test_without_a_common_error_mean_and_quantile_are_one(production, a_component):

@@ -11,7 +11,7 @@ import pytest
 
 from service import documents
 from tests.service.api.conftest import Callers
-from tests.service.api.house import a_study, decision, done, example
+from tests.service.api.house import a_study, decision, done, example, put_in_force, specification
 
 SET_POINTS, IMPROVEMENTS, GIVEAWAY = "/v1/set-points", "/v1/improvements", "/v1/giveaway"
 
@@ -311,6 +311,41 @@ def test_a_record_without_lots_says_what_to_do(callers: Callers) -> None:
     stated = {"from": "record", "steered_by_this_analyzer": False}
     found = faults(callers["engineer"].post(SET_POINTS, asked(process_variation=stated)))
     assert "state the variation" in found["#/process_variation/from"]
+
+
+# --- rules of several rounds, and rules that are not done here -----------------------------------------
+
+
+def rule_in_force(callers: Callers, code: str, **members: Any) -> str:
+    rule = {"kind": "guarded_by_specific_risk", "largest_risk": 0.05, **members}
+    engineer, approver = callers["engineer"], callers["max"]
+    put_in_force(engineer, approver, "specifications", specification(code, 3.2, rule))
+    return code
+
+
+def test_looks_are_those_of_the_rules(callers: Callers) -> None:
+    twice = rule_in_force(callers, "customer-d", rounds=2)
+    once = rule_in_force(callers, "customer-e", rounds=1)
+    two, one = (
+        done(callers["engineer"].post(SET_POINTS, asked(specifications=["legal", code])), 200)
+        for code in (twice, once)
+    )
+    assert (two["procedure"]["looks"], one["procedure"]["looks"]) == (2, 1)
+    # The risk of both looks together is that of the rule: each takes less, and some lots get another chance.
+    assert two["measurement"]["upper_acceptance_limit"] < one["measurement"]["upper_acceptance_limit"]
+    assert two["today"]["further_looks"] > 0
+    assert two["today"]["release_rate"] > two["today"]["release_rate_of_first_look"]
+    assert two["cheapest"]["cost_parts"]["retests"] > 0
+    option = {"code": "once", "kind": "fewer_looks", "looks": 1}
+    found = compared(callers, option, specifications=["legal", twice])
+    assert found["ranked"][0]["set_point"] == pytest.approx(one["cheapest"]["set_point"], abs=1e-6)
+
+
+def test_a_cap_on_the_risk_of_the_lot_is_not_done_here(callers: Callers) -> None:
+    code = rule_in_force(callers, "customer-f", largest_lot_risk=0.1)
+    response = callers["engineer"].post(SET_POINTS, asked(specifications=[code]))
+    assert response.status_code == 422
+    assert response.get_json()["type"] == "/problems/not-supported"
 
 
 # --- improvements --------------------------------------------------------------------------------------
