@@ -110,6 +110,7 @@ class InfluenceBounds:
     unit: str
     lower: float | None
     upper: float | None
+    required: bool = True
 
 
 @dataclass(frozen=True)

@@ -149,6 +149,7 @@ class InfluenceBoundsSchema(BoundsSchema):
 
     loads_to = InfluenceBounds
     unit = Text(32, required=True)
+    required = Flag(load_default=True, about="Whether a scan that comes without it is held.")
 
 
 class CalibrationSchema(StrictSchema):

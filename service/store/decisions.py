@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import asdict
 from typing import Any
 
@@ -152,14 +152,26 @@ class Readings:
     def __init__(self, session: Session) -> None:
         self._session = session
         self._added: dict[ReadingIdentity, StoredReading] = {}
+        self._added_at: dict[ReadingIdentity, StoredReading] = {}
 
     def find(self, identities: Iterable[ReadingIdentity]) -> Sequence[StoredReading]:
         """Return those of the identities that were used before."""
-        wanted = list(dict.fromkeys(identities))
-        names = ("analyzer", "identity", "sample")
-        earlier = [each for each in wanted if each not in self._added]
+        return self._find(identities, ("analyzer", "identity", "sample"), self._added)
+
+    def find_taken_at(self, instants: Iterable[ReadingIdentity]) -> Sequence[StoredReading]:
+        """Return readings with an identity of their own that were taken at (analyzer, instant, sample)."""
+        return self._find(instants, ("analyzer", "taken_at", "sample"), self._added_at)
+
+    def _find(
+        self,
+        keys: Iterable[ReadingIdentity],
+        names: tuple[str, str, str],
+        added: Mapping[ReadingIdentity, StoredReading],
+    ) -> Sequence[StoredReading]:
+        wanted = list(dict.fromkeys(keys))
+        earlier = [each for each in wanted if each not in added]
         rows = self._session.rows_among(readings, names, earlier)
-        found = [self._added[each] for each in wanted if each in self._added]
+        found = [added[each] for each in wanted if each in added]
         return found + [StoredReading(**row._mapping) for row in rows]
 
     def count(self) -> int:
@@ -177,9 +189,19 @@ class Readings:
         rows = self._session.rows(query.order_by(*order).limit(limit), readings)
         return [StoredReading(**row._mapping) for row in rows]
 
-    def add(self, identities: Iterable[ReadingIdentity], entry: Entry) -> None:
-        """Mark readings as used by an entry."""
-        for analyzer, identity, sample in identities:
-            stored = StoredReading(analyzer, identity, sample, entry.chain, entry.sequence)
+    def add(
+        self,
+        identities: Iterable[ReadingIdentity],
+        entry: Entry,
+        taken_at: Mapping[ReadingIdentity, str] | None = None,
+    ) -> None:
+        """Mark readings as used by an entry; ``taken_at`` of those whose identity is not the instant."""
+        instants = taken_at or {}
+        for identity in identities:
+            analyzer, name, sample = identity
+            instant = instants.get(identity)
+            stored = StoredReading(analyzer, name, sample, entry.chain, entry.sequence, instant)
             self._session.insert(readings, asdict(stored))
-            self._added[analyzer, identity, sample] = stored
+            self._added[identity] = stored
+            if instant is not None:
+                self._added_at[analyzer, instant, sample] = stored

@@ -150,13 +150,17 @@ class StoredLot:
 
 @dataclass(frozen=True)
 class StoredReading:
-    """A reading that was judged, with the entry that used it."""
+    """A reading that was judged, with the entry that used it.
+
+    ``taken_at`` is None where the identity is the instant itself, or was stored before there was a column.
+    """
 
     analyzer: str
     identity: str
     sample: str
     chain: str
     sequence: int
+    taken_at: str | None = None
 
 
 @dataclass(frozen=True)

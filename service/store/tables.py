@@ -103,6 +103,16 @@ readings = Table(
     _required("identity", key=True),
     _required("sample", key=True),
     *_entry_columns(),
+    # When it was taken, where its identity does not say so.
+    Column("taken_at", Text),
+    Index(
+        "ix_readings_taken_at",
+        "analyzer",
+        "taken_at",
+        "sample",
+        sqlite_where=text("taken_at IS NOT NULL"),
+        postgresql_where=text("taken_at IS NOT NULL"),
+    ),
 )
 
 lots = Table(

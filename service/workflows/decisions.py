@@ -13,8 +13,9 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows.judging import judge
 from service.workflows.paging import page_of, start_after
 from service.workflows.recording import Page, Request, entry_reference, record
-from service.workflows.request_checks import reading_identity
 from service.workflows.services import Services
+from service.workflows.stuck_sensors import stuck_sensors
+from service.workflows.used_readings import check_unused, mark_used
 
 
 def preview(services: Services, actor: Actor, request: DecisionRequest) -> dict[str, Any]:
@@ -23,7 +24,8 @@ def preview(services: Services, actor: Actor, request: DecisionRequest) -> dict[
     with services.database.reading() as unit_of_work:
         register = services.registers.current(unit_of_work)
         _check_unjudged(unit_of_work, request)
-        answer = judge(register, request, unit_of_work.now(request.line))
+        stuck = stuck_sensors(unit_of_work, request, register.plant.identical_readings)
+        answer = judge(register, request, unit_of_work.now(request.line), stuck=stuck)
     return {"id": None, "recorded": False, **answer, "entry": None}
 
 
@@ -48,7 +50,9 @@ def decide(
     def perform(unit_of_work: UnitOfWork) -> Entry:
         register = services.registers.current(unit_of_work)
         _check_unjudged(unit_of_work, decision_request)
-        answer = judge(register, decision_request, unit_of_work.now(decision_request.line))
+        stuck = stuck_sensors(unit_of_work, decision_request, register.plant.identical_readings)
+        moment = unit_of_work.now(decision_request.line)
+        answer = judge(register, decision_request, moment, stuck=stuck)
         content = {**answer, "request": said}
         entry = unit_of_work.append(decision_request.line, "decision", actor.principal, content)
         project(unit_of_work, decision_request, content, entry)
@@ -65,7 +69,7 @@ def project(
     place = {"product": request.product, "lot": request.lot, "outcome": content["outcome"], "entry": entry}
     unit_of_work.decisions.add(round=content["round"], **place)
     unit_of_work.lots.upsert(line=request.line, rounds=content["round"], **place)
-    unit_of_work.readings.add([reading_identity(reading) for reading in request.readings], entry)
+    mark_used(unit_of_work, request, entry)
 
 
 def _check_unjudged(unit_of_work: UnitOfWork, request: DecisionRequest) -> None:
@@ -78,19 +82,6 @@ def _check_unjudged(unit_of_work: UnitOfWork, request: DecisionRequest) -> None:
             link=f"/v1/decisions/{lot.chain}.{lot.sequence}",
         )
     check_unused(unit_of_work, request)
-
-
-def check_unused(unit_of_work: UnitOfWork, request: DecisionRequest) -> None:
-    """Refuse readings that were judged before, in any lot. Raises Conflict."""
-    used = unit_of_work.readings.find([reading_identity(reading) for reading in request.readings])
-    if used:
-        first = used[0]
-        raise Conflict(
-            "reading-already-judged",
-            f"The reading of sample {first.sample} on {first.analyzer} ({first.identity}) was judged before; "
-            "the same reading again is no new evidence.",
-            link=f"/v1/decisions/{first.chain}.{first.sequence}",
-        )
 
 
 def answer_of(entry: Entry) -> dict[str, Any]:

@@ -10,7 +10,7 @@ from itertools import islice
 
 from service.ledger import Entry, Finding
 from service.store.unit_of_work import ReadingIdentity, StoredReading, UnitOfWork
-from service.workflows.request_checks import recorded_identity
+from service.workflows.request_checks import recorded_reading
 
 # So many are looked up at a time, however many readings a page of entries has.
 LOOKED_UP = 1000
@@ -25,16 +25,20 @@ class JudgedReadings:
 
     def finding_among(self, page: Sequence[Entry]) -> Finding | None:
         """Give the first reading of a page of entries that does not stand in the table as it was judged."""
-        said = ((identity, entry) for entry in page for identity in _identities(entry))
+        said = ((identity, instant, entry) for entry in page for identity, instant in _readings(entry))
         while some := list(islice(said, LOOKED_UP)):
             self._expected += len(some)
-            stored = self._unit_of_work.readings.find(identity for identity, _ in some)
-            found = {_key(row): (row.chain, row.sequence) for row in stored}
-            for identity, entry in some:
-                if identity not in found:
+            stored = self._unit_of_work.readings.find(identity for identity, _, _ in some)
+            found = {_key(row): row for row in stored}
+            for identity, instant, entry in some:
+                row = found.get(identity)
+                if row is None:
                     return _finding(entry, identity, "is missing from the readings that were judged")
-                if found[identity] != (entry.chain, entry.sequence):
+                if (row.chain, row.sequence) != (entry.chain, entry.sequence):
                     return _finding(entry, identity, "stands in the tables as one of another decision")
+                # Rows that are older than the column have no instant.
+                if row.taken_at not in (None, instant):
+                    return _finding(entry, identity, "stands in the tables as taken at another time")
         return None
 
     def finding_beyond(self) -> Finding | None:
@@ -46,17 +50,17 @@ class JudgedReadings:
         while rows := self._unit_of_work.readings.list(after=after, limit=LOOKED_UP):
             for row in rows:
                 entry = self._unit_of_work.ledger.entry(row.chain, row.sequence)
-                if entry is None or _key(row) not in _identities(entry):
+                if entry is None or _key(row) not in [identity for identity, _ in _readings(entry)]:
                     detail = f"{_name(_key(row))} stands in the tables as judged, but no entry says so"
                     return Finding(row.chain, row.sequence, detail)
             after = _key(rows[-1])
         return Finding("plant", None, "the readings that were judged are other ones than the decisions say")
 
 
-def _identities(entry: Entry) -> list[ReadingIdentity]:
+def _readings(entry: Entry) -> list[tuple[ReadingIdentity, str]]:
     if entry.kind != "decision":
         return []
-    return [recorded_identity(reading) for reading in entry.content["request"]["readings"]]
+    return [recorded_reading(reading) for reading in entry.content["request"]["readings"]]
 
 
 def _key(row: StoredReading) -> ReadingIdentity:

@@ -25,6 +25,7 @@ from service.workflows.replicate_checks import judge_replicates, level_of
 from service.workflows.request_checks import check_request
 from service.workflows.rule_figures import FIGURES, figures_of
 from service.workflows.rules import rule_here
+from service.workflows.stuck_sensors import StuckSensors, stuck_before
 from service.workflows.wording import IN_GUARD_BAND, about_the_value, display
 
 # The worst verdict decides the lot.
@@ -78,11 +79,17 @@ class Ruling:
 
 
 def judge(
-    register: Register, request: DecisionRequest, recorded_at: str, earlier: EarlierLooks = FIRST_LOOK
+    register: Register,
+    request: DecisionRequest,
+    recorded_at: str,
+    earlier: EarlierLooks = FIRST_LOOK,
+    *,
+    stuck: StuckSensors | None = None,
 ) -> dict[str, Any]:
     """Judge a lot by what is in force; gives the answer but for its place in the record.
 
-    The readings of a further look are joined with all those before it.
+    The readings of a further look are joined with all those before it. ``stuck`` are the channels that showed
+    the same digits too often, which only the record can tell.
 
     Raises
     ------
@@ -95,7 +102,9 @@ def judge(
 
     def measured(code: str) -> Measured:
         if code not in judged:
-            judged[code] = measure(register, request, code, recorded_at, earlier.counted(code).readings)
+            seen = earlier.counted(code).readings
+            found = measure(register, request, code, recorded_at, seen, stuck or {})
+            judged[code] = replace(found, holds=(*found.holds, *stuck_before(earlier.decisions, code)))
         return judged[code]
 
     codes = request.specifications

@@ -19,6 +19,7 @@ from service.workflows.evidence import FaultCollector
 from service.workflows.holds import Hold
 from service.workflows.register import BudgetInForce, Register
 from service.workflows.replicate_checks import Replicates, replicates_of
+from service.workflows.stuck_sensors import StuckSensors
 
 _ASK_THE_LABORATORY: Final = "Have the laboratory analyse a sample of this lot."
 _WEIGHTS: Final = "one weight above 0 for all readings of one presentation"
@@ -50,7 +51,12 @@ class Measured:
 
 
 def measure(
-    register: Register, request: DecisionRequest, code: str, recorded_at: str, seen: int = 0
+    register: Register,
+    request: DecisionRequest,
+    code: str,
+    recorded_at: str,
+    seen: int,
+    stuck: StuckSensors,
 ) -> Measured:
     """Join the readings of one characteristic and find every reason not to trust them.
 
@@ -91,6 +97,8 @@ def measure(
         for reading in scans
         for hold in _scan_holds(register.calibrations[reading.calibration], reading, register.plant.time_zone)
     ]
+    used = {(reading.analyzer, channel) for reading in scans for channel in channels}
+    holds += [hold for sensor, hold in stuck.items() if sensor in used]
     estimate = None
     replicates: tuple[Replicates, ...] = ()
     if budget is None:
@@ -249,6 +257,10 @@ def _scan_holds(calibration: Calibration, reading: Reading, time_zone: str) -> l
             holds.append(Hold("scan-flagged", detail, _SCAN_AGAIN))
     for name, bounds in calibration.influences.items():
         value = reading.influences.get(name)
+        if value is None and bounds.required:
+            words = name.replace("_", " ")
+            detail = f"The scan of sample {reading.sample} came without {words}."
+            holds.append(Hold("influence-missing", detail, _SCAN_AGAIN))
         below = value is not None and bounds.lower is not None and value < bounds.lower
         above = value is not None and bounds.upper is not None and value > bounds.upper
         if below or above:

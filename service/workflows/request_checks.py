@@ -22,18 +22,23 @@ ReadingIdentity = tuple[str, str, str]
 
 def reading_identity(reading: Reading) -> ReadingIdentity:
     """Name a reading so that it counts once: analyzer, measurement or instant to the millisecond, sample."""
-    return _identity(reading.analyzer, reading.measurement, reading.taken_at, reading.sample)
+    name = reading.measurement or _moment(reading.taken_at)
+    return reading.analyzer, name, reading.sample
 
 
-def recorded_identity(reading: Mapping[str, Any]) -> ReadingIdentity:
-    """Name a reading as it stands in an entry: the same name as reading_identity gave it."""
-    taken_at = datetime.fromisoformat(reading["taken_at"])
-    return _identity(reading["analyzer"], reading.get("measurement"), taken_at, reading["sample"])
+def reading_instant(reading: Reading) -> ReadingIdentity:
+    """Name a reading by its instant, as one without a measurement of its own would be named."""
+    return reading.analyzer, _moment(reading.taken_at), reading.sample
 
 
-def _identity(analyzer: str, measurement: str | None, taken_at: datetime, sample: str) -> ReadingIdentity:
-    moment = taken_at.astimezone(UTC).isoformat(timespec="milliseconds")
-    return analyzer, measurement or moment, sample
+def recorded_reading(reading: Mapping[str, Any]) -> tuple[ReadingIdentity, str]:
+    """Name a reading as it stands in an entry, as reading_identity did, with its instant."""
+    moment = _moment(datetime.fromisoformat(reading["taken_at"]))
+    return (reading["analyzer"], reading.get("measurement") or moment, reading["sample"]), moment
+
+
+def _moment(taken_at: datetime) -> str:
+    return taken_at.astimezone(UTC).isoformat(timespec="milliseconds")
 
 
 def check_request(register: Register, request: DecisionRequest, now: datetime) -> None:
@@ -151,12 +156,20 @@ def _check_conditions(
 
 
 def _check_no_twins(request: DecisionRequest) -> None:
+    """Refuse the same reading twice; it stays the same when one of the two names its measurement."""
     seen: dict[ReadingIdentity, int] = {}
+    measured_at: dict[ReadingIdentity, int] = {}
     for index, reading in enumerate(request.readings):
-        first = seen.setdefault(reading_identity(reading), index)
-        if first != index:
+        identity, instant = reading_identity(reading), reading_instant(reading)
+        first = seen.get(identity)
+        if first is None:
+            first = (measured_at if reading.measurement is None else seen).get(instant)
+        if first is not None:
             raise Conflict(
                 "reading-already-judged",
                 f"Readings {first} and {index} are the same reading (analyzer, time, sample); "
                 "the same reading twice is not two readings.",
             )
+        seen[identity] = index
+        if reading.measurement is not None:
+            measured_at[instant] = index

@@ -12,11 +12,13 @@ from service.ledger import Entry
 from service.schemas import dump
 from service.store.rows import StoredLot
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.decisions import answer_of, check_unused, project
+from service.workflows.decisions import answer_of, project
 from service.workflows.earlier_looks import EarlierLooks
 from service.workflows.judging import judge
 from service.workflows.recording import Request, record
 from service.workflows.services import Services
+from service.workflows.stuck_sensors import stuck_sensors
+from service.workflows.used_readings import check_unused
 
 # A lot that other lines read again meanwhile is looked up anew so often.
 _TRIES: Final = 5
@@ -70,7 +72,8 @@ def retest(
         earlier = earlier_looks(unit_of_work, product, lot)
         _check_open(stored, earlier)
         check_unused(unit_of_work, decision_request)
-        answer = judge(register, decision_request, unit_of_work.now(further.line), earlier)
+        stuck = stuck_sensors(unit_of_work, decision_request, register.plant.identical_readings)
+        answer = judge(register, decision_request, unit_of_work.now(further.line), earlier, stuck=stuck)
         content = {**answer, "request": said}
         entry = unit_of_work.append(further.line, "decision", actor.principal, content)
         project(unit_of_work, decision_request, content, entry)

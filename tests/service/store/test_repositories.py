@@ -264,6 +264,19 @@ class TestDecisionsLotsReadings:
         ]
         assert unit.readings.find([]) == []
 
+    def test_a_measurement_is_found_by_its_instant_in_its_transaction_and_after_it(self, database):
+        named, at = ("nir-1", "m1", "1"), "2026-03-02T05:12:04.120Z"
+        with database.writing(["tower-1"]) as unit:
+            entry = act(unit, "tower-1")
+            unit.readings.add([named, ("nir-1", at, "2")], entry, {named: at})
+            stored = StoredReading(*named, "tower-1", entry.sequence, at)
+            assert unit.readings.find_taken_at([("nir-1", at, "1")]) == [stored]
+            unit.commit()
+        with database.reading() as unit:
+            instants = [("nir-1", at, "1"), ("nir-1", at, "2"), ("nir-2", at, "1")]
+            assert unit.readings.find_taken_at(instants) == [stored]
+            assert unit.readings.find([named]) == [stored]
+
     def test_what_a_transaction_gathered_is_found_in_it_and_after_it(self, database):
         with database.writing(["tower-1"]) as unit:
             judge("A", "hold").perform(unit)

@@ -131,7 +131,12 @@ def test_a_record_with_everything_in_it_is_whole(database: Database) -> None:
             "the reading nir-1/2026-03-02T05:12:03.120+00:00/1 stands in the tables as one of another",
         ),
         (
-            "INSERT INTO readings VALUES ('nir-1', '2026-03-02T05:12:55.120+00:00', '1', 'tower-1', 1)",
+            "UPDATE readings SET taken_at = '2026-03-02T05:12:09.000+00:00'"
+            " WHERE identity = '2026-03-02T05:12:03.120+00:00'",
+            "the reading nir-1/2026-03-02T05:12:03.120+00:00/1 stands in the tables as taken at another time",
+        ),
+        (
+            "INSERT INTO readings VALUES ('nir-1', '2026-03-02T05:12:55.120+00:00', '1', 'tower-1', 1, NULL)",
             "tower-1.1: the reading nir-1/2026-03-02T05:12:55.120+00:00/1 stands in the tables as judged",
         ),
         (
