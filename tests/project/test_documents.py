@@ -75,7 +75,9 @@ class Caller:
 
 def reading_of(moisture: float, number: int, **changes: Any) -> plant.Document:
     taken_at = f"2026-03-02T06:12:{number:02d}.120+01:00"
-    return plant.reading("1", taken_at, moisture, distance=1.8, temperature=24.5) | changes
+    # A channel that never moved would be stuck.
+    fat, protein = (value + number % 2 / 100 for value in (27.1, 24.9))
+    return plant.reading("1", taken_at, moisture, fat, protein, distance=1.8, temperature=24.5) | changes
 
 
 def documents_of(caller: Caller) -> Iterator[tuple[str, Any]]:
