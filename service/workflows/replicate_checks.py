@@ -14,20 +14,25 @@ from service.workflows.calendar import DEFAULT_PLANT
 from service.workflows.holds import Hold
 from service.workflows.register import BudgetInForce, Register
 
-# Twice the readings that first disagreed, and their mean may count again; beyond them the median.
+# So many more are read once; when they do not settle it, the median is what is left (ISO 5725-6, 5.2.2, from
+# memory).
 _MORE: Final = 2
-_MOST_FOR_A_MEAN: Final = 4
+_MOST_BEFORE: Final = 3
 
 
 @dataclass(frozen=True)
 class Replicates:
-    """Readings of one channel and one sample on one analyzer, with what is known to separate them."""
+    """Readings of one channel and one sample on one analyzer, with what is known to separate them.
+
+    ``most`` is how many of them the procedure of the budget has.
+    """
 
     channel: str
     unit: str
     sample: str
     values: tuple[float, ...]
     spread: ReplicateSpread
+    most: int
 
 
 @dataclass(frozen=True)
@@ -51,6 +56,7 @@ def replicates_of(
         at = means if model is None else model.estimates(means)
     except BudgetsError:
         return ()
+    most = budget.budget.procedure.readings_per_sample.most
     together: dict[tuple[str, str], list[int]] = {}
     for index, scan in enumerate(scans):
         together.setdefault((scan.sample, scan.analyzer), []).append(index)
@@ -64,7 +70,7 @@ def replicates_of(
             if spread is not None:
                 unit = register.characteristics[budget.document.product, channel].unit
                 chosen = tuple(values[index] for index in indices)
-                found.append(Replicates(channel, unit, sample, chosen, spread))
+                found.append(Replicates(channel, unit, sample, chosen, spread, most))
     return tuple(found)
 
 
@@ -128,7 +134,7 @@ def _hold(each: Replicates, found: float, critical: float, level: float) -> Hold
 def _next(each: Replicates, level: float) -> str:
     """Give the first remedy: two more readings, and when those do not agree either, the median."""
     number = len(each.values) + _MORE
-    if number > _MOST_FOR_A_MEAN + 1:
+    if len(each.values) > _MOST_BEFORE or number > each.most:
         return (
             f"Their median is {median(each.values):.6g} {each.unit}. Look for the cause, then a person "
             "decides on this lot."

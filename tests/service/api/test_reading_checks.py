@@ -156,3 +156,41 @@ def test_an_influence_may_be_optional(callers: Callers) -> None:
     etag = callers["engineer"].get(path).headers["ETag"]
     done(callers["engineer"].put(path, calibration, If_Match=etag), 200)
     assert done(callers["mes"].post("/v1/decisions", without_temperature()))["outcome"] == "release"
+
+
+# --- further looks -------------------------------------------------------------------------------------
+
+
+def again(callers: Callers, place: int, *moisture: float) -> dict[str, Any]:
+    """Read a lot on hold again, the same sample."""
+    whole = house.moved(decision(f"W26-{place}", moisture), minutes=100 + place)
+    request = {name: whole[name] for name in ("line", "units", "readings")}
+    path = f"/v1/lots/whole-milk-powder/W26-{place}/retests"
+    return done(callers["mes"].post(path, request))
+
+
+def test_two_more_readings_settle_replicates_that_disagree(callers: Callers) -> None:
+    held = judge(callers, 1, 2.60, 2.74)
+    assert (held["outcome"], codes(held)) == ("hold", {"replicates-disagree"})
+    assert "Read sample 1 2 more times" in held["reasons"][0]["next"]
+    # no estimate was compared, so no round is used up
+    assert held["rounds_left"] == 1
+    answer = again(callers, 1, 2.66, 2.68)
+    assert answer["outcome"] == "release"
+    (check,) = answer["verdicts"][0]["replicates"]["checks"]
+    assert (check["readings"], check["agrees"]) == (4, True)
+
+
+def test_replicates_that_still_disagree_are_not_outvoted(callers: Callers) -> None:
+    judge(callers, 1, 2.60, 2.90)
+    answer = again(callers, 1, 2.66, 2.68)
+    assert (answer["outcome"], codes(answer)) == ("hold", {"replicates-disagree"})
+    assert "median" in answer["reasons"][0]["next"]
+
+
+def test_readings_of_a_stuck_sensor_are_not_made_good_by_others(callers: Callers) -> None:
+    allow(callers, 3)
+    assert codes(judge(callers, 1, 2.71, 2.71, 2.71)) == {"stuck-sensor"}
+    answer = again(callers, 1, 2.72)
+    assert (answer["outcome"], codes(answer)) == ("hold", {"stuck-sensor"})
+    assert "stay with the lot" in answer["reasons"][0]["next"]

@@ -84,6 +84,13 @@ def test_four_that_still_disagree_leave_their_median() -> None:
     assert "more times" not in reason["next"]
 
 
+def test_more_readings_are_asked_for_within_the_procedure_only() -> None:
+    """The procedure has 4 readings of a sample: a fifth would be a fault."""
+    readings = [a_reading(value, second) for second, value in enumerate((2.6, 2.7, 3.2))]
+    (reason,) = verdict_of(*readings)["reasons"]
+    assert "median is 2.7 %" in reason["next"]
+
+
 def test_how_often_good_lots_are_held_counts_every_sample() -> None:
     readings = [a_reading(2.8, second, sample=str(second // 2)) for second in range(4)]
     figures = verdict_of(*readings, level=0.95)["replicates"]
