@@ -16,7 +16,7 @@ from service.errors import Fault, InvalidRequest, NotFound
 from service.schemas import dump, load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.budgets import resolve_budget
+from service.workflows.resolved_budgets import resolve_budget
 from service.workflows.rules import decision_rule, planned_counts, tolerance
 from service.workflows.services import Services
 from service.workflows.stored_budgets import budget_evaluation, budget_from_evaluation

@@ -24,13 +24,14 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
 from service.workflows.accounts import verify_signature
 from service.workflows.approvals import authors_of
-from service.workflows.budgets import approval_of_resolved, resolve_budget
+from service.workflows.budgets import approval_of_resolved
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import LONGEST_SERVICE, FaultCollector
 from service.workflows.extended_limits import check_limits_are_narrower
 from service.workflows.recording import PLANT_CHAIN, Request, entry_reference, record
 from service.workflows.reevaluations import evidence_of
 from service.workflows.renewals import each_budget
+from service.workflows.resolved_budgets import resolve_budget
 from service.workflows.services import Services
 from service.workflows.version_steps import Answer, answer_of
 from service.workflows.versioned_kind import Approval

@@ -20,8 +20,8 @@ from service.access import require
 from service.documents import Actor, BudgetDocument, ImprovementOption, ImprovementsRequest
 from service.schemas import load
 from service.store.unit_of_work import UnitOfWork
-from service.workflows.budgets import resolve_budget
 from service.workflows.evidence import FaultCollector
+from service.workflows.resolved_budgets import resolve_budget
 from service.workflows.services import Services
 from service.workflows.set_point_questions import Answer, Question, question_of
 from service.workflows.set_points import CAUTION, question_figures

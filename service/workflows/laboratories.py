@@ -10,6 +10,7 @@ import hashlib
 import json
 from collections.abc import Mapping
 from dataclasses import replace
+from datetime import date
 from typing import Any, Final
 
 from service.documents import (
@@ -64,18 +65,26 @@ def resolve(
     behind = _behind(unit_of_work, code, stated, unit, pointer, extended=extended)
     _check_is_dated(evidence, stated, behind, pointer)
     assert behind.serves_until is not None  # checked just now
+    # The study belongs to the laboratory, not to the analyzer and product that it is used for.
     reference = {
         "code": evidence.laboratory,
         "component": evidence.component,
         "characteristic": about,
+        **_entry_used(stored, method, stated, behind.serves_until),
+    }
+    return replace(behind, study=None, diagnostics={}, laboratory=reference)
+
+
+def _entry_used(
+    stored: StoredDocument, method: LaboratoryMethod, stated: StatedEvidence, serves_until: date
+) -> dict[str, Any]:
+    return {
         "method": method.method,
         "revision": stored.revision,
         "entry": {"chain": stored.chain, "sequence": stored.sequence},
         "study": stated.study if isinstance(stated, StudyEvidence) else None,
-        "serves_until": behind.serves_until.isoformat(),
+        "serves_until": serves_until.isoformat(),
     }
-    # The study belongs to the laboratory, not to the analyzer and product that it is used for.
-    return replace(behind, study=None, diagnostics={}, laboratory=reference)
 
 
 def check_laboratory(unit_of_work: UnitOfWork, laboratory: Laboratory, collector: FaultCollector) -> None:
