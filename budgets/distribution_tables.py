@@ -9,10 +9,13 @@ the number of the cell, and the remaining bits the place inside it.
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.special import betaln, stdtr
+
+from budgets.error_distributions import StudentT
 
 _MANTISSA_BITS = 52
 _CELL_BITS = 8  # 256 cells per power of two: the first ones are 1/256 wide
@@ -21,6 +24,7 @@ _OFFSET = 1023 << _CELL_BITS  # cell number of x = 1
 _PLACE_MASK = (1 << _SHIFT) - 1
 _NEGLIGIBLE = 1e-12
 _LARGEST_POWER = 1000
+_SMALLEST, _TINY = 1e-40, 1e-300
 
 
 class DistributionTable:
@@ -77,6 +81,73 @@ class DistributionTable:
         positive = z > 0
         np.subtract(1.0, tail, out=tail, where=positive)
         z[...] = tail
+
+
+class TailTable:
+    """The upper tail of Student's t with a relative error below 5e-10, for sums over many nodes.
+
+    Parameters
+    ----------
+    degrees_of_freedom : float
+        Finite.
+
+    Notes
+    -----
+    Cubic Hermite pieces of the logarithm of the tail, in the cells of `DistributionTable`: the logarithm
+    bends less the further out it is, so wider cells do there.
+    """
+
+    def __init__(self, degrees_of_freedom: float) -> None:
+        error = StudentT(degrees_of_freedom)
+        powers = np.arange(1, _LARGEST_POWER)
+        beyond = np.count_nonzero(error.upper_tail(np.exp2(powers) - 1) > _SMALLEST)
+        self._cells = (1 + int(beyond)) << _CELL_BITS
+        edges = ((np.arange(self._cells + 1) + _OFFSET) << _SHIFT).view(np.float64)
+        tail = np.maximum(error.upper_tail(edges - 1), _TINY)
+        value = np.log(tail)
+        slopes = -student_density(edges - 1, degrees_of_freedom) / tail
+        width, rise = np.diff(edges), np.diff(value)
+        start, end = slopes[:-1] * width, slopes[1:] * width
+        self._coefficients = (value[:-1], start, 3 * rise - 2 * start - end, start + end - 2 * rise)
+
+    def upper_tail(self, z: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return the probability above z.
+
+        Parameters
+        ----------
+        z : ndarray of float64, any shape
+            Not below 0.
+
+        Returns
+        -------
+        ndarray, shape of z
+            Of what is below 1e-40, some number not above it.
+        """
+        bits = (z + 1.0).view(np.int64)
+        cell = np.minimum((bits >> _SHIFT) - _OFFSET, self._cells - 1)
+        place = (bits & _PLACE_MASK) * (1.0 / (1 << _SHIFT))
+        first, second, third, fourth = self._coefficients
+        logarithm: NDArray[np.float64] = fourth[cell]
+        for coefficient in (third, second, first):
+            logarithm *= place
+            logarithm += coefficient[cell]
+        np.exp(logarithm, out=logarithm)
+        return logarithm
+
+
+@lru_cache(maxsize=16)
+def tail_table(degrees_of_freedom: float) -> TailTable:
+    """Return the table for some degrees of freedom, made once.
+
+    Parameters
+    ----------
+    degrees_of_freedom : float
+
+    Returns
+    -------
+    TailTable
+    """
+    return TailTable(degrees_of_freedom)
 
 
 def student_density(z: NDArray[np.float64], nu: float) -> NDArray[np.float64]:

@@ -8,13 +8,15 @@ terms are positive, so the sums keep their relative digits far out in the tails.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, fields
 from typing import NamedTuple, Self
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import ndtr
 
-from budgets.error_distributions import StudentT
+from budgets.distribution_tables import tail_table
 from budgets.level_dependence import LevelDependence
 from budgets.production_priors import ProductionPrior, standard_marks
 
@@ -218,7 +220,6 @@ def _shares(
     expected: Array, spread: Array | float, interval: tuple[Array | None, Array | None], nu: float
 ) -> tuple[Array, Array]:
     """Return the probabilities of a value inside and outside of an interval, each summed as such."""
-    error = StudentT(nu)
     lower, upper = interval
     if lower is None or upper is None:
         if upper is not None:
@@ -226,11 +227,21 @@ def _shares(
         else:
             assert lower is not None  # a tolerance has at least one limit
             beyond = (expected - lower[:, None]) / spread
-        return error.lower_tail(beyond), error.upper_tail(beyond)
-    above = (upper[:, None] - expected) / spread
-    below = (expected - lower[:, None]) / spread
-    outside = error.upper_tail(above) + error.upper_tail(below)
+        above, below = _tails(beyond, nu)
+        return below, above
+    to_upper = (upper[:, None] - expected) / spread
+    to_lower = (expected - lower[:, None]) / spread
+    over, not_over = _tails(to_upper, nu)
+    under, not_under = _tails(to_lower, nu)
     # From the side on which the value is expected, as in conformity.conformance_probability.
-    near, far = np.minimum(above, below), np.maximum(above, below)
-    inside = error.lower_tail(near) - error.upper_tail(far)
-    return np.maximum(inside, 0.0), outside
+    inside = np.where(to_upper < to_lower, not_over - under, not_under - over)
+    return np.maximum(inside, 0.0), over + under
+
+
+def _tails(z: Array, nu: float) -> tuple[Array, Array]:
+    """Return the probabilities above and below z: the smaller one as a tail, the other as the rest."""
+    size = np.abs(z)
+    tail = ndtr(-size) if math.isinf(nu) else tail_table(nu).upper_tail(size)
+    rest = 1 - tail
+    positive = z > 0
+    return np.where(positive, tail, rest), np.where(positive, rest, tail)
