@@ -20,7 +20,7 @@ from service.schemas.base import StrictSchema, Wrong
 from service.schemas.fields import Choice, Code, Count, Day, Flag, Number, Part, Parts, Text, at_schema
 
 # A verdict goes through all of them.
-MOST_VALUES = 200
+MOST_VALUES = 100
 MOST_BANDS = 200
 
 

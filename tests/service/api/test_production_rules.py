@@ -215,6 +215,28 @@ def test_a_risk_out_of_reach_says_what_is_impossible(callers: Callers) -> None:
     )
 
 
+def test_a_study_of_lots_in_another_unit_is_converted(callers: Callers) -> None:
+    study = production_study()
+    rows = [[lot, round(10 * reading, 2)] for lot, reading in study["rows"]]
+    tenfold = production_study(code="wmp-prod-g", unit="g/kg", rows=rows)
+    priors = []
+    for code, body in (("wmp-prod-2026", study), ("wmp-prod-g", tenfold)):
+        done(callers["engineer"].post("/v1/studies", body))
+        document = with_rule({**SPECIFIC, "prior": {"study": code, "distribution": "t"}}, code=f"by-{code}")
+        house.put_in_force(callers["ada"], callers["max"], "specifications", document)
+        request = house.moved(decision(code, specifications=[document["code"]]), minutes=-len(code))
+        priors.append(done(callers["mes"].post("/v1/decisions", request))["verdicts"][0]["prior"])
+    for name in ("mean", "standard_deviation", "conformance_probability"):
+        assert priors[0][name] == pytest.approx(priors[1][name], rel=1e-9)
+
+
+def test_the_record_of_a_rule_with_a_prior_is_whole(callers: Callers) -> None:
+    document = with_rule({**GLOBAL, "prior": DECLARED})
+    house.put_in_force(callers["ada"], callers["max"], "specifications", document)
+    judged(callers, document, "one", 2.9, 2.9)
+    assert done(callers["auditor"].get("/v1/ledger/verification"), 200)["whole"] is True
+
+
 def test_items_and_several_rounds_are_not_supported_beside_it(callers: Callers) -> None:
     response = drafted(callers, with_rule({**GLOBAL, "prior": DECLARED, "rounds": 2}))
     assert "rounds" in next(iter(faults(response)))

@@ -191,6 +191,15 @@ def test_lapsed_evidence_holds_from_its_instant_on_and_is_announced_before() -> 
     assert answer("2027-03-16T11:00:00.000000Z")["notices"] == []
 
 
+def test_a_lapsed_production_study_holds_what_rests_on_its_prior() -> None:
+    def answer(lapses_at: str) -> dict[str, Any]:
+        return judged(register=a_register(prior_lapses={("customer-b", "moisture"): lapses_at}))
+
+    assert reasons(answer(NOW)) == ["evidence-lapsed"]
+    assert "production study" in answer(NOW)["reasons"][0]["detail"]
+    assert answer("2026-03-16T11:00:00.000000Z")["outcome"] == "release"
+
+
 def test_a_required_characteristic_that_was_not_sent_is_held() -> None:
     both = a_specification("customer-b", a_requirement(), a_requirement(characteristic="fat"))
     answer = judged(register=a_register(specifications={"customer-b": both}))
