@@ -199,24 +199,6 @@ class ProductionPrior:
             total += np.exp(-0.5 * z * z).sum(axis=-1)
         return total / (_ROOT * self._width * self._centres.size)
 
-    def tail(self, limit: float, *, above: bool) -> float:
-        """Return the probability of a true value above, or below, a limit.
-
-        Parameters
-        ----------
-        limit : float, unit of the characteristic
-        above : bool
-
-        Returns
-        -------
-        float
-        """
-        sign = 1.0 if above else -1.0
-        if self.distribution == "empirical":
-            z = sign * (limit - self._centres) / self._width
-            return float(np.mean(StudentT(math.inf).upper_tail(z)))
-        return float(StudentT(self.degrees_of_freedom).upper_tail(sign * (limit - self.mean) / self._scale))
-
     @cached_property
     def marks(self) -> Array:
         """Places that part the axis into pieces in each of which the density is smooth."""

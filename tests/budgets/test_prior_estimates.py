@@ -1,13 +1,17 @@
 """Priors from readings, studies and reference values: the truth of simulated plants within the intervals."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
+from budgets.conformity import Tolerance
 from budgets.errors import EvidenceError, LimitsError
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.evidence.study_data import StudyData, evaluate_study
+from budgets.global_risks import nonconforming_share
+from budgets.measurement_errors import MeasurementErrors
 from budgets.prior_estimates import prior_of_readings, prior_of_reference_values, prior_of_study
 from budgets.propagation import Counts
 
@@ -62,7 +66,11 @@ def test_the_empirical_prior_keeps_shape_and_takes_the_measurement_out(a_budget)
     skew = 3 + 0.12 * (generator.exponential(1.0, 2000) - 1) + generator.normal(0, RANDOM, 2000)
     found = prior_of_readings(skew, a_budget(), ONE, steered=False, distribution="empirical").prior
     assert found.standard_deviation == pytest.approx(0.12, rel=0.05)
-    above, below = found.tail(3.3, above=True), found.tail(2.7, above=False)
+    errors = MeasurementErrors.of(0.01)
+    above, below = (
+        nonconforming_share(replace(found, anchor="true_values"), errors, tolerance)
+        for tolerance in (Tolerance(None, 3.3), Tolerance(2.7, None))
+    )
     assert above > 10 * below
     with pytest.raises(EvidenceError, match="29 lots; a prior is made from 30 on"):
         prior_of_readings(skew[:29], a_budget(), ONE, steered=False, distribution="empirical")
