@@ -143,6 +143,15 @@ SET_POINT_ANSWERS: dict[str, Form] = {
             "today": ref("SetPointFigures"),
             "best_centre": or_null(ref("SetPointFigures")),
             "nearest_without_drift": _MAYBE,
+            "nearest_over_the_interval": or_null(
+                object_of(
+                    "The nearest set point at both ends of the interval of the variation.",
+                    {
+                        "least_variation": _MAYBE,
+                        "most_variation": {**_MAYBE, "description": "null: none keeps what is wanted."},
+                    },
+                )
+            ),
             "required_uncertainty": or_null(
                 object_of(
                     "The largest uncertainty with which the wanted set point keeps what is wanted.",

@@ -26,6 +26,12 @@ class SetPointWalk:
         self._show_variation(found)
         self._show_set_points(found)
         self._say(found["statement"])
+        over = found["nearest_over_the_interval"]
+        ends = [_reading(over[name]) for name in ("least_variation", "most_variation")]
+        self._say(
+            f"These lots show the variation only so well: at the ends of its 95 % interval the nearest set "
+            f"point is {ends[0]} or {ends[1]}."
+        )
         controller = found["controller"]
         self._say(
             f"For the controller: {controller['set_point']} {controller['unit']}, as "
@@ -98,3 +104,7 @@ class SetPointWalk:
 
     def _say(self, text: str) -> None:
         self._console.print(text, highlight=False, markup=False)
+
+
+def _reading(set_point: float | None) -> str:
+    return "none" if set_point is None else f"{set_point:.3f} %"

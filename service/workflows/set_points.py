@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from dataclasses import asdict
+from dataclasses import asdict, replace
 from typing import Final
 
+from budgets.errors import LimitsError
 from budgets.planned_measurements import PlannedMeasurement
 from budgets.required_uncertainty import required_uncertainty
 from budgets.set_point_figures import Production, SetPointFigures
-from budgets.set_points import SetPoints, set_points
+from budgets.set_points import SetPoints, nearest_set_point, set_points
 from service.access import require
 from service.documents import Actor, SetPointRequest
 from service.workflows.evidence import FaultCollector
@@ -53,6 +54,7 @@ def ask(services: Services, actor: Actor, request: SetPointRequest) -> Answer:
         "today": _figures(found.today),
         "best_centre": None if found.best_centre is None else _figures(found.best_centre),
         "nearest_without_drift": found.without_drift,
+        "nearest_over_the_interval": _over_the_interval(question, production),
         "required_uncertainty": needed,
         "curve": [_figures(point) for point in found.curve],
         "controller": _controller(question, found),
@@ -123,6 +125,26 @@ def _with_gain(figures: SetPointFigures | None, bound_by: str | None, gain: floa
     if figures is None:
         return None
     return {**_figures(figures), "bound_by": bound_by, "gain_per_year": gain}
+
+
+def _over_the_interval(question: Question, production: Production) -> Answer | None:
+    """Give the nearest set point for both ends of the interval of the variation; null where none keeps it."""
+    interval = question.variation.facts["interval"]
+    process = production.process
+    if interval is None or production.towards is None:
+        return None
+    whole = process.unsteered_standard_deviation
+
+    def nearest(deviation: float) -> float | None:
+        ratio = deviation / whole
+        moved = replace(process, lot_to_lot=process.lot_to_lot * ratio, drift=process.drift * ratio)
+        try:
+            return nearest_set_point(replace(production, process=moved), question.wanted)
+        except LimitsError:
+            # Nothing varies at the lower end, or too much at the upper one.
+            return None
+
+    return {"least_variation": nearest(interval["lower"]), "most_variation": nearest(interval["upper"])}
 
 
 def _needed(question: Question) -> Answer | None:

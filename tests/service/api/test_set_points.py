@@ -10,8 +10,17 @@ from typing import Any
 import pytest
 
 from service import documents
+from service.workflows import recorded_lots
 from tests.service.api.conftest import Callers
-from tests.service.api.house import a_study, decision, done, example, put_in_force, specification
+from tests.service.api.house import (
+    a_study,
+    decision,
+    done,
+    example,
+    moved,
+    put_in_force,
+    specification,
+)
 
 SET_POINTS, IMPROVEMENTS, GIVEAWAY = "/v1/set-points", "/v1/improvements", "/v1/giveaway"
 
@@ -149,6 +158,48 @@ def test_the_record_shows_how_the_lots_vary(callers: Callers) -> None:
     released = sum(answer["outcome"] == "release" for answer in answers)
     assert seen["recorded_release_rate"] == pytest.approx(released / 24)
     assert found["today"]["set_point"] == pytest.approx(seen["mean"])
+    over = found["nearest_over_the_interval"]
+    most = over["most_variation"]
+    assert most is None or most < found["nearest"]["set_point"]
+    assert over["least_variation"] is None or over["least_variation"] > found["nearest"]["set_point"]
+
+
+def test_a_long_record_is_read_page_by_page(callers: Callers, monkeypatch: pytest.MonkeyPatch) -> None:
+    judged_lots(callers, 12)
+    body = asked(process_variation={"from": "record", "steered_by_this_analyzer": False})
+    at_once = done(callers["engineer"].post(SET_POINTS, body), 200)
+    monkeypatch.setattr(recorded_lots, "_PAGE", 5)
+    monkeypatch.setattr(recorded_lots, "MOST_DECISIONS", 15)
+    assert done(callers["engineer"].post(SET_POINTS, body), 200) == at_once
+    monkeypatch.setattr(recorded_lots, "MOST_DECISIONS", 10)
+    newest = done(callers["engineer"].post(SET_POINTS, body), 200)
+    assert newest["process_variation"]["lots"] == 9
+    counted = done(callers["engineer"].post(GIVEAWAY, {"production": body}), 200)
+    assert counted["whole_record_read"] is False
+
+
+def test_the_first_look_shows_the_variation_and_the_last_one_the_release(callers: Callers) -> None:
+    code = rule_in_force(callers, "customer-d", rounds=2)
+    for lot in range(6):
+        judged(callers, f"T{lot:03d}", 2.8 + 0.04 * lot, 2.8 + 0.04 * lot)
+    held = decision("again", moisture=(3.16, 3.16), specifications=[code])
+    assert done(callers["mes"].post("/v1/decisions", held))["outcome"] == "hold"
+    later = moved(decision("again", moisture=(2.9, 2.9)), minutes=20)
+    further = {name: later[name] for name in ("line", "units", "readings")}
+    for reading in further["readings"]:
+        reading["sample"] = "2"
+    again = done(callers["mes"].post("/v1/lots/whole-milk-powder/again/retests", further))
+    assert again["outcome"] == "release"
+    body = asked(process_variation={"from": "record", "steered_by_this_analyzer": False})
+    found = done(callers["engineer"].post(GIVEAWAY, {"production": body}), 200)
+    readings = [2.8 + 0.04 * lot for lot in range(6)]
+    assert found["process_variation"]["lots"] == 7
+    assert found["process_variation"]["mean"] == pytest.approx(statistics.mean([*readings, 3.16]))
+    # Of the lot that was read again the estimate of all its readings counts.
+    offset = found["measurement"]["reading_less_estimate"]
+    true_values = [*(reading - offset for reading in readings), of_moisture(again)["estimate"]]
+    assert found["giveaway"]["lots"] == 7
+    assert found["giveaway"]["true_mean"] == pytest.approx(statistics.mean(true_values))
 
 
 def test_lots_that_vary_less_than_their_readings_are_steered(callers: Callers) -> None:
