@@ -16,6 +16,7 @@ from budgets.evidence.evaluation import EvaluationWarning, effective_degrees_of_
 from budgets.level_dependence import level_dependent_acceptance
 from budgets.levels import LEVELS
 from budgets.linear_propagation import CompiledPropagation, Line
+from budgets.planned_looks import risk_per_look_of
 from budgets.propagation import (
     CombinedUncertainty,
     Contribution,
@@ -205,7 +206,8 @@ def explain(
     -----
     "Without it" takes the component out of the sum and leaves everything else, also what others have of its
     mean squares. The expanded uncertainty can rise without a component: k falls with the degrees of freedom
-    that a well known component brings. Source: JCGM 100:2008, G.4 and G.6.4 (from memory).
+    that a well known component brings. The risk per look of a rule of several rounds stays that of the whole
+    budget. Source: JCGM 100:2008, G.4 and G.6.4 (from memory).
     """
     result = combined(budget, counts, estimates=estimates)
     law = compiled(budget, counts)
@@ -220,6 +222,8 @@ def explain(
             "validated_range": budget.validated_range,
             "truncated": truncated,
         }
+        if rule.kind != "guarded_by_global_risk":
+            options["risk_per_look"] = risk_per_look_of(budget, tolerance, rule)
         judged = Judged(tolerance, rule, options, budget.model is None)
     p = budget.coverage_probability
     basis = Basis(law, coefficients, full, p, judged)

@@ -6,7 +6,6 @@ import math
 from collections.abc import Mapping
 from typing import Any, Final
 
-from budgets.budget import Budget
 from budgets.errors import BudgetsError
 from budgets.joined_looks import covariance_of_looks
 from budgets.looks import power_of_a_further_look
@@ -17,7 +16,13 @@ from service.documents import Requirement
 from service.workflows.earlier_looks import EarlierLooks
 from service.workflows.holds import Hold
 from service.workflows.measured import Measured
-from service.workflows.register import BudgetInForce, Register, SpecificationInForce
+from service.workflows.register import (
+    MOST_COMPILED,
+    BudgetInForce,
+    Outlook,
+    Register,
+    SpecificationInForce,
+)
 from service.workflows.rules import rule_here
 
 _A_PERSON: Final = "A person decides, with an analysis by the laboratory."
@@ -77,24 +82,26 @@ def next_look(
     looks: int,
 ) -> str:
     """Say what to read next, and how likely that releases a lot that is held by its value."""
-    assert measured.budget is not None and measured.done is not None and measured.estimate is not None
-    budget = measured.budget.budget
+    assert measured.budget is not None and measured.estimate is not None
+    procedure = measured.budget.budget.procedure
     best, power = 0, -1.0
-    for samples in _numbers(budget):
-        joined = _with_new_samples(measured.done, samples, budget.procedure.readings_per_sample.plan)
-        try:
-            compiled = register.rule(specification, requirement, measured.budget, joined, looks + 1)
-            then = rule_here(compiled, measured.means, measured.estimate)
-        except BudgetsError:
+    for samples in sorted({procedure.samples.least, procedure.samples.plan, procedure.samples.most}):
+        outlook = _outlook(register, specification, requirement, measured, looks + 1, samples)
+        if outlook is None:
             continue
-        found = _power(budget, measured, joined, then)
+        found = power_of_a_further_look(
+            measured.estimate,
+            ((outlook.before, outlook.shared), (outlook.shared, outlook.then)),
+            (outlook.lower_acceptance_limit, outlook.upper_acceptance_limit),
+            outlook.effective_degrees_of_freedom,
+        )
         if found > power:
             best, power = samples, found
         if power >= _LIKELY:
             break
     if power < _HOPELESS:
         return f"No further reading within the procedure can settle it. {_A_PERSON}"
-    each = budget.procedure.readings_per_sample.plan
+    each = procedure.readings_per_sample.plan
     what = f"{best} more sample" + ("s" if best > 1 else "")
     if each > 1:
         what += f", {each} readings of each" if best > 1 else f", {each} readings"
@@ -102,22 +109,45 @@ def next_look(
     return f"Take {what}: release is then {likely} ({power:.2f})."
 
 
-def _numbers(budget: Budget) -> list[int]:
-    samples = budget.procedure.samples
-    return sorted({samples.least, samples.plan, samples.most})
+def _outlook(
+    register: Register,
+    specification: SpecificationInForce,
+    requirement: Requirement,
+    measured: Measured,
+    looks: int,
+    samples: int,
+) -> Outlook | None:
+    """Look ahead by some new samples, read as planned; None where no rule can be made then.
 
-
-def _power(budget: Budget, measured: Measured, joined: ReadingPattern, then: ReleaseRule) -> float:
-    assert measured.estimate is not None and measured.done is not None
+    Kept for the next lot that is held, where the uncertainty is the same whatever was read.
+    """
+    assert measured.budget is not None and measured.done is not None and measured.estimate is not None
+    budget = measured.budget.budget
+    keeps = budget.model is None and not any(item.relative_terms for item in budget.components)
+    key = register.rule_key(specification, requirement, measured.budget, measured.done)
+    if keeps and (known := register.outlooks.get((key, looks, samples))) is not None:
+        return known
+    before = _pattern(measured.done)
+    joined = _with_new_samples(before, samples, budget.procedure.readings_per_sample.plan)
     where = measured.means if budget.model is not None else {budget.characteristic: measured.estimate}
-    covariance = covariance_of_looks(budget, (_pattern(measured.done), joined), where)
+    try:
+        compiled = register.rule(specification, requirement, measured.budget, joined, looks)
+        then = rule_here(compiled, measured.means, measured.estimate)
+        covariance = covariance_of_looks(budget, (before, joined), where)
+    except BudgetsError:
+        return None
     lower, upper = then.lower_acceptance_limit, then.upper_acceptance_limit
-    return power_of_a_further_look(
-        measured.estimate,
-        covariance,
-        (-math.inf if lower is None else lower, math.inf if upper is None else upper),
-        then.effective_degrees_of_freedom,
+    found = Outlook(
+        before=float(covariance[0, 0]),
+        shared=float(covariance[0, 1]),
+        then=float(covariance[1, 1]),
+        lower_acceptance_limit=-math.inf if lower is None else lower,
+        upper_acceptance_limit=math.inf if upper is None else upper,
+        effective_degrees_of_freedom=then.effective_degrees_of_freedom,
     )
+    if keeps and len(register.outlooks) < MOST_COMPILED:
+        register.outlooks[key, looks, samples] = found
+    return found
 
 
 def _pattern(done: Counts | ReadingPattern) -> ReadingPattern:
@@ -127,9 +157,8 @@ def _pattern(done: Counts | ReadingPattern) -> ReadingPattern:
     return ReadingPattern({"sample": tuple(str(i) for i, number in numbers for _ in range(number))})
 
 
-def _with_new_samples(done: Counts | ReadingPattern, samples: int, readings: int) -> ReadingPattern:
+def _with_new_samples(pattern: ReadingPattern, samples: int, readings: int) -> ReadingPattern:
     """Add samples that are not there yet, read in the session and on the instrument of the first reading."""
-    pattern = _pattern(done)
     # A line break is in no label that was sent.
     new = tuple(f"\n{i}" for i in range(samples) for _ in range(readings))
     return ReadingPattern(

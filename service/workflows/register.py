@@ -59,6 +59,21 @@ class BudgetInForce:
     extensions: tuple[Mapping[str, Any], ...] = ()
 
 
+@dataclass(frozen=True)
+class Outlook:
+    """What a further look would be: the variances of the estimates now and then, and what they share.
+
+    An acceptance limit that there is not is infinite.
+    """
+
+    before: float
+    shared: float
+    then: float
+    lower_acceptance_limit: float
+    upper_acceptance_limit: float
+    effective_degrees_of_freedom: float
+
+
 @dataclass
 class Register:
     """What is in force at one revision; ``compiled`` keeps rules for counts that no approval foresaw."""
@@ -76,6 +91,7 @@ class Register:
     rules: Mapping[RuleKey, AnyRule]
     prior_lapses: Mapping[tuple[str, str], str] = field(default_factory=dict)
     compiled: dict[RuleKey, AnyRule] = field(default_factory=dict)
+    outlooks: dict[tuple[RuleKey, int, int], Outlook] = field(default_factory=dict)
     replicate_laws: dict[tuple[str, int, str, frozenset[str]], ReplicateLaw] = field(default_factory=dict)
     shared: dict[tuple[str, tuple[str, ...], tuple[str, ...]], SharedErrors] = field(default_factory=dict)
 
@@ -92,14 +108,7 @@ class Register:
         ``looks`` says over how many looks it was done: the procedure counts for each of them.
         """
         characteristic = self.characteristics[budget.document.product, requirement.characteristic]
-        key = RuleKey(
-            specification=specification.document.code,
-            specification_version=specification.version,
-            characteristic=requirement.characteristic,
-            budget=budget.document.code,
-            budget_version=budget.version,
-            counts=_done_text(done),
-        )
+        key = self.rule_key(specification, requirement, budget, done)
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
             used = budget.budget
@@ -151,6 +160,23 @@ class Register:
             if len(self.shared) < MOST_COMPILED:
                 self.shared[key] = errors
         return errors
+
+    def rule_key(
+        self,
+        specification: SpecificationInForce,
+        requirement: Requirement,
+        budget: BudgetInForce,
+        done: Counts | ReadingPattern,
+    ) -> RuleKey:
+        """Name the rule for what was done."""
+        return RuleKey(
+            specification=specification.document.code,
+            specification_version=specification.version,
+            characteristic=requirement.characteristic,
+            budget=budget.document.code,
+            budget_version=budget.version,
+            counts=_done_text(done),
+        )
 
     @cached_property
     def risks_per_look(self) -> Mapping[RuleKey, float | None]:

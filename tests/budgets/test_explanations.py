@@ -11,6 +11,7 @@ from budgets.decision_rules import DecisionRule
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.explanations import Limits, explain
 from budgets.measurement_models import MeasurementModel, Quantity
+from budgets.planned_looks import risk_per_look_of
 from budgets.propagation import Counts, combined, expanded_uncertainty
 from budgets.release import ReleaseRule
 
@@ -175,3 +176,14 @@ def test_limits_of_a_proportional_uncertainty_are_those_of_the_release_rule(a_bu
     assert explained.components[-1].without.acceptance_limits.upper == pytest.approx(
         plain.upper_acceptance_limit
     )
+
+
+def test_limits_of_a_rule_of_two_rounds_are_those_of_the_release_rule(a_budget, a_component):
+    budget = a_budget()
+    twice = DecisionRule("guarded_by_specific_risk", largest_risk=0.05, rounds=2)
+    per_look = risk_per_look_of(budget, TOLERANCE, twice)
+    explained = explain(budget, Counts((2,)), tolerance=TOLERANCE, rule=twice)
+    rule = ReleaseRule.compile(budget, Counts((2,)), TOLERANCE, twice, risk_per_look=per_look)
+    assert explained.acceptance_limits == Limits(rule.lower_acceptance_limit, rule.upper_acceptance_limit)
+    once = explain(budget, Counts((2,)), tolerance=TOLERANCE, rule=RULE)
+    assert explained.acceptance_limits.upper < once.acceptance_limits.upper

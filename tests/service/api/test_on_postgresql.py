@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Iterator
+from concurrent.futures import ThreadPoolExecutor
 from datetime import timedelta
 from pathlib import Path
 
 import pytest
 from flask import Flask
 
-from service import create_app, create_services
+from service import create_app, create_services, documents
 from service.settings import load_settings
 from service.store.schema import migrate
 from service.workflows import accounts
@@ -84,3 +86,37 @@ def test_evidence_is_extended_and_renewed(callers: Callers) -> None:
 @pytest.mark.parametrize("path", ["/v1/lots/p/%00", "/v1/lots?cursor=%00", "/v1/studies?product=%00"])
 def test_characters_that_postgresql_cannot_hold_are_refused(callers: Callers, path: str) -> None:
     assert callers["mes"].get(path).status_code in (404, 422)
+
+
+def test_of_two_processes_only_one_takes_the_last_round_of_a_lot(
+    app: Flask, callers: Callers, tmp_path: Path
+) -> None:
+    """Two lines, each with a process of its own, read the same lot again at once."""
+    house.build(callers["engineer"], callers["max"])
+    rule = {"kind": "guarded_by_specific_risk", "largest_risk": 0.05, "rounds": 2}
+    document = house.specification("customer-c", 3.2, rule)
+    house.put_in_force(callers["engineer"], callers["max"], "specifications", document)
+    line = house.example(documents.Line, code="tower-2", name="Tower 2")
+    done(callers["engineer"].put("/v1/lines/tower-2", line))
+    settings = app.extensions["shoalmark"].settings
+    other = create_app(create_services(settings))
+    apps = {"tower-1": app, "tower-2": other}
+    try:
+        for number in range(3):
+            lot = f"W26-{number}"
+            held = decision(lot, (3.16, 3.16), specifications=["customer-c"])
+            assert done(callers["mes"].post("/v1/decisions", held))["outcome"] == "hold"
+            together = threading.Barrier(len(apps))
+
+            def send(line: str, lot: str = lot, together: threading.Barrier = together) -> int:
+                caller = house.Caller(apps[line].test_client(), callers["mes"].token)
+                request = house.moved(decision(lot, (3.14, 3.15)), minutes=5 if line == "tower-1" else 9)
+                body = {"line": line, "units": request["units"], "readings": request["readings"]}
+                together.wait()
+                return caller.post(f"/v1/lots/whole-milk-powder/{lot}/retests", body).status_code
+
+            with ThreadPoolExecutor(len(apps)) as pool:
+                assert sorted(pool.map(send, apps)) == [201, 409]
+    finally:
+        other.extensions["shoalmark"].close()
+    assert done(callers["auditor"].get("/v1/ledger/verification"), 200)["whole"] is True
