@@ -62,8 +62,13 @@ def release_rule_over_production(
     LimitsError
         As in `ReleaseRule.compile`, and if no guard band holds the global risk.
     NotSupportedError
-        For a budget with a measurement model, or a global risk with an error that Monte Carlo tabulated.
+        For a budget with a measurement model, probabilities within the natural domain, or a global risk with
+        an error that Monte Carlo tabulated.
     """
+    if options.get("truncated"):
+        raise NotSupportedError(
+            "a production prior beside probabilities within the natural domain", where=("within_domain",)
+        )
     errors = measurement_errors(budget, counts, tolerance)
     if rule.kind != "guarded_by_global_risk":
         made = ReleaseRule.compile(budget, counts, tolerance, rule, **options)

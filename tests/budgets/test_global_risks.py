@@ -415,3 +415,24 @@ def test_a_simulated_steered_plant_of_a_million_lots():
     unsteered = ProductionPrior("normal", 2.98, float(seen.std()))
     blind = global_risks(unsteered, MeasurementErrors.of(0.03), BOTH, 0.06).global_consumers_risk[0]
     assert blind < 0.1 * np.mean(~conforming & accepted)
+
+
+def test_an_empirical_prior_is_the_mean_of_its_normal_distributions():
+    """Its risks are those of normal priors around every lot, each of which agrees with mpmath."""
+    values = np.random.default_rng(9).gamma(6.0, 0.05, 40) + 2.7
+    prior = ProductionPrior.empirical(values)
+    width = (
+        0.9
+        * min(values.std(ddof=1), float(np.subtract(*np.quantile(values, [0.75, 0.25]))) / 1.34)
+        * 40**-0.2
+    )
+    centres = values.mean() + (values - values.mean()) * math.sqrt(1 - (width / values.std(ddof=1)) ** 2)
+    for nu in (math.inf, 7.0):
+        errors = MeasurementErrors.of(0.04, 0.02, nu)
+        whole = global_risks(prior, errors, BOTH, 0.03)
+        each = [
+            global_risks(ProductionPrior("normal", c, width), errors, BOTH, 0.03) for c in centres.tolist()
+        ]
+        for name in ("global_consumers_risk", "global_producers_risk", "release_rate"):
+            mean = np.mean([getattr(one, name)[0] for one in each])
+            assert getattr(whole, name)[0] == pytest.approx(mean, rel=1e-8)

@@ -108,6 +108,12 @@ def test_a_monte_carlo_distribution_is_not_supported_beside_a_global_risk(a_budg
         release_rule_over_production(a_budget(), ONE, UPPER, by_global_risk(), PRIOR, distribution=table)
 
 
+def test_probabilities_within_the_domain_are_not_supported_beside_a_prior(a_budget):
+    rule = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
+    with pytest.raises(NotSupportedError, match="within the natural domain"):
+        release_rule_over_production(a_budget(), ONE, UPPER, rule, PRIOR, domain=(0.0, 100.0), truncated=True)
+
+
 def test_the_rule_in_words():
     text = rule_text(by_global_risk(0.001, 0.1))
     assert text == (
