@@ -10,7 +10,7 @@ from budgets.acceptance import AcceptanceInterval, AcceptanceOptions, Ends, acce
 from budgets.budget import Budget
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
-from budgets.error_distributions import StudentT
+from budgets.error_distributions import StudentT, Tabulated
 from budgets.errors import BudgetsError, ComponentError
 from budgets.evidence.evaluation import EvaluationWarning, effective_degrees_of_freedom
 from budgets.level_dependence import level_dependent_acceptance
@@ -107,6 +107,7 @@ class Judged:
     rule: DecisionRule
     options: AcceptanceOptions
     fixed: bool
+    tabulated: Tabulated | None = None
 
 
 @dataclass(frozen=True)
@@ -175,6 +176,7 @@ def explain(
     rule: DecisionRule | None = None,
     domain: Ends = (None, None),
     truncated: bool = False,
+    tabulated: Tabulated | None = None,
 ) -> Explanation:
     """Explain the combined uncertainty of a budget.
 
@@ -192,6 +194,8 @@ def explain(
         Natural domain of the characteristic.
     truncated : bool
         Probabilities are those within the domain.
+    tabulated : Tabulated or None
+        Takes the place of Student's t for acceptance limits, also for those that would be otherwise.
 
     Returns
     -------
@@ -223,8 +227,10 @@ def explain(
             "truncated": truncated,
         }
         if rule.kind != "guarded_by_global_risk":
-            options["risk_per_look"] = risk_per_look_of(budget, tolerance, rule)
-        judged = Judged(tolerance, rule, options, budget.model is None)
+            options["risk_per_look"] = risk_per_look_of(
+                budget, tolerance, rule, any_distribution=tabulated is not None
+            )
+        judged = Judged(tolerance, rule, options, budget.model is None, tabulated)
     p = budget.coverage_probability
     basis = Basis(law, coefficients, full, p, judged)
     whole = expanded_uncertainty(result.standard_uncertainty, p, result.effective_degrees_of_freedom)
@@ -283,10 +289,12 @@ def _accepted(judged: Judged, law: CompiledPropagation, u: float, nu: float) -> 
         there = uncertainty_of_law_at_limits(law, judged.tolerance)
         u, nu = there.standard_uncertainty, there.degrees_of_freedom
         if there.dependence is not None:
+            distribution = judged.tabulated or StudentT(nu)
             return level_dependent_acceptance(
-                judged.rule, judged.tolerance, there.dependence, StudentT(nu), **judged.options
+                judged.rule, judged.tolerance, there.dependence, distribution, **judged.options
             )
-    return acceptance_interval(judged.rule, judged.tolerance, u, StudentT(nu), **judged.options)
+    distribution = judged.tabulated or StudentT(nu)
+    return acceptance_interval(judged.rule, judged.tolerance, u, distribution, **judged.options)
 
 
 def _remark(

@@ -16,9 +16,9 @@ from typing import Any
 
 import numpy as np
 import uncertainties
-from numpy.typing import NDArray
 
 from budgets.errors import ConvergenceError, ModelError, NotSupportedError
+from budgets.input_distributions import root_of
 from budgets.linear_propagation import CompiledPropagation, Propagated
 
 LARGEST_DIFFERENCE = 0.05
@@ -101,8 +101,8 @@ def validate_over_box(law: CompiledPropagation, ranges: Mapping[str, tuple[float
     Notes
     -----
     Points ``x ± sqrt(n) L_i``, L a root of the covariance. Source: Julier and Uhlmann 1997, the unscented
-    transformation (from memory). The validation by Monte Carlo of JCGM 101:2008, clause 8, takes its place
-    where that is available.
+    transformation (from memory). It costs so little that every point of the grid has its turn; approval
+    holds the worst of them against Monte Carlo runs, see `budgets.budget_validation`.
     """
     missing = [name for name in law.model.read if name not in ranges]
     if missing:
@@ -136,6 +136,25 @@ def validate_over_box(law: CompiledPropagation, ranges: Mapping[str, tuple[float
     )
 
 
+def grid_by_difference(
+    law: CompiledPropagation, ranges: Mapping[str, tuple[float, float]]
+) -> list[dict[str, float]]:
+    """Return the points of the grid over a box, those first where the law of propagation is worst.
+
+    Parameters
+    ----------
+    law : CompiledPropagation
+    ranges : mapping of str to tuple of float
+        For every quantity that is read.
+
+    Returns
+    -------
+    list of dict of str to float
+    """
+    points = list(_grid(law.model.read, ranges))
+    return sorted(points, key=lambda point: -_difference(law, point, law.at(point)))
+
+
 def _grid(names: tuple[str, ...], ranges: Mapping[str, tuple[float, float]]) -> Iterator[dict[str, float]]:
     def side(name: str) -> tuple[float, ...]:
         low, high = ranges[name]
@@ -148,7 +167,7 @@ def _grid(names: tuple[str, ...], ranges: Mapping[str, tuple[float, float]]) -> 
 def _difference(law: CompiledPropagation, point: Mapping[str, float], result: Propagated) -> float:
     """Return the larger relative difference: of the standard uncertainty, and of the mean."""
     full = law.model.estimates(point)
-    root = _root(law.input_covariance(full))
+    root = root_of(law.input_covariance(full))
     number = len(root)
     steps = math.sqrt(number) * np.concatenate([root.T, -root.T])
     centre = np.array([full[name] for name in law.model.names])
@@ -156,12 +175,6 @@ def _difference(law: CompiledPropagation, point: Mapping[str, float], result: Pr
     u = result.standard_uncertainty
     shift = abs(float(values.mean()) - result.estimate) / u
     return max(shift, abs(float(values.std()) / u - 1))
-
-
-def _root(covariance: NDArray[np.float64]) -> NDArray[np.float64]:
-    values, vectors = np.linalg.eigh(covariance)
-    # Rounding may leave an eigenvalue just below zero.
-    return np.asarray(vectors * np.sqrt(np.maximum(values, 0.0)))
 
 
 def _compare_derivatives(law: CompiledPropagation, point: Mapping[str, float]) -> None:

@@ -127,7 +127,9 @@ def planned_looks(
     return PlannedLooks(tuple(steps), largest)
 
 
-def risk_per_look_of(budget: Budget, tolerance: Tolerance, rule: DecisionRule) -> float | None:
+def risk_per_look_of(
+    budget: Budget, tolerance: Tolerance, rule: DecisionRule, *, any_distribution: bool = False
+) -> float | None:
     """Return the risk per look of a decision rule with a budget.
 
     Parameters
@@ -135,6 +137,8 @@ def risk_per_look_of(budget: Budget, tolerance: Tolerance, rule: DecisionRule) -
     budget : Budget
     tolerance : Tolerance
     rule : DecisionRule
+    any_distribution : bool
+        Whatever the joint distribution of the looks: the overall risk is at most the sum of theirs.
 
     Returns
     -------
@@ -159,6 +163,8 @@ def risk_per_look_of(budget: Budget, tolerance: Tolerance, rule: DecisionRule) -
     largest_risk = rule.largest_risk
     if largest_risk is None:
         largest_risk = _implied_risk(rule, budget, places[0])
+    if any_distribution:
+        return largest_risk / rule.rounds
     looks = planned_looks(budget, rule.rounds, places)
     return looks.risk_per_look(largest_risk, rejection=rule.rejection)
 

@@ -660,6 +660,21 @@ class GiveawayRequest:
     last_day: date | None = None
 
 
+@dataclass(frozen=True)
+class MonteCarloRequest:
+    """How a budget is held against a Monte Carlo run.
+
+    ``trials``: null for as many as the tolerance needs; ``significant_digits`` of the standard uncertainty
+    give the tolerance, null takes 5 % of it; ``at`` are the readings, null for the middle of what was
+    validated.
+    """
+
+    trials: int | None = None
+    seed: int = 1
+    significant_digits: int | None = None
+    at: Mapping[str, float] | None = None
+
+
 # --- decisions ----------------------------------------------------------------------------------------
 
 

@@ -321,6 +321,79 @@ _LINE: Form = {
     "contribution": _NUMBER,
     "share_of_variance": _NUMBER,
 }
+_ENDS = {"type": "array", "items": _NUMBER, "minItems": 2, "maxItems": 2}
+_HELD_AGAINST = {
+    "agrees": _YES,
+    "sentence": {**_TEXT, "description": "The finding in words."},
+    "coverage_probability": _NUMBER,
+    "law_of_propagation": _object(
+        "What the law of propagation gives.",
+        {
+            "estimate": _NUMBER,
+            "combined_standard_uncertainty": _NUMBER,
+            "expanded_uncertainty": _NUMBER,
+            "coverage_interval": _ENDS,
+        },
+    ),
+    "monte_carlo": _object(
+        "What the trials give.",
+        {
+            "trials": _WHOLE,
+            "mean": {**_NUMBER_OR_NULL, "description": "null: too few degrees of freedom for one."},
+            "standard_deviation": {
+                **_NUMBER_OR_NULL,
+                "description": "null: too few degrees of freedom for one.",
+            },
+            "median": _NUMBER,
+            "coverage_interval": {**_ENDS, "description": "Probabilistically symmetric."},
+            "shortest_coverage_interval": _ENDS,
+            "scatter_of_ends": _or_null(
+                {**_ENDS, "description": "By how much the ends scatter from seed to seed."}
+            ),
+        },
+    ),
+    "differences": {**_ENDS, "description": "Of the ends of both intervals."},
+    "tolerance": _NUMBER,
+    "with_known_variances": _or_null(
+        _object(
+            "The same with infinite degrees of freedom; null where they are.",
+            {"agrees": _YES, "differences": _ENDS, "tolerance": _NUMBER},
+        )
+    ),
+    "remarks": _list(_TEXT, "What was assumed beyond the distributions of the components."),
+}
+_AT_READINGS = {"type": "object", "description": "The readings at which it was run."}
+_MONTE_CARLO = _object(
+    "The law of propagation of a budget held against a Monte Carlo run.",
+    {
+        "code": _CODE,
+        "version": _WHOLE,
+        "state": _STATE,
+        "unit": _TEXT,
+        "digest": _TEXT,
+        "samples": _WHOLE,
+        "readings_per_sample": _WHOLE,
+        "at": _AT_READINGS,
+        "seed": _WHOLE,
+        **_HELD_AGAINST,
+    },
+)
+_MONTE_CARLO_AT_APPROVAL = _object(
+    "What Monte Carlo runs found at approval.",
+    {
+        "agrees": _YES,
+        "sentence": {**_TEXT, "description": "The finding in words."},
+        "decisions_use": {"type": "string", "enum": ["law_of_propagation", "monte_carlo"]},
+        "seed": _WHOLE,
+        "program": {"type": "object", "description": "By what the trials were drawn."},
+        "checks": _list(
+            _object(
+                "One run: so many readings, at these estimates.",
+                {"readings_per_sample": _list(_WHOLE), "at": _AT_READINGS, **_HELD_AGAINST},
+            )
+        ),
+    },
+)
 _BUDGET_FIGURES = _object(
     "A budget explained, for its planned procedure.",
     {
@@ -358,6 +431,7 @@ _BUDGET_FIGURES = _object(
                 laboratory={"type": "object", "description": "The entry that it was taken from, if any."},
             )
         ),
+        "monte_carlo": _or_null(_MONTE_CARLO_AT_APPROVAL),
         "warnings": _list({"type": "object"}),
     },
 )
@@ -558,6 +632,7 @@ ANSWERS: dict[str, Form] = {
     **SET_POINT_ANSWERS,
     "BudgetFigures": _BUDGET_FIGURES,
     "BudgetComparison": _BUDGET_COMPARISON,
+    "MonteCarlo": _MONTE_CARLO,
     "AcceptanceLimits": _ACCEPTANCE_LIMITS,
     "Lot": _object(
         "How a lot stands.",

@@ -9,8 +9,8 @@ from service.api import requests
 from service.api.answers import answer
 from service.api.operations import Operation, describe, parameter
 from service.api.versioned import Versioned, register_collection, register_versions
-from service.documents import BudgetDocument
-from service.workflows import budget_figures
+from service.documents import BudgetDocument, MonteCarloRequest
+from service.workflows import budget_figures, monte_carlo
 
 blueprint = Blueprint("budgets", __name__, description="Uncertainty budgets in the sense of the GUM.")
 
@@ -54,3 +54,15 @@ def get_comparison(code: str, version: int) -> Response:
             requests.services(), requests.actor(), code, version, against=against, **given
         )
     )
+
+
+@describe(
+    blueprint,
+    "/v1/budgets/<code:code>/versions/<version:version>/monte-carlo",
+    "POST",
+    Operation("MonteCarlo", body=MonteCarloRequest, problems=(503,)),
+)
+def run_monte_carlo(code: str, version: int) -> Response:
+    """Hold the law of propagation of a budget against a Monte Carlo run; nothing is recorded."""
+    wanted = requests.body(MonteCarloRequest)
+    return answer(monte_carlo.run(requests.services(), requests.actor(), code, version, wanted))

@@ -25,6 +25,7 @@ from service.schemas.master import (
     PlantSchema,
     ProductSchema,
 )
+from service.schemas.monte_carlo import MonteCarloRequestSchema
 from service.schemas.priors import GlobalRisksRequestSchema
 from service.schemas.set_points import (
     GiveawayRequestSchema,
@@ -57,6 +58,7 @@ SCHEMAS: dict[type[Any], StrictSchema] = {
     documents.SetPointRequest: SetPointRequestSchema(),
     documents.ImprovementsRequest: ImprovementsRequestSchema(),
     documents.GiveawayRequest: GiveawayRequestSchema(),
+    documents.MonteCarloRequest: MonteCarloRequestSchema(),
     documents.DecisionRequest: DecisionRequestSchema(),
     documents.RetestRequest: RetestRequestSchema(),
     documents.SignedAct: SignedActSchema(),

@@ -255,6 +255,12 @@ EXAMPLES: dict[type[Any], dict[str, Any]] = {
         "precision": {"relative_uncertainty": 0.25, "design": "repeatability", "values_per_sample": 2},
         "bias": {"bias": 0.05, "standard_deviation": 0.1, "power": 0.9, "pairs_per_group": 2},
     },
+    documents.MonteCarloRequest: {
+        "trials": 1000000,
+        "seed": 7,
+        "significant_digits": 2,
+        "at": {"moisture": 3.1},
+    },
     documents.GlobalRisksRequest: {
         "product": "whole-milk-powder",
         "characteristic": "moisture",

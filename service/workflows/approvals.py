@@ -17,6 +17,8 @@ from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.accounts import verify_signature
+from service.workflows.budget_validation import Findings
+from service.workflows.monte_carlo import findings
 from service.workflows.recording import PLANT_CHAIN, Request
 from service.workflows.services import Services
 from service.workflows.version_steps import (
@@ -58,10 +60,11 @@ def submit(
         It could not be approved as it stands.
     """
     require(actor, "submit a version")
+    found = findings(services, actor, request, lambda unit: _standing(unit, kind, code, version, "draft"))
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = in_state(unit_of_work, kind, code, version, "draft", act="submitted", if_match=if_match)
-        approval_of(unit_of_work, stored)
+        approval_of(unit_of_work, stored, found)
         return _move(unit_of_work, actor, stored, "submitted", "submitted", submitted_by=actor.principal)
 
     return recorded(services, actor, request, perform)
@@ -93,11 +96,12 @@ def approve(
     """
     require(actor, "approve a version")
     verify_signature(services, require_person(actor, "approve"), signed.signature)
+    found = findings(services, actor, request, lambda unit: _standing(unit, kind, code, version, "submitted"))
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = in_state(unit_of_work, kind, code, version, "submitted", act="approved", if_match=if_match)
         require_another(actor, authors_of(unit_of_work, actor, stored))
-        step = approving(unit_of_work, actor, stored)
+        step = approving(unit_of_work, actor, stored, found)
         entry = append_version(
             unit_of_work,
             actor,
@@ -208,9 +212,9 @@ class Approving:
             unit_of_work.rules.add(key.stored(numbers))
 
 
-def approving(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> Approving:
+def approving(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion, found: Findings) -> Approving:
     """Compute what is stored when a version comes into force. Raises Conflict or InvalidRequest."""
-    approval = approval_of(unit_of_work, stored)
+    approval = approval_of(unit_of_work, stored, found)
     changes = {
         "approved_by": actor.principal,
         "in_force_from": unit_of_work.now(PLANT_CHAIN),
@@ -221,12 +225,23 @@ def approving(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> 
     return Approving(stored, before, approval, changes)
 
 
-def approval_of(unit_of_work: UnitOfWork, stored: StoredVersion) -> Approval:
-    """Compute what an approval would store. Raises Conflict or InvalidRequest."""
+def _standing(
+    unit_of_work: UnitOfWork, kind: str, code: str, version: int, state: str
+) -> list[StoredVersion]:
+    """Give the version, if it is in this state: else there is nothing to be found before it is refused."""
+    stored = unit_of_work.versions.get(kind, code, version)
+    return [] if stored is None or stored.state != state else [stored]
+
+
+def approval_of(unit_of_work: UnitOfWork, stored: StoredVersion, found: Findings) -> Approval:
+    """Compute what an approval would store, with what the helper process found for a budget before.
+
+    Raises Conflict or InvalidRequest; Unavailable if nothing was found for the budget as it stands now.
+    """
     kind = KINDS[stored.kind]
     document = load(kind.document_class, stored.document)
     kind.check(unit_of_work, document)
-    return kind.approval(unit_of_work, stored, document)
+    return kind.approval(unit_of_work, stored, document, found)
 
 
 def authors_of(unit_of_work: UnitOfWork, actor: Actor, stored: StoredVersion) -> frozenset[str]:

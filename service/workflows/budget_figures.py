@@ -16,6 +16,7 @@ from service.errors import Fault, InvalidRequest, NotFound
 from service.schemas import dump, load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.budget_validation import shown, stored_tables
 from service.workflows.resolved_budgets import resolve_budget
 from service.workflows.rules import decision_rule, planned_counts, tolerance
 from service.workflows.services import Services
@@ -61,7 +62,7 @@ def evaluation(
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        subject = _subject(unit_of_work, code, version)
+        subject = subject_of(unit_of_work, code, version)
         by = _requirement(unit_of_work, subject, specification)
         explained = _explained(unit_of_work, subject, None if by is None else by[1], subject.centre)
         warnings = (*explained.warnings, *range_warnings(unit_of_work, subject.document))
@@ -91,6 +92,7 @@ def evaluation(
                 strict=True,
             )
         ],
+        "monte_carlo": shown(subject.evaluation),
         "warnings": [asdict(warning) for warning in warnings],
     }
 
@@ -115,13 +117,13 @@ def comparison(
     """
     require(actor, "read")
     with services.database.reading() as unit_of_work:
-        after = _subject(unit_of_work, code, version)
+        after = subject_of(unit_of_work, code, version)
         if against is None:
             in_force = unit_of_work.versions.in_force("budget", code)
             if in_force is None:
                 raise NotFound(f"No version of {code!r} is in force; say which one to compare with.")
             against = in_force.version
-        before = _subject(unit_of_work, code, against)
+        before = subject_of(unit_of_work, code, against)
         by = _requirement(unit_of_work, after, specification)
         requirement = None if by is None else by[1]
         # Both at one place, or the place would be taken for what the versions differ by.
@@ -144,7 +146,8 @@ def comparison(
 # --- what is shown -------------------------------------------------------------------------------------
 
 
-def _subject(unit_of_work: UnitOfWork, code: str, version: int) -> Subject:
+def subject_of(unit_of_work: UnitOfWork, code: str, version: int) -> Subject:
+    """Give a budget version with its numbers. Raises NotFound or InvalidRequest."""
     stored = unit_of_work.versions.get("budget", code, version)
     if stored is None:
         raise NotFound(f"There is no version {version} of a budget {code!r}.")
@@ -186,6 +189,7 @@ def _explained(
     assert stored is not None  # checked with the draft
     characteristic = load(Characteristic, stored.document)
     domain = characteristic.natural_domain
+    tables = stored_tables(subject.evaluation)
     return explain(
         subject.budget,
         subject.counts,
@@ -194,6 +198,7 @@ def _explained(
         rule=decision_rule(requirement.decision_rule),
         domain=(domain.lower, domain.upper),
         truncated=requirement.within_domain,
+        tabulated=None if tables is None else tables.of(subject.counts),
     )
 
 

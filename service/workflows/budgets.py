@@ -6,6 +6,7 @@ from datetime import date
 from typing import Any, Final
 
 from budgets.budget import Budget
+from budgets.budget_validation import BudgetValidation, ErrorTables
 from service.documents import (
     BudgetDocument,
     Characteristic,
@@ -17,11 +18,12 @@ from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
+from service.workflows.budget_validation import Findings, finding, finding_document
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import FaultCollector
 from service.workflows.production_priors import resolve_prior
 from service.workflows.reference_methods import check_requirement
-from service.workflows.resolved_budgets import derived_from, resolve_budget
+from service.workflows.resolved_budgets import derived_from, in_document, resolve_budget
 from service.workflows.rules import RuleKey, compile_pair
 from service.workflows.stored_budgets import (
     ResolvedBudget,
@@ -112,10 +114,12 @@ def _check_calibration(
             collector.add(pointer, f"{code!r} is for the {member} {stored.document[member]!r}", f"{ours!r}")
 
 
-def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetDocument) -> Approval:
+def _approval(
+    unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetDocument, found: Findings
+) -> Approval:
     _check_sole_budget(unit_of_work, document)
     resolved = resolve_budget(unit_of_work, document)
-    approval = approval_of_resolved(unit_of_work, stored, document, resolved)
+    approval = approval_of_resolved(unit_of_work, stored, document, resolved, found)
     if approval.lapses_at is not None and approval.lapses_at <= unit_of_work.now("plant"):
         raise Conflict(
             "evidence-lapsed", f"The evidence served until {resolved.serves_until}; renew it first."
@@ -124,15 +128,22 @@ def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetD
 
 
 def approval_of_resolved(
-    unit_of_work: UnitOfWork, stored: StoredVersion, document: BudgetDocument, resolved: ResolvedBudget
+    unit_of_work: UnitOfWork,
+    stored: StoredVersion,
+    document: BudgetDocument,
+    resolved: ResolvedBudget,
+    found: Findings,
 ) -> Approval:
     """Compute what is stored of a budget in force, whether or not its evidence has lapsed.
 
     Raises
     ------
     InvalidRequest
-        A specification in force could not be proved with it.
+        A specification in force could not be proved with it, or neither its law of propagation nor Monte
+        Carlo quantiles can speak for it.
     """
+    evaluation = budget_evaluation(stored.document, resolved)
+    validation = _validation(document, found, evaluation["digest"])
     lapses_at = None
     if resolved.serves_until is not None:
         instant = lapse_instant(date.fromisoformat(resolved.serves_until), plant.in_force(unit_of_work))
@@ -151,9 +162,21 @@ def approval_of_resolved(
                     document,
                     stored.version,
                     resolved.budget,
+                    validation.tables,
                 )
             )
-    return Approval(budget_evaluation(stored.document, resolved), lapses_at, tuple(rules))
+    numbers = {**evaluation, "monte_carlo": finding_document(validation)}
+    return Approval(numbers, lapses_at, tuple(rules))
+
+
+def _validation(document: BudgetDocument, found: Findings, digest: str) -> BudgetValidation:
+    """Give what Monte Carlo runs found; refuse a model that neither the law nor one table can speak for."""
+    collector = FaultCollector()
+    validation = collector.attempt("#", finding, found, digest)
+    collector.faults = [in_document(document, fault) for fault in collector.faults]
+    collector.finish("The law of propagation may not be used for this budget.")
+    assert validation is not None
+    return validation
 
 
 def _check_sole_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> None:
@@ -179,8 +202,11 @@ def rules_of_pair(
     document: BudgetDocument,
     budget_version: int,
     budget: Budget,
+    tables: ErrorTables | None,
 ) -> list[tuple[RuleKey, dict[str, Any]]]:
     """Compile the release rules of a budget for the requirement of a specification that it serves.
+
+    ``tables`` are those that stand in for its law of propagation, where that does not hold.
 
     Raises
     ------
@@ -206,7 +232,7 @@ def rules_of_pair(
             prior = resolve_prior(
                 unit_of_work, stated, characteristic, document, budget, pointer=pointer
             ).prior
-        compiled = compile_pair(budget, requirement, characteristic, label=label, prior=prior)
+        compiled = compile_pair(budget, requirement, characteristic, label=label, prior=prior, tables=tables)
         for counts, numbers in compiled.items():
             key = RuleKey(
                 specification=specification.code,

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from typing import Any, Final
@@ -24,10 +24,12 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows import plant
 from service.workflows.accounts import verify_signature
 from service.workflows.approvals import authors_of
+from service.workflows.budget_validation import Findings
 from service.workflows.budgets import approval_of_resolved
 from service.workflows.calendar import lapse_instant
 from service.workflows.evidence import LONGEST_SERVICE, FaultCollector
 from service.workflows.extended_limits import check_limits_are_narrower
+from service.workflows.monte_carlo import findings
 from service.workflows.recording import PLANT_CHAIN, Request, entry_reference, record
 from service.workflows.reevaluations import evidence_of
 from service.workflows.renewals import each_budget
@@ -84,6 +86,7 @@ def extend(
     """
     require(actor, "extend a study")
     verify_signature(services, require_person(actor, "extend"), extension.signature)
+    found = findings(services, actor, request, lambda unit: _expected(unit, actor, code, extension))
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         stored = unit_of_work.studies.get(code)
@@ -94,7 +97,7 @@ def extend(
         with unit_of_work.extensions.expecting({code: said}):
             steps = each_budget(
                 using,
-                lambda before: _widened(unit_of_work, actor, before, code, extension.reason),
+                lambda before: _widened(unit_of_work, actor, before, code, extension.reason, found),
                 pointer="#/widening_factor",
                 act="extended",
             )
@@ -173,22 +176,39 @@ def _last_day(done_on: date, serves_until: date) -> date:
         return serves_until
 
 
-def _widened(
-    unit_of_work: UnitOfWork, actor: Actor, before: StoredVersion, code: str, reason: str
-) -> Widened:
-    """Compute the version that comes into force; the evidence beside the study has to be what it was."""
-    document = {**before.document, "reason": reason}
-    version = dataclasses.replace(
+def _expected(
+    unit_of_work: UnitOfWork, actor: Actor, code: str, extension: Extension
+) -> Iterator[StoredVersion]:
+    """Give the versions one by one, each while the study is known to be extended."""
+    stored = unit_of_work.studies.get(code)
+    if stored is None:
+        return
+    using = _using(unit_of_work, actor, stored)
+    said = _said(unit_of_work, load(Study, stored.document), extension)
+    with unit_of_work.extensions.expecting({code: said}):
+        yield from (_version(unit_of_work, actor, before, extension.reason) for before in using)
+
+
+def _version(unit_of_work: UnitOfWork, actor: Actor, before: StoredVersion, reason: str) -> StoredVersion:
+    return dataclasses.replace(
         before,
         version=unit_of_work.versions.next_number("budget", before.code),
         revision=1,
-        document=document,
+        document={**before.document, "reason": reason},
         evaluation=None,
         approved_by=actor.principal,
         in_force_from=unit_of_work.now(PLANT_CHAIN),
     )
-    budget = load(BudgetDocument, document)
-    approval = approval_of_resolved(unit_of_work, version, budget, resolve_budget(unit_of_work, budget))
+
+
+def _widened(
+    unit_of_work: UnitOfWork, actor: Actor, before: StoredVersion, code: str, reason: str, found: Findings
+) -> Widened:
+    """Compute the version that comes into force; the evidence beside the study has to be what it was."""
+    version = _version(unit_of_work, actor, before, reason)
+    budget = load(BudgetDocument, version.document)
+    resolved = resolve_budget(unit_of_work, budget)
+    approval = approval_of_resolved(unit_of_work, version, budget, resolved, found)
     assert before.evaluation is not None and approval.evaluation is not None  # of budgets in force
     _check_unchanged(before, approval.evaluation["components"], code)
     check_limits_are_narrower(unit_of_work, before, approval)

@@ -10,6 +10,7 @@ from service.documents import Plant
 from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.budget_validation import Findings
 from service.workflows.calendar import DEFAULT_PLANT
 from service.workflows.evidence import FaultCollector
 from service.workflows.versioned_kind import Approval, VersionedKind
@@ -35,7 +36,7 @@ def _check(unit_of_work: UnitOfWork, document: Plant) -> None:
     collector.finish("The plant document cannot be used.")
 
 
-def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: Plant) -> Approval:
+def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: Plant, found: Findings) -> Approval:
     return Approval()
 
 

@@ -9,6 +9,7 @@ from functools import cached_property
 from typing import Any, Final
 
 from budgets.budget import Budget
+from budgets.budget_validation import ErrorTables
 from budgets.item_rules import LotSpreadRule
 from budgets.production_priors import ProductionPrior
 from budgets.propagation import Counts
@@ -30,6 +31,7 @@ from service.documents import (
 from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.budget_validation import stored_tables
 from service.workflows.calendar import DEFAULT_PLANT
 from service.workflows.production_priors import prior_lapses_at
 from service.workflows.rules import AnyRule, RuleKey, compile_rule, counts_text, pattern_text, stored_rule
@@ -57,6 +59,7 @@ class BudgetInForce:
     digest: str
     lapses_at: str | None
     extensions: tuple[Mapping[str, Any], ...] = ()
+    tables: ErrorTables | None = None
 
 
 @dataclass(frozen=True)
@@ -111,7 +114,7 @@ class Register:
         key = self.rule_key(specification, requirement, budget, done)
         rule = self.rules.get(key) or self.compiled.get(key)
         if rule is None:
-            used = budget.budget
+            used, tables = budget.budget, budget.tables
             if looks > 1:
                 used = replace(used, procedure=used.procedure.joined(looks))
             rule = compile_rule(
@@ -119,6 +122,7 @@ class Register:
                 done,
                 requirement,
                 characteristic,
+                distribution=None if tables is None else tables.of(done),
                 risk_per_look=self.risks_per_look.get(_pair(key)),
                 prior=self._prior(key) if requirement.decision_rule.prior is not None else None,
             )
@@ -256,6 +260,7 @@ def _budget_in_force(version: StoredVersion) -> BudgetInForce:
         digest=version.evaluation["digest"],
         lapses_at=version.lapses_at,
         extensions=tuple(version.evaluation.get("extensions", ())),
+        tables=stored_tables(version.evaluation),
     )
 
 

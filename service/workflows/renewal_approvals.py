@@ -13,6 +13,7 @@ from service.store.unit_of_work import UnitOfWork
 from service.workflows import budget_figures
 from service.workflows.accounts import verify_signature
 from service.workflows.approvals import RENEWED, Approving, approving, authors_of
+from service.workflows.monte_carlo import findings
 from service.workflows.recording import PLANT_CHAIN, Request
 from service.workflows.renewals import each_budget, evaluated_in, renewal_recorded
 from service.workflows.services import Services
@@ -37,12 +38,13 @@ def approve(
     """
     require(actor, "approve a version")
     verify_signature(services, require_person(actor, "approve"), signed.signature)
+    found = findings(services, actor, request, lambda unit: _waiting(unit, code, replacement))
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         waiting = _waiting(unit_of_work, code, replacement)
         for stored in waiting:
             require_another(actor, authors_of(unit_of_work, actor, stored))
-        steps = each_budget(waiting, lambda stored: approving(unit_of_work, actor, stored))
+        steps = each_budget(waiting, lambda stored: approving(unit_of_work, actor, stored, found))
         content = {
             "study": code,
             "replacement": replacement,

@@ -7,7 +7,8 @@ a single one can still be returned or withdrawn, and approved by itself.
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from typing import Any, Final, TypeVar
 
 from service.access import require
@@ -17,6 +18,8 @@ from service.ledger import Entry
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.approvals import RENEWED, approval_of
+from service.workflows.budget_validation import Findings
+from service.workflows.monte_carlo import findings
 from service.workflows.recording import PLANT_CHAIN, Request, entry_reference, record, was_recorded
 from service.workflows.reevaluations import Reevaluation, evaluated, evidence_of, laboratory_first, planned
 from service.workflows.services import Services
@@ -48,10 +51,14 @@ def submit(
     for act in ("draft a version", "submit a version", "record a study"):
         require(actor, act)
     anew = _evaluated_anew(services, actor, code, replacement, request)
+    found = findings(services, actor, request, lambda unit: _expected(unit, actor, code, replacement, anew))
 
     def perform(unit_of_work: UnitOfWork) -> Entry:
         _check_studies(unit_of_work, code, replacement.study)
         drafts = _drafts(unit_of_work, actor, code, replacement, anew)
+        becomes = _becomes(code, replacement, anew)
+        with _coming(unit_of_work, anew):
+            each_budget(drafts, lambda draft: _check_draft(unit_of_work, draft, becomes, found))
         submitted = [
             changed_version(draft, state="submitted", submitted_by=actor.principal) for draft in drafts
         ]
@@ -110,21 +117,45 @@ def _drafts(
     codes = planned(unit_of_work, in_force, code, replacement)
     if codes != {item.instead_of: item.study.code for item in anew}:
         raise Unavailable("The budgets in force changed while studies were evaluated anew; try again.")
-    becomes = {code: replacement.study, **codes}
+    becomes = _becomes(code, replacement, anew)
     using = [version for version in in_force if evidence_of(version) & becomes.keys()]
     drafts = [_draft(unit_of_work, actor, before, becomes, replacement) for before in using]
     if not drafts:
         raise Conflict("nothing-in-force", f"No budget in force uses the study {code!r}.")
-    extensions = {item.study.code: item.extension for item in anew if item.extension is not None}
-    studies = [item.stored() for item in anew]
-    with unit_of_work.studies.expecting(studies), unit_of_work.extensions.expecting(extensions):
-        each_budget(drafts, lambda draft: _check_draft(unit_of_work, draft, becomes))
     return drafts
 
 
-def _check_draft(unit_of_work: UnitOfWork, draft: StoredVersion, becomes: Mapping[str, str]) -> None:
+def _becomes(code: str, replacement: Replacement, anew: Sequence[Reevaluation]) -> dict[str, str]:
+    return {code: replacement.study, **{item.instead_of: item.study.code for item in anew}}
+
+
+@contextmanager
+def _coming(unit_of_work: UnitOfWork, anew: Sequence[Reevaluation]) -> Iterator[None]:
+    """Have studies that are evaluated anew, and their extensions, found as if they were kept."""
+    extensions = {item.study.code: item.extension for item in anew if item.extension is not None}
+    studies = [item.stored() for item in anew]
+    with unit_of_work.studies.expecting(studies), unit_of_work.extensions.expecting(extensions):
+        yield
+
+
+def _expected(
+    unit_of_work: UnitOfWork,
+    actor: Actor,
+    code: str,
+    replacement: Replacement,
+    anew: Sequence[Reevaluation],
+) -> Iterator[StoredVersion]:
+    """Give the drafts one by one, each while the studies that are evaluated anew are known to be coming."""
+    drafts = _drafts(unit_of_work, actor, code, replacement, anew)
+    with _coming(unit_of_work, anew):
+        yield from drafts
+
+
+def _check_draft(
+    unit_of_work: UnitOfWork, draft: StoredVersion, becomes: Mapping[str, str], found: Findings
+) -> None:
     """Refuse a draft that could not be approved, or still rests on the old study through a laboratory."""
-    evaluation = approval_of(unit_of_work, draft).evaluation
+    evaluation = approval_of(unit_of_work, draft, found).evaluation
     assert evaluation is not None  # of a budget
     for item in evaluation["components"]:
         if "laboratory" in item and item["laboratory"]["study"] in becomes:

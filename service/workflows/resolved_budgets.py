@@ -74,13 +74,13 @@ def resolve_budget(unit_of_work: UnitOfWork, document: BudgetDocument) -> Resolv
         name: item.estimate.value for name, item in values.items() if item.estimate.value is not None
     }
     budget = collector.attempt("#", assemble_budget, document, ready, estimates)
-    collector.faults = [_in_document(document, fault) for fault in collector.faults]
+    collector.faults = [in_document(document, fault) for fault in collector.faults]
     collector.finish("The budget does not hold together.")
     assert budget is not None
     return ResolvedBudget(budget, behind, estimates, _serves_until(behind))
 
 
-def _in_document(document: BudgetDocument, fault: Fault) -> Fault:
+def in_document(document: BudgetDocument, fault: Fault) -> Fault:
     """Point to the member of the document, where the computation calls it otherwise."""
     pointer = (fault.pointer or "#").replace("#/validated_box", "#/validated_ranges", 1)
     pointer = pointer.replace("#/expression", "#/model/expression", 1)

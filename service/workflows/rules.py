@@ -8,6 +8,7 @@ from itertools import islice
 from typing import Any, Final
 
 from budgets.budget import Budget, Procedure
+from budgets.budget_validation import ErrorTables
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.derived_release import DerivedReleaseRule, release_rule_kind
@@ -194,11 +195,19 @@ def compile_rule(
     )
 
 
-def risk_of_looks(budget: Budget, requirement: Requirement, characteristic: Characteristic) -> float | None:
-    """Find the risk that each look of a rule of several rounds may take; None for one round."""
-    return risk_per_look_of(
-        budget, tolerance(requirement, characteristic), decision_rule(requirement.decision_rule)
-    )
+def risk_of_looks(
+    budget: Budget,
+    requirement: Requirement,
+    characteristic: Characteristic,
+    *,
+    any_distribution: bool = False,
+) -> float | None:
+    """Find the risk that each look of a rule of several rounds may take; None for one round.
+
+    ``any_distribution``: where errors are not those of Student's t.
+    """
+    limits, rule = tolerance(requirement, characteristic), decision_rule(requirement.decision_rule)
+    return risk_per_look_of(budget, limits, rule, any_distribution=any_distribution)
 
 
 def stored_rule(numbers: Mapping[str, Any]) -> AnyRule:
@@ -232,6 +241,7 @@ def compile_pair(
     *,
     label: str,
     prior: ProductionPrior | None = None,
+    tables: ErrorTables | None = None,
 ) -> dict[str, dict[str, Any]]:
     """Compile the rules of one budget and one requirement for all balanced numbers of readings.
 
@@ -246,9 +256,16 @@ def compile_pair(
     collector = FaultCollector()
     planned = planned_counts(budget.procedure)
     options: dict[str, Any] = {"prior": prior}
-    options["risk_per_look"] = collector.attempt("#", risk_of_looks, budget, requirement, characteristic)
+
+    def compiled(counts: Counts) -> AnyRule:
+        distribution = None if tables is None else tables.of(counts)
+        return compile_rule(budget, counts, requirement, characteristic, distribution=distribution, **options)
+
+    options["risk_per_look"] = collector.attempt(
+        "#", risk_of_looks, budget, requirement, characteristic, any_distribution=tables is not None
+    )
     if not collector.faults:
-        collector.attempt("#", compile_rule, budget, planned, requirement, characteristic, **options)
+        collector.attempt("#", compiled, planned)
     if collector.faults:
         detail = "; ".join(fault.detail for fault in collector.faults)
         collector.faults.clear()
@@ -257,7 +274,7 @@ def compile_pair(
     rules = {}
     for counts in dict.fromkeys((planned, *islice(balanced_counts(budget.procedure), MOST_STORED))):
         try:
-            rule = compile_rule(budget, counts, requirement, characteristic, **options)
+            rule = compiled(counts)
         except (LimitsError, ModelError):
             # Also where fewer readings leave so much uncertainty that the model curves within it.
             continue

@@ -8,6 +8,7 @@ from service.helpers import Helper
 from service.settings import Settings
 from service.store.unit_of_work import Database
 from service.store.writer import Writer
+from service.workflows.budget_validation import ValidationCache
 from service.workflows.recorded_lots import Remembered
 from service.workflows.register import RegisterCache
 
@@ -22,6 +23,7 @@ class Services:
     registers: RegisterCache = field(default_factory=RegisterCache)
     helper: Helper = field(default_factory=Helper)
     remembered: Remembered = field(default_factory=Remembered)
+    validations: ValidationCache = field(default_factory=ValidationCache)
 
     def close(self) -> None:
         """End the helper, let the writer finish what it took, then let go of the database."""

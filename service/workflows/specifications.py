@@ -10,6 +10,7 @@ from service.errors import Fault, InvalidRequest
 from service.schemas import load
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.budget_validation import Findings, stored_tables
 from service.workflows.budgets import rules_of_pair
 from service.workflows.evidence import FaultCollector
 from service.workflows.production_priors import check_prior
@@ -122,7 +123,9 @@ def _check_unit(
     collector.attempt(pointer, conversion, limit.unit, characteristic.unit)
 
 
-def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: Specification) -> Approval:
+def _approval(
+    unit_of_work: UnitOfWork, stored: StoredVersion, document: Specification, found: Findings
+) -> Approval:
     rules: list[tuple[RuleKey, dict[str, Any]]] = []
     faults: list[Fault] = []
     for version in unit_of_work.versions.all_in_force():
@@ -134,7 +137,13 @@ def _approval(unit_of_work: UnitOfWork, stored: StoredVersion, document: Specifi
         try:
             rules.extend(
                 rules_of_pair(
-                    unit_of_work, document, stored.version, budget_document, version.version, budget
+                    unit_of_work,
+                    document,
+                    stored.version,
+                    budget_document,
+                    version.version,
+                    budget,
+                    stored_tables(version.evaluation),
                 )
             )
         except InvalidRequest as error:

@@ -9,6 +9,7 @@ from typing import Any
 from service.errors import Fault, InvalidRequest
 from service.store.rows import StoredVersion
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.budget_validation import Findings
 from service.workflows.rules import RuleKey
 
 
@@ -30,14 +31,15 @@ class VersionedKind:
     """A kind of versioned document.
 
     ``check`` refuses a draft that names what does not exist; ``approval`` computes what is stored at
-    approval; ``subject`` gives (product, characteristic) for look-up. A singleton has one code, its name.
+    approval, with what the helper process found for budgets before; ``subject`` gives (product,
+    characteristic) for look-up. A singleton has one code, its name.
     """
 
     name: str
     document_class: type[Any]
     subject: Callable[[Any], tuple[str | None, str | None]]
     check: Callable[[UnitOfWork, Any], None]
-    approval: Callable[[UnitOfWork, StoredVersion, Any], Approval]
+    approval: Callable[[UnitOfWork, StoredVersion, Any, Findings], Approval]
     singleton: bool = False
 
     def check_code(self, document: Any, code: str) -> None:

@@ -207,3 +207,7 @@ def test_a_rule_by_global_risk_has_one_round():
     rule = SimpleNamespace(rounds=2, kind="guarded_by_global_risk")
     with pytest.raises(NotSupportedError, match="several rounds"):
         risk_per_look_of(None, LIMIT, rule)
+
+
+def test_whatever_the_distribution_the_risks_of_the_looks_add_up(a_budget):
+    assert risk_per_look_of(a_budget(), LIMIT, a_rule(), any_distribution=True) == 0.05 / a_rule().rounds

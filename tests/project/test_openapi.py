@@ -18,7 +18,10 @@ from service.store.schema import migrate
 
 ROOT = Path(__file__).parents[2]
 # What computes and records nothing.
-COMPUTING = ("/global-risks", "/preview", "/study-plans", "/set-points", "/improvements", "/giveaway")
+COMPUTING = (
+    *("/global-risks", "/preview", "/study-plans", "/set-points", "/improvements", "/giveaway"),
+    "/monte-carlo",
+)
 
 
 @pytest.fixture(scope="module")
