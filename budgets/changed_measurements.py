@@ -1,15 +1,19 @@
-"""What can be changed about a measurement: more readings, a better component, another budget."""
+"""What can be changed about a measurement: more readings, a better component, another budget.
+
+A change says what it touches, makes another measurement of one, and has a remark that always goes with it.
+"""
 
 from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from typing import ClassVar
 
 from budgets.budget import Budget
 from budgets.components import Component
 from budgets.errors import ComponentError, LimitsError, ProcedureError
 from budgets.evidence.evaluation import MeanSquare, Term, variance
-from budgets.planned_measurements import Demand, LotProcedure
+from budgets.lot_procedures import Demand, LotProcedure
 
 
 @dataclass(frozen=True)
@@ -29,6 +33,8 @@ class ChangedLooks:
     ----------
     samples, readings_per_sample, increments_per_sample, looks : int or None
     """
+
+    remark: ClassVar[str] = ""
 
     samples: int | None = None
     readings_per_sample: int | None = None
@@ -62,11 +68,6 @@ class ChangedLooks:
             demands = tuple(_with_rounds(demand, self.looks) for demand in demands)
         return Measuring(measuring.budget, replace(measuring.procedure, **given), demands)
 
-    @property
-    def remark(self) -> str:
-        """What has to be said of the option in any case."""
-        return ""
-
 
 @dataclass(frozen=True)
 class ChangedComponent:
@@ -83,6 +84,8 @@ class ChangedComponent:
     degrees_of_freedom : float or None
         After the change; None keeps the evidence's own.
     """
+
+    remark: ClassVar[str] = ""
 
     component: str
     standard_uncertainty: float | None = None
@@ -122,15 +125,12 @@ class ChangedComponent:
         made = _with_terms(line, factor * factor, self.degrees_of_freedom)
         return replace(measuring, budget=_with_line(measuring.budget, made))
 
-    @property
-    def remark(self) -> str:
-        """What has to be said of the option in any case."""
-        return ""
-
 
 @dataclass(frozen=True)
 class CorrectedBias:
     """The bias is taken off the reading instead of widening the guard band."""
+
+    remark: ClassVar[str] = ""
 
     @property
     def touches(self) -> frozenset[str]:
@@ -150,11 +150,6 @@ class CorrectedBias:
             raise ComponentError("the budget has no bias that is left uncorrected", where=("kind",))
         return replace(measuring, budget=replace(budget, bias_treatment="corrected"))
 
-    @property
-    def remark(self) -> str:
-        """What has to be said of the option in any case."""
-        return ""
-
 
 @dataclass(frozen=True)
 class ReferenceDeterminations:
@@ -173,6 +168,11 @@ class ReferenceDeterminations:
     pairs : int
         Of the validation.
     """
+
+    remark: ClassVar[str] = (
+        "The reference method's noise is in no reading: this makes only the bias better known, and the "
+        "difference that the remainder is more certain."
+    )
 
     component: str
     standard_deviation: float
@@ -215,14 +215,6 @@ class ReferenceDeterminations:
         made = _with_terms(line, 1 - less / own, None)
         return replace(measuring, budget=_with_line(measuring.budget, made))
 
-    @property
-    def remark(self) -> str:
-        """What has to be said of the option in any case."""
-        return (
-            "The reference method's noise is in no reading: this makes only the bias better known, and the "
-            "difference that the remainder is more certain."
-        )
-
 
 @dataclass(frozen=True)
 class ChangedBudget:
@@ -232,6 +224,8 @@ class ChangedBudget:
     ----------
     budget : Budget
     """
+
+    remark: ClassVar[str] = ""
 
     budget: Budget
 
@@ -243,11 +237,6 @@ class ChangedBudget:
     def made(self, measuring: Measuring) -> Measuring:
         """Return the measurement after the change."""
         return replace(measuring, budget=self.budget)
-
-    @property
-    def remark(self) -> str:
-        """What has to be said of the option in any case."""
-        return ""
 
 
 Change = ChangedLooks | ChangedComponent | CorrectedBias | ReferenceDeterminations | ChangedBudget

@@ -10,8 +10,9 @@ from itertools import combinations
 from budgets.budget import Budget
 from budgets.changed_measurements import Change, ChangedBudget, ChangedLooks, Measuring, go_together
 from budgets.errors import BudgetsError, LimitsError
+from budgets.lot_procedures import Demand, LotProcedure
 from budgets.money import Money
-from budgets.planned_measurements import Demand, LotProcedure, PlannedMeasurement, planned_measurement
+from budgets.planned_measurements import PlannedMeasurement, planned_measurement
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production, SetPointFigures
 from budgets.set_point_search import Wanted

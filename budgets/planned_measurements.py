@@ -9,117 +9,20 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from budgets.budget import LARGEST_COUNT, Budget, Count, Procedure
+from budgets.budget import Budget
 from budgets.components import Component
-from budgets.conformity import Tolerance
-from budgets.decision_rules import DecisionRule
-from budgets.error_distributions import Tabulated
-from budgets.errors import EmptyAcceptanceError, ModelError, ProcedureError
+from budgets.errors import EmptyAcceptanceError, ModelError
 from budgets.evidence.evaluation import Term
 from budgets.joined_looks import covariance_of_looks
 from budgets.linear_propagation import CompiledPropagation
 from budgets.look_limits import LookLimits
+from budgets.lot_procedures import Demand, LotProcedure
 from budgets.measurement_errors import COMMON_LEVELS
 from budgets.planned_looks import risk_per_look_of
 from budgets.propagation import compiled, estimates_for
 from budgets.reading_patterns import ReadingPattern
 from budgets.release import ReleaseRule
 from budgets.uncertainty_at_limits import uncertainty_of_law_at_limits
-
-
-@dataclass(frozen=True)
-class Demand:
-    """What one specification demands of the characteristic.
-
-    Parameters
-    ----------
-    code : str
-    tolerance : Tolerance
-    decision_rule : DecisionRule
-    legal : bool
-        Whether the limits are those of the law.
-    domain : tuple of float or None
-        Natural domain of the characteristic.
-    truncated : bool
-        Whether probabilities are those within the domain.
-    distribution : Tabulated or None
-        Monte Carlo quantiles, where the rule rests on them instead of Student's t.
-    """
-
-    code: str
-    tolerance: Tolerance
-    decision_rule: DecisionRule
-    legal: bool = False
-    domain: tuple[float | None, float | None] = (None, None)
-    truncated: bool = False
-    distribution: Tabulated | None = None
-
-
-@dataclass(frozen=True)
-class LotProcedure:
-    """What is done at every look at a lot; a further look takes as many samples again.
-
-    A lot that is held is read again as long as every rule that holds it plans a further round.
-
-    Parameters
-    ----------
-    samples, readings_per_sample : int
-    increments_per_sample : int
-        A sample is a composite of so many increments.
-    looks : int
-        The most rounds that a rule plans.
-
-    Raises
-    ------
-    ProcedureError
-        If a number is below 1, or all looks together are more than a budget can have.
-    """
-
-    samples: int
-    readings_per_sample: int
-    increments_per_sample: int = 1
-    looks: int = 1
-
-    def __post_init__(self) -> None:
-        for name in ("samples", "readings_per_sample", "increments_per_sample", "looks"):
-            if getattr(self, name) < 1:
-                raise ProcedureError(f"{name} must be at least 1", where=(name,))
-        if max(self.samples * self.looks, self.readings_per_sample) > LARGEST_COUNT:
-            raise ProcedureError(f"more than {LARGEST_COUNT} samples of a lot", where=("samples",))
-
-    def done(self, looks: int) -> ReadingPattern:
-        """Return all that has been done when so many looks are over.
-
-        Parameters
-        ----------
-        looks : int
-
-        Returns
-        -------
-        ReadingPattern
-            The readings of a sample share its presentation. All looks share one session, the cautious
-            default of a decision whose readings name none.
-        """
-        samples = [f"{look}/{sample}" for look in range(looks) for sample in range(self.samples)]
-        labels = tuple(label for label in samples for _ in range(self.readings_per_sample))
-        parts = {
-            label: tuple(f"{label}/{part}" for part in range(self.increments_per_sample)) for label in samples
-        }
-        return ReadingPattern(
-            {
-                "presentation": labels,
-                "increment": tuple(parts[label] for label in labels),
-                "sample": labels,
-                "session": ("",) * len(labels),
-            }
-        )
-
-    def within(self, procedure: Procedure) -> Procedure:
-        """Return the procedure of a budget that has this one: its own where that leaves room for it."""
-        own = (procedure.samples, self.samples), (procedure.readings_per_sample, self.readings_per_sample)
-        if all(count.least <= number <= count.most for count, number in own):
-            return procedure
-        return Procedure(*(Count(number, number, number) for _, number in own))
 
 
 @dataclass(frozen=True)

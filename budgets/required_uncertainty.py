@@ -9,7 +9,8 @@ from scipy.optimize import brentq
 
 from budgets.budget import Budget
 from budgets.errors import EmptyAcceptanceError, LimitsError
-from budgets.planned_measurements import Demand, LotProcedure, planned_measurement, scaled
+from budgets.lot_procedures import Demand, LotProcedure
+from budgets.planned_measurements import planned_measurement, scaled
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted

@@ -9,18 +9,21 @@ from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.errors import EvidenceError
-from budgets.evidence.evaluation import Evaluation, variance
+from budgets.evidence.evaluation import Evaluation, effective_degrees_of_freedom, variance
 from budgets.evidence.study_data import evaluate_study
 from budgets.evidence.study_tables import StudyData
+from budgets.evidence.sums import f_quantile
+from budgets.lot_procedures import LotProcedure
 from budgets.measurement_errors import RANDOM_LEVELS, error_terms
-from budgets.planned_measurements import LotProcedure
 from budgets.prior_estimates import PriorEstimate, prior_of_readings, prior_of_study
 from budgets.process_variation import ProcessVariation, process_of_prior, steered_process
 from budgets.propagation import Counts
 from budgets.units import Conversion
 from service.documents import StatedVariation, Study
+from service.ledger import format_instant
 from service.schemas import load
 from service.store.unit_of_work import UnitOfWork
+from service.workflows.calendar import lapse_instant
 from service.workflows.recorded_lots import RecordedLots, Remembered, recorded_lots
 from service.workflows.register import BudgetInForce, Register
 
@@ -33,7 +36,11 @@ class Variation:
 
     process: ProcessVariation
     facts: Mapping[str, Any] = field(default_factory=dict)
+    lapses_at: str | None = None
 
+
+_INSIDE_A_LOT: Final = ("reading", "presentation", "increment", "sample")
+_SIGNIFICANCE: Final = 0.05
 
 NO_FACTS: Final[Answer] = {
     "lots": None,
@@ -64,7 +71,7 @@ def variation_of(
     if stated.source == "stated":
         return Variation(_stated(budget, stated, convert), NO_FACTS)
     if stated.source == "study":
-        return _of_study(unit_of_work, budget, analyzer, stated, convert.factor)
+        return _of_study(unit_of_work, register, budget, analyzer, stated, convert.factor)
     lots = recorded_lots(
         unit_of_work,
         remembered,
@@ -115,7 +122,12 @@ def _stated(budget: BudgetInForce, stated: StatedVariation, convert: Conversion)
 
 
 def _of_study(
-    unit_of_work: UnitOfWork, budget: BudgetInForce, analyzer: str, stated: StatedVariation, factor: float
+    unit_of_work: UnitOfWork,
+    register: Register,
+    budget: BudgetInForce,
+    analyzer: str,
+    stated: StatedVariation,
+    factor: float,
 ) -> Variation:
     assert stated.study is not None  # by the schema
     found = unit_of_work.studies.get(stated.study)
@@ -140,10 +152,12 @@ def _of_study(
             f"{document.unit} on {analyzer} with the calibration {calibration}",
             where=("study",),
         )
+    lapses_at = _lapse(unit_of_work, register, study)
     evaluation = Evaluation.from_document(found.evaluation)
     parts = _components(evaluation)
     drift, within = _deviation(parts.get("periods")), parts.get("within_lot")
     within_lot = None if within is None else _deviation(within)
+    sampling = _sampling_warnings(evaluation, budget.budget)
     steered = any(warning.code == "steered" for warning in evaluation.warnings)
     if steered != (stated.true_standard_deviation is not None):
         said, use = ("is", "needed") if steered else ("is not", "of no use")
@@ -155,7 +169,8 @@ def _of_study(
     if not steered:
         prior = prior_of_study(evaluation, budget.budget)
         process = process_of_prior(prior, budget.budget.correction, drift=drift, within_lot=within_lot)
-        return Variation(process, _facts(prior, evaluation))
+        facts = _facts(prior, evaluation)
+        return Variation(process, {**facts, "warnings": [*facts["warnings"], *sampling]}, lapses_at)
     assert stated.true_standard_deviation is not None
     # First readings of lots hold what every level inside of the lot adds to a single one.
     process = steered_process(
@@ -165,7 +180,41 @@ def _of_study(
         _random_variance(budget.budget, Counts((1,))),
         within_lot=within_lot,
     )
-    return Variation(process, {**NO_FACTS, "lots": int(evaluation.diagnostics["lots"])})
+    facts = {**NO_FACTS, "lots": int(evaluation.diagnostics["lots"]), "warnings": sampling}
+    return Variation(process, facts, lapses_at)
+
+
+def _lapse(unit_of_work: UnitOfWork, register: Register, study: Study) -> str | None:
+    """Say when a study lapses. Raises EvidenceError where it has."""
+    if study.serves_until is None:
+        return None
+    lapses_at = format_instant(lapse_instant(study.serves_until, register.plant))
+    if unit_of_work.now("plant") >= lapses_at:
+        raise EvidenceError(
+            f"the study {study.code!r} served until {lapses_at}: the process may vary otherwise by now; "
+            "renew it, or take the variation from the record",
+            where=("study",),
+        )
+    return lapses_at
+
+
+def _sampling_warnings(evaluation: Evaluation, budget: Budget) -> list[Answer]:
+    """Warn where lots vary more within themselves than the budget counts for a single reading."""
+    parts = {part["name"]: part for part in evaluation.diagnostics["components"]}
+    within = parts.get("within_lot")
+    if within is None:
+        return []
+    inside = ("presentation", "increment", "sample") if "repeatability" in parts else _INSIDE_A_LOT
+    counted = error_terms(budget, Counts((1,)), inside, sum(budget.validated_range) / 2)
+    seen, known = float(within["variance"]), variance(counted)
+    freedom = within["degrees_of_freedom"], effective_degrees_of_freedom(counted)
+    if seen <= 0 or (known > 0 and seen / known <= f_quantile(_SIGNIFICANCE, *freedom)):
+        return []
+    detail = (
+        f"within a lot single readings vary by {math.sqrt(seen):.3g}; the budget counts "
+        f"{math.sqrt(known):.3g} for that: its component of sampling is too small, and so is the guard band"
+    )
+    return [{"code": "within-lot-not-counted", "detail": detail}]
 
 
 def _components(evaluation: Evaluation) -> dict[str, float]:

@@ -6,8 +6,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+from budgets.lot_procedures import Demand, LotProcedure
 from budgets.money import Money
-from budgets.planned_measurements import Demand, LotProcedure, PlannedMeasurement, planned_measurement
+from budgets.planned_measurements import PlannedMeasurement, planned_measurement
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted
 from budgets.units import Conversion, conversion
@@ -42,6 +43,12 @@ class Question:
     def measurement(self) -> PlannedMeasurement:
         """How lots are measured and judged. Raises the errors of budgets."""
         return planned_measurement(self.budget.budget, self.procedure, self.demands)
+
+    @property
+    def valid_until(self) -> str | None:
+        """When the first of the evidence behind the answer lapses; None: it does not."""
+        lapses = [each for each in (self.budget.lapses_at, self.variation.lapses_at) if each is not None]
+        return min(lapses, default=None)
 
     def production(self) -> Production:
         """The production as it is. Raises the errors of budgets."""
@@ -250,5 +257,5 @@ def references(question: Question) -> Mapping[str, Any]:
             for specification in question.specifications
         ],
         "calibration": budget.document.calibrations[question.request.analyzer],
-        "valid_until": budget.lapses_at,
+        "valid_until": question.valid_until,
     }

@@ -188,7 +188,7 @@ def _controller(question: Question, found: SetPoints) -> Answer | None:
         "scale": "reading",
         "analyzer": question.request.analyzer,
         "calibration": question.budget.document.calibrations[question.request.analyzer],
-        "valid_until": question.budget.lapses_at,
+        "valid_until": question.valid_until,
         "basis": basis,
     }
 

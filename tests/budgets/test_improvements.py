@@ -17,8 +17,9 @@ from budgets.decision_rules import DecisionRule
 from budgets.errors import BudgetsError, ComponentError, LimitsError, ProcedureError
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.improvements import Option, Situation, improvements
+from budgets.lot_procedures import Demand, LotProcedure
 from budgets.money import Money
-from budgets.planned_measurements import Demand, LotProcedure, planned_measurement
+from budgets.planned_measurements import planned_measurement
 from budgets.process_variation import ProcessVariation
 from budgets.set_point_figures import Production
 from budgets.set_point_search import Wanted

@@ -12,10 +12,11 @@ from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.errors import EmptyAcceptanceError, LimitsError, ModelError, ProcedureError
 from budgets.global_risks import risks_of_acceptance
+from budgets.lot_procedures import Demand, LotProcedure
 from budgets.measurement_errors import MeasurementErrors, measurement_errors
 from budgets.money import Money
 from budgets.planned_looks import risk_per_look_of
-from budgets.planned_measurements import Demand, LotProcedure, planned_measurement, scaled
+from budgets.planned_measurements import planned_measurement, scaled
 from budgets.process_variation import ProcessVariation, steered_process
 from budgets.production_priors import ProductionPrior
 from budgets.propagation import Counts

@@ -5,6 +5,7 @@ from __future__ import annotations
 import copy
 import random
 import statistics
+from datetime import timedelta
 from typing import Any
 
 import pytest
@@ -13,6 +14,7 @@ from service import documents
 from service.workflows import recorded_lots
 from tests.service.api.conftest import Callers
 from tests.service.api.house import (
+    TODAY,
     a_study,
     decision,
     done,
@@ -215,12 +217,12 @@ def test_lots_that_vary_less_than_their_readings_are_steered(callers: Callers) -
     assert answer["process_variation"]["steering"] > 0.5
 
 
-def production_study(code: str, **changes: Any) -> dict[str, Any]:
+def production_study(code: str, within: float = 0.04, **changes: Any) -> dict[str, Any]:
     draw = random.Random(9)
     rows = []
     for lot in range(30):
         middle = 2.85 + 0.03 * (lot // 10) + draw.gauss(0, 0.1)
-        rows += [[f"week-{lot // 10}", f"L{lot}", round(middle + draw.gauss(0, 0.04), 3)] for _ in range(2)]
+        rows += [[f"week-{lot // 10}", f"L{lot}", round(middle + draw.gauss(0, within), 3)] for _ in range(2)]
     return a_study(
         code=code,
         design="production",
@@ -241,9 +243,33 @@ def test_a_study_tells_lots_periods_and_samples_apart(callers: Callers) -> None:
     assert seen["within_lot"] == pytest.approx(0.04, abs=0.015)
     assert seen["interval"]["lower"] < seen["true_standard_deviation"] < seen["interval"]["upper"]
     assert (found["nearest_without_drift"] is None) == (seen["drift"] == 0)
+    assert seen["warnings"] == []
+    # The samples of other lots differ, and the budget of this plant has no component of sampling.
+    done(callers["engineer"].post("/v1/studies", production_study("wmp-made-5", within=0.12)))
+    uneven = done(
+        callers["engineer"].post(SET_POINTS, asked(process_variation={**study, "study": "wmp-made-5"})), 200
+    )
+    codes = [warning["code"] for warning in uneven["process_variation"]["warnings"]]
+    assert "within-lot-not-counted" in codes
     of_no_use = {**study, "true_standard_deviation": 0.1}
     said = faults(callers["engineer"].post(SET_POINTS, asked(process_variation=of_no_use)))
     assert "of no use" in said["#/process_variation/true_standard_deviation"]
+
+
+def test_a_study_that_lapses_first_bounds_the_answer_and_one_that_lapsed_is_refused(
+    callers: Callers,
+) -> None:
+    soon = (TODAY + timedelta(days=10)).isoformat()
+    done(callers["engineer"].post("/v1/studies", production_study("wmp-made-3", serves_until=soon)))
+    study = {"from": "study", "study": "wmp-made-3"}
+    found = done(callers["engineer"].post(SET_POINTS, asked(process_variation=study)), 200)
+    assert found["valid_until"] == found["controller"]["valid_until"]
+    assert found["valid_until"] < (TODAY + timedelta(days=14)).isoformat()
+    past = (TODAY - timedelta(days=10)).isoformat()
+    done(callers["engineer"].post("/v1/studies", production_study("wmp-made-4", serves_until=past)))
+    lapsed = {"from": "study", "study": "wmp-made-4"}
+    said = faults(callers["engineer"].post(SET_POINTS, asked(process_variation=lapsed)))
+    assert "served until" in said["#/process_variation/study"]
 
 
 def test_a_steered_study_needs_reference_values(callers: Callers) -> None:
