@@ -45,6 +45,12 @@ _ESTIMATED = object_of(
         ),
         "degrees_of_freedom": _MAYBE,
         "warnings": list_of(object_of("A warning.", {"code": _TEXT, "detail": _TEXT})),
+        "left_out": {
+            "type": "object",
+            "description": "Lots of the record that could not serve, by reason.",
+            "additionalProperties": _WHOLE,
+        },
+        "whole_record_read": {"type": "boolean"},
     },
 )
 _PRIOR = object_of(

@@ -14,7 +14,7 @@ from budgets.global_guard_bands import global_guard_band
 from budgets.global_risks import GlobalRisks, global_risks, risks_of_acceptance
 from budgets.known_productions import prior_document
 from budgets.measurement_errors import MeasurementErrors, measurement_errors
-from budgets.prior_estimates import PriorEstimate, prior_of_readings
+from budgets.prior_estimates import prior_of_readings
 from budgets.propagation import Counts
 from budgets.release import ReleaseRule
 from budgets.units import conversion
@@ -169,8 +169,7 @@ def _prior(
         return resolve_prior(
             unit_of_work, asked, characteristic, budget.document, budget.budget, pointer="#/prior"
         )
-    found = _recorded(services, unit_of_work, request, asked.record, budget)
-    return ResolvedPrior(found.prior, found)
+    return _recorded(services, unit_of_work, request, asked.record, budget)
 
 
 def _recorded(
@@ -179,7 +178,7 @@ def _recorded(
     request: GlobalRisksRequest,
     asked: RecordedPrior,
     budget: BudgetInForce,
-) -> PriorEstimate:
+) -> ResolvedPrior:
     """Make the prior of the first looks in the record, those that were done alike. Raises EvidenceError."""
     lots = recorded_lots(
         unit_of_work,
@@ -194,13 +193,17 @@ def _recorded(
         raise EvidenceError("the record holds no lot that could serve", where=("record",))
     counts = lots.usual_counts
     estimates = [lot.reading - budget.budget.correction for lot in lots.first_looks if lot.counts == counts]
-    return prior_of_readings(
+    estimate = prior_of_readings(
         estimates,
         budget.budget,
         counts,
         steered=asked.steered_by_this_analyzer,
         distribution=request.prior.distribution,
     )
+    left_out = dict(lots.left_out)
+    if len(estimates) < len(lots.first_looks):
+        left_out["read-otherwise"] = len(lots.first_looks) - len(estimates)
+    return ResolvedPrior(estimate.prior, estimate, left_out, lots.all_read)
 
 
 # --- what is answered ----------------------------------------------------------------------------------
@@ -221,7 +224,7 @@ def _bands(subject: Subject, request: GlobalRisksRequest, factor: float) -> list
 
 def _rests_on(subject: Subject, request: GlobalRisksRequest) -> Answer:
     budget, specification, rule = subject.budget, subject.specification, subject.rule
-    estimate, errors = subject.prior.estimate, subject.errors
+    errors = subject.errors
     limits = [
         limit for limit in (rule.lower_tolerance_limit, rule.upper_tolerance_limit) if limit is not None
     ]
@@ -242,11 +245,12 @@ def _rests_on(subject: Subject, request: GlobalRisksRequest) -> Answer:
         "common_standard_uncertainty": max(errors.common.at(limit) for limit in limits),
         "effective_degrees_of_freedom": _finite(errors.degrees_of_freedom),
         "uncorrected_bias": errors.bias,
-        "prior": {**prior_document(subject.prior.prior), "estimated_from": _estimated(estimate)},
+        "prior": {**prior_document(subject.prior.prior), "estimated_from": _estimated(subject.prior)},
     }
 
 
-def _estimated(estimate: PriorEstimate | None) -> Answer | None:
+def _estimated(prior: ResolvedPrior) -> Answer | None:
+    estimate = prior.estimate
     if estimate is None:
         return None
     return {
@@ -256,6 +260,8 @@ def _estimated(estimate: PriorEstimate | None) -> Answer | None:
         "interval": {"lower": estimate.interval_lower, "upper": estimate.interval_upper},
         "degrees_of_freedom": _finite(estimate.degrees_of_freedom),
         "warnings": [asdict(warning) for warning in estimate.warnings],
+        "left_out": dict(prior.left_out),
+        "whole_record_read": prior.all_read,
     }
 
 

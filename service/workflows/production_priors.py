@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from datetime import date
 from typing import Any
 
@@ -23,11 +23,16 @@ from service.workflows.evidence import FaultCollector, in_unit
 
 @dataclass(frozen=True)
 class ResolvedPrior:
-    """A prior, in the unit of the characteristic, and what it was estimated from, where it was."""
+    """A prior, in the unit of the characteristic, and what it was estimated from, where it was.
+
+    ``left_out`` counts lots of the record that could not serve, by reason; ``all_read`` is false when the
+    record holds more than is read.
+    """
 
     prior: ProductionPrior
     estimate: PriorEstimate | None = None
-    lapses_at: str | None = None
+    left_out: Mapping[str, int] = field(default_factory=dict)
+    all_read: bool = True
 
 
 def resolve_prior(
@@ -49,7 +54,7 @@ def resolve_prior(
     """
     if stated.declaration is not None:
         return ResolvedPrior(_declared(stated, stated.declaration, characteristic, pointer))
-    study, evaluation, lapses_at = _study(unit_of_work, stated, characteristic, pointer)
+    study, evaluation = _study(unit_of_work, stated, characteristic, pointer)
     collector = FaultCollector()
     for analyzer, calibration in document.calibrations.items():
         if study.calibrations.get(analyzer) != calibration:
@@ -64,7 +69,7 @@ def resolve_prior(
     )
     collector.finish("The production prior cannot be used.")
     assert estimate is not None
-    return ResolvedPrior(estimate.prior, estimate, lapses_at)
+    return ResolvedPrior(estimate.prior, estimate)
 
 
 def _declared(
@@ -127,7 +132,7 @@ def _lapse(unit_of_work: UnitOfWork, serves_until: date | None) -> str | None:
 
 def _study(
     unit_of_work: UnitOfWork, stated: StatedPrior, characteristic: Characteristic, pointer: str
-) -> tuple[Study, Evaluation, str | None]:
+) -> tuple[Study, Evaluation]:
     """Find the study of a prior, its figures in the unit of the characteristic."""
     assert stated.study is not None  # the schema saw to it
     collector = FaultCollector()
@@ -152,7 +157,7 @@ def _study(
     evaluation = collector.attempt(at, _in_unit, stored.evaluation, study.unit, characteristic.unit, at)
     collector.finish("The production prior cannot be used.")
     assert evaluation is not None
-    return study, evaluation, lapses_at
+    return study, evaluation
 
 
 def _in_unit(document: Mapping[str, Any], from_unit: str, to_unit: str, pointer: str) -> Evaluation:

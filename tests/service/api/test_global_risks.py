@@ -116,6 +116,8 @@ def test_the_record_gives_the_prior_held_and_rejected_lots_included(callers: Cal
     found = done(callers["engineer"].post(PATH, asked(prior=from_record(), largest_risk=None)), 200)
     estimated = found["prior"]["estimated_from"]
     assert estimated["lots"] == number
+    assert estimated["left_out"] == {"read-otherwise": 1, "not-trusted": 1}
+    assert estimated["whole_record_read"] is True
     assert estimated["interval"]["lower"] < 0.2 < estimated["interval"]["upper"]
     assert found["prior"]["mean"] == pytest.approx(3.0, abs=0.15)
     steered = callers["engineer"].post(PATH, asked(prior=from_record(steered_by_this_analyzer=True)))
