@@ -12,7 +12,7 @@ from budgets.budget_trials import budget_trials
 from budgets.errors import LimitsError
 from budgets.evidence.evaluation import Term
 from budgets.evidence.mean_square_matrices import MatrixTerm
-from budgets.monte_carlo import MonteCarlo, monte_carlo
+from budgets.monte_carlo import LARGEST_COVERAGE, MonteCarlo, monte_carlo
 from budgets.pooled_trials import Progress
 from budgets.propagation import CombinedUncertainty, Counts, combined, expanded_uncertainty
 from budgets.reading_patterns import ReadingPattern
@@ -165,7 +165,8 @@ def validate(
     -------
     PropagationValidation
         Unless the trials hold a fifth of the tolerance, three times what the ends of the run scatter by
-        counts to their differences: it agrees only if it surely does.
+        counts to their differences: it agrees only if it surely does. A coverage probability beyond what a
+        run can show is held against that of 0.999.
 
     Raises
     ------
@@ -186,7 +187,7 @@ def validate(
         def run(number: int | None) -> MonteCarlo:
             return monte_carlo(
                 drawn,
-                coverage_probability=budget.coverage_probability,
+                coverage_probability=min(budget.coverage_probability, LARGEST_COVERAGE),
                 seed=seed,
                 trials=number,
                 tolerance=allowed / _PART_FOR_TRIALS if number is None else None,
@@ -231,7 +232,7 @@ def _compared(
     budget: Budget, law: CombinedUncertainty, run: MonteCarlo, allowed: float
 ) -> PropagationValidation:
     u, y = law.standard_uncertainty, law.estimate or 0.0
-    expanded = expanded_uncertainty(u, budget.coverage_probability, law.effective_degrees_of_freedom)
+    expanded = expanded_uncertainty(u, run.coverage_probability, law.effective_degrees_of_freedom)
     low, high = abs(run.symmetric[0] - (y - expanded)), abs(run.symmetric[1] - (y + expanded))
     unsure = _unsure(run)
     return PropagationValidation(

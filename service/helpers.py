@@ -63,7 +63,7 @@ class Helper:
             if self._closed:
                 raise Unavailable("The service is stopping.")
             if self._asked >= self._most:
-                message = "Other evaluations are under way; nothing was recorded, try again."
+                message = "Other computations are under way; nothing was recorded, try again."
                 raise Unavailable(message, retry_after=_RETRY_AFTER)
             self._asked += 1
         try:
@@ -87,7 +87,7 @@ class Helper:
             connection.send_bytes(job)
             if not connection.poll(self._seconds):
                 self._stop()
-                raise TooLarge(f"The evaluation takes more than {self._seconds:g} s; a smaller study may do.")
+                raise TooLarge(f"The computation takes more than {self._seconds:g} s; ask for less of it.")
             kind, found = connection.recv()
         except (EOFError, OSError):
             self._stop()
@@ -95,7 +95,7 @@ class Helper:
         if kind == "memory":
             self._stop()
             size = self._memory // 1024**2
-            raise TooLarge(f"The evaluation takes more than {size} MiB of memory; a smaller study may do.")
+            raise TooLarge(f"The computation takes more than {size} MiB of memory; ask for less of it.")
         if kind == "error":
             raise found
         return found

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from datetime import date
 from typing import Any, Final
 
@@ -173,7 +174,13 @@ def _validation(document: BudgetDocument, found: Findings, digest: str) -> Budge
     """Give what Monte Carlo runs found; refuse a model that neither the law nor one table can speak for."""
     collector = FaultCollector()
     validation = collector.attempt("#", finding, found, digest)
-    collector.faults = [in_document(document, fault) for fault in collector.faults]
+    # A trial without a value of the model is one of the model, whatever estimates it met.
+    collector.faults = [
+        in_document(
+            document, replace(fault, pointer=(fault.pointer or "#").replace("#/estimates", "#/model"))
+        )
+        for fault in collector.faults
+    ]
     collector.finish("The law of propagation may not be used for this budget.")
     assert validation is not None
     return validation

@@ -7,7 +7,7 @@ import pytest
 from budgets.budget import Budget, Count, Procedure
 from budgets.errors import LimitsError
 from budgets.measurement_models import MeasurementModel, Quantity
-from budgets.propagation import Counts
+from budgets.propagation import Counts, combined, coverage_factor
 from budgets.propagation_validation import numerical_tolerance, validate
 
 ANY = Procedure(Count(1, 1, 3), Count(1, 1, 4))
@@ -86,3 +86,11 @@ def test_further_quantiles_and_progress(a_budget):
         a_budget(), Counts((1,)), seed=1, probabilities=(0.001, 0.999), progress=lambda *now: told.append(now)
     )
     assert len(found.run.quantiles) == 2 and told[-1][0] == told[-1][1] >= found.run.trials
+
+
+def test_a_coverage_that_no_run_can_show(a_budget):
+    found = validate(a_budget(coverage_probability=0.9999), Counts((2,)), seed=1)
+    assert found.run.coverage_probability == 0.999 and found.agrees
+    nu = combined(a_budget(), Counts((2,))).effective_degrees_of_freedom
+    factor = found.expanded_uncertainty / found.standard_uncertainty
+    assert factor == pytest.approx(coverage_factor(0.999, nu), rel=1e-12)

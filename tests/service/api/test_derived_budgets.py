@@ -126,6 +126,20 @@ def test_evidence_about_something_else_is_refused(
     assert words in faults_of(engineer, document)[pointer]
 
 
+def test_a_model_that_curves_within_its_uncertainty_is_not_submitted(engineer: Caller) -> None:
+    """The sum of the channels comes within its uncertainty of 100 %."""
+    document = {**copy.deepcopy(plant.derived_budget()), "code": "curving"}
+    figure = {"meaning": "standard_deviation", "value": 12, "unit": "%", "document": "a guess"}
+    document["components"].append(
+        {"code": "guess", "quantity": "moisture", "level": "lot", "evidence": {"declaration": figure}}
+    )
+    done(engineer.post("/v1/budgets", document))
+    response = engineer.post("/v1/budgets/curving/versions/1/submit")
+    assert response.status_code == 422, response.get_data(as_text=True)
+    (fault,) = response.get_json()["errors"]
+    assert fault["pointer"] == "#/validated_ranges" and "curves within" in fault["detail"]
+
+
 def test_a_relative_figure_is_relative_to_a_quantity_in_its_own_unit(engineer: Caller) -> None:
     document = copy.deepcopy(plant.derived_budget())
     document["model"]["quantities"]["fat_bias"]["unit"] = "g/kg"
