@@ -307,6 +307,23 @@ def power_of_a_further_look(
     return max(0.0, 1.0 - float(missed))
 
 
+@lru_cache(maxsize=256)
+def gauss_legendre(number: int) -> tuple[Array, Array]:
+    """Return the nodes and weights of the Gauss-Legendre quadrature over (-1, 1).
+
+    Parameters
+    ----------
+    number : int
+
+    Returns
+    -------
+    tuple of ndarray, shape (number,)
+        Kept, for they are used again and again: not to be changed.
+    """
+    nodes, weights = np.polynomial.legendre.leggauss(number)
+    return nodes, weights
+
+
 # --- the sequence of integrals ------------------------------------------------------------------------------
 
 
@@ -314,7 +331,7 @@ def _released(steps: Sequence[float], looks: Sequence[Look], degrees_of_freedom:
     if math.isinf(degrees_of_freedom):
         return float(_chain(steps, looks, np.ones(1))[0])
     # Errors in units of their estimated scale are normal errors over s, s^2 a chi-square over its degrees.
-    nodes, weights = _gauss(_SCALE_NODES)
+    nodes, weights = gauss_legendre(_SCALE_NODES)
     # Both ends of (0, 1) are approached smoothly, so that few nodes serve small degrees of freedom too.
     place = (1 + nodes) / 2
     share = place**3 * (10 - 15 * place + 6 * place**2)
@@ -361,12 +378,6 @@ def _held(look: Look, scales: Array, spread: float, before: _Held | None) -> _He
     return _Held(nodes, weights * density / math.sqrt(2 * math.pi), 0.0, 1.0)
 
 
-@lru_cache(maxsize=256)
-def _gauss(number: int) -> tuple[Array, Array]:
-    nodes, weights = np.polynomial.legendre.leggauss(number)
-    return nodes, weights
-
-
 def _between(scales: Array, ends: Ends) -> Array:
     found: Array = ndtr(ends[1] * scales) - ndtr(ends[0] * scales)
     return found
@@ -381,7 +392,7 @@ def _held_nodes(look: Look, scales: Array, spread: float) -> tuple[Array, Array]
         number = int(np.clip(2.5 * length.max() / spread, _FEWEST_NODES, _MOST_NODES))
         if not length.any():
             continue
-        x, w = _gauss(number)
+        x, w = gauss_legendre(number)
         nodes.append(start + length * (1 + x) / 2)
         weights.append(w * length / 2)
     return np.concatenate(nodes, axis=1), np.concatenate(weights, axis=1)

@@ -1,99 +1,33 @@
 """The looks that a rule of several rounds plans, before anything is read: the risk that each may take.
 
-What will be read in each round is free within the procedure. So the looks are taken at their worst: the
-smallest correlations between one look and the next that the procedure leaves open, and whatever lies between
-these and looks that are all the same. What is found holds the overall risk for every way to do the rounds.
+What will be read in each round is free within the procedure, and may be chosen by what was seen before. So
+the risk per look is the one that holds the overall risk for every choice between the smallest and the largest
+correlation, of one look with the next, that the procedure leaves open.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
 from itertools import product
 
 from budgets.budget import Budget, Procedure
+from budgets.chosen_looks import Step, risk_per_chosen_look
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
 from budgets.error_distributions import StudentT
 from budgets.errors import NotSupportedError
 from budgets.joined_looks import Draw, draws_of
 from budgets.levels import LEVELS
-from budgets.looks import overall_risk, risk_per_look
-from budgets.propagation import Counts, averaging_weights, compiled, compiled_with, estimates_for
+from budgets.propagation import Counts, compiled, estimates_for
 
-# Steps towards looks that are all the same, where the risk may be larger than with the smallest correlations.
-_CLOSER = tuple(i / 8 for i in range(8))
-_HELD = 1e-6
-_MANY_LOOKS = 4
 Weights = Mapping[str, float]
 Three = tuple[float, float, float]
 
 
-@dataclass(frozen=True)
-class PlannedLooks:
-    """What is known of the looks before any of them.
-
-    Parameters
-    ----------
-    least_steps : tuple of float, shape (rounds - 1,)
-        The smallest correlation of each look with the one before it.
-    degrees_of_freedom : float
-        The largest of a look: with the same risk per look, fewer leave the looks more alike.
-    """
-
-    least_steps: tuple[float, ...]
-    degrees_of_freedom: float
-
-    def risk_per_look(self, largest_risk: float, *, rejection: str = "at_tolerance_limit") -> float:
-        """Return the risk per look that holds the overall risk, whatever is read within the procedure.
-
-        Parameters
-        ----------
-        largest_risk : float
-            Over all looks, at the tolerance limit.
-        rejection : {"at_tolerance_limit", "guarded"}
-
-        Returns
-        -------
-        float
-        """
-        # Many looks as if u were known: cautious, and quick.
-        nu = self.degrees_of_freedom if len(self.least_steps) < _MANY_LOOKS else math.inf
-
-        def worst_at(risk: float) -> tuple[tuple[float, ...], float]:
-            def overall(steps: Sequence[float]) -> float:
-                return overall_risk(steps, risk, nu, rejection=rejection)
-
-            steps = self._worst(overall)
-            return steps, overall(steps)
-
-        found = largest_risk
-        worst, overall = worst_at(found)
-        # What is worst moves a little as the risk per look falls.
-        while overall > largest_risk * (1 + _HELD):
-            found = min(found, risk_per_look(worst, largest_risk, nu, rejection=rejection))
-            worst, overall = worst_at(found)
-        return found
-
-    def _worst(self, risk: Callable[[Sequence[float]], float]) -> tuple[float, ...]:
-        """Return the steps of the largest risk: first along all steps at once, then along each of them."""
-        found = max((self._closer((near,) * len(self.least_steps)) for near in _CLOSER), key=risk)
-        for place, least in enumerate(self.least_steps):
-            ways = [
-                (*found[:place], least + near * (1 - least), *found[place + 1 :]) for near in (*_CLOSER, 1.0)
-            ]
-            found = max((found, *ways), key=risk)
-        return found
-
-    def _closer(self, near: Sequence[float]) -> tuple[float, ...]:
-        """Return the steps, each moved by a share of its way towards looks that are the same."""
-        return tuple(step + share * (1 - step) for step, share in zip(self.least_steps, near, strict=True))
-
-
 def planned_looks(
     budget: Budget, rounds: int, estimates: Sequence[Mapping[str, float] | None] = (None,)
-) -> PlannedLooks:
+) -> tuple[Step, ...]:
     """Return what a budget's procedure leaves open about the looks of some rounds.
 
     Parameters
@@ -105,26 +39,22 @@ def planned_looks(
 
     Returns
     -------
-    PlannedLooks
+    tuple of tuple of float, shape (rounds - 1, 2)
+        The smallest and the largest correlation of each look with the one before it.
 
     Raises
     ------
     ModelError
         As in `budgets.joined_looks.draws_of`.
     """
-    steps = [1.0] * (rounds - 1)
-    largest = 0.0
+    steps = [(1.0, 0.0)] * (rounds - 1)
     corners = tuple(_corners(budget.procedure))
     for where in estimates:
         draws = draws_of(budget, where)
-        for place in range(rounds - 1):
-            ways = _ways_to_go_on(corners, place + 1)
-            steps[place] = min(steps[place], *(_correlation(draws, *way) for way in ways))
-        for (samples, readings), number in product(corners, range(1, rounds + 1)):
-            weights = averaging_weights(Counts((readings,) * samples * number))
-            law = compiled_with(budget, weights)
-            largest = max(largest, law.at(estimates_for(budget, where)).effective_degrees_of_freedom)
-    return PlannedLooks(tuple(steps), largest)
+        for place, (least, most) in enumerate(steps):
+            found = [_correlation(draws, *way) for way in _ways_to_go_on(corners, place + 1)]
+            steps[place] = min(least, *found), max(most, *found)
+    return tuple(steps)
 
 
 def risk_per_look_of(
@@ -163,10 +93,9 @@ def risk_per_look_of(
     largest_risk = rule.largest_risk
     if largest_risk is None:
         largest_risk = _implied_risk(rule, budget, places[0])
-    if any_distribution:
-        return largest_risk / rule.rounds
-    looks = planned_looks(budget, rule.rounds, places)
-    return looks.risk_per_look(largest_risk, rejection=rule.rejection)
+    steps = planned_looks(budget, rule.rounds, places)
+    found = risk_per_chosen_look(steps, largest_risk, rejection=rule.rejection)
+    return min(found, largest_risk / rule.rounds) if any_distribution else found
 
 
 def _where(budget: Budget, tolerance: Tolerance) -> tuple[Mapping[str, float] | None, ...]:

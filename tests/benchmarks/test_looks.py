@@ -9,8 +9,8 @@ import numpy as np
 import pytest
 from scipy.stats import multivariate_normal, norm
 
+from budgets.chosen_looks import risk_per_chosen_look
 from budgets.looks import overall_risk, power_of_a_further_look
-from budgets.planned_looks import PlannedLooks
 
 STEPS = (0.5**0.5, (2 / 3) ** 0.5)
 
@@ -29,9 +29,10 @@ def test_the_overall_risk_of_three_looks(benchmark, nu):
     assert 0.09 < benchmark(overall_risk, STEPS, 0.05, nu) < 0.1
 
 
-@pytest.mark.parametrize("nu", [math.inf, 40.0], ids=["normal", "t"])
-def test_the_risk_per_look_whatever_is_read(benchmark, nu):
-    assert 0.02 < benchmark(PlannedLooks(STEPS, nu).risk_per_look, 0.05) < 0.03
+@pytest.mark.parametrize("rounds", [2, 3])
+def test_the_risk_per_look_whatever_is_read(benchmark, rounds):
+    steps = [(step, 1.0) for step in STEPS[: rounds - 1]]
+    assert 0.02 < benchmark(risk_per_chosen_look, steps, 0.05) < 0.03
 
 
 def test_the_power_of_a_further_look(benchmark):
