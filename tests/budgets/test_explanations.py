@@ -8,6 +8,7 @@ from budgets.components import Component
 from budgets.conformity import Tolerance
 from budgets.correlations import Correlation
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import Tabulated
 from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.explanations import Limits, explain
 from budgets.measurement_models import MeasurementModel, Quantity
@@ -187,3 +188,40 @@ def test_limits_of_a_rule_of_two_rounds_are_those_of_the_release_rule(a_budget, 
     assert explained.acceptance_limits == Limits(rule.lower_acceptance_limit, rule.upper_acceptance_limit)
     once = explain(budget, Counts((2,)), tolerance=TOLERANCE, rule=RULE)
     assert explained.acceptance_limits.upper < once.acceptance_limits.upper
+
+
+@pytest.mark.parametrize("rounds", [1, 2])
+def test_limits_by_quantiles_are_those_of_the_release_rule(a_budget, rounds):
+    z = (-4.0, -1.8, 0.1, 2.2, 4.5)
+    tabulated = Tabulated((0.001, 0.05, 0.5, 0.95, 0.999), z, 100_000)
+    rule = DecisionRule("guarded_by_specific_risk", largest_risk=0.05, rounds=rounds)
+    budget, counts = a_budget(), Counts((2,))
+    explained = explain(budget, counts, tolerance=TOLERANCE, rule=rule, tabulated=tabulated)
+    # Whatever the quantiles, the risks of the looks add up to no more than the largest risk.
+    each = None if rounds == 1 else 0.025
+    compiled = ReleaseRule.compile(
+        budget, counts, TOLERANCE, rule, distribution=tabulated, risk_per_look=each
+    )
+    assert explained.acceptance_limits == Limits(
+        compiled.lower_acceptance_limit, compiled.upper_acceptance_limit
+    )
+
+
+def test_limits_by_quantiles_where_the_uncertainty_depends_on_the_value(a_budget, a_component):
+    tabulated = Tabulated((0.001, 0.05, 0.5, 0.95, 0.999), (-4.0, -1.8, 0.1, 2.2, 4.5), 100_000)
+    square = MeanSquare("relative", 0.01**2, math.inf)
+    part = a_component("r", 0.03, relative_terms=(Term(1.0, square),))
+    budget, counts = a_budget(components=(part,), bias=None), Counts((2,))
+    at = {"moisture": 3.0}
+    explained = explain(budget, counts, estimates=at, tolerance=TOLERANCE, rule=RULE, tabulated=tabulated)
+    compiled = ReleaseRule.compile(budget, counts, TOLERANCE, RULE, distribution=tabulated)
+    assert explained.acceptance_limits == Limits(
+        compiled.lower_acceptance_limit, compiled.upper_acceptance_limit
+    )
+
+
+def test_by_global_risk_it_is_said_that_limits_need_the_production(a_budget):
+    rule = DecisionRule("guarded_by_global_risk", largest_risk=0.01, specific_risk_cap=0.1)
+    explained = explain(a_budget(), Counts((2,)), tolerance=TOLERANCE, rule=rule)
+    assert explained.acceptance_limits.upper is None
+    assert "production" in explained.acceptance_limits.detail
