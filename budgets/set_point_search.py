@@ -18,8 +18,8 @@ Array = NDArray[np.float64]
 _GRID, _FINER, _ROUNDS, _SMOOTH_ROUNDS = 65, 33, 4, 2
 _ANY_RATE = 1e-12
 _AT_A_BOUND = 1e-5
-# How far beyond the limit money is followed to see where it pulls.
-_BEYOND = 4.0
+# How far beyond the limit money is followed to see where it pulls, and at how many places.
+_BEYOND, _COARSE = 4.0, 17
 
 
 @dataclass(frozen=True)
@@ -168,8 +168,8 @@ class SetPointSearch:
         wide = np.concatenate(
             [
                 grid,
-                np.linspace(max(low, bottom - reach) - reach, bottom, _GRID) if math.isfinite(low) else [],
-                np.linspace(top, min(high, top + reach) + reach, _GRID) if math.isfinite(high) else [],
+                np.linspace(max(low, bottom - reach) - reach, bottom, _COARSE) if math.isfinite(low) else [],
+                np.linspace(top, min(high, top + reach) + reach, _COARSE) if math.isfinite(high) else [],
             ]
         )
         found = production.outcomes(wide)

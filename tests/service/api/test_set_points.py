@@ -376,6 +376,31 @@ def test_money_that_weighs_nothing_is_refused(callers: Callers) -> None:
     assert "all the money is zero" in found["#/money/value_of_one_unit"]
 
 
+def test_money_beyond_the_law_is_refused(callers: Callers) -> None:
+    simple = {"kind": "simple", "largest_standard_uncertainty": 1.0}
+    document = specification("law", 3.2, simple) | {"kind": "legal"}
+    put_in_force(callers["engineer"], callers["max"], "specifications", document)
+    greedy = {
+        **asked()["money"],
+        "value_of_one_unit": 1e4,
+        "cost_of_hold": 0.001,
+        "cost_of_not_released": 0.001,
+        "cost_of_nonconforming": 0.001,
+    }
+    body = asked(
+        specifications=["law"],
+        process_variation=variation(mean=3.15, lot_to_lot=0.3),
+        wanted={"release_rate": 0.4, "largest_risk": None},
+        wanted_set_point=None,
+        money=greedy,
+    )
+    said = faults(callers["engineer"].post(SET_POINTS, body))
+    assert "beyond the legal limit 3.2" in said["#/money"]
+    # With what things cost in truth there is a set point, on the right side of the limit.
+    found = done(callers["engineer"].post(SET_POINTS, {**body, "money": asked()["money"]}), 200)
+    assert found["cheapest"]["true_mean"] < 3.2
+
+
 def test_nothing_in_force_is_a_conflict(callers: Callers) -> None:
     response = callers["engineer"].post(SET_POINTS, asked(characteristic="fat"))
     assert response.status_code in (409, 422)
