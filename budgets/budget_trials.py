@@ -21,7 +21,7 @@ from budgets.distributions import draws
 from budgets.errors import ComponentError
 from budgets.evidence.evaluation import MeanSquare, Term, merged, variance
 from budgets.evidence.mean_square_matrices import MeanSquareMatrix
-from budgets.input_distributions import chi_square_ratios, root_of
+from budgets.joint_distributions import chi_square_ratios, root_of
 from budgets.linear_propagation import CompiledPropagation, Line
 from budgets.measurement_models import MeasurementModel
 from budgets.propagation import Counts, compiled, estimates_for, group_shares

@@ -1,7 +1,8 @@
 """Distributions of input quantities as a Monte Carlo method draws them: all of JCGM 101, Table 1.
 
 Each is a frozen record of what is known of a quantity and draws values of it. Those of several quantities
-together draw vectors. `budgets.distributions` has the shapes of errors about zero that components name.
+together are in `budgets.joint_distributions`; the shapes of errors about zero that components name are in
+`budgets.distributions`.
 """
 
 from __future__ import annotations
@@ -14,7 +15,6 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from budgets.correlations import is_possible
 from budgets.distributions import check_shape, draws, relative_half_width
 from budgets.errors import ComponentError
 
@@ -49,7 +49,21 @@ class InputDistribution(Protocol):
         ...
 
 
-def _check(right: bool, message: str, *where: str) -> None:
+def check(right: bool, message: str, *where: str) -> None:
+    """Refuse a distribution that is none.
+
+    Parameters
+    ----------
+    right : bool
+    message : str
+    *where : str
+        The member at fault.
+
+    Raises
+    ------
+    ComponentError
+        Unless it is right.
+    """
     if not right:
         raise ComponentError(message, where=where)
 
@@ -86,7 +100,7 @@ class Bounded:
     def __post_init__(self) -> None:
         check_shape(self.shape, self.top_to_base_ratio)
         relative_half_width(self.shape, self.top_to_base_ratio)
-        _check(
+        check(
             math.isfinite(self.upper - self.lower) and self.lower < self.upper,
             f"the limits must be finite and in order; got {self.lower} and {self.upper}",
             "lower",
@@ -144,8 +158,8 @@ class CurvilinearTrapezoid:
 
     def __post_init__(self) -> None:
         half = (self.upper - self.lower) / 2
-        _check(math.isfinite(half) and half > 0, "the limits must be finite and in order", "lower")
-        _check(
+        check(math.isfinite(half) and half > 0, "the limits must be finite and in order", "lower")
+        check(
             0 < self.plus_or_minus < half,
             f"the limits are known within more than 0 and less than half of the width, {half:g}",
             "plus_or_minus",
@@ -194,12 +208,12 @@ class Normal:
     degrees_of_freedom: float = math.inf
 
     def __post_init__(self) -> None:
-        _check(math.isfinite(self.estimate), "the estimate must be a finite number", "estimate")
+        check(math.isfinite(self.estimate), "the estimate must be a finite number", "estimate")
         u = self.standard_uncertainty
-        _check(
+        check(
             math.isfinite(u) and u > 0, "the standard uncertainty must be above zero", "standard_uncertainty"
         )
-        _check(self.degrees_of_freedom > 0, "the degrees of freedom must be above zero", "degrees_of_freedom")
+        check(self.degrees_of_freedom > 0, "the degrees of freedom must be above zero", "degrees_of_freedom")
 
     @classmethod
     def of_indications(cls, values: Sequence[float]) -> Normal:
@@ -225,7 +239,7 @@ class Normal:
         Source: JCGM 101:2008, 6.4.9.2 (from memory).
         """
         array = np.asarray(values, dtype=np.float64)
-        _check(array.ndim == 1 and array.size >= 2, "at least two indications are needed", "values")
+        check(array.ndim == 1 and array.size >= 2, "at least two indications are needed", "values")
         return cls(
             float(array.mean()), float(array.std(ddof=1)) / math.sqrt(array.size), float(array.size - 1)
         )
@@ -262,7 +276,7 @@ class Exponential:
     degrees_of_freedom = math.inf
 
     def __post_init__(self) -> None:
-        _check(math.isfinite(self.estimate) and self.estimate > 0, "it must be above zero", "estimate")
+        check(math.isfinite(self.estimate) and self.estimate > 0, "it must be above zero", "estimate")
 
     def draw(self, generator: np.random.Generator, size: int) -> Array:
         """Draw values; see `InputDistribution`."""
@@ -294,7 +308,7 @@ class Counted:
     degrees_of_freedom = math.inf
 
     def __post_init__(self) -> None:
-        _check(self.number >= 0, "a number of objects is not below zero", "number")
+        check(self.number >= 0, "a number of objects is not below zero", "number")
 
     @property
     def estimate(self) -> float:
@@ -330,8 +344,8 @@ class Sampled:
     degrees_of_freedom = math.inf
 
     def __post_init__(self) -> None:
-        _check(all(map(math.isfinite, self.values)), "every value must be finite", "values")
-        _check(len(set(self.values)) >= 2, "at least two different values are needed", "values")
+        check(all(map(math.isfinite, self.values)), "every value must be finite", "values")
+        check(len(set(self.values)) >= 2, "at least two different values are needed", "values")
 
     @property
     def estimate(self) -> float:
@@ -341,108 +355,3 @@ class Sampled:
     def draw(self, generator: np.random.Generator, size: int) -> Array:
         """Draw values; see `InputDistribution`."""
         return np.asarray(self.values)[generator.integers(len(self.values), size=size)]
-
-
-@dataclass(frozen=True)
-class JointNormal:
-    """Several quantities together: a multivariate normal distribution, or t with finite degrees of freedom.
-
-    Parameters
-    ----------
-    quantities : tuple of str, shape (n,)
-    estimates : tuple of float, shape (n,)
-    covariance : tuple of tuple of float, shape (n, n)
-        Of the estimates; of t the squared scale, as the standard uncertainty of `Normal`.
-    degrees_of_freedom : float
-        Common to all of them.
-
-    Raises
-    ------
-    ComponentError
-        If the numbers do not fit each other, or the matrix is no covariance.
-
-    Notes
-    -----
-    Source: JCGM 101:2008, 6.4.8; JCGM 102:2011, 5.3.2 for t (from memory).
-    """
-
-    quantities: tuple[str, ...]
-    estimates: tuple[float, ...]
-    covariance: tuple[tuple[float, ...], ...]
-    degrees_of_freedom: float = math.inf
-
-    def __post_init__(self) -> None:
-        matrix, number = self._matrix, len(self.quantities)
-        fits = len(set(self.quantities)) == len(self.estimates) == number and matrix.shape == (number, number)
-        _check(fits, "each quantity has one estimate, one row and one column", "covariance")
-        possible = np.isfinite(matrix).all() and np.array_equal(matrix, matrix.T) and is_possible(matrix)
-        _check(
-            bool(possible), "the covariance matrix is not symmetric and positive semi-definite", "covariance"
-        )
-        _check(all(map(math.isfinite, self.estimates)), "every estimate must be finite", "estimates")
-        _check(self.degrees_of_freedom > 0, "the degrees of freedom must be above zero", "degrees_of_freedom")
-
-    @property
-    def _matrix(self) -> Array:
-        return np.asarray(self.covariance, dtype=np.float64)
-
-    def draw(self, generator: np.random.Generator, size: int) -> Array:
-        """Draw vectors.
-
-        Parameters
-        ----------
-        generator : numpy.random.Generator
-        size : int
-
-        Returns
-        -------
-        ndarray, shape (n, size)
-        """
-        errors = root_of(self._matrix) @ generator.standard_normal((len(self.quantities), size))
-        if math.isfinite(self.degrees_of_freedom):
-            # One common factor for all of them, or their tails would not be those of the joint t.
-            errors *= np.sqrt(chi_square_ratios(self.degrees_of_freedom, size, generator))
-        return np.asarray(self.estimates)[:, None] + errors
-
-
-def root_of(covariance: Array) -> Array:
-    """Return a matrix whose product with its transpose is a covariance matrix.
-
-    Parameters
-    ----------
-    covariance : ndarray, shape (n, n)
-        Positive semi-definite; also singular.
-
-    Returns
-    -------
-    ndarray, shape (n, n)
-    """
-    values, vectors = np.linalg.eigh(covariance)
-    # Rounding may leave an eigenvalue just below zero.
-    return np.asarray(vectors * np.sqrt(np.maximum(values, 0.0)))
-
-
-def chi_square_ratios(degrees_of_freedom: float, size: int, generator: np.random.Generator) -> Array:
-    """Return draws of nu over a chi-square with nu degrees of freedom.
-
-    Parameters
-    ----------
-    degrees_of_freedom : float
-        Finite.
-    size : int
-    generator : numpy.random.Generator
-
-    Returns
-    -------
-    ndarray, shape (size,)
-        What a variance known from nu degrees of freedom may be, over its estimate.
-
-    Notes
-    -----
-    A normal draw times the root of it is Student's t. Source: JCGM 101:2008, 6.4.9.4 (from memory).
-    """
-    half = degrees_of_freedom / 2
-    gammas = generator.standard_gamma(half, size)
-    # Far below one degree of freedom a draw may underflow to zero.
-    np.maximum(gammas, np.finfo(np.float64).tiny, out=gammas)
-    return np.divide(half, gammas, out=gammas)

@@ -18,7 +18,7 @@ import numpy as np
 import uncertainties
 
 from budgets.errors import ConvergenceError, ModelError, NotSupportedError
-from budgets.input_distributions import root_of
+from budgets.joint_distributions import root_of
 from budgets.linear_propagation import CompiledPropagation, Propagated
 
 LARGEST_DIFFERENCE = 0.05

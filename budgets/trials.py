@@ -10,7 +10,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from budgets.errors import BudgetsError, ModelError, raise_collected
-from budgets.input_distributions import InputDistribution, JointNormal
+from budgets.input_distributions import InputDistribution
+from budgets.joint_distributions import JointNormal
 from budgets.measurement_models import MeasurementModel
 
 Array = NDArray[np.float64]

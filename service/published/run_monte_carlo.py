@@ -8,7 +8,8 @@ from typing import Any
 
 from budgets.budget_trials import budget_trials
 from budgets.declarations import Declaration
-from budgets.input_distributions import Bounded, InputDistribution, JointNormal, Normal
+from budgets.input_distributions import Bounded, InputDistribution, Normal
+from budgets.joint_distributions import JointNormal
 from budgets.measurement_models import MeasurementModel, Quantity
 from budgets.monte_carlo import MonteCarlo, monte_carlo
 from budgets.propagation import CombinedUncertainty, Counts, expanded_uncertainty

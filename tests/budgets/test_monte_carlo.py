@@ -7,7 +7,8 @@ import pytest
 from scipy import stats
 
 from budgets.errors import LimitsError, ModelError
-from budgets.input_distributions import Bounded, JointNormal, Normal
+from budgets.input_distributions import Bounded, Normal
+from budgets.joint_distributions import JointNormal
 from budgets.measurement_models import MeasurementModel, Quantity
 from budgets.monte_carlo import PROMISE, monte_carlo
 from budgets.trials import Trials, model_trials
