@@ -158,7 +158,16 @@ def test_the_same_readings_are_no_new_evidence(app: Flask, callers: Callers) -> 
     moisture_only = copy.deepcopy(same)
     for reading in moisture_only["readings"]:
         reading["values"] = {"moisture": 2.7}
-    for way in (same, {**same, "line": "tower-2"}, {**same, "units": in_grams["units"]}, moisture_only):
+    renamed = copy.deepcopy(same)
+    for number, reading in enumerate(renamed["readings"]):
+        reading["measurement"] = f"again-{number}"
+    for way in (
+        same,
+        renamed,
+        {**same, "line": "tower-2"},
+        {**same, "units": in_grams["units"]},
+        moisture_only,
+    ):
         response = callers["mes"].post(RETESTS, way)
         assert problem(response) == (409, "/problems/reading-already-judged"), response.get_json()
     twice = further()

@@ -6,18 +6,22 @@ import math
 from dataclasses import replace
 from typing import Any
 
+import numpy as np
 import pytest
 from scipy.stats import norm
 
 from budgets.budget import Count, Procedure
+from budgets.looks import Look, probability_of_release
 from budgets.planned_looks import risk_per_look_of
+from budgets.propagation import Counts
+from budgets.release import ReleaseRule
 from service.documents import Reading, Requirement, RuleOfDecision, ToleranceLimit
 from service.errors import InvalidRequest
 from service.schemas import dump
 from service.workflows.earlier_looks import FIRST_LOOK, EarlierLooks
 from service.workflows.judging import judge
 from service.workflows.register import Register
-from service.workflows.rules import RuleKey, compile_pair, decision_rule, stored_rule, tolerance
+from service.workflows.rules import RuleKey, compile_pair, compile_rule, decision_rule, stored_rule, tolerance
 from tests.service.workflows.registers import (
     BIAS,
     NOW,
@@ -319,3 +323,42 @@ def test_a_rule_of_one_round_beside_one_of_two_does_not_hold_what_it_released() 
     # Held by the rule of one round the lot is not read again, whatever the other allows.
     stuck, _ = look(register, FIRST_LOOK, reading(3.5, "1"), specifications=("legal",))
     assert stuck["rounds_left"] == 0
+
+
+def test_a_simulated_plant_at_the_limit_releases_no_more_than_was_agreed() -> None:
+    """200,000 lots exactly at the limit, by the rules that decisions use: a sample, held, then three more."""
+    register = a_plant()
+    specification = register.specifications["customer-b"]
+    (budget,) = register.budgets.values()
+    first = register.rule(specification, a_rule(), budget, Counts((1,)))
+    second = register.rule(specification, a_rule(), budget, Counts((1, 1, 1, 1)), 2)
+    assert isinstance(first, ReleaseRule) and isinstance(second, ReleaseRule)
+    lots = 200_000
+    generator = np.random.default_rng(29)
+    samples = LIMIT + generator.normal(0, COMMON, (lots, 1)) + generator.normal(0, SAMPLING, (lots, 4))
+    at_first = first.judge_many(samples[:, 0]).outcomes
+    at_second = second.judge_many(samples.mean(axis=1)).outcomes
+    released = (at_first == 0) | ((at_first == 1) & (at_second == 0))
+    covariance = np.array(
+        [[SAMPLING**2 + COMMON**2, SAMPLING**2 / 4 + COMMON**2], [0, SAMPLING**2 / 4 + COMMON**2]]
+    )
+    covariance[1, 0] = covariance[0, 1]
+    looks = [
+        Look((-math.inf, rule.upper_acceptance_limit or math.nan), (-math.inf, LIMIT))
+        for rule in (first, second)
+    ]
+    predicted = probability_of_release(covariance, looks, LIMIT)
+    error = math.sqrt(predicted * (1 - predicted) / lots)
+    assert released.mean() == pytest.approx(predicted, abs=4 * error)
+    assert 0.045 < predicted <= 0.05
+    # Joined without the smaller risk per look, the same rule would release too many.
+    once = compile_rule(
+        budget.budget,
+        Counts((1,)),
+        a_rule(1),
+        register.characteristics["whole-milk-powder", "moisture"],
+    )
+    assert isinstance(once, ReleaseRule) and once.upper_acceptance_limit is not None
+    joined = LIMIT - norm.isf(0.05) * math.sqrt(covariance[1, 1])
+    naive = [Look((-math.inf, limit), (-math.inf, LIMIT)) for limit in (once.upper_acceptance_limit, joined)]
+    assert probability_of_release(covariance, naive, LIMIT) > 0.07
