@@ -108,7 +108,12 @@ def planned_measurement(
     budget = replace(budget, procedure=procedure.within(budget.procedure))
     patterns = [procedure.done(look) for look in range(1, procedure.looks + 1)]
     laws = [compiled(budget, pattern) for pattern in patterns]
-    risks = [risk_per_look_of(budget, demand.tolerance, demand.decision_rule) for demand in demands]
+    risks = [
+        risk_per_look_of(
+            budget, demand.tolerance, demand.decision_rule, any_distribution=demand.distribution is not None
+        )
+        for demand in demands
+    ]
     rules = [
         [_rule(budget, law, demand, risk) for demand, risk in zip(demands, risks, strict=True)]
         for law in laws

@@ -10,6 +10,7 @@ from scipy.stats import norm
 
 from budgets.conformity import Tolerance
 from budgets.decision_rules import DecisionRule
+from budgets.error_distributions import Tabulated
 from budgets.errors import EmptyAcceptanceError, LimitsError, ModelError, ProcedureError
 from budgets.global_risks import risks_of_acceptance
 from budgets.lot_procedures import Demand, LotProcedure
@@ -549,6 +550,22 @@ def test_limits_are_those_that_approval_compiles(a_budget, rounds, treatment):
             rule.upper_acceptance_limit, rel=1e-14
         )
         assert found.limits[look].upper_rejection_limit == rule.upper_tolerance_limit
+
+
+def test_limits_by_monte_carlo_quantiles_are_those_that_approval_compiles(a_budget):
+    """Whatever the quantiles, the risks of two looks add up to no more than the largest risk."""
+    quantiles = Tabulated((0.001, 0.025, 0.5, 0.975, 0.999), (-4.0, -1.8, 0.1, 2.2, 4.5), 100_000)
+    demand = replace(CUSTOMER, decision_rule=replace(RISK, rounds=2), distribution=quantiles)
+    found = planned_measurement(a_budget(), LotProcedure(1, 2, looks=2), (demand,))
+    rule = ReleaseRule.compile(
+        a_budget(),
+        Counts((2,)),
+        demand.tolerance,
+        demand.decision_rule,
+        distribution=quantiles,
+        risk_per_look=RISK.largest_risk / 2,
+    )
+    assert found.limits[0].upper_acceptance_limit == pytest.approx(rule.upper_acceptance_limit, rel=1e-14)
 
 
 def test_demands_that_exclude_each_other_accept_nothing(a_budget):
