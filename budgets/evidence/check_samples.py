@@ -94,7 +94,7 @@ def evaluate(study: Study) -> Evaluation:
             "findings": [found.to_document() for found in findings],
         },
         warnings=(
-            *precision_warnings(len(sessions), precision[0].degrees_of_freedom),
+            *precision_warnings(len(sessions), precision[0].degrees_of_freedom, of="sessions"),
             *_warnings_of_number(len(sessions)),
             *_warnings_of_components(components, precision),
             *_warnings_of_control(chart, list(sessions)),

@@ -141,7 +141,7 @@ def _of_held_sample(study: Study, values: Array) -> Evaluation:
             "autocorrelations": list(found.autocorrelations[: _SHOWN_LAGS + 1]),
         },
         warnings=(
-            *precision_warnings(len(values), found.degrees_of_freedom),
+            *precision_warnings(len(values), found.degrees_of_freedom, of="readings"),
             *_warnings_of_dependence(found, number, len(values)),
             *resolution_warnings(single, study.decimals),
         ),
@@ -164,6 +164,11 @@ def _warnings_of_dependence(found: MeanOfReadings, number: int, n: int) -> tuple
     detail = f"successive readings are not independent (autocorrelation {first:.2f}): "
     if number > 1:
         detail += f"{number} of them are worth {found.effective_number:.1f}"
+    elif first < 0:
+        detail += (
+            "each goes against the one before it, so a mean of several is better known than a budget that "
+            "averages them as if they were independent says; say how many are averaged (readings_averaged)"
+        )
     else:
         detail += (
             "a budget that averages them as if they were promises too much; say how many are averaged "

@@ -88,7 +88,7 @@ def evaluate(study: Study) -> Evaluation:
             "lot_means": [[label, value] for label, value in zip(lots, means, strict=True)],
         },
         warnings=(
-            *precision_warnings(len(lots), of_lots.mean_square.degrees_of_freedom),
+            *precision_warnings(len(lots), of_lots.mean_square.degrees_of_freedom, of="lots"),
             *_warnings_of_steering(steered),
             *_warnings_of_order(chart),
             *_warnings_of_estimates(estimates, components),

@@ -50,8 +50,6 @@ def evaluate(study: Study) -> Evaluation:
     """
     readings = study.full("reading")
     _check_replicates(study)
-    if len(set(readings)) == 1:
-        raise EvidenceError("all readings are equal; they say nothing about repeatability", where=("rows",))
     groups = grouped(study.labels["sample"], readings)
     replicated = {label: values for label, values in groups.items() if len(values) > 1}
     if not replicated:
@@ -59,6 +57,8 @@ def evaluate(study: Study) -> Evaluation:
             "no sample has two replicates; repeatability needs at least two readings of the same sample",
             where=("rows",),
         )
+    if len(set(readings)) == 1:
+        raise EvidenceError("all readings are equal; they say nothing about repeatability", where=("rows",))
     freedom = sum(len(values) - 1 for values in replicated.values())
     # ISO 5725-2, 7.4.5.1: s_r^2 = sum (n_i - 1) s_i^2 / sum (n_i - 1)
     square = math.fsum(sum_of_squares(values) for values in replicated.values()) / freedom
@@ -108,7 +108,7 @@ def _check_replicates(study: Study) -> None:
         if first.setdefault(key, row) != row:
             faults.append(
                 EvidenceError(
-                    f"replicate {key[1]} of sample {key[0]} stands in row {first[key]} already",
+                    f"replicate {key[1]} of sample {key[0]} stands in row {first[key] + 1} already",
                     where=("rows", row),
                 )
             )
@@ -185,13 +185,15 @@ def _group_figures(groups: Mapping[str, Sequence[float]]) -> list[dict[str, Any]
     ]
 
 
-def precision_warnings(replicates: int, degrees_of_freedom: float) -> tuple[EvaluationWarning, ...]:
-    """Say in plain words how well so many replicates know a standard deviation."""
+def precision_warnings(
+    number: int, degrees_of_freedom: float, *, of: str = "replicates"
+) -> tuple[EvaluationWarning, ...]:
+    """Say in plain words how well so many values know a standard deviation."""
     lower, upper = standard_deviation_factors(degrees_of_freedom)
     if upper - 1 <= _WELL_KNOWN:
         return ()
     detail = (
-        f"{replicates} replicates know the standard deviation to within {100 * (lower - 1):.0f} % / "
+        f"{number} {of} know the standard deviation to within {100 * (lower - 1):.0f} % / "
         f"+{100 * (upper - 1):.0f} % ({degrees_of_freedom:g} degrees of freedom)"
     )
     return (EvaluationWarning("few-degrees-of-freedom", detail),)

@@ -106,7 +106,7 @@ def sampling_of_process(study: Study, values: Array, step: float) -> Evaluation:
             "cycle_period": None if period is None else len(values) * step / period,
         },
         warnings=(
-            *precision_warnings(len(values), freedom),
+            *precision_warnings(len(values), freedom, of="readings"),
             *_warnings_of_process(estimate, bool(known), lot / increments),
             *_warnings_of_cycle(period, len(values), lot / increments, increments, scheme, step),
         ),

@@ -150,9 +150,7 @@ def read_columns(
         row = data.rows[i]
         if len(row) != len(data.columns):
             faults.append(
-                EvidenceError(
-                    f"row {i} has {len(row)} cells, expected {len(data.columns)}", where=("rows", i)
-                )
+                EvidenceError(f"it has {len(row)} cells, expected {len(data.columns)}", where=("rows", i))
             )
             continue
         for j, (name, cell) in enumerate(zip(data.columns, row, strict=True)):

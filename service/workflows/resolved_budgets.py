@@ -30,9 +30,11 @@ from service.workflows.stored_budgets import (
     assemble_budget,
     component_of,
 )
-from service.workflows.trueness import check_trueness
+from service.workflows.trueness import VALIDATIONS, check_trueness
 from service.workflows.validated_ranges import check_ranges
 
+# What an analyzer does itself, with one calibration: neither a laboratory nor another analyzer shows it.
+_ITS_OWN: Final = frozenset({"reading", "presentation", "session", "instrument", "calibration"})
 _NUMBERED_QUANTITY: Final = re.compile(r"#/quantities/(\d+)(/name)?")
 
 
@@ -115,7 +117,7 @@ def _behind(unit_of_work: UnitOfWork, document: BudgetDocument, line: BudgetComp
         ours = (document.characteristic, *derived_from(unit_of_work, document))
         check_laboratory_fits(unit_of_work, document, line, behind.laboratory, ours, index)
     if behind.study is not None:
-        _check_study_fits(unit_of_work, behind.study, document, pointer)
+        _check_study_fits(unit_of_work, behind.study, document, pointer, line.level)
     check_quantities(document, line, behind, index)
     return behind
 
@@ -137,7 +139,7 @@ def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, eviden
     code = f"{document.code}/{name}"
     behind = resolve_stated(unit_of_work, evidence, code=code, unit=unit, pointer=pointer)
     if behind.study is not None:
-        _check_study_fits(unit_of_work, behind.study, document, pointer)
+        _check_study_fits(unit_of_work, behind.study, document, pointer, "calibration")
     collector = FaultCollector()
     if behind.estimate.value is None:
         collector.add(
@@ -149,7 +151,9 @@ def _value(unit_of_work: UnitOfWork, document: BudgetDocument, name: str, eviden
     return behind
 
 
-def _check_study_fits(unit_of_work: UnitOfWork, study: Study, document: BudgetDocument, pointer: str) -> None:
+def _check_study_fits(
+    unit_of_work: UnitOfWork, study: Study, document: BudgetDocument, pointer: str, level: str
+) -> None:
     """Refuse evidence that was made for something else than this budget speaks of."""
     collector = FaultCollector()
     if study.product != document.product:
@@ -166,11 +170,12 @@ def _check_study_fits(unit_of_work: UnitOfWork, study: Study, document: BudgetDo
             f"{study.code} was made on {', '.join(study.calibrations)}",
             f"evidence for {', '.join(document.calibrations)}",
         )
-    if study.design == "agreement" and not study.calibrations:
+    needed = [name for name in document.calibrations if not _is_laboratory(unit_of_work, name)]
+    if needed and not study.calibrations and (study.design in VALIDATIONS or level in _ITS_OWN):
         collector.add(
             f"{pointer}/study",
             f"{study.code} does not say on which calibration it was made",
-            f"evidence for {', '.join(document.calibrations)}",
+            f"evidence for {', '.join(needed)}",
         )
     for analyzer in sorted(shared):
         if study.calibrations[analyzer] != document.calibrations[analyzer]:
@@ -180,6 +185,11 @@ def _check_study_fits(unit_of_work: UnitOfWork, study: Study, document: BudgetDo
                 f"{document.calibrations[analyzer]!r}",
             )
     collector.finish("The evidence belongs to something else.")
+
+
+def _is_laboratory(unit_of_work: UnitOfWork, analyzer: str) -> bool:
+    stored = unit_of_work.master.get("analyzer", analyzer)
+    return stored is not None and stored.document["kind"] == "laboratory"
 
 
 def derived_from(unit_of_work: UnitOfWork, document: BudgetDocument) -> tuple[str, ...]:

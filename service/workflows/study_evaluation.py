@@ -22,7 +22,8 @@ from service.workflows.named_sources import ResolvedSource, resolve_source
 from service.workflows.reference_methods import check_stated_methods, methods_of_study
 from service.workflows.services import Services
 
-_CELL: Final = re.compile(r"#/rows/([0-9]+)/[0-9]+")
+_PLACE: Final = re.compile(r"#/rows/([0-9]+)(/[0-9]+)?")
+_NOT_SUPPORTED: Final = "not supported yet: "
 _SHA256: Final = re.compile(r"[0-9A-Fa-f]{64}")
 
 
@@ -111,8 +112,10 @@ def _in_document(fault: Fault) -> Fault:
     pointer = (fault.pointer or "#").replace("#/options/independent", "#/independent", 1)
     detail = fault.detail
     # The computation counts rows from 0, and so do pointers; people count them from 1.
-    if found := _CELL.fullmatch(pointer):
-        detail = f"row {int(found[1]) + 1}, column {detail}"
+    if found := _PLACE.fullmatch(pointer):
+        prefix = _NOT_SUPPORTED if detail.startswith(_NOT_SUPPORTED) else ""
+        place = f"row {int(found[1]) + 1}" + (", column " if found[2] else ": ")
+        detail = prefix + place + detail.removeprefix(prefix)
     return replace(fault, pointer=pointer, detail=detail)
 
 

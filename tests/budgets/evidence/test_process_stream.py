@@ -98,6 +98,14 @@ def test_a_mean_of_correlated_readings_is_worth_what_the_theory_says():
     )
 
 
+def test_readings_that_go_against_the_one_before_average_better_than_independent_ones():
+    evaluation = evaluated(autoregressive(1, -0.5, 1000), {**HELD, "readings_averaged": 16})
+    assert evaluation.diagnostics["effective_number_of_readings"] > 16
+    warnings = {w.code: w.detail for w in evaluated(autoregressive(1, -0.5, 1000), HELD).warnings}
+    assert "a mean of several is better known" in warnings["autocorrelated"]
+    assert "promises too much" not in warnings["autocorrelated"]
+
+
 @pytest.mark.slow
 @pytest.mark.parametrize(
     ("phi", "size", "options", "truth", "least"),

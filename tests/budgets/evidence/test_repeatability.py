@@ -76,6 +76,7 @@ def test_outliers_are_told_and_kept():
     [
         ({"P0": [3.1, 3.1], "P1": [3.1, 3.1]}, "all readings are equal"),
         ({"P0": [3.1], "P1": [3.2]}, "no sample has two replicates"),
+        ({"P0": [3.1], "P1": [3.1]}, "no sample has two replicates"),
         ({"P0": [3.1, 3.1], "P1": [3.2, 3.2]}, "declare its resolution"),
     ],
 )
@@ -124,6 +125,6 @@ def test_the_same_replicate_twice_is_one_reading_copied():
     with pytest.raises(EvidenceError, match="2 faults") as caught:
         evaluate_study("repeatability", data, study="rep")
     assert [fault.where for fault in caught.value.each()] == [("rows", 2), ("rows", 4)]
-    assert "replicate 1 of sample P1 stands in row 0 already" in caught.value.each()[0].message
+    assert "replicate 1 of sample P1 stands in row 1 already" in caught.value.each()[0].message
     fine = StudyData(("sample", "replicate", "reading"), (*rows[:2], *rows[3:4]))
     assert evaluate_study("repeatability", fine, study="rep").used == 2

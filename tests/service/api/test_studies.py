@@ -163,6 +163,20 @@ def test_the_place_in_a_json_study_is_said_in_words_too(callers: Callers) -> Non
     assert fault["detail"].startswith("row 4, column reading: got the text '3,1'")
 
 
+def test_rows_are_counted_from_one_wherever_they_are_named(callers: Callers) -> None:
+    document = house.repeatability_study(code="new-study")
+    document["rows"] = [["P01", 1, 3.1], ["P01", 1, 3.2], ["P01", 2, 3.1]]
+    found = problem(callers["engineer"].send("POST", PREVIEW, document), 422, "invalid-request")
+    assert [fault["detail"] for fault in found["errors"]] == [
+        "row 2: replicate 1 of sample P01 stands in row 1 already"
+    ]
+    document["rows"][1] = ["P01", 3, {"below": 0.1}]
+    found = problem(callers["engineer"].send("POST", PREVIEW, document), 422, "not-supported")
+    assert [fault["detail"] for fault in found["errors"]] == [
+        "not supported yet: row 2, column reading: values below a reporting limit"
+    ]
+
+
 def test_other_bodies_are_refused(callers: Callers) -> None:
     said = said_of(house.repeatability_study(code="new-study"))
     call = csv_call(callers["engineer"], b"sample,reading\nP,1\n", content_type="text/plain", **said)

@@ -11,6 +11,7 @@ from service import documents
 from tests.service.api import house
 from tests.service.api.conftest import Callers
 from tests.service.api.house import done, example, signed
+from tests.service.api.test_bad_input import problem
 
 KINDS: list[tuple[str, dict[str, Any]]] = [
     ("/v1/specifications/new-one", house.specification("new-one", 3.1)),
@@ -225,6 +226,20 @@ def test_a_validation_says_which_calibration_it_is_for(callers: Callers) -> None
     details = [fault["detail"] for fault in response.get_json()["errors"]]
     # The bias as a quantity of the model and as a component.
     assert details.count("anywhere does not say on which calibration it was made") == 2
+
+
+@pytest.mark.parametrize("level", ["reading", "presentation", "session"])
+def test_the_repeatability_of_a_laboratory_is_none_of_an_analyzer(callers: Callers, level: str) -> None:
+    engineer = callers["engineer"]
+    study = {**house.repeatability_study(code="of-the-oven"), "calibrations": {}, "laboratory": "site-lab"}
+    done(engineer.post("/v1/studies", study))
+    document = example(documents.BudgetDocument, code="new-one")
+    document["components"][0]["evidence"] = {"study": "of-the-oven", "estimate": "repeatability"}
+    document["components"][0]["level"] = level
+    found = problem(engineer.post("/v1/budgets", document), 422, "invalid-request")
+    assert [(fault["pointer"], fault["detail"]) for fault in found["errors"]] == [
+        ("#/components/0/evidence/study", "of-the-oven does not say on which calibration it was made")
+    ]
 
 
 def test_a_repeated_approval_is_one_act_whatever_the_password(callers: Callers) -> None:
