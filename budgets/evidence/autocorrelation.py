@@ -10,6 +10,9 @@ import numpy as np
 from budgets.errors import EvidenceError
 from budgets.evidence.variograms import Array
 
+# A variance of a mean, over that of a reading, that is a difference of rounding.
+_NOTHING = 1e-12
+
 
 @dataclass(frozen=True)
 class MeanOfReadings:
@@ -51,7 +54,8 @@ def mean_of_readings(values: Array, number: int) -> MeanOfReadings:
     Raises
     ------
     EvidenceError
-        If the correlation does not die out within a quarter of the series.
+        If the correlation does not die out within a quarter of the series, or readings that go against one
+        another leave the mean no variance.
 
     Notes
     -----
@@ -73,6 +77,12 @@ def mean_of_readings(values: Array, number: int) -> MeanOfReadings:
     within = np.arange(1, min(last, number - 1) + 1)
     weights = np.concatenate(([1 / number], 2 * (number - within) / number**2))
     variance = float(weights @ covariances[: len(weights)])
+    if variance <= _NOTHING * float(covariances[0]):
+        raise EvidenceError(
+            f"readings that go against one another leave the mean of {number} no variance that could be "
+            "found from this series: it is no noise but an alternation, whose cause should be found first",
+            where=("options", "readings_averaged"),
+        )
     return MeanOfReadings(
         variance=variance,
         single_variance=float(covariances[0]),

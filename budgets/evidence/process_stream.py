@@ -150,8 +150,10 @@ def _of_held_sample(study: Study, values: Array) -> Evaluation:
 
 def _warnings_of_dependence(found: MeanOfReadings, number: int, n: int) -> tuple[EvaluationWarning, ...]:
     warnings = []
-    independent = n / (2 * math.fsum(found.autocorrelations) - 1)
-    if independent < _TIMES_THE_CORRELATION:
+    # Of readings that go against one another the sum is small or negative: they are worth more than n.
+    length = 2 * math.fsum(found.autocorrelations) - 1
+    if n < _TIMES_THE_CORRELATION * length:
+        independent = n / length
         detail = (
             f"{n} readings that follow one another so long are worth {max(1.0, independent):.0f} independent "
             "ones: the figure is less well known than its interval says; record a longer series"

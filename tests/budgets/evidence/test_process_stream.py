@@ -106,6 +106,20 @@ def test_readings_that_go_against_the_one_before_average_better_than_independent
     assert "promises too much" not in warnings["autocorrelated"]
 
 
+ALTERNATING = np.where(np.arange(400) % 2, 1.0, -1.0)
+WITH_A_WAVE = ALTERNATING + 0.6 * np.cos(1.2 * np.arange(400))
+
+
+@pytest.mark.parametrize(
+    ("x", "number"), [(3 + ALTERNATING, 2), (3 + ALTERNATING, 10), (3 + WITH_A_WAVE, 10)]
+)
+def test_an_alternation_is_no_noise_that_an_average_could_be_credited_with(x, number):
+    with pytest.raises(EvidenceError, match="it is no noise but an alternation") as caught:
+        evaluated(x, {**HELD, "readings_averaged": number})
+    assert caught.value.where == ("options", "readings_averaged")
+    assert "short-for-its-correlation" not in {w.code for w in evaluated(x, HELD).warnings}
+
+
 @pytest.mark.slow
 @pytest.mark.parametrize(
     ("phi", "size", "options", "truth", "least"),

@@ -22,6 +22,9 @@ BUDGETS = ("wmp-moisture-nir", "wmp-moisture-nir-2")
 WISH = {"study": NEW, "reason": "yearly study of repeatability"}
 
 
+BOTH = {"nir-1": "wmp-7", "nir-2": "wmp-8"}
+
+
 def repeatability(code: str, deviation: float, **changes: Any) -> dict[str, Any]:
     draw = random.Random(21)
     rows = [
@@ -29,7 +32,7 @@ def repeatability(code: str, deviation: float, **changes: Any) -> dict[str, Any]
         for sample in range(40)
         for replicate in (1, 2)
     ]
-    return house.repeatability_study(**{"code": code, "rows": rows, "calibrations": {}, **changes})
+    return house.repeatability_study(**{"code": code, "rows": rows, "calibrations": BOTH, **changes})
 
 
 def budget(code: str, analyzer: str, calibration: str, validation: str) -> dict[str, Any]:
