@@ -169,7 +169,7 @@ def critical_range_factor(number: int, level: float, degrees_of_freedom: float =
     Notes
     -----
     Source: ISO 5725-6:1994, 4.1.4, table 1 (from memory): f(n) for a known standard deviation. The value is
-    kept, so that it costs its half millisecond once.
+    kept, so that it costs its millisecond or two once.
 
     Examples
     --------

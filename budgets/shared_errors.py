@@ -127,11 +127,17 @@ class SharedErrors:
         return tuple(_Source.of(named, self.done) for named in self.budgets)
 
     @cached_property
-    def _fixed(self) -> NDArray[np.float64] | None:
-        """The covariance of all quantities, where no part of it is proportional to a value."""
+    def _fixed(self) -> NDArray[np.float64] | CorrelationError | None:
+        """The covariance of all quantities, where no part of it is proportional to a value.
+
+        Or what is not known, which is the same every time as well.
+        """
         if any(source.depends_on_value for source in self._sources):
             return None
-        return self._covariance([dict.fromkeys(source.law.model.read, 1.0) for source in self._sources])
+        try:
+            return self._covariance([dict.fromkeys(source.law.model.read, 1.0) for source in self._sources])
+        except CorrelationError as error:
+            return error
 
     @cached_property
     def _further(self) -> tuple[Said, ...]:
@@ -173,7 +179,11 @@ class SharedErrors:
         places = [
             estimates_for(named.budget, given) for named, given in zip(self.budgets, means, strict=True)
         ]
-        covariance = self._fixed if self._fixed is not None else self._covariance(places)
+        covariance = self._fixed
+        if isinstance(covariance, CorrelationError):
+            raise CorrelationError(covariance.message, where=covariance.where)
+        if covariance is None:
+            covariance = self._covariance(places)
         slopes = np.zeros((len(places), len(covariance)))
         start = 0
         for row, (source, given) in enumerate(zip(self._sources, places, strict=True)):

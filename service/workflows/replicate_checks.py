@@ -66,12 +66,26 @@ def replicates_of(
             continue
         levels = _drawn_anew([scans[index] for index in indices])
         for channel, values in by_channel.items():
-            spread = register.replicate_law(budget, channel, levels).at(at)
+            spread = _spread(register, budget, channel, levels, at)
             if spread is not None:
                 unit = register.characteristics[budget.document.product, channel].unit
                 chosen = tuple(values[index] for index in indices)
                 found.append(Replicates(channel, unit, sample, chosen, spread, most))
     return tuple(found)
+
+
+def _spread(
+    register: Register,
+    budget: BudgetInForce,
+    channel: str,
+    levels: frozenset[str],
+    at: Mapping[str, float],
+) -> ReplicateSpread | None:
+    try:
+        return register.replicate_law(budget, channel, levels).at(at)
+    except BudgetsError:
+        # Nothing separates them at this value, as where all of it is proportional to a value of 0.
+        return None
 
 
 def _drawn_anew(scans: list[Reading]) -> frozenset[str]:

@@ -86,6 +86,8 @@ def test_where_no_budget_holds_both_nothing_is_assumed():
     pair = SharedErrors((direct("moisture"), direct("protein")), COUNTS)
     with pytest.raises(CorrelationError, match=r"moisture and protein go together at the level 'reading'"):
         pair.correlations([{"moisture": 3.0}, {"protein": 25.0}])
+    with pytest.raises(CorrelationError, match="go together"):
+        pair.correlations([{"moisture": 3.1}, {"protein": 25.0}])
 
 
 def test_a_bias_is_shared_by_its_name():

@@ -8,6 +8,7 @@ from typing import Any
 
 import pytest
 
+from budgets.evidence.evaluation import MeanSquare, Term
 from budgets.replicates import critical_range_factor
 from service.documents import Reading, RuleOfDecision
 from service.workflows.calendar import DEFAULT_PLANT
@@ -121,6 +122,18 @@ def test_fillings_of_the_cup_add_what_separates_them() -> None:
     assert critical(a_reading(2.8, 1), a_reading(2.81, 2)) == pytest.approx(factor * 0.06)
     apart = (a_reading(2.8, 1, presentation="a"), a_reading(2.81, 2, presentation="b"))
     assert critical(*apart) == pytest.approx(factor * 0.1)
+
+
+def test_a_spread_that_vanishes_with_the_value_checks_nothing_there() -> None:
+    relative = (Term(1.0, MeanSquare("test/share", 1e-4, math.inf)),)
+    noise = replace(
+        a_component("repeatability", "moisture", "reading", 0.1), terms=(), relative_terms=relative
+    )
+    components = (noise, a_component("bias", "bias", "calibration", 0.05))
+    budget = a_budget_in_force(budget=a_budget(components=components, validated_range=(-1.0, 4.6)))
+    register = a_register(budgets={("whole-milk-powder", "moisture", "nir-1"): budget})
+    answer = judge(register, a_request(a_reading(0.0, 1), a_reading(0.0, 2)), NOW)
+    assert answer["verdicts"][0]["replicates"] is None
 
 
 def test_without_a_component_between_readings_nothing_is_checked() -> None:
