@@ -14,6 +14,7 @@ from budgets.components import Component
 from budgets.errors import ComponentError, LimitsError, ProcedureError
 from budgets.evidence.evaluation import MeanSquare, Term, variance
 from budgets.lot_procedures import Demand, LotProcedure
+from budgets.measurement_errors import COMMON_LEVELS
 
 
 @dataclass(frozen=True)
@@ -171,7 +172,7 @@ class ReferenceDeterminations:
 
     remark: ClassVar[str] = (
         "The reference method's noise is in no reading: this makes only the bias better known, and the "
-        "difference that the remainder is more certain."
+        "remainder, which is what the noise leaves of a scatter, more certain."
     )
 
     component: str
@@ -191,7 +192,8 @@ class ReferenceDeterminations:
         Raises
         ------
         ComponentError
-            If the numbers are not possible, or the noise said to be in the line is more than the line.
+            If the numbers are not possible, the line is drawn anew with every lot, or the noise said to be in
+            it is more than the line.
 
         Notes
         -----
@@ -204,6 +206,12 @@ class ReferenceDeterminations:
                 where=("determinations",),
             )
         line = component_of(measuring.budget, self.component)
+        if line.level not in COMMON_LEVELS:
+            raise ComponentError(
+                f"{self.component} is drawn anew at the level {line.level!r}; the noise of the reference is "
+                "in no reading; name the line of the bias",
+                where=("component",),
+            )
         less = self.standard_deviation**2 * (1 / self.instead_of - 1 / self.determinations) / self.pairs
         own = variance(line.terms)
         if not (math.isfinite(less) and 0 <= less < own):

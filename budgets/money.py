@@ -64,7 +64,9 @@ class Money:
             and not (math.isfinite(getattr(self, name)) and getattr(self, name) >= 0)
         ]
         raise_collected(faults)
-        if self.value_of_one_unit == 0 and not any(getattr(self, name) for name in _COSTS):
+        if self.value_of_one_unit == 0 and not any(
+            getattr(self, name) for name in (*_COSTS, "cost_of_not_released")
+        ):
             raise LimitsError(
                 "all the money is zero: nothing is gained by running closer and nothing lost by a hold, so "
                 "no set point costs less than another",
@@ -121,7 +123,7 @@ def expected_cost(
     distances : ndarray, shape (set points,), unit of the characteristic
         From the mean of the true values to the limit; positive inside.
     todays_distance : float, unit of the characteristic
-        The same at today's set point.
+        The same at today's set point; 0 where that lies beyond the limit.
     side : {1, 0, -1}
         1 when the value lies in running closer to the upper limit, -1 for the lower one, 0 for none.
 

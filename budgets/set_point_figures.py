@@ -160,7 +160,8 @@ class Production:
         """Return the expected cost of a lot; None without money."""
         if self.money is None:
             return None
-        today = float(self.distance(self.todays_centre))
+        # What is not released has no value from lying beyond the limit, where a process may run today.
+        today = max(0.0, float(self.distance(self.todays_centre)))
         return expected_cost(self.money, outcomes, self.distance(centres), today, self.side)
 
     def figures(self, centres: ArrayLike) -> tuple[SetPointFigures, ...]:

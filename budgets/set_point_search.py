@@ -86,11 +86,11 @@ class SetPointSearch:
         """Return the end that lies towards the limit; None where no limit is run towards."""
         return {1: highest, -1: lowest, 0: None}[self._production.side]
 
-    def best_centre(self) -> float:
-        """Return the set point of the highest release rate."""
+    def best_centre(self, lowest: float, highest: float) -> float:
+        """Return the set point of the highest release rate among those that keep what is wanted."""
         return _minimum(
             lambda centres: -self._production.outcomes(centres).release_rate,
-            np.linspace(*self.ends, _GRID),
+            np.linspace(lowest, highest, _GRID),
         )
 
     def cheapest(self) -> float | None:
@@ -187,7 +187,7 @@ class SetPointSearch:
     def _refusal(self, best: float) -> LimitsError:
         figures = self._production.figures([best])[0]
         wanted = self._wanted
-        wishes = [f"a release rate of {wanted.release_rate:.4g}"] if wanted.release_rate > _ANY_RATE else []
+        wishes = [f"a release rate of {wanted.release_rate:.12g}"] if wanted.release_rate > _ANY_RATE else []
         if wanted.largest_risk is not None:
             wishes.append(f"at most {wanted.largest_risk:.3g} of the released lots nonconforming")
         own = math.sqrt(self._production.lots.covariance[0, 0])

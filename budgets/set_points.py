@@ -33,7 +33,7 @@ class SetPoints:
         ``acceptance_limit``, ``validated_range`` or ``largest_risk`` where money would pull further.
     today : SetPointFigures
     best_centre : SetPointFigures or None
-        Of the highest release rate, for two limits; else None.
+        Of the highest release rate among those that keep what is wanted, for two limits; else None.
     without_drift : float or None, unit of the characteristic
         The nearest set point of a process without drift; None without drift, or without a limit to run
         towards.
@@ -96,7 +96,7 @@ def set_points(production: Production, wanted: Wanted) -> SetPoints:
         cheapest=cheapest,
         cheapest_bound_by=None if cheapest is None else search.bound_of(cheapest, None),
         today=today,
-        best_centre=production.figures_at(search.best_centre()) if both else None,
+        best_centre=production.figures_at(search.best_centre(lowest, highest)) if both else None,
         without_drift=_without_drift(production, wanted),
         gain_of_nearest=gain_per_year(production, nearest, today),
         gain_of_cheapest=gain_per_year(production, cheapest, today),

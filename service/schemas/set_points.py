@@ -20,6 +20,8 @@ from service.documents import (
 from service.schemas.base import StrictSchema, Wrong
 from service.schemas.fields import Choice, Code, Count, Day, Flag, Number, Part, Parts, Text
 
+# Larger figures are no plant's: their squares and products would no longer be numbers.
+LARGEST = 1e12
 # Which members each source of the variation needs, and which it may have beside them.
 _STEERED = ("true_standard_deviation",)
 VARIATIONS: Mapping[str, tuple[tuple[str, ...], tuple[str, ...]]] = {
@@ -58,6 +60,17 @@ def _members_of(table: Mapping[str, Any], chosen: str, data: Mapping[str, Any]) 
     return wrongs
 
 
+def _numbers_of(data: Mapping[str, Any]) -> dict[str, list[Wrong]]:
+    """Find an option that changes nothing, and a component of two figures after the change."""
+    names = OPTIONS["procedure"][1] if data["kind"] == "procedure" else ("standard_uncertainty", "factor")
+    given = [name for name in names if data[name] is not None]
+    if data["kind"] == "procedure" and not given:
+        return {names[0]: [Wrong("nothing is changed", f"one of {', '.join(names)}")]}
+    if data["kind"] == "component" and len(given) != 1:
+        return {names[0]: [Wrong(f"got {len(given)} figures", f"one of {' and '.join(names)}")]}
+    return {}
+
+
 class StatedVariationSchema(StrictSchema):
     """How the lots vary about the set point."""
 
@@ -74,17 +87,37 @@ class StatedVariationSchema(StrictSchema):
     study = Code(allow_none=True, load_default=None)
     first_day = Day(allow_none=True, load_default=None, about="Of the readings of the record.")
     last_day = Day(allow_none=True, load_default=None)
-    mean = Number(allow_none=True, load_default=None, about="Of the readings: today's set point.")
-    lot_to_lot = Number(
-        least=0, allow_none=True, load_default=None, about="Standard deviation of true means of lots."
+    mean = Number(
+        least=-LARGEST,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Of the readings: today's set point.",
     )
-    drift = Number(least=0, allow_none=True, load_default=None, about="Standard deviation of periods.")
-    within_lot = Number(least=0, allow_none=True, load_default=None)
+    lot_to_lot = Number(
+        least=0,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Standard deviation of true means of lots.",
+    )
+    drift = Number(
+        least=0, most=LARGEST, allow_none=True, load_default=None, about="Standard deviation of periods."
+    )
+    within_lot = Number(least=0, most=LARGEST, allow_none=True, load_default=None)
     true_standard_deviation = Number(
-        above=0, allow_none=True, load_default=None, about="Of a steered process: from reference values."
+        above=0,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Of a steered process: from reference values.",
     )
     reading_standard_deviation = Number(
-        above=0, allow_none=True, load_default=None, about="Of a steered process: of its first readings."
+        above=0,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Of a steered process: of its first readings.",
     )
 
     @validates_schema(skip_on_field_errors=True)
@@ -128,17 +161,26 @@ class StatedMoneySchema(StrictSchema):
 
     loads_to = StatedMoney
     currency = Text(10, required=True)
-    lot_size = Number(above=0, required=True)
+    lot_size = Number(above=0, most=LARGEST, required=True)
     quantity_unit = Text(32, required=True, about="Of the lot size, as t.")
-    lots_per_year = Number(above=0, required=True)
+    lots_per_year = Number(above=0, most=LARGEST, required=True)
     value_of_one_unit = Number(
-        least=0, required=True, about="Of one unit of quantity, for one unit of the characteristic closer."
+        least=0,
+        most=LARGEST,
+        required=True,
+        about="Of one unit of quantity, for one unit of the characteristic closer.",
     )
-    cost_of_hold = Number(least=0, required=True, about="Of each lot held at its first look.")
-    cost_of_retest = Number(least=0, required=True, about="Of each further look.")
-    cost_of_nonconforming = Number(least=0, required=True, about="Of each such lot that was released.")
+    cost_of_hold = Number(least=0, most=LARGEST, required=True, about="Of each lot held at its first look.")
+    cost_of_retest = Number(least=0, most=LARGEST, required=True, about="Of each further look.")
+    cost_of_nonconforming = Number(
+        least=0, most=LARGEST, required=True, about="Of each such lot that was released."
+    )
     cost_of_not_released = Number(
-        least=0, allow_none=True, load_default=None, about="Of each lot not released in the end; as a hold."
+        least=0,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Of each lot not released in the end; as a hold.",
     )
 
 
@@ -168,7 +210,11 @@ class SetPointRequestSchema(StrictSchema):
     money = Part(StatedMoneySchema, allow_none=True, load_default=None)
     towards = Choice("upper", "lower", allow_none=True, load_default=None, about="The limit to run towards.")
     wanted_set_point = Number(
-        allow_none=True, load_default=None, about="Which uncertainty would this set point need?"
+        least=-LARGEST,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Which uncertainty would this set point need?",
     )
 
 
@@ -178,20 +224,26 @@ class ImprovementOptionSchema(StrictSchema):
     loads_to = ImprovementOption
     code = Code(required=True)
     kind = Choice(*OPTIONS, required=True)
-    cost_per_lot = Number(least=0, load_default=0.0)
-    cost_per_year = Number(least=0, load_default=0.0)
+    cost_per_lot = Number(least=0, most=LARGEST, load_default=0.0)
+    cost_per_year = Number(least=0, most=LARGEST, load_default=0.0)
     samples = Count(least=1, most=50, allow_none=True, load_default=None)
     readings_per_sample = Count(least=1, most=50, allow_none=True, load_default=None)
     increments_per_sample = Count(least=1, most=50, allow_none=True, load_default=None)
     looks = Count(least=1, most=10, allow_none=True, load_default=None)
     component = Code(allow_none=True, load_default=None, about="A line of the budget.")
     standard_uncertainty = Number(
-        above=0, allow_none=True, load_default=None, about="Of one draw, after the change."
+        above=0, most=LARGEST, allow_none=True, load_default=None, about="Of one draw, after the change."
     )
-    factor = Number(above=0, allow_none=True, load_default=None, about="On the standard uncertainty.")
-    degrees_of_freedom = Number(above=0, allow_none=True, load_default=None)
+    factor = Number(
+        above=0, most=LARGEST, allow_none=True, load_default=None, about="On the standard uncertainty."
+    )
+    degrees_of_freedom = Number(above=0, most=LARGEST, allow_none=True, load_default=None)
     standard_deviation = Number(
-        above=0, allow_none=True, load_default=None, about="Of single determinations by the reference."
+        above=0,
+        most=LARGEST,
+        allow_none=True,
+        load_default=None,
+        about="Of single determinations by the reference.",
     )
     determinations = Count(least=1, most=50, allow_none=True, load_default=None, about="For each pair.")
     instead_of = Count(least=1, most=50, allow_none=True, load_default=None)
@@ -201,7 +253,7 @@ class ImprovementOptionSchema(StrictSchema):
 
     @validates_schema(skip_on_field_errors=True)
     def _members(self, data: dict[str, Any], **_: Any) -> None:
-        wrongs = _members_of(OPTIONS, data["kind"], data)
+        wrongs = _members_of(OPTIONS, data["kind"], data) or _numbers_of(data)
         if wrongs:
             raise ValidationError(dict(wrongs))
 

@@ -13,6 +13,7 @@ from budgets.changed_measurements import (
     ChangedLooks,
     CorrectedBias,
     ReferenceDeterminations,
+    component_of,
 )
 from budgets.errors import LimitsError
 from budgets.improvements import Improvement, Improvements, Option, Situation, improvements
@@ -105,9 +106,10 @@ def _change(unit_of_work: UnitOfWork, question: Question, stated: ImprovementOpt
     """Turn an option into a change; its members are there by the schema."""
     members: dict[str, Any] = asdict(stated)
     factor = question.convert.factor
+    if stated.component is not None:
+        line = component_of(question.budget.budget, stated.component)
     if stated.kind == "component":
-        known = question.budget.budget.components
-        relative = any(line.code == stated.component and line.relative_terms for line in known)
+        relative = bool(line.relative_terms)
         u = stated.standard_uncertainty
         return ChangedComponent(
             members["component"],
@@ -173,6 +175,8 @@ def _statement(question: Question, found: Improvements) -> str:
     money, unit = question.request.money, question.characteristic.unit
     assert money is not None  # a situation has money
     best = found.best
+    if not found.ranked:
+        return "None of the options can be had; see why under impossible."
     if best is None:
         return (
             "Nothing pays: none of the options, alone or in pairs, brings in a year what it costs. The "

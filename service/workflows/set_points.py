@@ -225,9 +225,11 @@ def _statement(question: Question, found: SetPoints) -> str:
 
 
 def _share(figures: SetPointFigures) -> str:
+    if figures.release_rate == 0:
+        return "no lot released"
     risk = 100 * figures.conditional_global_consumers_risk
     # Nothing below 0.01 % is shown; the figures keep their digits.
-    nonconforming = "less than 0.01 %" if risk < 0.01 else f"{risk:.2g} %"
+    nonconforming = "less than 0.01 %" if risk < 0.01 else f"{risk:.{2 if risk < 10 else 3}g} %"
     return f"{100 * figures.release_rate:.1f} % of lots released, {nonconforming} of them nonconforming"
 
 

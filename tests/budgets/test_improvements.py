@@ -234,6 +234,11 @@ def test_more_determinations_take_their_part_out_of_the_bias(situation):
         (ChangedComponent("bias", 0.1, 0.5), ComponentError, "one of the two"),
         (ChangedComponent("bias", factor=0.0), ComponentError, "above 0"),
         (CorrectedBias(), ComponentError, "no bias that is left"),
+        (
+            ReferenceDeterminations("remainder", 0.04, 2, 1, 60),
+            ComponentError,
+            "in no reading; name the line",
+        ),
         (ReferenceDeterminations("bias", 0.05, 1, 2, 60), ComponentError, "are an improvement"),
         (ReferenceDeterminations("bias", 0.5, 2, 1, 60), ComponentError, "account for more"),
     ],

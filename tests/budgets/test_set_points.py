@@ -134,6 +134,27 @@ def test_two_limits_have_a_best_centre(production):
         nearest_set_point(production((TWO_LIMITS,), money=None), Wanted(0.8))
 
 
+def test_the_best_centre_keeps_what_is_wanted(production):
+    low = Demand("legal", Tolerance(2.6, None), replace(RISK, largest_risk=0.001), legal=True)
+    two = production((low, Demand("plain", Tolerance(None, 3.2), SIMPLE)), money=None)
+    free, bound = (set_points(two, Wanted(0.5, risk)) for risk in (None, 0.002))
+    # Most lots are released where too many of them do not conform: the risk decides.
+    assert free.best_centre.conditional_global_consumers_risk > 0.004
+    assert bound.best_centre.set_point == pytest.approx(bound.highest, abs=1e-9)
+    assert bound.best_centre.conditional_global_consumers_risk == pytest.approx(0.002, rel=1e-4)
+
+
+def test_a_process_beyond_the_limit_is_counted_as_one_at_it(production):
+    # What is not released would else be worth more than the lots that are.
+    at, beyond = (
+        set_points(production(process=ProcessVariation(mean, 0.08)), WANTED) for mean in (3.2 + 0.03, 9.0)
+    )
+    assert at.today.true_mean == pytest.approx(3.2, abs=1e-9)
+    assert beyond.cheapest.set_point == pytest.approx(at.cheapest.set_point, abs=1e-6)
+    assert beyond.cheapest.cost == pytest.approx(at.cheapest.cost, rel=1e-9)
+    assert beyond.gain_of_cheapest > 0
+
+
 def test_the_lower_limit_is_the_mirror_of_the_upper_one(production):
     upper = set_points(production((CUSTOMER,), bias=0.0), WANTED)
     mirrored = Demand("mirror", Tolerance(-3.2, None), RISK)
@@ -499,6 +520,7 @@ def test_money_beyond_the_law_is_refused(production):
                 "cost_of_hold": 0.0,
                 "cost_of_retest": 0.0,
                 "cost_of_nonconforming": 0.0,
+                "cost_of_not_released": 0.0,
             },
             "all the money is zero",
         ),
@@ -510,6 +532,10 @@ def test_money_beyond_the_law_is_refused(production):
 def test_money_that_weighs_nothing_is_refused(changes, words):
     with pytest.raises(LimitsError, match=words):
         replace(MONEY, **changes)
+
+
+def test_what_is_not_released_may_be_all_that_costs():
+    assert Money(25.0, 2000.0, 0.0, 0.0, 0.0, 0.0, 400.0).not_released == 400.0
 
 
 def test_a_lot_that_is_not_released_costs_a_hold_where_nothing_is_said():

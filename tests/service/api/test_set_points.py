@@ -328,6 +328,9 @@ def test_a_period_without_lots_and_a_question_without_money_are_refused(callers:
         ({"process_variation": variation(lot_to_lot=0.9)}, "#/wanted/release_rate", "no set point keeps"),
         ({"wanted_set_point": 3.3}, "#/wanted_set_point", "even an exact measurement"),
         ({"towards": "lower"}, "#/towards", "no lower tolerance limit"),
+        ({"process_variation": variation(mean=1e300)}, "#/process_variation/mean", "1e+300"),
+        ({"process_variation": variation(lot_to_lot=1e200)}, "#/process_variation/lot_to_lot", "1e+200"),
+        ({"money": {**asked()["money"], "lot_size": 1e300}}, "#/money/lot_size", "1e+300"),
         ({"unit": "kg"}, "#/unit", "got 'kg'"),
         ({"characteristic": "taste"}, "#/characteristic", "got 'taste'"),
         ({"specifications": ["customer-z"]}, "#/specifications/0", "'customer-z'"),
@@ -370,7 +373,14 @@ def test_each_source_of_the_variation_has_its_members(
 
 def test_money_that_weighs_nothing_is_refused(callers: Callers) -> None:
     nothing = dict.fromkeys(
-        ("value_of_one_unit", "cost_of_hold", "cost_of_retest", "cost_of_nonconforming"), 0.0
+        (
+            "value_of_one_unit",
+            "cost_of_hold",
+            "cost_of_retest",
+            "cost_of_nonconforming",
+            "cost_of_not_released",
+        ),
+        0.0,
     )
     found = faults(callers["engineer"].post(SET_POINTS, asked(money={**asked()["money"], **nothing})))
     assert "all the money is zero" in found["#/money/value_of_one_unit"]
@@ -506,6 +516,19 @@ def test_nothing_pays_is_an_answer(callers: Callers) -> None:
     assert found["statement"].startswith("Nothing pays")
 
 
+def test_what_cannot_be_had_is_no_matter_of_what_pays(callers: Callers) -> None:
+    found = compared(callers, {"code": "correct", "kind": "corrected_bias"})
+    assert found["ranked"] == [] and found["best"] is None
+    assert found["statement"] == "None of the options can be had; see why under impossible."
+
+
+def test_a_process_that_releases_nothing_today_is_told_so(callers: Callers) -> None:
+    body = asked(process_variation=variation(mean=9.0))
+    found = done(callers["engineer"].post(SET_POINTS, body), 200)
+    assert found["statement"].startswith("Today the readings average 9.00 %: no lot released.")
+    assert found["cheapest"]["gain_per_year"] > 0
+
+
 def test_a_component_in_another_unit_is_the_same(callers: Callers) -> None:
     option = {"code": "trueness", "kind": "component", "component": "reference-trueness"}
     one = compared(callers, {**option, "standard_uncertainty": 0.02})
@@ -528,6 +551,20 @@ def test_a_component_in_another_unit_is_the_same(callers: Callers) -> None:
         ({"code": "x", "kind": "budget", "budget": "nobody"}, "#/options/0/version"),
         ({"code": "x", "kind": "procedure", "samples": 2, "factor": 0.5}, "#/options/0/factor"),
         ({"code": "x", "kind": "magic"}, "#/options/0/kind"),
+        ({"code": "x", "kind": "procedure"}, "#/options/0/samples"),
+        ({"code": "x", "kind": "component", "component": "bias"}, "#/options/0/standard_uncertainty"),
+        (
+            {
+                "code": "x",
+                "kind": "component",
+                "component": "bias",
+                "factor": 0.5,
+                "standard_uncertainty": 0.1,
+            },
+            "#/options/0/standard_uncertainty",
+        ),
+        ({"code": "x", "kind": "component", "component": "magic", "factor": 0.5}, "#/options/0/component"),
+        ({"code": "x", "kind": "corrected_bias", "cost_per_lot": 1e308}, "#/options/0/cost_per_lot"),
         ({"code": "x", "kind": "corrected_bias", "cost_per_lot": -1.0}, "#/options/0/cost_per_lot"),
     ],
 )
