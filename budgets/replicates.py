@@ -168,8 +168,8 @@ def critical_range_factor(number: int, level: float, degrees_of_freedom: float =
 
     Notes
     -----
-    Source: ISO 5725-6:1994, 4.1.4, table 1 (from memory): f(n) for a known standard deviation. The value is
-    kept, so that it costs its millisecond or two once.
+    Source: ISO 5725-6:1994, 4.1.4, table 1 (from memory): f(n) for a known standard deviation, printed
+    with one decimal. The value is kept, so that it costs its millisecond or two once.
 
     Examples
     --------

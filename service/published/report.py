@@ -26,6 +26,7 @@ RUNNERS: Mapping[str, Mapping[str, Runner]] = {
     "ilac_g8": run_decisions.ILAC_G8,
     "z540_3": run_risks.Z540_3,
     "iso_5725_2": run_precision.ISO_5725_2,
+    "iso_5725_6": run_precision.ISO_5725_6,
     "iso_7870_2": run_precision.ISO_7870_2,
     "nist_tn_1297": run_examples.NIST_TN_1297,
     "nist_tn_1900": run_examples.NIST_TN_1900,

@@ -9,6 +9,7 @@ from budgets.control_charts import chart_factors
 from budgets.evidence.screening import cochran_critical_value, grubbs_critical_value
 from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.evidence.sums import standard_deviation_factors
+from budgets.replicates import critical_range_factor
 from service.published.cases import Runner
 from service.published.run_lines import outlying_values
 
@@ -103,11 +104,17 @@ def _lettuce(i: Inputs) -> dict[str, Any]:
     }
 
 
+def _critical_range_factors(i: Mapping[str, Any]) -> dict[str, Any]:
+    return {"f": [critical_range_factor(number, i["level"]) for number in i["results"]]}
+
+
 ISO_5725_2: dict[str, Runner] = {
     "iso5725-2-coal": _sulfur,
     "iso5725-2-grubbs": _grubbs,
     "cochran-95": _cochran,
 }
+ISO_5725_6: dict[str, Runner] = {"iso5725-6-critical-range-factors": _critical_range_factors}
+
 ISO_7870_2: dict[str, Runner] = {"chart-constants": _chart_factors, "chart-A3": _mean_factors}
 NIST_HANDBOOK: dict[str, Runner] = {"nist-gear": _gear, "rosner-esd": outlying_values}
 NBS_HANDBOOK_91: dict[str, Runner] = {"chi2-factors": _confidence_factors}

@@ -25,8 +25,9 @@ from tests.budgets.scans import MEANS, NOISE, a_scan_budget, joint_line
 READING = ("reading",)
 
 
-# ISO 5725-6:1994, 4.1.4, table 1, critical range factors f(n) at 95 % (from memory).
-ISO_5725_6 = {2: 2.77, 3: 3.31, 4: 3.63, 5: 3.86, 6: 4.03, 7: 4.17, 8: 4.29}
+# The range of normal values at 95 % (Pearson and Hartley, from memory); ISO 5725-6:1994, 4.1.4, table 1,
+# prints one decimal of it, and is among the published cases.
+RANGE_AT_95 = {2: 2.77, 3: 3.31, 4: 3.63, 5: 3.86, 6: 4.03, 7: 4.17, 8: 4.29}
 # Rule 42 of the project's mathematics, simulated there; at 15 degrees of freedom as in tables of the
 # studentised range (Pearson and Hartley, from memory).
 AT_99 = {2: 3.64, 3: 4.12, 4: 4.40}
@@ -37,7 +38,7 @@ AT_99_WITH_15 = {2: 4.17, 3: 4.84, 4: 5.25}
 @pytest.mark.parametrize(
     ("table", "level", "nu"),
     [
-        (ISO_5725_6, 0.95, math.inf),
+        (RANGE_AT_95, 0.95, math.inf),
         (AT_99, 0.99, math.inf),
         (AT_95_WITH_15, 0.95, 15.0),
         (AT_99_WITH_15, 0.99, 15.0),
