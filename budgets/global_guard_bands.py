@@ -112,8 +112,8 @@ def _refuse(
     share = nonconforming_share(prior, errors, tolerance)
     raise LimitsError(
         f"a global consumer's risk of {wanted:g} is out of reach: the guard band of {band:.4g} that holds "
-        f"it releases less than {LEAST_RELEASE_RATE:.0%} of the lots; by the prior (mean {prior.mean:.6g}, "
-        f"standard deviation {prior.standard_deviation:.4g}) {share:.1%} of all lots do not conform. Move "
-        "the process, or agree on other limits",
+        f"it releases less than {100 * LEAST_RELEASE_RATE:g} % of the lots; by the prior (mean "
+        f"{prior.mean:.6g}, standard deviation {prior.standard_deviation:.4g}) {100 * share:.1f} % of all "
+        "lots do not conform. Move the process, or agree on other limits",
         where=("largest_risk",),
     )

@@ -83,8 +83,8 @@ def without_averaging_noise(estimate: float) -> float:
     Returns
     -------
     float
-        A mean of decimals is off by a last digit or two: 9.6/3 is 3.1999999999999997. At a tie that would
-        round it the wrong way.
+        A mean of decimals is off by a last digit or two: 9.6/3 is 3.1999999999999997. That would round a tie
+        the wrong way, and put an estimate that lies at a strict limit inside of it.
 
     Examples
     --------

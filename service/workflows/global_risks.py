@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from typing import Any, Final
 
 import numpy as np
@@ -37,6 +37,7 @@ CAUTION: Final = (
     "They replace no verdict on a lot; local regulations and the plant's authorised person decide."
 )
 _POINTS: Final = 41
+_RECORD: Final = "#/prior/record"
 # A guard band of more standard uncertainties than that lets next to nothing nonconforming pass.
 _WIDEST: Final = 4.0
 
@@ -82,13 +83,11 @@ def ask(services: Services, actor: Actor, request: GlobalRisksRequest) -> Answer
     bands = _bands(subject, request, factor.factor)
     run = services.helper.run
     lower, upper = subject.rule.lower_acceptance_limit, subject.rule.upper_acceptance_limit
-    curve = collector.attempt("#/guard_bands", run, global_risks, prior, errors, tolerance, bands)
+    curve = collector.attempt("#", run, global_risks, prior, errors, tolerance, bands)
     now = collector.attempt("#", run, risks_of_acceptance, prior, errors, tolerance, lower, upper)
     wanted = None
     if request.largest_risk is not None:
-        found = collector.attempt(
-            "#/largest_risk", run, global_guard_band, prior, errors, tolerance, request.largest_risk
-        )
+        found = collector.attempt("#", run, global_guard_band, prior, errors, tolerance, request.largest_risk)
         wanted = None if found is None else {"largest_risk": request.largest_risk, **asdict(found)}
     collector.finish("The question cannot be answered.")
     assert curve is not None and now is not None
@@ -117,7 +116,9 @@ def _subject(services: Services, unit_of_work: UnitOfWork, request: GlobalRisksR
         counts = Counts((request.procedure.readings_per_sample,) * request.procedure.samples)
     collector = FaultCollector()
     rule = collector.attempt("#/procedure", register.rule, specification, requirement, budget, counts)
-    prior = collector.attempt("#/prior", _prior, services, unit_of_work, request, characteristic, budget)
+    # Whatever it is, it is wrong with how the lot is to be read.
+    collector.faults = [replace(fault, pointer="#/procedure") for fault in collector.faults]
+    prior = collector.attempt("#", _prior, services, unit_of_work, request, characteristic, budget)
     collector.finish("The question cannot be answered.")
     assert isinstance(rule, ReleaseRule) and prior is not None
     errors = collector.attempt("#", measurement_errors, budget.budget, counts, rule.tolerance)
@@ -169,7 +170,16 @@ def _prior(
         return resolve_prior(
             unit_of_work, asked, characteristic, budget.document, budget.budget, pointer="#/prior"
         )
-    return _recorded(services, unit_of_work, request, asked.record, budget)
+    collector = FaultCollector()
+    found = collector.attempt(_RECORD, _recorded, services, unit_of_work, request, asked.record, budget)
+    # What is wrong with the readings of the record is no member of the request.
+    steering = f"{_RECORD}/steered_by_this_analyzer"
+    collector.faults = [
+        fault if fault.pointer == steering else replace(fault, pointer=_RECORD) for fault in collector.faults
+    ]
+    collector.finish("The question cannot be answered.")
+    assert found is not None
+    return found
 
 
 def _recorded(

@@ -195,9 +195,7 @@ def _weigh(
     repeated = judge_replicates(measured.replicates, level)
     lapsed = lapsed_prior(register, specification, requirement.characteristic, recorded_at)
     holds = (*measured.holds, *repeated.holds, *unusable, *lapsed)
-    estimate = measured.estimate
-    if estimate is not None and requirement.comparison == "rounded":
-        estimate = without_averaging_noise(estimate)
+    estimate = None if measured.estimate is None else without_averaging_noise(measured.estimate)
     judgement = None
     if rule is not None and estimate is not None and not holds:
         judgement = rule.judge(estimate)

@@ -65,8 +65,10 @@ def resolve_prior(
             )
     collector.finish("The production prior belongs to other readings.")
     estimate = collector.attempt(
-        f"{pointer}/study", prior_of_study, evaluation, budget, distribution=stated.distribution
+        pointer, prior_of_study, evaluation, budget, distribution=stated.distribution
     )
+    # Whatever it is, it is wrong with the study.
+    collector.faults = [replace(fault, pointer=f"{pointer}/study") for fault in collector.faults]
     collector.finish("The production prior cannot be used.")
     assert estimate is not None
     return ResolvedPrior(estimate.prior, estimate)

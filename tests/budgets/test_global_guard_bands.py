@@ -82,7 +82,7 @@ def test_a_risk_out_of_reach_says_so(prior, tolerance, risk):
     with pytest.raises(LimitsError, match=r"out of reach.*of all lots do not conform") as error:
         global_guard_band(prior, ERRORS, tolerance, risk)
     assert error.value.where == ("largest_risk",)
-    assert f"{LEAST_RELEASE_RATE:.0%}" in str(error.value)
+    assert f"less than {100 * LEAST_RELEASE_RATE:g} % of the lots" in str(error.value)
 
 
 @pytest.mark.parametrize("risk", [0.0, 0.5, -1.0, math.nan])

@@ -256,3 +256,20 @@ def test_a_tie_is_that_of_the_decimals_that_were_read() -> None:
         readings = (a_reading(value + step, second) for second, step in ((1, -0.1), (2, 0.0), (3, 0.1)))
         found = judge(register, a_request(*readings), NOW)["verdicts"][0]
         assert (found["estimate"], found["outcome"]) == (value, outcome)
+
+
+def test_an_estimate_at_a_strict_limit_is_not_within_it() -> None:
+    """Readings of 3.1, 3.2 and 3.3 have the mean 3.2; in binary numbers it is 3.1999999999999997."""
+    budget = a_budget(bias=0.0, procedure=Procedure(Count(1, 1, 2), Count(2, 3, 4)))
+    rule = RuleOfDecision("simple", largest_standard_uncertainty=1.0)
+    for inclusive, outcome in ((True, "release"), (False, "reject")):
+        requirement = a_requirement(
+            decision_rule=rule, upper_tolerance_limit=ToleranceLimit(3.2, "%", inclusive)
+        )
+        register = a_register(
+            specifications={"customer-b": a_specification("customer-b", requirement)},
+            budgets={("whole-milk-powder", "moisture", "nir-1"): a_budget_in_force(budget=budget)},
+        )
+        readings = (a_reading(value, second) for second, value in enumerate((3.1, 3.2, 3.3), 1))
+        found = judge(register, a_request(*readings), NOW)["verdicts"][0]
+        assert (found["estimate"], found["outcome"]) == (3.2, outcome)
