@@ -44,8 +44,8 @@ from budgets.evidence.remainder import (
 from budgets.evidence.repeatability import finding_warnings
 from budgets.evidence.screening import grubbs_findings
 from budgets.evidence.study_tables import Layout, NamedSource, Study
-from budgets.evidence.sums import mean, standard_deviation_interval, sum_of_squares
-from budgets.evidence.validation_pairs import BULK, UNCERTAINTIES, Pair, validation_pairs
+from budgets.evidence.sums import is_rounding, mean, standard_deviation_interval, sum_of_squares
+from budgets.evidence.validation_pairs import BULK, UNCERTAINTIES, Pair, validation_pairs, values_of
 
 __all__ = ["LAYOUT", "OPTIONS", "NamedSource", "evaluate"]
 
@@ -96,7 +96,7 @@ def evaluate(study: Study) -> Evaluation:
         f"{study.code}/standard_error_of_prediction", sum_of_squares(differences) / (n - 1), n - 1
     )
     # A scatter so small that its square over n vanishes is none.
-    if square.value / n**2 == 0:
+    if square.value / n**2 == 0 or is_rounding(square.value, values_of(pairs)):
         raise EvidenceError("all pairs differ by the same amount: they show no scatter", where=("rows",))
     sources = checked_sources(study.named_sources, pairs, study.code)
     one_run = len({pair.run for pair in pairs}) == 1 and pairs[0].run is not None

@@ -15,8 +15,8 @@ from budgets.evidence.bias import BiasTest, bias_warnings
 from budgets.evidence.censored_normal import CensoredNormal, censored_normal
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning, Interval, MeanSquare, Term
 from budgets.evidence.study_tables import BelowLimit, Study
-from budgets.evidence.sums import CONFIDENCE, standard_deviation_interval, sum_of_squares
-from budgets.evidence.validation_pairs import BULK, Pair
+from budgets.evidence.sums import CONFIDENCE, is_rounding, standard_deviation_interval, sum_of_squares
+from budgets.evidence.validation_pairs import BULK, Pair, values_of
 from budgets.propagation import coverage_factor
 
 _LEAST_KNOWN = 10
@@ -71,7 +71,8 @@ def evaluate_with_limits(study: Study, pairs: Sequence[Pair]) -> Evaluation:
             f"{_LEAST_KNOWN} and half of them must be known",
             where=("rows",),
         )
-    if sum_of_squares(differences) < _LEAST_SQUARES:
+    squares = sum_of_squares(differences)
+    if squares < _LEAST_SQUARES or is_rounding(squares / len(known), values_of(known)):
         raise EvidenceError("all pairs differ by the same amount: they show no scatter", where=("rows",))
     fit = censored_normal(differences, below, above)
     square = MeanSquare(f"{study.code}/standard_error_of_prediction", fit.variance, fit.degrees_of_freedom)

@@ -18,7 +18,7 @@ from budgets.evidence.repeatability import (
 )
 from budgets.evidence.screening import cochran_findings
 from budgets.evidence.study_tables import Layout, Study
-from budgets.evidence.sums import grouped, mean, sum_of_squares
+from budgets.evidence.sums import grouped, is_rounding, mean, sum_of_squares
 from budgets.levels import levels_from
 
 LAYOUT = Layout(required=("sample", "result"), optional=("determination",), numbers=("result",))
@@ -65,7 +65,7 @@ def evaluate(study: Study) -> Evaluation:
         freedom = sum(len(values) - 1 for values in groups.values())
         square = math.fsum(sum_of_squares(values) for values in groups.values()) / freedom
         diagnostics, warnings = {}, ()
-    if square == 0:
+    if is_rounding(square, study.full("result")):
         raise EvidenceError(
             "the determinations of every sample agree exactly: they show no scatter", where=("rows",)
         )

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Sequence
+import sys
+from collections.abc import Hashable, Iterable, Sequence
 from typing import TypeVar
 
 from scipy.special import chdtri, fdtri
@@ -35,6 +36,33 @@ def sum_of_squares(values: Sequence[float]) -> float:
     shifted = [value - first for value in values]
     centre = math.fsum(shifted) / len(shifted)
     return math.fsum((value - centre) ** 2 for value in shifted)
+
+
+def is_rounding(square: float, values: Iterable[float]) -> bool:
+    """Say whether a scatter of differences is no more than what binary numbers leave of decimal ones.
+
+    Parameters
+    ----------
+    square : float, unit squared
+        Variance of differences of the values.
+    values : iterable of float, not empty
+        What was subtracted.
+
+    Returns
+    -------
+    bool
+
+    Notes
+    -----
+    3.1 - 3.0 and 3.2 - 3.1 differ by 2e-16, and are the same: a value is off by half a unit of its last place
+    at most, a difference by as much of either and of its own.
+
+    Examples
+    --------
+    >>> is_rounding(sum_of_squares([3.1 - 3.0, 3.2 - 3.1]), [3.0, 3.1, 3.2])
+    True
+    """
+    return math.sqrt(square) <= 2 * sys.float_info.epsilon * max(map(abs, values))
 
 
 def f_quantile(tail: float, first: float, second: float) -> float:

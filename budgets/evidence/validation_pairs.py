@@ -55,6 +55,11 @@ class Pair:
         return self.reading - self.reference
 
 
+def values_of(pairs: Sequence[Pair]) -> list[float]:
+    """Return all readings and reference values."""
+    return [value for pair in pairs for value in (*pair.readings, *pair.references)]
+
+
 def validation_pairs(study: Study) -> tuple[Pair, ...]:
     """Return the pairs of a study in long form, several rows of one pair being replicates.
 

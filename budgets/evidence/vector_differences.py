@@ -13,7 +13,7 @@ from budgets.evidence.bias import FEW_CLUSTERS, alike
 from budgets.evidence.evaluation import Estimate, Evaluation, EvaluationWarning
 from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix, covariance_of
 from budgets.evidence.study_tables import Study
-from budgets.evidence.sums import grouped
+from budgets.evidence.sums import grouped, is_rounding
 from budgets.evidence.validation_pairs import BULK
 from budgets.evidence.vector_remainder import remainder
 from budgets.evidence.vectors import (
@@ -78,6 +78,7 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
     n = len(values)
     scatter = centred(values)
     matrix = scatter_matrix(f"{study.code}/prediction_covariance", quantities, scatter.T @ scatter, n - 1)
+    _check_scatter(study, matrix)
     whole = joint_estimate(
         "prediction_covariance",
         [MatrixTerm(1.0, matrix)],
@@ -109,6 +110,18 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
             *_warnings_of_remainder(left),
         ),
     )
+
+
+def _check_scatter(study: Study, matrix: MeanSquareMatrix) -> None:
+    """Refuse a quantity whose differences are all the same, but for what binary numbers make of them."""
+    squares = zip(matrix.quantities, np.diag(matrix.value), strict=True)
+    still = [
+        name
+        for name, square in squares
+        if is_rounding(float(square), (*study.full(name), *study.full(f"{name}{REFERENCE}")))
+    ]
+    if still:
+        raise EvidenceError(f"the values of {', '.join(still)} do not scatter", where=("rows",))
 
 
 def _percentile(levels: Mapping[str, Sequence[float]], percent: float) -> dict[str, float]:

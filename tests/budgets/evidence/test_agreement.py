@@ -380,6 +380,9 @@ def test_pairs_that_cannot_be_formed_are_named():
         evaluated([("V0", 3.5, 3.0), ("V1", 4.5, 4.0)])
     with pytest.raises(EvidenceError, match="all pairs differ by the same amount"):
         evaluated([("V0", 3e-162, 0.0), ("V1", 0.0, 0.0)])
+    # 0.1 each time, of which binary numbers make several.
+    with pytest.raises(EvidenceError, match="all pairs differ by the same amount"):
+        evaluated([(f"V{i}", 3 + i / 10, float(f"{3.1 + i / 10:.1f}")) for i in range(20)])
 
 
 def test_a_pair_stands_in_one_group_and_one_run():

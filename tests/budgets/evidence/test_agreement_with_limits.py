@@ -129,6 +129,10 @@ def test_too_few_that_are_known_are_refused():
     rows = [(f"V{i}", 1.5 + i, 1.0 + i) for i in range(12)]
     with pytest.raises(EvidenceError, match="no scatter"):
         evaluated([*rows, ("B", 0.5, {"below": 1.0})])
+    # The same difference each time, but for what binary numbers make of it.
+    rows = [(f"V{i}", float(f"{1.6 + i / 10:.1f}"), float(f"{1.5 + i / 10:.1f}")) for i in range(12)]
+    with pytest.raises(EvidenceError, match="no scatter"):
+        evaluated([*rows, ("B", 0.5, {"below": 1.0})])
 
 
 @pytest.mark.parametrize(

@@ -335,3 +335,13 @@ def test_one_pair_in_two_groups_is_refused():
     twice = StudyData(data.columns, (*data.rows, (data.rows[0][0], "another", *data.rows[0][2:])))
     with pytest.raises(EvidenceError, match="two groups"):
         evaluated(twice, options={"independent": True})
+
+
+def test_a_quantity_whose_differences_are_all_the_same_is_refused():
+    columns = ("pair", "x", "y", "x_reference", "y_reference")
+    noise = np.random.default_rng(4).normal(0, 0.1, 20)
+    rows = tuple(
+        (f"V{i}", 3 + i / 10, 5.0 + float(noise[i]), float(f"{3.1 + i / 10:.1f}"), 5.0) for i in range(20)
+    )
+    with pytest.raises(EvidenceError, match="the values of x do not scatter"):
+        evaluated(StudyData(columns, rows), options={"independent": True})

@@ -82,6 +82,7 @@ def test_more_than_two_determinations_are_pooled():
         (pairs([0.1]), "1 samples have two determinations"),
         (pairs([0.0, 0.0, 0.0]), "agree exactly"),
         ([("P0", 1.0), ("P0", 1.5), ("P1", 3.0), ("P1", 3.5)], "agree exactly"),
+        ([("P0", 3.0), ("P0", 3.1), ("P1", 3.1), ("P1", 3.2), ("P2", 4.0), ("P2", 4.1)], "agree exactly"),
         ([("P0", 1.0), ("P0", 1.0), ("P1", 1.0), ("P1", 1.0)], "all results are equal"),
     ],
 )
