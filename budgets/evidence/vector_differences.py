@@ -113,7 +113,13 @@ def differences(study: Study, quantities: tuple[str, ...]) -> Evaluation:
 
 
 def _check_scatter(study: Study, matrix: MeanSquareMatrix) -> None:
-    """Refuse a quantity whose differences are all the same, but for what binary numbers make of them."""
+    """Refuse a quantity whose differences are all the same, but for what binary numbers make of them.
+
+    Raises
+    ------
+    EvidenceError
+        With the names of all of them.
+    """
     squares = zip(matrix.quantities, np.diag(matrix.value), strict=True)
     still = [
         name
