@@ -339,6 +339,13 @@ _HELD_AGAINST = {
         "What the trials give.",
         {
             "trials": _WHOLE,
+            "tolerance": {
+                **_NUMBER_OR_NULL,
+                "description": "That the number of trials was chosen for; null: another reason.",
+            },
+            "holds_tolerance": _or_null(
+                {**_YES, "description": "With a probability of 0.99; false: more trials than allowed."}
+            ),
             "mean": {**_NUMBER_OR_NULL, "description": "null: too few degrees of freedom for one."},
             "standard_deviation": {
                 **_NUMBER_OR_NULL,

@@ -95,6 +95,8 @@ def validation_document(found: PropagationValidation) -> Answer:
         },
         "monte_carlo": {
             "trials": run.trials,
+            "tolerance": run.tolerance,
+            "holds_tolerance": run.holds_tolerance,
             "mean": run.mean,
             "standard_deviation": run.standard_deviation,
             "median": run.median,

@@ -40,6 +40,7 @@ _POINTS: Final = 41
 _RECORD: Final = "#/prior/record"
 # A guard band of more standard uncertainties than that lets next to nothing nonconforming pass.
 _WIDEST: Final = 4.0
+_SMALLEST_SHOWN: Final = 1e-4
 
 
 @dataclass(frozen=True)
@@ -306,7 +307,7 @@ def _statement(share: float, now: Answer, wanted: Answer | None, unit: str) -> s
     parts = [
         f"{_percent(share)} of all lots do not conform. By the rule in force {_percent(now['release_rate'])} "
         f"are released; {_percent(now['global_consumers_risk'])} of all lots do not conform and are released "
-        f"(in nineteen of twenty plants at most {_percent(now['global_consumers_risk_quantile'])}), and "
+        f"(in nineteen of twenty plants {_at_most(now['global_consumers_risk_quantile'])}), and "
         f"{_percent(now['global_producers_risk'])} conform and are not."
     ]
     if wanted is not None:
@@ -317,6 +318,10 @@ def _statement(share: float, now: Answer, wanted: Answer | None, unit: str) -> s
     return " ".join(parts)
 
 
+def _at_most(share: float) -> str:
+    return _percent(share) if share < _SMALLEST_SHOWN else f"at most {_percent(share)}"
+
+
 def _percent(share: float) -> str:
     # Nothing below 0.01 % is shown; the figures keep their digits.
-    return "less than 0.01 %" if share < 1e-4 else f"{100 * share:.3g} %"
+    return "less than 0.01 %" if share < _SMALLEST_SHOWN else f"{100 * share:.3g} %"

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Mapping
 from contextlib import suppress
 from dataclasses import replace
 from functools import partial
@@ -98,6 +98,8 @@ def run(
         subject = subject_of(unit_of_work, code, version)
     at = subject.centre if wanted.at is None else dict(wanted.at)
     collector = FaultCollector()
+    _check_places(collector, subject.budget, at)
+    collector.finish("The run cannot be made.")
     document = collector.attempt("#", _validated, services, subject.budget, subject.counts, at, wanted)
     collector.faults = [
         replace(fault, pointer=(fault.pointer or "#").replace("#/estimates", "#/at", 1))
@@ -117,6 +119,18 @@ def run(
         "seed": wanted.seed,
         **document,
     }
+
+
+def _check_places(collector: FaultCollector, budget: Budget, at: Mapping[str, float]) -> None:
+    """Refuse readings that the evidence does not speak of: nothing is validated there."""
+    plain = budget.model is None
+    ranges = {budget.characteristic: budget.validated_range} if plain else budget.validated_box
+    for name, (lower, upper) in ranges.items():
+        value = at.get(name)
+        if value is not None and not lower <= value <= upper:
+            collector.add(
+                f"#/at/{name}", f"{value:g} lies outside of the validated range", f"{lower:g} to {upper:g}"
+            )
 
 
 def _validated(

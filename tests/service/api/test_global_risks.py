@@ -154,6 +154,12 @@ def test_what_cannot_be_answered_says_why(
     assert words in found[pointer], found
 
 
+def test_shares_too_small_to_be_shown_are_told_in_plain_words(callers: Callers) -> None:
+    narrow = asked(prior=declared(mean=2.7, standard_deviation=0.01), largest_risk=None)
+    found = done(callers["engineer"].post(PATH, narrow), 200)
+    assert "(in nineteen of twenty plants less than 0.01 %)" in found["statement"]
+
+
 def test_nothing_in_force_is_a_conflict(callers: Callers) -> None:
     for changes in ({"specification": "unknown"}, {"analyzer": "oven"}):
         response = callers["engineer"].post(PATH, asked(**changes))
