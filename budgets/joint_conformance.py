@@ -28,6 +28,8 @@ _NODES, _WEIGHTS = (1 + _GAUSS[0]) / 2, _GAUSS[1] / 2
 # sqrt(1 - r^2) below which two errors are one.
 _DEGENERATE, _NEARLY_DEGENERATE = 1e-14, 1e-3
 _TINY = 1e-300
+# Of the largest risk: what is smaller than this changes no digit of the risk of all.
+_NEGLIGIBLE = 1e-14
 
 
 @dataclass(frozen=True)
@@ -122,8 +124,20 @@ def joint_conformance(
     matrix = check_correlation_matrix(correlations)
     if len(matrix) != len(risks):
         raise LimitsError("there is a correlation for each two characteristics", where=("correlations",))
-    risk = _risk_of_two(risks, float(matrix[0, 1])) if len(risks) == 2 else _risk_of_more(risks, matrix)
+    risk = _risk_of(risks, matrix, [i for i, single in enumerate(singles) if single > _NEGLIGIBLE * smallest])
     return JointConformance(smallest, largest, min(max(risk, smallest), largest))
+
+
+def _risk_of(
+    risks: Sequence[tuple[float, float]], matrix: NDArray[np.float64], counting: Sequence[int]
+) -> float:
+    """Return the risk of those that count; mostly one alone comes near a limit."""
+    if len(counting) < 2:
+        return math.fsum(sum(risks[i]) for i in counting)
+    left = [risks[i] for i in counting]
+    if len(counting) == 2:
+        return _risk_of_two(left, float(matrix[counting[0], counting[1]]))
+    return _risk_of_more(left, matrix[np.ix_(counting, counting)])
 
 
 def both_exceed(one: ArrayLike, other: ArrayLike, correlation: ArrayLike) -> NDArray[np.float64]:

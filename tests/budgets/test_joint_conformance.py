@@ -187,3 +187,17 @@ def test_what_is_no_correlation_matrix_is_refused():
         joint_conformance(risks, [[1, 1.2], [1.2, 1]])
     with pytest.raises(LimitsError, match="each two"):
         joint_conformance(risks, np.eye(3))
+
+
+@pytest.mark.parametrize(
+    "far", [(0.0, 1e-18), (1e-17, 3e-18), (0.0, 0.0), (0.0, 4e-17)], ids=lambda pair: f"{sum(pair):g}"
+)
+def test_characteristics_far_inside_change_no_digit_and_cost_nothing(far):
+    matrix = np.array([[1, 0.6, 0.3, 0.5], [0.6, 1, 0.2, 0.1], [0.3, 0.2, 1, 0], [0.5, 0.1, 0, 1]])
+    near = [(0.0, 0.03), (0.01, 0.0)]
+    of_two = joint_conformance(near, matrix[:2, :2]).risk
+    assert joint_conformance([*near, far, far], matrix).risk == pytest.approx(of_two, rel=1e-13)
+    assert joint_conformance([far, near[0], far], matrix[:3, :3]).risk == pytest.approx(0.03, rel=1e-13)
+    # The exact way for three says the same of a risk that is small, but counts.
+    counted = joint_conformance([*near, (0.0, 1e-11)], matrix[:3, :3]).risk
+    assert counted == pytest.approx(of_two, abs=1.1e-11)
