@@ -40,6 +40,8 @@ def test_the_scale_of_t_is_u_itself():
     # Computed for the project's rules: z = 1.96, nu = 8: normal 2.50 %, t 4.28 %.
     assert StudentT(math.inf).upper_tail(1.96) == pytest.approx(0.0250, abs=5e-5)
     assert StudentT(8).upper_tail(1.96) == pytest.approx(0.0428, abs=5e-5)
+    # On a u inflated to the standard deviation of that t it would be 6.40 %, which is wrong.
+    assert StudentT(8).upper_tail(1.96 / math.sqrt(8 / 6)) == pytest.approx(0.0640, abs=5e-5)
 
 
 @pytest.mark.parametrize("nu", [1, 3.7, 41.2, math.inf])

@@ -31,6 +31,18 @@ def test_the_risk_per_look_takes_the_place_of_the_largest_risk():
     assert both.lower == pytest.approx(2 + 0.1 * NORMAL.upper_quantile(0.0304), rel=1e-9)
 
 
+def test_guard_bands_of_trade_standards():
+    """ISO 14253-1 at 95 %, one-sided: 1.645 u; ISO 4259: 0.59 R, with R = 2.77 standard deviations.
+
+    Both from memory (mathematics of the project, rule 28).
+    """
+    rule = DecisionRule("guarded_by_specific_risk", largest_risk=0.05)
+    assert acceptance_interval(rule, UPPER, 0.1, NORMAL).guard_band_upper == pytest.approx(0.1645, abs=5e-5)
+    reproducibility = 0.5
+    accepted = acceptance_interval(rule, UPPER, reproducibility / 2.77, NORMAL)
+    assert accepted.guard_band_upper / reproducibility == pytest.approx(0.59, abs=5e-3)
+
+
 @pytest.mark.parametrize(
     ("rule", "options", "words"),
     [

@@ -13,7 +13,7 @@ from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.global_risks import nonconforming_share
 from budgets.measurement_errors import MeasurementErrors
 from budgets.prior_estimates import prior_of_readings, prior_of_reference_values, prior_of_study
-from budgets.propagation import Counts
+from budgets.propagation import Counts, combined
 
 ONE = Counts((1,))
 # Of the budget of the fixture, one reading: repeatability and remainder, not the bias.
@@ -41,6 +41,17 @@ def test_only_what_scatters_from_lot_to_lot_is_taken_out(a_budget):
     assert one.removed_standard_deviation == pytest.approx(RANDOM)
     assert one.lots == 400 and one.prior.anchor == "readings" and one.warnings == ()
     assert one.prior.mean == pytest.approx(3.0, abs=0.03)
+
+
+def test_calibration_and_reference_levels_are_not_taken_out(a_budget, a_component):
+    """Mathematics, rule 36 [S]: with the full u removed, a true 0.12 is estimated as 0.066."""
+    common = a_component("trueness", 0.1, level="reference", quantity="bias")
+    budget = a_budget(components=(*a_budget().components[:2], common))
+    step = math.sqrt(0.12**2 + RANDOM**2) * math.sqrt(199 / 200)
+    found = prior_of_readings([3.0 - step, 3.0 + step] * 100, budget, ONE, steered=False)
+    assert found.prior.standard_deviation == pytest.approx(0.12, rel=1e-9)
+    whole = combined(budget, ONE).standard_uncertainty
+    assert math.sqrt(found.observed_standard_deviation**2 - whole**2) == pytest.approx(0.066, abs=5e-4)
 
 
 def test_a_common_error_moves_the_mean_and_not_the_spread(a_budget):
