@@ -119,7 +119,10 @@ _IMPROVEMENT = object_of(
         "combined_standard_uncertainty": _NUMBER,
         "lower_acceptance_limit": _MAYBE,
         "upper_acceptance_limit": _MAYBE,
-        "set_point": _NUMBER,
+        "set_point": {
+            **_NUMBER,
+            "description": "The cheapest within risk and law, whatever share of lots it releases.",
+        },
         "true_mean": _NUMBER,
         "release_rate": _SHARE,
         "conditional_global_consumers_risk": _SHARE,

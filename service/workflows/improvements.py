@@ -181,11 +181,20 @@ def _statement(question: Question, found: Improvements) -> str:
         return (
             "Nothing pays: none of the options, alone or in pairs, brings in a year what it costs. The "
             f"measurement as it is serves best, at {found.as_it_is.set_point.set_point:.4g} {unit}."
+            f"{_released(question, found.as_it_is)}"
         )
     others = "" if math.isclose(best.cost_per_year, 0) else f", after {best.cost_per_year:,.0f} for them"
     return (
         f"First {' with '.join(best.options)}: {best.net_gain_per_year:,.0f} {money.currency} a year"
         f"{others}; "
         f"the set point moves from {found.as_it_is.set_point.set_point:.4g} to "
-        f"{best.set_point.set_point:.4g} {unit}."
+        f"{best.set_point.set_point:.4g} {unit}.{_released(question, best)}"
     )
+
+
+def _released(question: Question, item: Improvement) -> str:
+    """Say so where the cheapest set point, which options are compared at, releases less than is wanted."""
+    rate, wanted = item.set_point.release_rate, question.wanted.release_rate
+    if rate >= wanted:
+        return ""
+    return f" There {100 * rate:.1f} % of the lots are released, fewer than the wanted {100 * wanted:.4g} %."

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from budgets.lot_procedures import Demand, LotProcedure
@@ -14,6 +14,7 @@ from budgets.set_point_search import Wanted
 from budgets.units import Conversion, conversion
 from service.documents import Characteristic, GlobalRisksRequest, Requirement, SetPointRequest, StatedMoney
 from service.errors import Conflict, Fault, NotSupported
+from service.schemas.set_points import VARIATIONS
 from service.store.unit_of_work import UnitOfWork
 from service.workflows.evidence import FaultCollector
 from service.workflows.process_variations import Variation, planned, variation_of
@@ -92,6 +93,8 @@ def question_of(
             request.process_variation,
             convert,
         )
+        base = f"{pointer}/process_variation"
+        collector.faults = [_at_a_member(fault, base, request) for fault in collector.faults]
     demands = [
         collector.attempt(f"{pointer}/specifications", _demand, register, budget, *both, characteristic)
         for both in requirements
@@ -110,6 +113,18 @@ def question_of(
         money,
         convert,
     )
+
+
+def _at_a_member(fault: Fault, base: str, request: SetPointRequest) -> Fault:
+    """Let a fault of what record or study show point at the member that named them."""
+    source = request.process_variation.source
+    name = (fault.pointer or "").removeprefix(f"{base}/")
+    if source == "stated" or name == fault.pointer or name in (*sum(VARIATIONS[source], ()), "from"):
+        return fault
+    member = "study" if source == "study" else "from"
+    if name == "reading_standard_deviation":
+        member = "true_standard_deviation"
+    return replace(fault, pointer=f"{base}/{member}")
 
 
 def _characteristic(register: Register, request: SetPointRequest, pointer: str) -> Characteristic:

@@ -217,6 +217,20 @@ def test_lots_that_vary_less_than_their_readings_are_steered(callers: Callers) -
     assert answer["process_variation"]["steering"] > 0.5
 
 
+def test_what_the_record_shows_is_wrong_with_the_member_that_asked_for_it(callers: Callers) -> None:
+    def refused(**record: Any) -> dict[str, str]:
+        body = asked(process_variation={"from": "record", **record})
+        return faults(callers["engineer"].post(SET_POINTS, body))
+
+    judged(callers, "S000", 2.85, 2.86)
+    few = refused(steered_by_this_analyzer=False)
+    assert "1 lots" in few["#/process_variation/from"]
+    for lot in range(1, 8):
+        judged(callers, f"S{lot:03d}", 2.85 + 0.001 * lot, 2.85 + 0.001 * lot)
+    both = refused(steered_by_this_analyzer=True, true_standard_deviation=0.5)
+    assert "cannot be true together" in both["#/process_variation/true_standard_deviation"]
+
+
 def production_study(code: str, within: float = 0.04, **changes: Any) -> dict[str, Any]:
     draw = random.Random(9)
     rows = []
@@ -514,6 +528,17 @@ def test_nothing_pays_is_an_answer(callers: Callers) -> None:
     found = compared(callers, dear)
     assert found["best"] is None
     assert found["statement"].startswith("Nothing pays")
+
+
+def test_a_cheapest_set_point_that_releases_less_than_wanted_is_told(callers: Callers) -> None:
+    option = {"code": "samples", "kind": "procedure", "samples": 2}
+    for cost in (0.0, 1e9):
+        wish, modest = (
+            compared(callers, {**option, "cost_per_year": cost}, wanted={"release_rate": rate})
+            for rate in (0.9999, 0.5)
+        )
+        assert wish["statement"].endswith("of the lots are released, fewer than the wanted 99.99 %.")
+        assert wish["statement"].startswith(modest["statement"])
 
 
 def test_what_cannot_be_had_is_no_matter_of_what_pays(callers: Callers) -> None:
