@@ -34,6 +34,8 @@ SOURCES = (
     "subsampling",
 )
 NEEDED = ("analyzer_repeatability", "reference_repeatability")
+# What the readings of one sample scatter by; any other error is averaged otherwise, or is not in them.
+_REPEATABILITY = frozenset({"repeatability", "resolution"})
 _BETWEEN_LABORATORIES = ("between_laboratories", "reproducibility")
 
 
@@ -113,9 +115,35 @@ def _fault(item: NamedSource, sources: Mapping[str, object], pairs: Sequence[Pai
         )
     if not estimate.usable or estimate.variance <= 0:
         return f"{item.source}: the estimate {estimate.name!r} is not usable"
+    if beside := held_beside(item):
+        return (
+            f"{item.source}: {estimate.name!r} holds {', '.join(beside)} too, which would be taken out where "
+            "it is not, or once more; name an estimate of the source alone"
+        )
     if item.source == "reference_run" and pairs[0].run is None:
         return "reference_run: which pairs were measured in one run must be known (column run)"
     return None
+
+
+def held_beside(item: NamedSource) -> tuple[str, ...]:
+    """Return what an estimate holds beside the source that it is named for.
+
+    Parameters
+    ----------
+    item : NamedSource
+
+    Returns
+    -------
+    tuple of str
+        Nothing for an estimate that may be taken out.
+
+    Notes
+    -----
+    A repeatability goes by the number of readings, what presentations or runs differ by does not. So a
+    repeatability is alone, and in no other source.
+    """
+    held = frozenset(item.estimate.contains)
+    return tuple(sorted(held - _REPEATABILITY if item.source in NEEDED else held & _REPEATABILITY))
 
 
 def run_share(pairs: Sequence[Pair]) -> float:

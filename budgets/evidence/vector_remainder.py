@@ -12,6 +12,7 @@ from budgets.errors import BudgetsError, EvidenceError, NotSupportedError, raise
 from budgets.evidence.evaluation import Estimate, MeanSquare, Term
 from budgets.evidence.evaluation_terms import effective_degrees_of_freedom, variance
 from budgets.evidence.mean_square_matrices import MatrixTerm, MeanSquareMatrix, covariance_of
+from budgets.evidence.remainder import held_beside
 from budgets.evidence.study_tables import NamedSource, Study
 from budgets.evidence.sums import CONFIDENCE, f_quantile
 from budgets.evidence.vectors import joint_estimate
@@ -118,11 +119,12 @@ def _checked_sources(
             not item.estimate.usable
             or not (joint or item.estimate.variance > 0)
             or any(mark in (item.estimate.name, *item.estimate.contains) for mark in _BETWEEN_LABORATORIES)
+            or held_beside(item)
         ):
             faults.append(
                 EvidenceError(
                     f"{item.source}: the estimate {item.estimate.name!r} cannot be taken out (made from a "
-                    "reproducibility limit, or not usable)",
+                    "reproducibility limit, holding more than its source, or not usable)",
                     where=where,
                 )
             )

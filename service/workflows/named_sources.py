@@ -120,6 +120,9 @@ def _check_analyzer(theirs: Study, ours: Study, pointer: str, collector: FaultCo
 def _check_reference(
     theirs: Study, ours: Study, wanted: set[str], pointer: str, collector: FaultCollector
 ) -> None:
+    if theirs.calibrations:
+        detail = f"{theirs.code} was made on {', '.join(theirs.calibrations)}"
+        collector.add(pointer, detail, "a study of the reference method itself")
     if None not in (theirs.laboratory, ours.laboratory) and theirs.laboratory != ours.laboratory:
         detail = f"{theirs.code} was made in the laboratory {theirs.laboratory!r}"
         collector.add(pointer, detail, f"one made in {ours.laboratory!r}, as the reference values")

@@ -181,6 +181,9 @@ def test_the_laboratory_s_bias_would_make_the_difference_negative():
         ("presentation", {"terms": (Term(-1.0, MeanSquare("a", 1.0, 2)),)}, "not usable"),
         ("presentation", {"relative_terms": (Term(1.0, MeanSquare("b", 1.0, 2)),)}, "depends on the level"),
         ("reference_run", {}, "column run"),
+        ("subsampling", {"contains": ("repeatability", "resolution")}, "holds repeatability, resolution too"),
+        ("presentation", {"contains": ("presentation", "repeatability")}, "holds repeatability too"),
+        ("analyzer_repeatability", {"contains": ("repeatability", "between_days")}, "holds between_days too"),
     ],
 )
 def test_sources_that_cannot_be_used(an_estimate, source, changes, match):

@@ -251,6 +251,7 @@ def test_data_that_do_not_serve_are_refused(columns, rows, options, where):
         (lambda s: [NamedSource("presentation", scalar("r", 0.1, usable=False), "fat")], EvidenceError),
         (lambda s: [NamedSource("presentation", scalar("r", 0.0), "fat")], EvidenceError),
         (lambda s: [NamedSource("presentation", RING_TEST, "fat")], EvidenceError),
+        (lambda s: [NamedSource("subsampling", s[0].estimate)], EvidenceError),
         (lambda s: [s[0], s[0]], EvidenceError),
     ],
 )  # fmt: skip

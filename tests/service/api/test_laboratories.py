@@ -242,6 +242,17 @@ def test_a_source_that_the_laboratory_does_not_give_is_refused(
     assert [fault["pointer"] for fault in refused["errors"]] == [f"#/named_sources/1/evidence{pointer}"]
 
 
+@pytest.mark.parametrize("source", ["reference_repeatability", "subsampling"])
+def test_the_repeatability_of_the_analyzer_is_not_taken_out_under_another_name(
+    engineer: Caller, source: str
+) -> None:
+    own = {"study": "wmp-rep-2026-01", "estimate": "repeatability"}
+    refused = problem(engineer.post("/v1/studies", validation(**{source: own})), 422, "invalid-request")
+    (fault,) = refused["errors"]
+    assert fault["pointer"].startswith("#/named_sources/1")
+    assert "was made on nir-1" in fault["detail"] or "holds repeatability" in fault["detail"]
+
+
 def test_a_source_had_to_serve_when_the_study_was_made(engineer: Caller) -> None:
     put(engineer, repeatability=declared(0.04, serves_until=house.TODAY - timedelta(days=45)))
     document = validation(reference_repeatability=of_laboratory("repeatability"))
