@@ -62,19 +62,19 @@ def release_rule_over_production(
     LimitsError
         As in `ReleaseRule.compile`, and if no guard band holds the global risk.
     NotSupportedError
-        For a budget with a measurement model, probabilities within the natural domain, or a global risk with
-        an error that Monte Carlo tabulated.
+        For a budget with a measurement model, probabilities within the natural domain, or an error that Monte
+        Carlo tabulated: what is said of a production rests on the law of propagation.
     """
     if options.get("truncated"):
         raise NotSupportedError(
             "a production prior beside probabilities within the natural domain", where=("within_domain",)
         )
+    if options.get("distribution") is not None:
+        raise NotSupportedError("a production prior with a Monte Carlo distribution", where=("prior",))
     errors = measurement_errors(budget, counts, tolerance)
     if rule.kind != "guarded_by_global_risk":
         made = ReleaseRule.compile(budget, counts, tolerance, rule, **options)
         return _with_production(made, prior, errors)
-    if options.get("distribution") is not None:
-        raise NotSupportedError("a global risk with a Monte Carlo distribution", where=("kind",))
     assert rule.largest_risk is not None  # a rule by global risk has one
     band = global_guard_band(prior, errors, tolerance, rule.largest_risk).guard_band
     made = ReleaseRule.compile(budget, counts, tolerance, rule, guard_band=band, **options)

@@ -122,6 +122,12 @@ def _subject(services: Services, unit_of_work: UnitOfWork, request: GlobalRisksR
     prior = collector.attempt("#", _prior, services, unit_of_work, request, characteristic, budget)
     collector.finish("The question cannot be answered.")
     assert isinstance(rule, ReleaseRule) and prior is not None
+    if rule.distribution is not None:
+        fault = Fault("was not validated by Monte Carlo", pointer="#/analyzer", supported=False)
+        text = (
+            f"Not supported yet: global risks where the law of propagation of {budget.document.code} fails."
+        )
+        raise NotSupported(text, faults=(fault,))
     errors = collector.attempt("#", measurement_errors, budget.budget, counts, rule.tolerance)
     collector.finish("The question cannot be answered.")
     assert errors is not None

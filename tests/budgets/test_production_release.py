@@ -101,11 +101,12 @@ def test_a_risk_out_of_reach_and_an_empty_interval_are_refused(a_budget):
         )
 
 
-def test_a_monte_carlo_distribution_is_not_supported_beside_a_global_risk(a_budget):
+def test_a_monte_carlo_distribution_is_not_supported_beside_a_prior(a_budget):
     levels = tuple((i + 0.5) / 999 for i in range(999))
     table = Tabulated(levels, tuple(-3 + 6 * level for level in levels), 100_000)
-    with pytest.raises(NotSupportedError, match="Monte Carlo"):
-        release_rule_over_production(a_budget(), ONE, UPPER, by_global_risk(), PRIOR, distribution=table)
+    for rule in (by_global_risk(), DecisionRule("guarded_by_specific_risk", largest_risk=0.05)):
+        with pytest.raises(NotSupportedError, match="Monte Carlo"):
+            release_rule_over_production(a_budget(), ONE, UPPER, rule, PRIOR, distribution=table)
 
 
 def test_probabilities_within_the_domain_are_not_supported_beside_a_prior(a_budget):

@@ -90,6 +90,13 @@ def test_decisions_use_the_quantiles_where_the_law_does_not_hold(callers: Caller
     assert limits["error_distribution"] == "monte_carlo"
 
 
+def test_global_risks_do_not_rest_on_a_law_that_does_not_hold(callers: Callers) -> None:
+    approved(callers, a_dominant_rectangle())
+    asked = example(documents.GlobalRisksRequest, specification="legal")
+    found = problem(callers["engineer"].post("/v1/global-risks", asked), 422, "not-supported")
+    assert "law of propagation of wmp-moisture-nir" in found["detail"]
+
+
 def test_a_specification_approved_later_takes_the_stored_quantiles(app: Flask, callers: Callers) -> None:
     approved(callers, a_dominant_rectangle())
     document = example(documents.Specification, code="legal", reason="a new regulation")
