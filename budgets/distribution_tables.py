@@ -124,13 +124,16 @@ class TailTable:
             Of what is below 1e-40, some number not above it.
         """
         bits = (z + 1.0).view(np.int64)
-        cell = np.minimum((bits >> _SHIFT) - _OFFSET, self._cells - 1)
-        place = (bits & _PLACE_MASK) * (1.0 / (1 << _SHIFT))
+        # Clipped to the last cell where they are taken.
+        cell = bits >> _SHIFT
+        cell -= _OFFSET
+        bits &= _PLACE_MASK
+        place = bits * (1.0 / (1 << _SHIFT))
         first, second, third, fourth = self._coefficients
-        logarithm: NDArray[np.float64] = fourth[cell]
+        logarithm: NDArray[np.float64] = fourth.take(cell, mode="clip")
         for coefficient in (third, second, first):
             logarithm *= place
-            logarithm += coefficient[cell]
+            logarithm += coefficient.take(cell, mode="clip")
         np.exp(logarithm, out=logarithm)
         return logarithm
 

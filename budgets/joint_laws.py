@@ -24,7 +24,7 @@ Array = NDArray[np.float64]
 
 NODES, WEIGHTS = np.polynomial.legendre.leggauss(12)
 # Rows that are summed at once: few enough for the working arrays to stay in the processor's cache.
-_BLOCK = 32
+_BLOCK = 64
 
 
 @dataclass(frozen=True)

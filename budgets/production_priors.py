@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -210,6 +210,7 @@ class ProductionPrior:
         return self.mean + self._scale * standard_marks(self.degrees_of_freedom)
 
 
+@lru_cache(maxsize=64)
 def standard_marks(degrees_of_freedom: float) -> Array:
     """Return places that part the axis of a standardised distribution where it is smooth in between.
 
@@ -221,17 +222,24 @@ def standard_marks(degrees_of_freedom: float) -> Array:
     Returns
     -------
     ndarray, ascending, symmetric around 0
+        Read-only.
     """
     if math.isinf(degrees_of_freedom):
         number = round(2 * _NORMAL_REACH / _NORMAL_STEP)
-        return np.linspace(-_NORMAL_REACH, _NORMAL_REACH, number + 1)
+        return _kept(np.linspace(-_NORMAL_REACH, _NORMAL_REACH, number + 1))
     # Steps that grow as fast as the distribution flattens out.
     growth = 1 + min(1.0, 3 / math.sqrt(degrees_of_freedom))
     found = [0.0, 0.75, 1.5]
     while StudentT(degrees_of_freedom).upper_tail(found[-1]) > _NEGLIGIBLE:
         found.append(max(found[-1] + 0.75, found[-1] * growth))
     half = np.asarray(found)
-    return np.concatenate((-half[:0:-1], half))
+    return _kept(np.concatenate((-half[:0:-1], half)))
+
+
+def _kept(marks: Array) -> Array:
+    """Return marks that are used again, and by nobody changed."""
+    marks.setflags(write=False)
+    return marks
 
 
 def _check_finite(name: str, value: float) -> None:
