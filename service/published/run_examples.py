@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from budgets.declarations import Declaration
+from budgets.distributions import quantile
 from budgets.evidence.study_data import StudyData, evaluate_study
 from budgets.evidence.sums import mean
 from budgets.propagation import coverage_factor
@@ -37,13 +38,15 @@ def _sum(i: Inputs) -> dict[str, Any]:
 
 
 def _dominant_rectangle(i: Inputs) -> dict[str, Any]:
-    """The coverage factor of the document is that of the rectangle itself: not by the law of propagation."""
+    """The coverage factor of the document is that of the rectangle itself, which outweighs the rest."""
     rectangles = [
         stated(Declaration("half_width", item["a"], distribution="rectangular")) for item in i["rect"]
     ]
     names = [f"x{k}" for k in range(len(rectangles) + len(i["other_u"]))]
     inputs = {name: (0.0, u) for name, u in zip(names, [*rectangles, *i["other_u"]], strict=True)}
-    return {"uc": propagated("+".join(names), inputs).standard_uncertainty}
+    uc = propagated("+".join(names), inputs).standard_uncertainty
+    k = quantile("rectangular", (1 + i["p"]) / 2)
+    return {"uc": uc, "k": k, "U": k * uc}
 
 
 def _product(i: Inputs) -> dict[str, Any]:
