@@ -215,6 +215,11 @@ class LotSpreadRule:
     domain: Ends
     validated_range: Ends
 
+    @property
+    def known_spread(self) -> float:
+        """A scale of what is known without the lot, unit of the characteristic: to choose spreads by."""
+        return math.hypot(self.measurement_standard_deviation, self.other_standard_uncertainty)
+
     def at(self, sample_means: Sequence[float]) -> ReleaseRule:
         """Return the rule for the samples of a lot.
 

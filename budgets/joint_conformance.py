@@ -49,16 +49,6 @@ class JointConformance:
     risk: float | None = None
 
     @property
-    def least_conformance_probability(self) -> float:
-        """Smallest probability that all conform."""
-        return 1.0 - self.largest_risk
-
-    @property
-    def most_conformance_probability(self) -> float:
-        """Largest probability that all conform."""
-        return 1.0 - self.smallest_risk
-
-    @property
     def conformance_probability(self) -> float | None:
         """Probability that all conform, where the correlations are known."""
         return None if self.risk is None else 1.0 - self.risk

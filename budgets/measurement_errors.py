@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 from budgets.budget import Budget
 from budgets.conformity import Tolerance
 from budgets.errors import LimitsError, NotSupportedError
-from budgets.evidence.evaluation import Term
+from budgets.evidence.evaluation import Term, effective_degrees_of_freedom, variance
+from budgets.evidence.sums import f_quantile
 from budgets.level_dependence import LevelDependence
 from budgets.levels import LEVELS
 from budgets.linear_propagation import CompiledPropagation
@@ -147,6 +148,36 @@ def error_terms(
     full = own.model.estimates({ESTIMATE: estimate})
     _, coefficients = own.model.linearised(full)
     return own.combination(coefficients, full)[1]
+
+
+def exceeds_counted(
+    seen: float, degrees_of_freedom: float, counted: Sequence[Term], *, significance: float = 0.05
+) -> bool:
+    """Say whether a variance that a study saw is significantly larger than what a budget counts for it.
+
+    Parameters
+    ----------
+    seen : float, unit of the characteristic squared
+    degrees_of_freedom : float
+        Of what was seen.
+    counted : sequence of Term
+        Of the budget, as from `error_terms`; none: it counts nothing.
+    significance : float
+
+    Returns
+    -------
+    bool
+
+    Notes
+    -----
+    One-sided F test of ``seen / counted`` on the effective degrees of freedom of both. Source: ISO 2854,
+    comparison of two variances (from memory); JCGM 100:2008, G.4.1, for the degrees of freedom.
+    """
+    known = variance(counted)
+    if seen <= 0 or known <= 0:
+        return seen > 0
+    limit = f_quantile(significance, degrees_of_freedom, effective_degrees_of_freedom(counted))
+    return seen / known > limit
 
 
 def _part_of(budget: Budget, law: CompiledPropagation, levels: Collection[str]) -> CompiledPropagation | None:

@@ -57,6 +57,11 @@ class PlannedMeasurement:
     rules: tuple[ReleaseRule, ...]
 
     @property
+    def random_standard_uncertainty(self) -> float:
+        """Standard uncertainty of the first look from errors that lots do not share, unit as estimates."""
+        return math.sqrt(float(self.random_covariance[0, 0]))
+
+    @property
     def standard_uncertainty(self) -> float:
         """Combined standard uncertainty of the first look; the largest one at a tolerance limit."""
         return max(rule.combined_standard_uncertainty for rule in self.rules)

@@ -191,7 +191,7 @@ class SetPointSearch:
         if wanted.largest_risk is not None:
             wishes.append(f"at most {wanted.largest_risk:.3g} of the released lots nonconforming")
         own = math.sqrt(self._production.lots.covariance[0, 0])
-        error = math.sqrt(self._production.measurement.random_covariance[0, 0])
+        error = self._production.measurement.random_standard_uncertainty
         return LimitsError(
             f"no set point keeps {' with '.join(wishes)}: the best, {figures.set_point:.5g}, releases "
             f"{figures.release_rate:.4g}, of them {figures.conditional_global_consumers_risk:.2g} "

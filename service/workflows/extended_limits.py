@@ -6,7 +6,6 @@ raises the effective degrees of freedom, and the coverage factor falls faster th
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable, Mapping
 from functools import partial
 from typing import Any, Final
@@ -78,8 +77,7 @@ def _rules_at(rule: AnyRule, before: AnyRule) -> list[ReleaseRule | None]:
         middle = {name: sum(ends) / 2 for name, ends in rule.box.ranges.items()}
         return [_rule_or_none(partial(rule.at, middle))]
     assert isinstance(before, LotSpreadRule)  # rules of one requirement are of one kind
-    scale = math.hypot(before.measurement_standard_deviation, before.other_standard_uncertainty)
-    return [_rule_or_none(partial(rule.with_spread, scale * times)) for times in _SPREADS]
+    return [_rule_or_none(partial(rule.with_spread, before.known_spread * times)) for times in _SPREADS]
 
 
 def _rule_or_none(compute: Callable[[], ReleaseRule]) -> ReleaseRule | None:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import asdict
 
 from budgets.errors import LimitsError
@@ -85,7 +84,7 @@ def _counted(
         production.towards,
         question.money,
         common_standard_uncertainty=measurement.common_standard_uncertainty,
-        random_standard_uncertainty=math.sqrt(float(measurement.random_covariance[0, 0])),
+        random_standard_uncertainty=measurement.random_standard_uncertainty,
     )
 
 

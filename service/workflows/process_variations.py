@@ -9,12 +9,11 @@ from typing import Any, Final
 
 from budgets.budget import Budget
 from budgets.errors import EvidenceError
-from budgets.evidence.evaluation import Evaluation, effective_degrees_of_freedom, variance
+from budgets.evidence.evaluation import Evaluation, variance
 from budgets.evidence.study_data import evaluate_study
 from budgets.evidence.study_tables import StudyData
-from budgets.evidence.sums import f_quantile
 from budgets.lot_procedures import LotProcedure
-from budgets.measurement_errors import RANDOM_LEVELS, error_terms
+from budgets.measurement_errors import RANDOM_LEVELS, error_terms, exceeds_counted
 from budgets.prior_estimates import PriorEstimate, prior_of_readings, prior_of_study
 from budgets.process_variation import ProcessVariation, process_of_prior, steered_process
 from budgets.propagation import Counts
@@ -40,7 +39,6 @@ class Variation:
 
 
 _INSIDE_A_LOT: Final = ("reading", "presentation", "increment", "sample")
-_SIGNIFICANCE: Final = 0.05
 
 NO_FACTS: Final[Answer] = {
     "lots": None,
@@ -207,8 +205,7 @@ def _sampling_warnings(evaluation: Evaluation, budget: Budget) -> list[Answer]:
     inside = ("presentation", "increment", "sample") if "repeatability" in parts else _INSIDE_A_LOT
     counted = error_terms(budget, Counts((1,)), inside, sum(budget.validated_range) / 2)
     seen, known = float(within["variance"]), variance(counted)
-    freedom = within["degrees_of_freedom"], effective_degrees_of_freedom(counted)
-    if seen <= 0 or (known > 0 and seen / known <= f_quantile(_SIGNIFICANCE, *freedom)):
+    if not exceeds_counted(seen, within["degrees_of_freedom"], counted):
         return []
     detail = (
         f"within a lot single readings vary by {math.sqrt(seen):.3g}; the budget counts "

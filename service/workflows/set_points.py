@@ -102,7 +102,7 @@ def _measurement(measurement: PlannedMeasurement) -> Answer:
     return {
         "combined_standard_uncertainty": measurement.standard_uncertainty,
         "effective_degrees_of_freedom": freedom if math.isfinite(freedom) else None,
-        "random_standard_uncertainty": math.sqrt(float(measurement.random_covariance[0, 0])),
+        "random_standard_uncertainty": measurement.random_standard_uncertainty,
         "common_standard_uncertainty": measurement.common_standard_uncertainty,
         "lower_acceptance_limit": _finite(first.lower_acceptance_limit),
         "upper_acceptance_limit": _finite(first.upper_acceptance_limit),

@@ -155,8 +155,8 @@ def test_unknown_correlations_leave_the_bounds():
     assert joint == JointConformance(0.04, pytest.approx(0.07))
     assert joint.cautious_risk == joint.largest_risk
     assert joint.conformance_probability is None
-    assert joint.least_conformance_probability == pytest.approx(0.93)
-    assert joint.most_conformance_probability == pytest.approx(0.96)
+    assert 1 - joint.largest_risk == pytest.approx(0.93)
+    assert 1 - joint.smallest_risk == pytest.approx(0.96)
 
 
 def test_a_single_characteristic_has_its_own_risk():

@@ -15,6 +15,7 @@ from budgets.measurement_errors import (
     RANDOM_LEVELS,
     MeasurementErrors,
     error_terms,
+    exceeds_counted,
     measurement_errors,
 )
 from budgets.measurement_models import MeasurementModel, Quantity
@@ -98,3 +99,19 @@ def test_a_characteristic_computed_from_several_is_refused(a_budget, a_component
         with pytest.raises(NotSupportedError, match="global risks"):
             call()
     assert replace(budget, model=None) is not budget
+
+
+@pytest.mark.parametrize(
+    ("ratio", "exceeds"),
+    [(3.32, False), (3.33, True)],  # F tables: 3.33 for 5 and 10 degrees of freedom, 5 % (from memory)
+)
+def test_a_variance_is_held_against_what_is_counted_by_f(ratio, exceeds):
+    counted = [Term(1.0, MeanSquare("counted", 0.04, 10))]
+    assert exceeds_counted(0.04 * ratio, 5, counted) is exceeds
+    # In another unit the same.
+    assert exceeds_counted(4.0 * ratio, 5, [Term(100.0, MeanSquare("counted", 0.04, 10))]) is exceeds
+
+
+def test_where_nothing_is_counted_all_that_is_seen_exceeds_it():
+    assert exceeds_counted(1e-9, 5, [])
+    assert not exceeds_counted(0.0, 5, [])
